@@ -1,0 +1,20 @@
+/** Limits of the wire. Each is checked before memory is spent on what it bounds. */
+export const LIMITS = {
+  /** Largest frame either side accepts, in bytes: a curvature matrix of 5,000 columns with room to spare. */
+  frameBytesMost: 128 * 1024 * 1024,
+  /** Deepest nesting of maps and arrays in one frame. */
+  nestingMost: 12,
+  /** Most elements in one map or array of a frame (vectors are byte strings, not arrays). */
+  elementsMost: 200_000,
+  /** Longest text string, in characters: a fit specification fits. */
+  textMost: 1_000_000,
+  /** Most coefficients of one fit. */
+  coefficientsMost: 2_000_000,
+  /** Most problems in one proximal work item, most points in one evaluate work item. */
+  batchMost: 4096,
+  /** A peer that has not sent `hello` within this time after the upgrade is closed. Milliseconds. */
+  helloDeadlineMs: 10_000,
+  /** Ping interval and the silence after which a link counts as dead. Milliseconds. */
+  pingEveryMs: 10_000,
+  silenceMostMs: 120_000,
+} as const;
