@@ -7,7 +7,12 @@ import { surveyAnswer, surveyWork } from './survey.js';
 import { count } from './vector.js';
 
 export const work = z.discriminatedUnion('work', [surveyWork, proximalWork, evaluateWork, factorWork]);
-export const workAnswer = z.discriminatedUnion('work', [surveyAnswer, proximalAnswer, evaluateAnswer, factorAnswer]);
+export const workAnswer = z.discriminatedUnion('work', [
+  surveyAnswer,
+  proximalAnswer,
+  evaluateAnswer,
+  factorAnswer,
+]);
 
 const identity = { run: z.string().min(1).max(64), ask: count.min(1) };
 
@@ -15,7 +20,11 @@ const identity = { run: z.string().min(1).max(64), ask: count.min(1) };
 export const ask = z.strictObject({ kind: z.literal('ask'), ...identity, work: z.array(work).min(1) });
 
 /** The reply: one answer per work item, in the same order. */
-export const answer = z.strictObject({ kind: z.literal('answer'), ...identity, work: z.array(workAnswer).min(1) });
+export const answer = z.strictObject({
+  kind: z.literal('answer'),
+  ...identity,
+  work: z.array(workAnswer).min(1),
+});
 
 /** The site will not or cannot answer: why, and what its custodian or the analyst can do. */
 export const refusal = z.strictObject({

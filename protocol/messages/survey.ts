@@ -7,7 +7,16 @@ export const surveyWork = z.strictObject({ work: z.literal('survey') });
 /** What a site's policy lets leave, so that the coordinator can choose the rung. `null` means no limit. */
 export const allowance = z.strictObject({
   leave: z.array(
-    z.enum(['counts', 'moments', 'proximal', 'gradients', 'curvature', 'site-estimates', 'sketches', 'residual-bins']),
+    z.enum([
+      'counts',
+      'moments',
+      'proximal',
+      'gradients',
+      'curvature',
+      'site-estimates',
+      'sketches',
+      'residual-bins',
+    ]),
   ),
   curvatureMost: count.nullable(),
   numbersMost: count.nullable(),

@@ -1,0 +1,50 @@
+import type { Certificate, Rung } from '../consensus/method.js';
+import type { RunOutcome } from './run.js';
+
+/**
+ * `result.json`, format 1. Holds no time and no run id: the same specification, data and Node version give the same
+ * bytes.
+ */
+export interface ResultDocument {
+  readonly format: 1;
+  readonly outcome: RunOutcome;
+  readonly reason: string | null;
+  readonly title: string;
+  /** SHA-256 of the canonical specification, hex. */
+  readonly specification: string;
+  readonly software: string;
+  readonly sites: readonly {
+    readonly site: string;
+    readonly rowsUsed: number | null;
+    readonly rowsDropped: number | null;
+    readonly kernel: string;
+  }[];
+  readonly rowsTotal: number | null;
+  readonly rung: Rung | null;
+  readonly rungReason: string | null;
+  readonly tolerance: number;
+  readonly fits: readonly FitDocument[];
+  readonly notes: readonly string[];
+  /** Rounds of the solve stage: set-up and certificate included, the survey not. */
+  readonly rounds: number;
+  /** Numbers (float64) per site: sent by it and received by it, survey included. */
+  readonly numbersSent: readonly { readonly site: string; readonly up: number; readonly down: number }[];
+}
+
+export interface FitDocument {
+  /** The fit's λ of each penalty in turn; null without a penalty. */
+  readonly lambda: number | readonly number[] | null;
+  readonly outcome: RunOutcome;
+  readonly reason: string | null;
+  readonly intercept: number | null;
+  readonly coefficients: Readonly<Record<string, number>>;
+  /** Columns without spread at any site: no coefficient. */
+  readonly dropped: readonly string[];
+  readonly objective: number;
+  readonly loss: number;
+  readonly penalty: number;
+  readonly deviance: number;
+  readonly certificate: Certificate | null;
+  readonly rounds: number;
+  readonly rung: Rung;
+}

@@ -1,0 +1,80 @@
+/**
+ * A parsed and checked fit specification: every default filled in, every name resolved. What the YAML may hold is in
+ * `schema.ts`; both sides compute with this form only.
+ */
+export interface FitSpecification {
+  readonly title: string;
+  /** Sites that must all take part, in roster order; or how many at least. */
+  readonly sites: readonly string[] | { readonly least: number };
+  readonly missing: 'refuse' | 'drop';
+  readonly response: { readonly column: string; readonly positive: string | null };
+  readonly loss: LossName;
+  /** Offset of the linear predictor: ln(exposure) or a column as it is. At most one. */
+  readonly offset: { readonly kind: 'exposure' | 'offset'; readonly column: string } | null;
+  readonly weights: { readonly column: string } | null;
+  readonly intercept: 'shared' | 'none';
+  readonly terms: readonly Term[];
+  /** They add up. Empty: no penalty. */
+  readonly penalties: readonly Penalty[];
+  readonly rounds: { readonly tolerance: number; readonly most: number; readonly rung: RungLimit };
+  readonly barrier: {
+    readonly deadlineMs: number;
+    readonly quorum: number | 'all';
+    readonly oldest: number;
+    readonly patienceMs: number;
+    readonly missing: 'stop' | 'go-without';
+  };
+}
+
+export type LossName = 'squared' | 'logistic' | 'poisson';
+export type RungLimit = 'highest' | 'pooled' | 'curvature' | 'sketched' | 'proximal';
+export type Transform = 'none' | 'log' | 'sqrt' | { readonly power: number };
+
+export type Term = NumericTerm | LevelsTerm | ProductTerm;
+export interface NumericTerm {
+  readonly kind: 'numeric';
+  readonly column: string;
+  readonly unit: string | null;
+  readonly transform: Transform;
+  /** Coefficient name: the column, or `column^2` for a power, `log(column)`, `sqrt(column)`. */
+  readonly name: string;
+}
+export interface LevelsTerm {
+  readonly kind: 'levels';
+  readonly column: string;
+  /** As text; numbers in the YAML and in tables are compared by value. */
+  readonly levels: readonly string[];
+  /** The level without a coefficient; null keeps a coefficient for every level. */
+  readonly baseline: string | null;
+  readonly name: string;
+}
+/** Product of two or more terms: every combination of their coefficients, named `a:b`. */
+export interface ProductTerm {
+  readonly kind: 'product';
+  readonly factors: readonly (NumericTerm | LevelsTerm)[];
+  readonly name: string;
+}
+
+export interface Penalty {
+  readonly kind: 'ridge' | 'lasso' | 'elastic-net';
+  /** One fit for each. */
+  readonly lambda: readonly number[];
+  /** Share of the ℓ₁ part: 0 ridge, 1 lasso. */
+  readonly l1: number;
+  /** true: penalises b_j · sd_j; false: b_j itself. */
+  readonly scaled: boolean;
+  /** Multiplier by term or coefficient name; 1 where absent. */
+  readonly perTerm: Readonly<Record<string, number>>;
+}
+
+/** A coefficient of the design: its name, the term it comes from and the columns it multiplies. */
+export interface DesignColumn {
+  readonly name: string;
+  /** Index into `terms`. */
+  readonly term: number;
+  /** The factors multiplied: a numeric column transformed, or the indicator of a level. */
+  readonly factors: readonly (
+    | { readonly kind: 'numeric'; readonly column: string; readonly transform: Transform }
+    | { readonly kind: 'level'; readonly column: string; readonly level: string }
+  )[];
+}

@@ -1,0 +1,33 @@
+/**
+ * The columns of a custodian's table that a specification uses, as typed arrays over the rows used, in table order.
+ */
+export interface Table {
+  /** Rows used: rows with a missing value in a used column are left out where the specification says so. */
+  readonly rowCount: number;
+  readonly rowsDropped: number;
+  /** Numeric columns by name, every value finite. */
+  readonly numeric: ReadonlyMap<string, Float64Array>;
+  /** Columns with levels, by column name: `codes[row]` indexes `levels`. */
+  readonly levels: ReadonlyMap<string, LevelColumn>;
+}
+
+export interface LevelColumn {
+  readonly levels: readonly string[];
+  readonly codes: Int32Array;
+}
+
+/** What to read: every column once, numeric or with its permitted levels. */
+export interface TableRequest {
+  readonly numeric: readonly string[];
+  readonly levels: readonly { readonly column: string; readonly levels: readonly string[] }[];
+  readonly missing: 'refuse' | 'drop';
+  /** This worker's share of the rows: row number modulo `of` equals `index − 1`. */
+  readonly shard: { readonly index: number; readonly of: number };
+}
+
+/** Where rows are: the `table` entry of a site file, paths absolute. */
+export type TableSource =
+  | { readonly kind: 'csv'; readonly path: string }
+  | { readonly kind: 'parquet'; readonly path: string }
+  | { readonly kind: 'jsonl'; readonly path: string }
+  | { readonly kind: 'query'; readonly query: string; readonly folder: string };
