@@ -4,6 +4,8 @@ export const CLOSE_CODES = {
   normal: 1000,
   /** RFC 6455: the process is stopping; come back later. */
   goingAway: 1001,
+  /** RFC 6455: never sent; what a side sees when the connection broke without a close frame. */
+  connectionLost: 1006,
   /** RFC 6455: a frame larger than the limit. */
   frameTooLarge: 1009,
   /** The bytes are not one CBOR map within the limits. */

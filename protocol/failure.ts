@@ -119,6 +119,7 @@ export const FAILURE_CODES = [
   'journal-broken',
   'port-in-use',
   'state-unwritable',
+  'coordinator-full',
   'not-found',
   'unauthorised',
   'internal',

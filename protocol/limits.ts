@@ -6,12 +6,16 @@ export const LIMITS = {
   nestingMost: 12,
   /** Most elements in one map or array of a frame (vectors are byte strings, not arrays). */
   elementsMost: 200_000,
-  /** Longest text string, in characters: a fit specification fits. */
+  /** Most data items in one frame, map keys counted too. */
+  itemsMost: 1_000_000,
+  /** Longest text string, in bytes of UTF-8: a fit specification fits. */
   textMost: 1_000_000,
-  /** Most coefficients of one fit. */
-  coefficientsMost: 2_000_000,
+  /** Most coefficients of one fit: their names travel in one array. */
+  coefficientsMost: 200_000,
   /** Most problems in one proximal work item, most points in one evaluate work item. */
   batchMost: 4096,
+  /** Most bytes that may wait to be sent on one link; a message that would pass it is not queued. */
+  sendBufferBytesMost: 256 * 1024 * 1024,
   /** A peer that has not sent `hello` within this time after the upgrade is closed. Milliseconds. */
   helloDeadlineMs: 10_000,
   /** Ping interval and the silence after which a link counts as dead. Milliseconds. */

@@ -71,8 +71,11 @@ export interface Certificate {
 }
 
 export interface MethodEnd {
-  readonly outcome: 'solved' | 'round-limit' | 'stalled' | 'infeasible' | 'unbounded' | 'broken';
+  readonly outcome: 'solved' | 'round-limit' | 'stalled' | 'refused' | 'infeasible' | 'unbounded' | 'broken';
+  /** `rank-deficient`, `separable`, or a sentence. */
   readonly reason: string | null;
+  /** Solver columns the reason is about. */
+  readonly columnsAtFault: readonly number[];
   readonly z: Float64Array;
   /** f(z) (the mean loss) and g(z). */
   readonly loss: number;

@@ -5,7 +5,7 @@
 export interface Link<Outgoing, Incoming> {
   /** Queues one message. Returns false when the link is closed or its bounded send buffer is full. */
   send(message: Outgoing): boolean;
-  /** Called for every message, in order. Set once, before the first message can arrive. */
+  /** Called for every message, in order. Set once; nothing is read from the link before. */
   onMessage(handler: (message: Incoming) => void): void;
   /** Called once, when the link is closed by either side; `code` is a close code. */
   onClose(handler: (code: number, reason: string) => void): void;

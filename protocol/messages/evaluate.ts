@@ -1,4 +1,5 @@
 import { z } from 'zod';
+import { LIMITS } from '../limits.js';
 import { count, finite, vector } from './vector.js';
 
 /** How much is wanted at a point; each includes those before it. */
@@ -12,23 +13,29 @@ export const want = z.enum(['value', 'gradient', 'diagonal', 'curvature']);
 export const evaluateWork = z.strictObject({
   work: z.literal('evaluate'),
   problem: count,
-  points: z.array(z.strictObject({ point: vector, want })).min(1),
+  points: z
+    .array(z.strictObject({ point: vector, want }))
+    .min(1)
+    .max(LIMITS.batchMost),
   ownFit: z.strictObject({ at: count, hold: finite.positive() }).nullable(),
 });
 
 export const evaluateAnswer = z.strictObject({
   work: z.literal('evaluate'),
   problem: count,
-  points: z.array(
-    z.strictObject({
-      value: finite,
-      gradient: vector.nullable(),
-      /** Diagonal of the curvature, p numbers. */
-      diagonal: vector.nullable(),
-      /** Packed lower triangle of the curvature, p (p + 1) / 2 numbers. */
-      curvature: vector.nullable(),
-    }),
-  ),
+  points: z
+    .array(
+      z.strictObject({
+        value: finite,
+        gradient: vector.nullable(),
+        /** Diagonal of the curvature, p numbers. */
+        diagonal: vector.nullable(),
+        /** Packed lower triangle of the curvature, p (p + 1) / 2 numbers. */
+        curvature: vector.nullable(),
+      }),
+    )
+    .min(1)
+    .max(LIMITS.batchMost),
   /** Packed curvature H(x) and H(x) x − ∇φ(x) at the site's own fit x. */
   ownFit: z.strictObject({ curvature: vector, linear: vector }).nullable(),
 });

@@ -1,4 +1,5 @@
 import { z } from 'zod';
+import { LIMITS } from '../limits.js';
 import { count, finite, vector } from './vector.js';
 
 /**
@@ -21,12 +22,15 @@ export const proximalProblem = z.strictObject({
 
 export const proximalWork = z.strictObject({
   work: z.literal('proximal'),
-  problems: z.array(proximalProblem).min(1),
+  problems: z.array(proximalProblem).min(1).max(LIMITS.batchMost),
 });
 
 export const proximalAnswer = z.strictObject({
   work: z.literal('proximal'),
-  problems: z.array(z.strictObject({ problem: count, point: vector, newtonSteps: count })).min(1),
+  problems: z
+    .array(z.strictObject({ problem: count, point: vector, newtonSteps: count }))
+    .min(1)
+    .max(LIMITS.batchMost),
 });
 
 export type ProximalProblem = z.infer<typeof proximalProblem>;

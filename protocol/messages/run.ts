@@ -1,4 +1,5 @@
 import { z } from 'zod';
+import { LIMITS } from '../limits.js';
 import { count, vector } from './vector.js';
 
 /**
@@ -8,7 +9,7 @@ import { count, vector } from './vector.js';
 export const scaling = z.strictObject({
   /** N: rows used over all sites; every φ is divided by it. */
   rowCountTotal: count.min(1),
-  kept: z.array(count),
+  kept: z.array(count).max(LIMITS.coefficientsMost),
   center: vector,
   scale: vector,
 });

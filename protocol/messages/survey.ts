@@ -1,4 +1,5 @@
 import { z } from 'zod';
+import { LIMITS } from '../limits.js';
 import { count, finite, vector } from './vector.js';
 
 /** Asks what a site would bring: rows, pooled moments of every design column, the response, and what may leave. */
@@ -29,7 +30,7 @@ export const surveyAnswer = z.strictObject({
   /** Rows left out because a used column has no value (`missing: drop`). */
   rowsDropped: count,
   /** Names of the design columns, intercept not among them, in the order of the vectors below. */
-  columns: z.array(z.string()),
+  columns: z.array(z.string()).max(LIMITS.coefficientsMost),
   /** Per design column, over the rows used: mean, and sum of squares about that mean. Unweighted. */
   mean: vector,
   centredSquares: vector,

@@ -36,7 +36,7 @@ export interface NumericTerm {
   readonly column: string;
   readonly unit: string | null;
   readonly transform: Transform;
-  /** Coefficient name: the column, or `column^2` for a power, `log(column)`, `sqrt(column)`. */
+  /** Coefficient name: the column, `column^2` for a power; `log(column)`, `sqrt(column)` where another term has the bare name. */
   readonly name: string;
 }
 export interface LevelsTerm {

@@ -5,6 +5,8 @@ export interface Table {
   /** Rows used: rows with a missing value in a used column are left out where the specification says so. */
   readonly rowCount: number;
   readonly rowsDropped: number;
+  /** 1-based data row in the source of each row used, for messages. Absent: row i is the source's row i + 1. */
+  readonly rowNumbers?: Uint32Array;
   /** Numeric columns by name, every value finite. */
   readonly numeric: ReadonlyMap<string, Float64Array>;
   /** Columns with levels, by column name: `codes[row]` indexes `levels`. */
@@ -19,10 +21,21 @@ export interface LevelColumn {
 /** What to read: every column once, numeric or with its permitted levels. */
 export interface TableRequest {
   readonly numeric: readonly string[];
-  readonly levels: readonly { readonly column: string; readonly levels: readonly string[] }[];
+  readonly levels: readonly LevelsRequest[];
   readonly missing: 'refuse' | 'drop';
   /** This worker's share of the rows: row number modulo `of` equals `index − 1`. */
   readonly shard: { readonly index: number; readonly of: number };
+}
+
+export interface LevelsRequest {
+  readonly column: string;
+  /** Permitted levels; a value that is none of them is `level-unknown`. */
+  readonly levels: readonly string[];
+  /**
+   * 'one' for a two-class response of which only the positive class is named: the first other value found joins the
+   * levels, a further one is `response-range`.
+   */
+  readonly others?: 'one';
 }
 
 /** Where rows are: the `table` entry of a site file, paths absolute. */

@@ -1,0 +1,61 @@
+import type { RunOutcome } from '../run/run.js';
+
+/** What the program can end with, but for outcomes. */
+export const EXIT = {
+  ok: 0,
+  defect: 1,
+  usage: 2,
+  document: 3,
+  unreachable: 4,
+  unauthorised: 5,
+  notFound: 6,
+  /** Something on this machine is in the way: a port that is taken, a folder that cannot be written. */
+  machine: 7,
+  /** 128 + SIGINT, as shells expect. */
+  interrupted: 130,
+} as const;
+
+const OUTCOME_CODES: Readonly<Record<RunOutcome, number>> = {
+  solved: 0,
+  'round-limit': 10,
+  'time-limit': 11,
+  stalled: 12,
+  'site-missing': 13,
+  refused: 14,
+  infeasible: 15,
+  unbounded: 16,
+  cancelled: 17,
+  broken: 18,
+};
+
+export type ExitCode = (typeof EXIT)[keyof typeof EXIT] | number;
+
+/** The exit code of a run's outcome; an outcome this program does not know (a newer coordinator's) is `broken`. */
+export const exitCodeOf = (outcome: string): number =>
+  Object.hasOwn(OUTCOME_CODES, outcome) ? OUTCOME_CODES[outcome as RunOutcome] : OUTCOME_CODES.broken;
+
+const MEANINGS: readonly [number, string][] = [
+  [EXIT.ok, 'done; of a run: solved'],
+  [EXIT.defect, 'a defect of this program'],
+  [EXIT.usage, 'the command line is wrong'],
+  [EXIT.document, 'the document is wrong'],
+  [EXIT.unreachable, 'the coordinator cannot be reached'],
+  [EXIT.unauthorised, 'the token is missing or not accepted'],
+  [EXIT.notFound, 'no such run, or it has no result yet'],
+  [EXIT.machine, 'a port, file or folder of this machine is in the way'],
+  [EXIT.interrupted, 'interrupted'],
+];
+
+/** Exit codes with their meaning, for `--help`: all, or those a command names. */
+export function exitCodeTable(codes: readonly number[], withOutcomes: boolean): string {
+  const rows = MEANINGS.filter(([code]) => codes.includes(code)).map(([code, meaning]) => [code, meaning]);
+  const outcomes = withOutcomes
+    ? Object.entries(OUTCOME_CODES)
+        .filter(([, code]) => code !== EXIT.ok)
+        .map(([outcome, code]) => [code, `the run ended as ${outcome}`])
+    : [];
+  return [...rows, ...outcomes]
+    .sort((a, b) => Number(a[0]) - Number(b[0]))
+    .map(([code, meaning]) => `  ${String(code).padStart(3)}  ${meaning}`)
+    .join('\n');
+}

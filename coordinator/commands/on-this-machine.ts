@@ -1,0 +1,124 @@
+import { mkdir, writeFile } from 'node:fs/promises';
+import { join } from 'node:path';
+import type { LogEvent } from '../run/log-event.js';
+import type { Analyst } from './analyst.js';
+import type { Document } from './document.js';
+import { EXIT, exitCodeOf } from './exit-codes.js';
+import { followRun, type OutcomeEvent } from './follow.js';
+import { type Fetched, fetchResult } from './result-folder.js';
+import { submitDocument } from './submit.js';
+import { type Attempt, done } from './terminal.js';
+import { startWorker, tailOf, type WorkerProcess } from './worker-process.js';
+import { type LocalCoordinator, startLocalCoordinator } from './local-coordinator.js';
+
+/** One site of a run on this machine: its site file, and where that file says its token is. */
+export interface LocalSite {
+  readonly site: string;
+  readonly siteFile: string;
+  readonly tokenFile: string;
+}
+
+export interface LocalPlan {
+  /** For the coordinator's state, the tokens and the workers' logs. */
+  readonly folder: string;
+  /** Makes the site files, once the coordinator's address (`ws://127.0.0.1:PORT`) is known. */
+  readonly sites: (url: string) => Promise<Attempt<readonly LocalSite[]>>;
+  /** What is fitted; read once the sites are there. */
+  readonly document: () => Promise<Attempt<Document>>;
+  readonly sink: (event: LogEvent) => void;
+  readonly signal: AbortSignal;
+}
+
+export interface LocalRun {
+  readonly outcome: OutcomeEvent;
+  readonly result: Fetched;
+  readonly events: readonly LogEvent[];
+}
+
+/**
+ * One run on this machine over loopback sockets: a coordinator in this process, one worker process a site. However it
+ * ends, nothing of it goes on: the workers are stopped and the coordinator closed before this returns.
+ */
+export async function runOnThisMachine(plan: LocalPlan): Promise<Attempt<LocalRun>> {
+  const workers: WorkerProcess[] = [];
+  const started = await startLocalCoordinator(join(plan.folder, 'coordinator'));
+  if (!started.ok) return started;
+  try {
+    return await runWith(started.value, plan, workers);
+  } finally {
+    await Promise.all(workers.map((worker) => worker.stop()));
+    await started.value.close();
+  }
+}
+
+async function runWith(
+  coordinator: LocalCoordinator,
+  plan: LocalPlan,
+  workers: WorkerProcess[],
+): Promise<Attempt<LocalRun>> {
+  const sites = await plan.sites(coordinator.siteUrl);
+  if (!sites.ok) return sites;
+  const document = await plan.document();
+  if (!document.ok) return document;
+  const died = new AbortController();
+  const logs = join(plan.folder, 'logs');
+  await mkdir(logs, { recursive: true });
+  for (const { site, siteFile, tokenFile } of sites.value) {
+    const token = await coordinator.admitSite(site);
+    if (!token.ok) return token;
+    await writeFile(tokenFile, `${token.value}\n`, { mode: 0o600 });
+    const ended = (name: string, how: string): void => died.abort({ name, how });
+    workers.push(startWorker(site, siteFile, join(logs, `${site}.log`), ended));
+  }
+  const stop = AbortSignal.any([plan.signal, died.signal]);
+  const run = await followed(coordinator.analyst, document.value, plan.sink, stop);
+  if (plan.signal.aborted) return interrupted();
+  return died.signal.aborted && !run.ok ? await workerEnded(died.signal.reason, workers) : run;
+}
+
+async function followed(
+  analyst: Analyst,
+  document: Document,
+  sink: (event: LogEvent) => void,
+  signal: AbortSignal,
+): Promise<Attempt<LocalRun>> {
+  const submitted = await submitDocument(analyst, document);
+  if (!submitted.ok) return submitted;
+  const events: LogEvent[] = [];
+  const keep = (event: LogEvent): void => {
+    events.push(event);
+    sink(event);
+  };
+  const end = await followRun(analyst, submitted.value.run, keep, signal);
+  if (end.kind === 'ending') return { ok: false, ending: end.ending };
+  if (end.kind === 'stopped') return interrupted();
+  const result = await fetchResult(analyst, submitted.value.run);
+  return result.ok ? done({ outcome: end.event, result: result.value, events }) : result;
+}
+
+export const interrupted = (): Attempt<never> => ({
+  ok: false,
+  ending: { exit: EXIT.interrupted, texts: ['Interrupted: the workers and the coordinator are stopped.'], failures: [] },
+});
+
+async function workerEnded(
+  reason: { name: string; how: string },
+  workers: readonly WorkerProcess[],
+): Promise<Attempt<never>> {
+  const worker = workers.find(({ site }) => site === reason.name);
+  const tail = worker === undefined ? [] : await tailOf(worker.logFile);
+  return {
+    ok: false,
+    ending: {
+      exit: exitCodeOf('site-missing'),
+      texts: [`The worker of ${reason.name} ended before the run did (${reason.how}). It last said:`, ...tail],
+      failures: [
+        {
+          code: 'site-missing',
+          message: `The worker of ${reason.name} ended before the run did (${reason.how}).`,
+          where: { site: reason.name },
+        },
+      ],
+    },
+  };
+}

@@ -1,0 +1,204 @@
+import { packSymmetric } from '../../numerics/packed.js';
+import { type ModelStep, measuredCertificate, modelStep, relativeTo } from './certificate.js';
+import { aliasedColumns, runawayColumns } from './existence.js';
+import type { Certificate, Method, MethodEnd, Progress } from './method.js';
+import { definiteMetric, diagonalOf, flooredDiagonal, plusDiagonal, RIDGE } from './metric.js';
+import { penaltyValue } from './penalty.js';
+import { evaluate, type PooledEvaluation, required } from './pooled.js';
+import type { ConsensusProblem } from './problem.js';
+import { bestLinePoint, bestTrial, type Iterate, linePoints, trialPoints } from './trial-points.js';
+import { zStepFull } from './z-step.js';
+
+/** Weight of the proximal term that holds each site's own fit near z₀, in the site's own diagonal curvature. */
+const OWN_FIT_HOLD = 0.3;
+/** Levenberg-Marquardt damping: first value, growth after a failed round, shrinkage after a good one. */
+const DAMPING_FIRST = 0.1;
+const DAMPING_FACTOR = 10;
+const DAMPING_LEAST = 1e-3;
+/** Rounds in a row without progress after which the run is called stalled. */
+const FAILURES_MOST = 30;
+
+/**
+ * The `curvature` rung: consensus steps (Z) on quadratic answers (quadratically approximated ADMM: Mokhtari, Shi, Ling,
+ * Ribeiro 2016; with a shared z, proximal Newton: Lee, Sun, Saunders 2014), safeguarded by trial points along the step
+ * and by damping. The answer that moved z is also the certificate of the new z.
+ */
+export function* curvatureRung(problem: ConsensusProblem): Method {
+  const g = problem.penalty;
+  const first = yield* evaluate(
+    [{ point: problem.start, want: 'curvature' }],
+    problem.quadratic ? null : { at: 0, hold: OWN_FIT_HOLD },
+    progressOf(null, null, 'curvature at the start, own fits'),
+  );
+  let rounds = 1;
+  let here = iterateFrom(problem, problem.start, first, 0);
+  const { diagonal: startDiagonal } = here;
+  const aliased = aliasedColumns(here.curvature, g);
+  if (aliased.length > 0) return ending(problem, here, null, rounds, 'refused', 'rank-deficient', aliased);
+  let extra = ownFitPoint(problem, first, here);
+  let damping = 0;
+  let failures = 0;
+  for (;;) {
+    const metric = definiteMetric(here.curvature, here.diagonal);
+    const step = modelStep(g, metric, here.gradient, here.z);
+    if (step === null)
+      return ending(problem, here, null, rounds, 'stalled', 'the curvature could not be factored');
+    if (problem.quadratic) return quadraticEnd(problem, here, step, metric, rounds);
+    const certificate = measuredCertificate(g, here.z, here.gradient, step.decrement, here.objective);
+    if (certificate.relativeGap <= problem.tolerance) {
+      const runaway = runawayColumns(here.z, step.direction, here.curvature, startDiagonal);
+      return runaway.length > 0
+        ? ending(problem, here, certificate, rounds, 'unbounded', 'separable', runaway)
+        : ending(problem, here, certificate, rounds, 'solved', null);
+    }
+    if (rounds >= problem.roundsMost) return ending(problem, here, certificate, rounds, 'round-limit', null);
+    if (failures >= FAILURES_MOST)
+      return ending(problem, here, certificate, rounds, 'stalled', `no progress in ${FAILURES_MOST} rounds`);
+
+    const damped =
+      damping > 0
+        ? (modelStep(g, plusDiagonal(metric, damping, here.diagonal), here.gradient, here.z) ?? step)
+        : step;
+    const trials = [...trialPoints(g, here.z, damped.direction), ...extra];
+    const line = linePoints(g, here.z, damped.direction);
+    const answers = yield* evaluate(
+      [
+        ...trials.map((point) => ({ point, want: 'curvature' as const })),
+        ...line.map((point) => ({ point, want: 'value' as const })),
+      ],
+      null,
+      progressOf(here, step, 'trial points with curvature'),
+    );
+    rounds++;
+    extra = [];
+    const values = answers.points.map((point) => point.value);
+    const best = bestTrial(g, here, trials, values.slice(0, trials.length));
+    if (best !== null) {
+      here = iterateFrom(problem, trials[best], answers, best);
+      damping = damping > DAMPING_LEAST ? damping / DAMPING_FACTOR : 0;
+      failures = 0;
+      continue;
+    }
+    const onLine = bestLinePoint(g, here, line, values.slice(trials.length));
+    if (onLine === null) {
+      damping = Math.max(damping * DAMPING_FACTOR, DAMPING_FIRST);
+      failures++;
+      continue;
+    }
+    const again = yield* evaluate(
+      [{ point: line[onLine], want: 'curvature' }],
+      null,
+      progressOf(here, step, 'a shorter step'),
+    );
+    rounds++;
+    failures = 0;
+    here = iterateFrom(problem, line[onLine], again, 0);
+  }
+}
+
+function iterateFrom(
+  problem: ConsensusProblem,
+  z: Float64Array,
+  answers: PooledEvaluation,
+  k: number,
+): Iterate {
+  const point = answers.points[k];
+  const curvature = required(point.curvature, 'curvature');
+  return {
+    z,
+    loss: point.value,
+    objective: point.value + penaltyValue(problem.penalty, z),
+    gradient: required(point.gradient, 'gradient'),
+    curvature,
+    diagonal: flooredDiagonal(diagonalOf(curvature, problem.p)),
+  };
+}
+
+/** The minimiser of the summed quadratics at the sites' own fits, plus g: a further trial point. */
+function ownFitPoint(problem: ConsensusProblem, first: PooledEvaluation, here: Iterate): Float64Array[] {
+  if (first.ownFit === null) return [];
+  const { curvature, linear } = first.ownFit;
+  const metric = plusDiagonal(curvature, RIDGE, here.diagonal);
+  const point = zStepFull(problem.penalty, metric, linear, here.z);
+  return point === null ? [] : [point];
+}
+
+/** Squared loss: the model is the function, so the step is the solution, and the step after it its certificate. */
+function quadraticEnd(
+  problem: ConsensusProblem,
+  here: Iterate,
+  step: ModelStep,
+  metric: Float64Array,
+  rounds: number,
+): MethodEnd {
+  const gradientAt = (z: Float64Array): Float64Array =>
+    here.gradient.map((value, i) => {
+      let sum = value;
+      for (let j = 0; j < problem.p; j++) sum += here.curvature[i * problem.p + j] * (z[j] - here.z[j]);
+      return sum;
+    });
+  const gradient = gradientAt(step.z);
+  const after = modelStep(problem.penalty, metric, gradient, step.z);
+  let bend = 0;
+  for (let j = 0; j < problem.p; j++) bend += 0.5 * step.direction[j] * (here.gradient[j] + gradient[j]);
+  const there: Iterate = {
+    ...here,
+    z: step.z,
+    loss: here.loss + bend,
+    objective: here.loss + bend + penaltyValue(problem.penalty, step.z),
+    gradient,
+  };
+  if (after === null)
+    return ending(problem, there, null, rounds, 'stalled', 'the curvature could not be factored');
+  const certificate = measuredCertificate(
+    problem.penalty,
+    step.z,
+    gradient,
+    after.decrement,
+    there.objective,
+  );
+  const solved = certificate.relativeGap <= problem.tolerance;
+  return ending(
+    problem,
+    there,
+    certificate,
+    rounds,
+    solved ? 'solved' : 'stalled',
+    solved ? null : 'rounding keeps the gap above the tolerance',
+  );
+}
+
+function ending(
+  problem: ConsensusProblem,
+  here: Iterate,
+  certificate: Certificate | null,
+  rounds: number,
+  outcome: MethodEnd['outcome'],
+  reason: string | null,
+  columnsAtFault: readonly number[] = [],
+): MethodEnd {
+  return {
+    outcome,
+    reason,
+    columnsAtFault,
+    z: here.z,
+    loss: here.loss,
+    penalty: penaltyValue(problem.penalty, here.z),
+    certificate,
+    curvature: packSymmetric(here.curvature, problem.p),
+    rounds,
+    rung: 'curvature',
+  };
+}
+
+function progressOf(here: Iterate | null, step: ModelStep | null, purpose: string): Progress {
+  return {
+    rung: 'curvature',
+    purpose,
+    primalResidual: null,
+    dualResidual: null,
+    relativeGap: here === null || step === null ? null : step.decrement / relativeTo(here.objective),
+    gapMeasured: here !== null,
+    objective: here?.objective ?? null,
+  };
+}

@@ -1,0 +1,67 @@
+import { unpackSymmetric } from '../../numerics/packed.js';
+import { sumOf } from '../../numerics/vector.js';
+import type { MethodAsk, Progress, SiteAnswers, SiteEvaluation } from './method.js';
+
+/** The sites' answers at one point, summed in roster order: f, ∇f and what curvature was asked. */
+export interface PooledPoint {
+  readonly value: number;
+  readonly gradient: Float64Array | null;
+  readonly diagonal: Float64Array | null;
+  /** Row-major p × p. */
+  readonly curvature: Float64Array | null;
+}
+
+export interface PooledEvaluation {
+  readonly points: readonly PooledPoint[];
+  /** Σ H_i(x_i) (row-major) and Σ H_i x_i − ∇φ_i(x_i) at the sites' own fits. */
+  readonly ownFit: { readonly curvature: Float64Array; readonly linear: Float64Array } | null;
+  /** ∇φ_i at the first point, per site. */
+  readonly siteGradients: readonly Float64Array[];
+}
+
+/** Asks all sites for values and derivatives and pools their answers. */
+export function* evaluate(
+  points: Extract<MethodAsk, { kind: 'evaluate' }>['points'],
+  ownFit: { readonly at: number; readonly hold: number } | null,
+  progress: Progress,
+): Generator<MethodAsk, PooledEvaluation, SiteAnswers> {
+  const answers = yield { kind: 'evaluate', points, ownFit, progress };
+  if (answers.kind !== 'evaluate') throw new TypeError(`an evaluate ask was answered with ${answers.kind}`);
+  return pool(answers.sites);
+}
+
+function pool(sites: readonly SiteEvaluation[]): PooledEvaluation {
+  const points = sites[0].points.map((_, k) => {
+    const at = sites.map((site) => site.points[k]);
+    return {
+      value: at.reduce((sum, point) => sum + point.value, 0),
+      gradient: sumPresent(at.map((point) => point.gradient)),
+      diagonal: sumPresent(at.map((point) => point.diagonal)),
+      curvature: unpackPresent(sumPresent(at.map((point) => point.curvature))),
+    };
+  });
+  const fits = sites.map((site) => site.ownFit);
+  const curvature = unpackPresent(sumPresent(fits.map((fit) => fit?.curvature ?? null)));
+  const linear = sumPresent(fits.map((fit) => fit?.linear ?? null));
+  const gradients = sites.map((site) => site.points[0].gradient);
+  return {
+    points,
+    ownFit: curvature === null || linear === null ? null : { curvature, linear },
+    siteGradients: gradients.filter((gradient) => gradient !== null),
+  };
+}
+
+const unpackPresent = (packed: Float64Array | null): Float64Array | null =>
+  packed === null ? null : unpackSymmetric(packed);
+
+/** Sum in the order given, or null where any is missing. */
+function sumPresent(vectors: readonly (Float64Array | null)[]): Float64Array | null {
+  const present = vectors.filter((vector) => vector !== null);
+  return present.length === vectors.length ? sumOf(present) : null;
+}
+
+/** What an answer must hold because it was asked; its absence is a defect of the panel, not of a site. */
+export function required<T>(value: T | null, what: string): T {
+  if (value === null) throw new TypeError(`the panel passed an answer without its ${what}`);
+  return value;
+}

@@ -1,0 +1,117 @@
+import { packSymmetric } from '../../numerics/packed.js';
+import { plusScaled } from '../../numerics/vector.js';
+import { measuredCertificate, modelStep, relativeTo } from './certificate.js';
+import { aliasedColumns, runawayColumns } from './existence.js';
+import type { Certificate, MethodAsk, Progress, SiteAnswers } from './method.js';
+import { definiteMetric, diagonalOf, flooredDiagonal } from './metric.js';
+import { penaltyValue } from './penalty.js';
+import { evaluate, type PooledEvaluation, required } from './pooled.js';
+import type { ConsensusProblem } from './problem.js';
+
+/** Shorter steps tried by value alone beside each full step. */
+const SHORTER = [0.3, 0.1] as const;
+/** A step must bring the decrement down to this share, or the rest of the budget is kept for later. */
+const CONTRACTION_MOST = 0.3;
+
+/** Where a second-order finish ended: the best point it has measured, with every site's gradient there. */
+export interface Finish {
+  readonly z: Float64Array;
+  readonly loss: number;
+  readonly certificate: Certificate | null;
+  readonly curvature: Float64Array;
+  /** Why there is no optimum to certify, if that was found: `rank-deficient` or `separable`, and the columns. */
+  readonly flaw: {
+    readonly reason: 'rank-deficient' | 'separable';
+    readonly columns: readonly number[];
+  } | null;
+  readonly siteGradients: readonly Float64Array[];
+  readonly matricesSpent: number;
+}
+
+/**
+ * Spends curvature matrices at and after z: each round measures f, ∇f and H; where that does not certify, its own
+ * z-step gives the next point. Stops when certified, when `budget` is spent, or when the steps do not contract.
+ */
+export function* secondOrderFinish(
+  problem: ConsensusProblem,
+  start: Float64Array,
+  startDiagonal: Float64Array,
+  budget: number,
+  progress: (purpose: string, gap: number | null, objective: number | null) => Progress,
+): Generator<MethodAsk, { readonly finish: Finish; readonly rounds: number }, SiteAnswers> {
+  const g = problem.penalty;
+  let z = start;
+  let direction: Float64Array | null = null;
+  let best: Finish | null = null;
+  let bestObjective = Number.POSITIVE_INFINITY;
+  let decrement = Number.POSITIVE_INFINITY;
+  let gap: number | null = null;
+  let rounds = 0;
+  for (let spent = 1; ; spent++) {
+    const shorter =
+      direction === null ? [] : SHORTER.map((t) => plusScaled(z, t - 1, direction as Float64Array));
+    const answers: PooledEvaluation = yield* evaluateAt(
+      z,
+      shorter,
+      progress('curvature at z', gap, finiteOrNull(bestObjective)),
+    );
+    rounds++;
+    const at = answers.points[0];
+    const objective = at.value + penaltyValue(g, z);
+    const curvature = required(at.curvature, 'curvature');
+    const gradient = required(at.gradient, 'gradient');
+    if (objective > bestObjective && best !== null) {
+      const values = shorter.map((point, k) => answers.points[k + 1].value + penaltyValue(g, point));
+      const least = values[0] <= values[1] ? 0 : 1;
+      if (spent >= budget || !(values[least] < bestObjective))
+        return { finish: { ...best, matricesSpent: spent }, rounds };
+      z = shorter[least];
+      direction = null;
+      continue;
+    }
+    const step = modelStep(
+      g,
+      definiteMetric(curvature, flooredDiagonal(diagonalOf(curvature, problem.p))),
+      gradient,
+      z,
+    );
+    const certificate = step === null ? null : measuredCertificate(g, z, gradient, step.decrement, objective);
+    const certified = certificate !== null && certificate.relativeGap <= problem.tolerance;
+    const aliased = spent === 1 ? aliasedColumns(curvature, g) : [];
+    const runaway =
+      certified && step !== null ? runawayColumns(z, step.direction, curvature, startDiagonal) : [];
+    const flaw =
+      aliased.length > 0
+        ? { reason: 'rank-deficient' as const, columns: aliased }
+        : runaway.length > 0
+          ? { reason: 'separable' as const, columns: runaway }
+          : null;
+    best = {
+      z,
+      loss: at.value,
+      certificate,
+      curvature: packSymmetric(curvature, problem.p),
+      flaw,
+      siteGradients: answers.siteGradients,
+      matricesSpent: spent,
+    };
+    bestObjective = objective;
+    gap = step === null ? null : step.decrement / relativeTo(objective);
+    const contracting = step !== null && step.decrement <= CONTRACTION_MOST * decrement;
+    if (certified || flaw !== null || step === null || spent >= budget || !contracting)
+      return { finish: best, rounds };
+    decrement = step.decrement;
+    z = step.z;
+    direction = step.direction;
+  }
+}
+
+function evaluateAt(z: Float64Array, shorter: readonly Float64Array[], progress: Progress) {
+  return evaluate(
+    [{ point: z, want: 'curvature' }, ...shorter.map((point) => ({ point, want: 'value' as const }))],
+    null,
+    progress,
+  );
+}
+
+const finiteOrNull = (value: number): number | null => (Number.isFinite(value) ? value : null);

@@ -1,0 +1,100 @@
+import { createHash } from 'node:crypto';
+import { decode, encode } from 'cborg';
+import { z } from 'zod';
+import { decodeToCoordinator, encodeMessage } from '../../protocol/codec.js';
+import { type Checked, fail, succeed } from '../../protocol/failure.js';
+import type { Work } from '../../protocol/messages/round.js';
+import type { Reply } from '../panel/panel.js';
+import { isRefusal } from '../panel/panel.js';
+
+const count = z.int().min(0);
+
+const opened = z.strictObject({
+  record: z.literal('opened'),
+  format: z.literal(1),
+  run: z.string(),
+  /** The canonical specification and its SHA-256, hex. */
+  specification: z.string(),
+  digest: z.string(),
+  roster: z.array(
+    z.strictObject({
+      site: z.string(),
+      shard: z.strictObject({ index: z.int().min(1), of: z.int().min(1) }),
+      kernel: z.string(),
+    }),
+  ),
+  software: z.string(),
+  node: z.string(),
+});
+
+const answered = z.strictObject({
+  record: z.literal('answered'),
+  /** Asks of a run are numbered from 1 in the order in which the run yields them. */
+  ask: z.int().min(1),
+  /** SHA-256 (hex) of what was asked of the whole roster, in full. */
+  asked: z.string().length(64),
+  /** Per member, in roster order: its answer or refusal as the message it came in. */
+  replies: z.array(z.custom<Uint8Array>((value) => value instanceof Uint8Array)),
+  /** For the round log only; the run never sees it. */
+  measured: z.strictObject({
+    tookMs: z.number().min(0),
+    slowest: z.strictObject({ member: count, ms: z.number().min(0) }).nullable(),
+    numbersUp: count,
+    numbersDown: count,
+    at: z.string(),
+  }),
+});
+
+const ended = z.strictObject({
+  record: z.literal('ended'),
+  outcome: z.string(),
+  reason: z.string().nullable(),
+  /** The run was ended from outside (cancelled, a site missing), not by its own return. */
+  forced: z.boolean(),
+});
+
+const journalRecord = z.discriminatedUnion('record', [opened, answered, ended]);
+
+export type JournalRecord = z.infer<typeof journalRecord>;
+export type OpenedRecord = z.infer<typeof opened>;
+export type AnsweredRecord = z.infer<typeof answered>;
+export type EndedRecord = z.infer<typeof ended>;
+export type Measured = AnsweredRecord['measured'];
+
+export const encodeRecord = (record: JournalRecord): Uint8Array => encode(record);
+
+/** Fails with `journal-broken`. */
+export function decodeRecord(payload: Uint8Array): Checked<JournalRecord> {
+  let value: unknown;
+  try {
+    value = decode(payload, { strict: true, rejectDuplicateMapKeys: true });
+  } catch (error) {
+    return fail('journal-broken', `A journal record is not CBOR: ${String(error)}.`);
+  }
+  const parsed = journalRecord.safeParse(value);
+  return parsed.success
+    ? succeed(parsed.data)
+    : fail('journal-broken', `A journal record is not of a known form: ${z.prettifyError(parsed.error)}.`);
+}
+
+/** SHA-256 (hex) over the ask as each member would get it in full, in roster order. */
+export function digestOfAsk(run: string, ask: number, works: readonly (readonly Work[])[]): string {
+  const hash = createHash('sha256');
+  for (const work of works) hash.update(encodeMessage({ kind: 'ask', run, ask, work: [...work] }));
+  return hash.digest('hex');
+}
+
+/** A reply as the message it came in: the codec keeps every bit of a vector. */
+export const encodeReply = (run: string, ask: number, reply: Reply): Uint8Array =>
+  encodeMessage(isRefusal(reply) ? reply : { kind: 'answer', run, ask, work: [...reply] });
+
+/** Fails with `journal-broken` when the bytes are no answer or refusal to this ask. */
+export function decodeReply(run: string, ask: number, bytes: Uint8Array): Checked<Reply> {
+  const message = decodeToCoordinator(bytes);
+  if (!message.ok) return fail('journal-broken', `A recorded reply is damaged: ${message.failure.message}`);
+  const reply = message.value;
+  if (reply.kind === 'hello' || reply.run !== run || reply.ask !== ask) {
+    return fail('journal-broken', `A recorded reply to ask ${ask} belongs to something else.`);
+  }
+  return succeed(reply.kind === 'answer' ? reply.work : reply);
+}

@@ -1,0 +1,37 @@
+import type { Work } from '../../protocol/messages/round.js';
+import { numbersOfAnswer, numbersOfWork } from '../../protocol/numbers.js';
+import { isRefusal, type Reply } from './panel.js';
+import { type ConnectionMemory, EMPTY_MEMORY, rememberAnswered, rememberSent, slimWorks } from './slim-ask.js';
+
+/**
+ * Numbers to and from each member, in roster order, as they are when no link is lost and nothing is asked twice: the
+ * same for the same run, whatever happened on the way.
+ */
+export class NumbersTally {
+  private readonly memories: ConnectionMemory[];
+  private readonly down: number[];
+  private readonly up: number[];
+
+  constructor(memberCount: number) {
+    this.memories = Array.from({ length: memberCount }, () => EMPTY_MEMORY);
+    this.down = new Array<number>(memberCount).fill(0);
+    this.up = new Array<number>(memberCount).fill(0);
+  }
+
+  /** One ask, in full, and what it was answered with. */
+  add(ask: number, works: readonly (readonly Work[])[], replies: readonly Reply[]): void {
+    for (const [member, full] of works.entries()) {
+      const sent = slimWorks(full, this.memories[member]);
+      this.memories[member] = rememberSent(this.memories[member], sent);
+      for (const work of sent) this.down[member] += numbersOfWork(work);
+      const reply = replies[member];
+      if (isRefusal(reply)) continue;
+      this.memories[member] = rememberAnswered(this.memories[member], ask, reply);
+      for (const answer of reply) this.up[member] += numbersOfAnswer(answer);
+    }
+  }
+
+  numbers(): { readonly up: number; readonly down: number }[] {
+    return this.up.map((up, member) => ({ up, down: this.down[member] }));
+  }
+}

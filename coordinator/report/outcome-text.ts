@@ -1,0 +1,33 @@
+import type { Certificate } from '../consensus/method.js';
+import type { RunOutcome } from '../run/run.js';
+import { roughly } from './phrases.js';
+
+/** What each outcome means, as the head of a paragraph. */
+export const OUTCOME_HEAD: Readonly<Record<RunOutcome, string>> = {
+  solved: 'Solved.',
+  'round-limit': 'Not solved: the rounds allowed were used up.',
+  'time-limit': 'Not solved: the time allowed was used up.',
+  stalled: 'Not solved: the rounds stopped making headway.',
+  'site-missing': 'Not solved: a site was missing for longer than the patience allowed.',
+  refused: 'Not solved: a site refused, as its custodian may.',
+  infeasible: 'Not solved: no coefficients satisfy the constraints.',
+  unbounded: 'Not solved: the data set no limit to the coefficients.',
+  cancelled: 'Not solved: the run was cancelled.',
+  broken: 'Not solved: something broke.',
+};
+
+/** What the certificate says of the point the run stands by. */
+export function certificateText(kind: Certificate['kind'] | string | null, relativeGap: number | null): string {
+  if (kind === null || relativeGap === null) return 'No certificate: nothing shows how far this is from the optimum.';
+  const gap = roughly(relativeGap);
+  switch (kind) {
+    case 'measured':
+      return `Certificate: gradients and curvature measured at this very point bound its distance to the optimum by ${gap} of the objective.`;
+    case 'sketched':
+      return `Certificate: gradients measured and curvature sketched at this very point put its distance to the optimum at no more than about ${gap} of the objective.`;
+    case 'duality-gap':
+      return `Certificate: the duality gap at this very point bounds its distance to the optimum by ${gap} of the objective.`;
+    default:
+      return `Certificate: an estimate only, from gradients and diagonal curvature at this very point; it puts the distance to the optimum at about ${gap} of the objective.`;
+  }
+}

@@ -1,0 +1,111 @@
+import type { Scaling } from '../../protocol/messages/run.js';
+import type { DesignColumn, FitSpecification } from '../../protocol/specification/types.js';
+import { noPenalty, type Penalty } from '../consensus/penalty.js';
+import type { PooledSurvey } from './survey.js';
+
+/** A standard deviation this small beside the mean is rounding: the column has no spread. */
+const SPREAD_LEAST = 1e-12;
+
+/** How design columns become solver columns, for the coordinator's own use. */
+export interface Frame {
+  readonly scaling: Scaling;
+  /** Solver columns: the intercept, where there is one, and the columns kept. */
+  readonly p: number;
+  readonly intercept: boolean;
+  readonly kept: readonly DesignColumn[];
+  /** 1/N standard deviations of the kept columns. */
+  readonly sd: Float64Array;
+  readonly dropped: readonly string[];
+}
+
+/**
+ * Stage two: the pooled scaling. With an intercept, columns are centred and scaled to unit standard deviation; without
+ * one they are only scaled, to unit root mean square, since centring would bring an intercept in.
+ */
+export function scale(
+  specification: FitSpecification,
+  columns: readonly DesignColumn[],
+  survey: PooledSurvey,
+): Frame {
+  const intercept = specification.intercept === 'shared';
+  const size = (j: number): number => (intercept ? survey.sd[j] : Math.hypot(survey.mean[j], survey.sd[j]));
+  const all = columns.map((_, j) => j);
+  const kept = all.filter((j) => size(j) > (intercept ? SPREAD_LEAST * Math.abs(survey.mean[j]) : 0));
+  return {
+    scaling: {
+      rowCountTotal: survey.rowsTotal,
+      kept,
+      center: Float64Array.from(kept, (j) => (intercept ? survey.mean[j] : 0)),
+      scale: Float64Array.from(kept, size),
+    },
+    p: kept.length + (intercept ? 1 : 0),
+    intercept,
+    kept: kept.map((j) => columns[j]),
+    sd: Float64Array.from(kept, (j) => survey.sd[j]),
+    dropped: all.filter((j) => !kept.includes(j)).map((j) => columns[j].name),
+  };
+}
+
+/** How many fits the specification asks for: one for each λ. */
+export const fitCount = ({ penalties }: FitSpecification): number =>
+  Math.max(1, ...penalties.map((penalty) => penalty.lambda.length));
+
+/** The λ of fit number `fit`: one number, one for each penalty where there are several, null without a penalty. */
+export function lambdaOf({ penalties }: FitSpecification, fit: number): number | number[] | null {
+  const lambdas = penalties.map(({ lambda }) => lambda[Math.min(fit, lambda.length - 1)]);
+  return lambdas.length === 0 ? null : lambdas.length === 1 ? lambdas[0] : lambdas;
+}
+
+/**
+ * The penalty of fit number `fit` on solver columns. On the original scale it weighs b_j · sd_j (scaled) or b_j, and
+ * θ_j = b_j · scale_j, so a column's factor is sd_j / scale_j or 1 / scale_j.
+ */
+export function penaltyOn(specification: FitSpecification, frame: Frame, fit: number): Penalty {
+  const out = noPenalty(frame.p);
+  const first = frame.intercept ? 1 : 0;
+  for (const penalty of specification.penalties) {
+    const lambda = penalty.lambda[Math.min(fit, penalty.lambda.length - 1)];
+    frame.kept.forEach((column, j) => {
+      const term = specification.terms[column.term];
+      const multiplier = penalty.perTerm[column.name] ?? penalty.perTerm[term.name] ?? 1;
+      const factor = (penalty.scaled ? frame.sd[j] : 1) / frame.scaling.scale[j];
+      out.l1[first + j] += lambda * penalty.l1 * multiplier * factor;
+      out.l2[first + j] += lambda * (1 - penalty.l1) * multiplier * factor * factor;
+    });
+  }
+  return out;
+}
+
+/** The intercept-only fit on solver columns: where every method starts. */
+export function interceptOnly(
+  specification: FitSpecification,
+  frame: Frame,
+  survey: PooledSurvey,
+): Float64Array {
+  const start = new Float64Array(frame.p);
+  if (!frame.intercept) return start;
+  const { weightSum, weightedSum, exposureSum } = survey.response;
+  const mean = weightedSum / weightSum;
+  start[0] = {
+    squared: mean,
+    logistic: Math.log(mean / (1 - mean)),
+    poisson: Math.log(weightedSum / exposureSum),
+  }[specification.loss];
+  return start;
+}
+
+/** Coefficients on the original scale from solver coefficients θ. */
+export function originalScale(
+  frame: Frame,
+  theta: Float64Array,
+): { readonly intercept: number | null; readonly coefficients: Record<string, number> } {
+  const first = frame.intercept ? 1 : 0;
+  const coefficients: Record<string, number> = {};
+  let shift = 0;
+  frame.kept.forEach((column, j) => {
+    const value = theta[first + j] / frame.scaling.scale[j];
+    coefficients[column.name] = value;
+    shift += value * frame.scaling.center[j];
+  });
+  return { intercept: frame.intercept ? theta[0] - shift : null, coefficients };
+}

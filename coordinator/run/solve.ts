@@ -1,0 +1,118 @@
+import type { WorkAnswer } from '../../protocol/messages/round.js';
+import { numbersOfAnswer } from '../../protocol/numbers.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+import { curvatureRung } from '../consensus/curvature-rung.js';
+import type { Method, MethodEnd, Progress } from '../consensus/method.js';
+import { pooledRung } from '../consensus/pooled-rung.js';
+import type { ConsensusProblem } from '../consensus/problem.js';
+import { proximalRung } from '../consensus/proximal-rung.js';
+import { Lockstep } from './lockstep.js';
+import type { Member, RosterAnswers, RunAsk, Shown } from './run.js';
+import type { RungChoice } from './rung.js';
+import { type Frame, fitCount, interceptOnly, penaltyOn } from './scale.js';
+import { firstRefusal, type PooledSurvey, type Stop } from './survey.js';
+import { numbersDown } from './traffic.js';
+
+/** What the solve stage leaves: one end per fit, the rounds it took and the numbers that moved. */
+export interface Solved {
+  readonly ends: readonly MethodEnd[];
+  readonly rounds: number;
+  readonly shown: Shown;
+  readonly up: readonly number[];
+  readonly down: readonly number[];
+}
+
+/** Stage three: the consensus method on the rung chosen, one problem per fit, all in lock-step. */
+export function* solve(
+  specification: FitSpecification,
+  roster: readonly Member[],
+  survey: PooledSurvey,
+  frame: Frame,
+  choice: RungChoice,
+  surveyed: Shown,
+): Generator<RunAsk, Solved | Stop, RosterAnswers> {
+  const fits = fitCount(specification);
+  const methods = Array.from({ length: fits }, (_, fit) =>
+    methodOn(choice.rung, consensusProblem(specification, survey, frame, choice, fit)),
+  );
+  const lockstep = new Lockstep(methods, roster.length);
+  const up = roster.map(() => 0);
+  const down = roster.map(() => 0);
+  let shown = surveyed;
+  let round = 0;
+  while (lockstep.asks.length > 0) {
+    // ask 1 is the survey
+    const askNumber = round + 2;
+    const works = lockstep.works(askNumber);
+    const answers = yield { stage: 'solve', works, scaling: frame.scaling, shown };
+    const refused = firstRefusal(answers, roster);
+    if (refused !== null) return refused;
+    const given = answers as readonly (readonly WorkAnswer[])[];
+    round++;
+    given.forEach((own, i) => {
+      up[i] += own.reduce((sum, answer) => sum + numbersOfAnswer(answer), 0);
+      down[i] += works[i].reduce((sum, work) => sum + numbersDown(work, askNumber), 0);
+    });
+    const open = lockstep.asks.length;
+    lockstep.receive(given, askNumber);
+    shown = {
+      kind: 'round',
+      round,
+      progress: shownProgress(lockstep, specification.rounds.tolerance),
+      tolerance: specification.rounds.tolerance,
+      fitsOpen: open,
+      fitsTotal: fits,
+    };
+  }
+  return { ends: lockstep.ends, rounds: round, shown, up, down };
+}
+
+function consensusProblem(
+  specification: FitSpecification,
+  survey: PooledSurvey,
+  frame: Frame,
+  choice: RungChoice,
+  fit: number,
+): ConsensusProblem {
+  return {
+    p: frame.p,
+    siteWeights: survey.sites.map(({ rowsUsed }) => rowsUsed / survey.rowsTotal),
+    penalty: penaltyOn(specification, frame, fit),
+    start: interceptOnly(specification, frame, survey),
+    tolerance: specification.rounds.tolerance,
+    roundsMost: specification.rounds.most,
+    quadratic: specification.loss === 'squared',
+    curvatureMost: choice.curvatureMost,
+  };
+}
+
+function methodOn(rung: RungChoice['rung'], problem: ConsensusProblem): Method {
+  switch (rung) {
+    case 'pooled':
+      return pooledRung(problem);
+    case 'curvature':
+      return curvatureRung(problem);
+    case 'sketched':
+    case 'proximal':
+      return proximalRung(problem);
+  }
+}
+
+/** Of the fits still open, the one farthest from the tolerance; once all have ended, the worst certificate. */
+function shownProgress(lockstep: Lockstep, tolerance: number): Progress {
+  const open = lockstep.asks.map(({ progress }) => progress);
+  const farthest = (a: Progress, b: Progress): Progress =>
+    (b.relativeGap ?? Number.POSITIVE_INFINITY) > (a.relativeGap ?? Number.POSITIVE_INFINITY) ? b : a;
+  if (open.length > 0) return open.reduce(farthest);
+  return lockstep.ends
+    .map((end): Progress => ({
+      rung: end.rung,
+      purpose: 'certificate',
+      primalResidual: null,
+      dualResidual: null,
+      relativeGap: end.certificate?.relativeGap ?? null,
+      gapMeasured: (end.certificate?.relativeGap ?? Number.POSITIVE_INFINITY) <= tolerance,
+      objective: end.loss + end.penalty,
+    }))
+    .reduce(farthest);
+}

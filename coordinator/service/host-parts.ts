@@ -1,0 +1,69 @@
+import type { Checked, FailureCode } from '../../protocol/failure.js';
+import type { ToWorker } from '../../protocol/messages/to-worker.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+import type { Journal } from '../journal/journal.js';
+import type { LogEvent } from '../run/log-event.js';
+import type { Member, Run, RunEnd } from '../run/run.js';
+
+/** A run as it was accepted: what is fitted, and the bytes its digest is of. */
+export interface AcceptedRun {
+  readonly run: string;
+  readonly specification: FitSpecification;
+  readonly canonical: string;
+  readonly digest: string;
+}
+
+/** A member's present connection. The object is the connection's identity. */
+export interface LinkedMember {
+  readonly member: Member;
+  /** False when the connection is closed or its buffer full; the panel asks again. */
+  send(message: ToWorker): boolean;
+  close(code: number, reason: string): void;
+}
+
+export interface HostTime {
+  /** Milliseconds since 1970, for people. */
+  wallMs(): number;
+  /** Milliseconds on a clock that does not go back, for durations. */
+  steadyMs(): number;
+  /** Calls once after `delayMs`, unless the returned function is called before. */
+  after(delayMs: number, call: () => void): () => void;
+}
+
+/** For the operational log; never the round log. */
+export interface Notice {
+  readonly level: 'debug' | 'info' | 'warn' | 'error';
+  readonly message: string;
+  readonly code?: FailureCode;
+  readonly site?: string;
+  readonly detail?: unknown;
+}
+
+/** Everything a run host is given; the service gives sockets and files, the simulator virtual time and memory. */
+export interface HostParts {
+  readonly accepted: AcceptedRun;
+  /** The run's generator for a roster. */
+  start(roster: readonly Member[]): Run;
+  readonly journal: Journal;
+  readonly time: HostTime;
+  /** All connections there are now, in any order. */
+  connected(): readonly LinkedMember[];
+  /** Whether one more run may leave the waiting state; when one may again, `poke` is called. */
+  mayStart(): boolean;
+  log(event: LogEvent): void;
+  notice(notice: Notice): void;
+  /** Writes the result folder, durably; returns its path. */
+  keepResult(end: RunEnd): Promise<Checked<string>>;
+  /** What the round log holds already (a run taken up again); rounds up to `round` are not logged twice. */
+  readonly logged: { readonly survey: boolean; readonly round: number };
+  /** Node's version, for the journal. */
+  readonly node: string;
+}
+
+export type HostState =
+  /** For members, or for its turn. */
+  | { readonly state: 'waiting' }
+  | { readonly state: 'running'; readonly round: number }
+  | { readonly state: 'ended'; readonly end: RunEnd }
+  /** The state folder cannot be written: nothing more happens until the coordinator is started again. */
+  | { readonly state: 'halted'; readonly reason: string; readonly round: number };

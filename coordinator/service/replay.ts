@@ -1,0 +1,72 @@
+import { type Checked, fail, succeed } from '../../protocol/failure.js';
+import type { Journal } from '../journal/journal.js';
+import { type AnsweredRecord, decodeReply, type EndedRecord, type OpenedRecord } from '../journal/records.js';
+import type { Reply } from '../panel/panel.js';
+import type { Drive, Turn } from './drive.js';
+
+/** What the journal led to: nothing recorded yet, a run in the middle, or a run that had ended. */
+export type Replayed =
+  | { readonly kind: 'empty' }
+  | { readonly kind: 'open'; readonly drive: Drive; readonly turn: Turn }
+  | { readonly kind: 'ended'; readonly drive: Drive | null; readonly turn: Turn | null; readonly ended: EndedRecord };
+
+/**
+ * Runs the recorded answers through the generator again. Fails with `journal-broken` where the journal is damaged or
+ * the run asks something else than it asked then.
+ */
+export async function replay(
+  journal: Journal,
+  run: string,
+  openDrive: (opened: OpenedRecord) => Checked<Drive>,
+): Promise<Checked<Replayed>> {
+  let drive: Drive | null = null;
+  let turn: Turn | null = null;
+  for (;;) {
+    const next = await journal.next();
+    if (!next.ok) return next;
+    const record = next.value;
+    if (record === null) {
+      if (drive === null || turn === null) return succeed({ kind: 'empty' });
+      return succeed({ kind: 'open', drive, turn });
+    }
+    if (record.record === 'opened') {
+      if (drive !== null) return broken('It is opened twice.');
+      const opened = openDrive(record);
+      if (!opened.ok) return opened;
+      drive = opened.value;
+      turn = drive.begin();
+    } else if (record.record === 'answered') {
+      if (drive === null || turn === null) return broken('An answer comes before the opening.');
+      const fed = feedRecorded(drive, turn, run, record);
+      if (!fed.ok) return fed;
+      turn = fed.value;
+    } else {
+      const after = await journal.next();
+      if (!after.ok) return after;
+      if (after.value !== null) return broken('Something is recorded after the end.');
+      return succeed({ kind: 'ended', drive, turn, ended: record });
+    }
+  }
+}
+
+function feedRecorded(drive: Drive, turn: Turn, run: string, record: AnsweredRecord): Checked<Turn> {
+  if (turn.kind !== 'ask' || turn.ask !== record.ask) {
+    return broken(`Ask ${record.ask} is recorded where the run does not ask it.`);
+  }
+  if (drive.digestOf(turn.asked) !== record.asked || record.replies.length !== drive.roster.length) {
+    return broken(`Ask ${record.ask} was another one when it was recorded.`);
+  }
+  const replies: Reply[] = [];
+  for (const bytes of record.replies) {
+    const reply = decodeReply(run, record.ask, bytes);
+    if (!reply.ok) return reply;
+    replies.push(reply.value);
+  }
+  return succeed(drive.feed(turn.asked, replies, record.measured));
+}
+
+const broken = (what: string) =>
+  fail('journal-broken', `The journal does not fit the run. ${what}`, {
+    remedy:
+      'Take the run up with the version of commonfit and Node that its journal names, or submit the specification again.',
+  });

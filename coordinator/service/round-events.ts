@@ -1,0 +1,100 @@
+import type { Measured } from '../journal/records.js';
+import type { LogEvent } from '../run/log-event.js';
+import type { ResultDocument } from '../run/result.js';
+import { type Member, memberName, type RunEnd, type Shown } from '../run/run.js';
+
+/** The round log's line for what the answers to one ask have shown, with the times that were measured. */
+export function eventOfShown(
+  shown: Shown,
+  measured: Measured,
+  roster: readonly Member[],
+  roundsMost: number,
+): LogEvent {
+  if (shown.kind === 'survey') {
+    const { kind: _, ...survey } = shown;
+    return { event: 'survey', ...survey, tookMs: measured.tookMs, at: measured.at };
+  }
+  const { slowest, tookMs, numbersUp, numbersDown, at } = measured;
+  const { progress } = shown;
+  return {
+    event: 'round',
+    round: shown.round,
+    roundsMost,
+    rung: progress.rung,
+    purpose: progress.purpose,
+    fitsOpen: shown.fitsOpen,
+    fitsTotal: shown.fitsTotal,
+    relativeGap: progress.relativeGap,
+    gapMeasured: progress.gapMeasured,
+    tolerance: shown.tolerance,
+    primalResidual: progress.primalResidual,
+    dualResidual: progress.dualResidual,
+    objective: progress.objective,
+    tookMs,
+    slowest: slowest === null ? null : { site: memberName(roster[slowest.member]), ms: slowest.ms },
+    numbersUp,
+    numbersDown,
+    at,
+  };
+}
+
+/** The last line of the round log; of several fits, the certificate that bounds least. */
+export function outcomeEvent(end: RunEnd, folder: string, at: string): LogEvent {
+  const worst = end.result.fits
+    .flatMap(({ certificate }) => (certificate === null ? [] : [certificate]))
+    .reduce<{ kind: string; relativeGap: number } | null>(
+      (most, next) => (most === null || next.relativeGap > most.relativeGap ? next : most),
+      null,
+    );
+  return {
+    event: 'outcome',
+    outcome: end.outcome,
+    reason: end.reason,
+    rounds: end.result.rounds,
+    relativeGap: worst?.relativeGap ?? null,
+    certificate: worst?.kind ?? null,
+    folder,
+    at,
+  };
+}
+
+/** What of an interrupted run is known, for its result document. */
+export interface KnownSoFar {
+  readonly roster: readonly Member[];
+  readonly survey: Extract<Shown, { kind: 'survey' }> | null;
+  readonly round: number;
+  /** Per member, in roster order. */
+  readonly numbers: readonly { readonly up: number; readonly down: number }[];
+}
+
+/** The end of a run that did not return by itself: no fit, and whatever is known about the sites. */
+export function forcedEnd(
+  ending: { readonly outcome: RunEnd['outcome']; readonly reason: string },
+  about: { readonly title: string; readonly digest: string; readonly tolerance: number; readonly software: string },
+  known: KnownSoFar,
+): RunEnd {
+  const { roster, survey, round, numbers } = known;
+  const result: ResultDocument = {
+    format: 1,
+    outcome: ending.outcome,
+    reason: ending.reason,
+    title: about.title,
+    specification: about.digest,
+    software: about.software,
+    sites: roster.map((member, index) => ({
+      site: memberName(member),
+      rowsUsed: survey?.sites[index]?.rowsUsed ?? null,
+      rowsDropped: survey?.sites[index]?.rowsDropped ?? null,
+      kernel: member.kernel,
+    })),
+    rowsTotal: survey?.rowsTotal ?? null,
+    rung: survey?.rung ?? null,
+    rungReason: survey?.rungReason ?? null,
+    tolerance: about.tolerance,
+    fits: [],
+    notes: survey?.notes ?? [],
+    rounds: round,
+    numbersSent: roster.map((member, index) => ({ site: memberName(member), ...numbers[index] })),
+  };
+  return { outcome: ending.outcome, reason: ending.reason, shown: null, result };
+}

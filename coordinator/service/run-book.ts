@@ -1,0 +1,241 @@
+import { randomBytes } from 'node:crypto';
+import { readdir, readFile } from 'node:fs/promises';
+import { join, resolve } from 'node:path';
+import { type Checked, type Failure, fail, succeed } from '../../protocol/failure.js';
+import type { Answer, Refusal } from '../../protocol/messages/round.js';
+import { canonicalText, digestOf } from '../../protocol/specification/canonical.js';
+import { parseFitSpecification } from '../../protocol/specification/parse.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+import { fileStore } from '../journal/file-store.js';
+import { openJournal } from '../journal/journal.js';
+import type { LogEvent } from '../run/log-event.js';
+import type { Member, Run } from '../run/run.js';
+import { makeFolder, unwritableIfFails, writeWhole } from './files.js';
+import type { HostTime, LinkedMember, Notice } from './host-parts.js';
+import { keepResult, loggedIn, RUN_FILES, type RunEntry, type RunSummary, summaryOf } from './run-entry.js';
+import { RunHost } from './run-host.js';
+import { RunLog, readLog } from './run-log.js';
+
+export interface BookParts {
+  readonly state: string;
+  readonly runningMost: number;
+  readonly waitingMost: number;
+  readonly time: HostTime;
+  readonly node: string;
+  fit(specification: FitSpecification, digest: string, roster: readonly Member[]): Run;
+  connected(): readonly LinkedMember[];
+  notice(notice: Notice): void;
+}
+
+export type Submitted =
+  | { readonly ok: true; readonly run: string; readonly digest: string }
+  | { readonly ok: false; readonly failures: readonly Failure[] };
+
+/** All runs of a state folder: accepts new ones, takes up unfinished ones, and hands links and messages to them. */
+export class RunBook {
+  private readonly entries = new Map<string, RunEntry>();
+  private closing = false;
+
+  constructor(private readonly parts: BookParts) {}
+
+  /** Reads the state folder and takes up every run without an outcome. */
+  async recover(): Promise<Checked<null>> {
+    const made = await makeFolder(this.runsFolder);
+    if (!made.ok) return made;
+    const names = await unwritableIfFails(this.runsFolder, () => readdir(this.runsFolder));
+    if (!names.ok) return names;
+    for (const name of names.value.sort()) {
+      const taken = await this.recoverRun(name);
+      if (!taken.ok) this.parts.notice({ level: 'error', ...taken.failure, detail: { run: name } });
+    }
+    return succeed(null);
+  }
+
+  list(): RunSummary[] {
+    return [...this.entries.values()].map(summaryOf);
+  }
+
+  find(run: string): RunEntry | null {
+    return this.entries.get(run) ?? null;
+  }
+
+  /** Accepts a specification; once this gives a run, the run survives a crash. */
+  async submit(text: string, file: string): Promise<Submitted> {
+    const parsed = parseFitSpecification(text, file);
+    if (!parsed.ok) return parsed;
+    if (this.count('waiting') >= this.parts.waitingMost) {
+      const { failure } = fail('coordinator-full', `${this.parts.waitingMost} runs are waiting already.`, {
+        remedy: 'Submit again when one of them has started, or cancel one.',
+      });
+      return { ok: false, failures: [failure] };
+    }
+    const digest = digestOf(canonicalText(parsed.value));
+    const submittedAt = new Date(this.parts.time.wallMs()).toISOString();
+    const run = newRunId(submittedAt);
+    const accepted = await this.accept(run, text, parsed.value, digest, submittedAt);
+    return accepted.ok ? { ok: true, run, digest } : { ok: false, failures: [accepted.failure] };
+  }
+
+  /** False when the run has ended already. */
+  cancel(entry: RunEntry): boolean {
+    return entry.open?.host.cancel() ?? false;
+  }
+
+  connected(linked: LinkedMember): void {
+    for (const { open } of this.entries.values()) open?.host.connected(linked);
+  }
+
+  lost(linked: LinkedMember): void {
+    for (const { open } of this.entries.values()) open?.host.lost(linked);
+  }
+
+  message(linked: LinkedMember, message: Answer | Refusal): void {
+    const open = this.entries.get(message.run)?.open;
+    if (open !== undefined && open !== null) {
+      open.host.receive(linked, message);
+      return;
+    }
+    const text = `A reply to ask ${message.ask} of run ${message.run}, which is not open, was dropped.`;
+    this.parts.notice({ level: 'warn', code: 'answer-unasked', message: text, site: linked.member.site });
+  }
+
+  /** Why a run cannot go on although it should; null when all is well. */
+  halted(): string | null {
+    for (const { open } of this.entries.values()) {
+      if (open?.host.state.state === 'halted') return open.host.state.reason;
+    }
+    return null;
+  }
+
+  /** Stops every open run where it stands; the next start takes it up. */
+  async close(): Promise<void> {
+    this.closing = true;
+    for (const { open } of this.entries.values()) {
+      if (open === null) continue;
+      await open.host.close();
+      open.log.close();
+    }
+  }
+
+  private get runsFolder(): string {
+    return resolve(this.parts.state, 'runs');
+  }
+
+  private async accept(
+    run: string,
+    text: string,
+    specification: FitSpecification,
+    digest: string,
+    submittedAt: string,
+  ): Promise<Checked<null>> {
+    const { title, sites } = specification;
+    const folder = join(this.runsFolder, run);
+    const made = await makeFolder(folder);
+    if (!made.ok) return made;
+    const kept = await writeWhole(join(folder, RUN_FILES.specification), text);
+    if (!kept.ok) return kept;
+    const log = await RunLog.open(join(folder, RUN_FILES.log));
+    if (!log.ok) return log;
+    const accepted = { event: 'accepted', run, title, digest, sites, at: submittedAt } as const;
+    const logged = await log.value.append(accepted);
+    if (!logged.ok) return logged;
+    const entry = { run, title, digest, submittedAt, folder, open: null, ended: null };
+    return this.openRun(entry, specification, log.value, [accepted]);
+  }
+
+  private async recoverRun(run: string): Promise<Checked<null>> {
+    const folder = join(this.runsFolder, run);
+    const log = await RunLog.open(join(folder, RUN_FILES.log));
+    if (!log.ok) return log;
+    const events = await readLog(log.value.path);
+    if (!events.ok) return events;
+    const accepted = events.value.find((event) => event.event === 'accepted');
+    if (accepted === undefined) {
+      log.value.close();
+      return fail('not-found', `Folder ${folder} is not of an accepted run and was left alone.`);
+    }
+    const { title, digest, at } = accepted;
+    const entry: RunEntry = { run, title, digest, submittedAt: at, folder, open: null, ended: null };
+    const outcome = events.value.find((event) => event.event === 'outcome');
+    if (outcome !== undefined) {
+      log.value.close();
+      entry.ended = { outcome: outcome.outcome, reason: outcome.reason, round: outcome.rounds };
+      this.entries.set(run, entry);
+      return succeed(null);
+    }
+    const file = join(folder, RUN_FILES.specification);
+    const text = await unwritableIfFails(file, () => readFile(file, 'utf8'));
+    if (!text.ok) return text;
+    const parsed = parseFitSpecification(text.value, file);
+    if (parsed.ok) return this.openRun(entry, parsed.value, log.value, events.value);
+    log.value.close();
+    const [failure] = parsed.failures;
+    entry.ended = { outcome: null, reason: `It cannot be taken up: ${failure.message}`, round: 0 };
+    this.entries.set(run, entry);
+    return { ok: false, failure };
+  }
+
+  private async openRun(
+    entry: RunEntry,
+    specification: FitSpecification,
+    log: RunLog,
+    events: readonly LogEvent[],
+  ): Promise<Checked<null>> {
+    const store = await fileStore(join(entry.folder, RUN_FILES.journal));
+    if (!store.ok) return store;
+    const { parts } = this;
+    const canonical = canonicalText(specification);
+    const digest = digestOf(canonical);
+    const host = new RunHost(
+      {
+        accepted: { run: entry.run, specification, canonical, digest },
+        start: (roster) => parts.fit(specification, digest, roster),
+        journal: openJournal(store.value),
+        time: parts.time,
+        connected: () => parts.connected(),
+        mayStart: () => this.count('running') < parts.runningMost,
+        log: (event) => void this.log(log, event),
+        notice: (notice) => parts.notice({ ...notice, detail: { run: entry.run, about: notice.detail } }),
+        keepResult: (end) => keepResult(entry.folder, end),
+        logged: loggedIn(events),
+        node: parts.node,
+      },
+      () => this.settle(entry),
+    );
+    entry.open = { host, log };
+    this.entries.set(entry.run, entry);
+    void host.open();
+    return succeed(null);
+  }
+
+  private async log(log: RunLog, event: LogEvent): Promise<void> {
+    const kept = await log.append(event);
+    if (!kept.ok) this.parts.notice({ level: 'error', ...kept.failure });
+  }
+
+  /** Lets go of a run that has ended and gives its place to those that wait, first come first served. */
+  private settle(entry: RunEntry): void {
+    const { open } = entry;
+    if (open !== null && open.host.state.state === 'ended') {
+      const { outcome, reason, round } = summaryOf(entry);
+      entry.ended = { outcome, reason, round };
+      entry.open = null;
+      open.log.close();
+      void open.host.close();
+    }
+    if (this.closing) return;
+    for (const other of this.entries.values()) other.open?.host.poke();
+  }
+
+  private count(state: 'waiting' | 'running'): number {
+    let count = 0;
+    for (const { open } of this.entries.values()) if (open?.host.state.state === state) count += 1;
+    return count;
+  }
+}
+
+/** Sorts by time of submission: `20260301-093015-1f2e3d4c`. */
+function newRunId(submittedAt: string): string {
+  const [date, time] = submittedAt.slice(0, 19).replaceAll(/[-:]/g, '').split('T');
+  return `${date}-${time}-${randomBytes(4).toString('hex')}`;
+}

@@ -1,0 +1,88 @@
+import { join } from 'node:path';
+import { type Checked, succeed } from '../../protocol/failure.js';
+import { coefficientsCsv, roundsCsv } from '../report/tables.js';
+import type { LogEvent } from '../run/log-event.js';
+import type { RunEnd } from '../run/run.js';
+import { writeWhole } from './files.js';
+import type { RunHost } from './run-host.js';
+import { readLog, type RunLog } from './run-log.js';
+
+/** A run as the service lists it. */
+export interface RunSummary {
+  readonly run: string;
+  readonly title: string;
+  readonly digest: string;
+  readonly state: 'waiting' | 'running' | 'ended';
+  readonly outcome: string | null;
+  readonly reason: string | null;
+  readonly round: number;
+  readonly submittedAt: string;
+  readonly folder: string;
+}
+
+/** One accepted run: what never changes, and its host while it is open. */
+export interface RunEntry {
+  readonly run: string;
+  readonly title: string;
+  readonly digest: string;
+  readonly submittedAt: string;
+  readonly folder: string;
+  open: { readonly host: RunHost; readonly log: RunLog } | null;
+  /** How it ended, or why it could not be taken up again. */
+  ended: { readonly outcome: string | null; readonly reason: string | null; readonly round: number } | null;
+}
+
+export const RUN_FILES = {
+  specification: 'specification.yaml',
+  journal: 'journal',
+  log: 'log.jsonl',
+  result: 'result.json',
+  coefficients: 'coefficients.csv',
+  rounds: 'rounds.csv',
+} as const;
+
+export function summaryOf(entry: RunEntry): RunSummary {
+  const { run, title, digest, submittedAt, folder, ended } = entry;
+  const fixed = { run, title, digest, submittedAt, folder };
+  if (ended !== null) return { ...fixed, state: ended.outcome === null ? 'waiting' : 'ended', ...ended };
+  const state = entry.open?.host.state ?? { state: 'waiting' };
+  switch (state.state) {
+    case 'waiting':
+      return { ...fixed, state: 'waiting', outcome: null, reason: null, round: 0 };
+    case 'running':
+      return { ...fixed, state: 'running', outcome: null, reason: null, round: state.round };
+    case 'halted':
+      return { ...fixed, state: 'running', outcome: null, reason: state.reason, round: state.round };
+    case 'ended': {
+      const { outcome, reason, result } = state.end;
+      return { ...fixed, state: 'ended', outcome, reason, round: result.rounds };
+    }
+  }
+}
+
+/** Writes the result files, each as a whole. Gives the folder back. */
+export async function keepResult(folder: string, end: RunEnd): Promise<Checked<string>> {
+  const events = await readLog(join(folder, RUN_FILES.log));
+  if (!events.ok) return events;
+  const files = [
+    [RUN_FILES.coefficients, coefficientsCsv(end.result)],
+    [RUN_FILES.rounds, roundsCsv(events.value)],
+    [RUN_FILES.result, `${JSON.stringify(end.result, null, 2)}\n`],
+  ] as const;
+  for (const [name, text] of files) {
+    const kept = await writeWhole(join(folder, name), text);
+    if (!kept.ok) return kept;
+  }
+  return succeed(folder);
+}
+
+/** What a round log holds already, so that a run taken up again does not say it twice. */
+export function loggedIn(events: readonly LogEvent[]): { survey: boolean; round: number } {
+  let round = 0;
+  let survey = false;
+  for (const event of events) {
+    if (event.event === 'survey') survey = true;
+    if (event.event === 'round') round = Math.max(round, event.round);
+  }
+  return { survey, round };
+}

@@ -1,0 +1,311 @@
+import { type Checked, describeFailure, type Failure, fail, succeed } from '../../protocol/failure.js';
+import type { Answer, Refusal } from '../../protocol/messages/round.js';
+import { SOFTWARE } from '../../protocol/version.js';
+import { type EndedRecord, encodeReply, type Measured, type OpenedRecord } from '../journal/records.js';
+import type { Reply } from '../panel/panel.js';
+import { type Member, memberName, type RunAsk, type RunEnd, type RunOutcome, type Shown } from '../run/run.js';
+import { AskDesk } from './ask-desk.js';
+import { Drive, type Turn } from './drive.js';
+import type { HostParts, HostState, LinkedMember } from './host-parts.js';
+import { type Replayed, replay } from './replay.js';
+import { eventOfShown, forcedEnd, outcomeEvent } from './round-events.js';
+import { WaitingRoom } from './waiting-room.js';
+
+type Ending = { readonly outcome: RunOutcome; readonly reason: string };
+
+/**
+ * Drives one run from its acceptance (or its journal) to its outcome. An answer reaches the generator only after the
+ * journal holds it, and an outcome is told only after the journal and the result folder hold it. Everything with a
+ * socket, clock or file comes in through `parts`.
+ */
+export class RunHost {
+  private phase: 'idle' | 'waiting' | 'starting' | 'running' | 'ended' | 'halted' | 'stopped' = 'idle';
+  private room: WaitingRoom | null = null;
+  private drive: Drive | null = null;
+  private desk: AskDesk | null = null;
+  /** Tasks that write the journal, one at a time: nothing else may move the run meanwhile. */
+  private tasks = 0;
+  private work: Promise<void> = Promise.resolve();
+  private cancelled = false;
+  private end: RunEnd | null = null;
+  private haltReason = '';
+
+  /** `onChange` is called when the run starts, ends or halts. */
+  constructor(
+    private readonly parts: HostParts,
+    private readonly onChange: () => void = () => {},
+  ) {}
+
+  /** Reads the journal and takes the run up where it stands. To be called once. */
+  open(): Promise<void> {
+    return this.alone(async () => {
+      const { accepted, journal } = this.parts;
+      const replayed = await replay(journal, accepted.run, (opened) => this.openDrive(opened));
+      if (journal.tornBytes > 0) {
+        const message = `The last record of the journal was cut off; ${journal.tornBytes} bytes of it were removed.`;
+        this.parts.notice({ level: 'warn', message, detail: { run: accepted.run } });
+      }
+      if (!replayed.ok) return this.stopOnBrokenJournal(replayed.failure);
+      return this.resume(replayed.value);
+    });
+  }
+
+  get state(): HostState {
+    const round = this.drive?.round ?? 0;
+    if (this.end !== null && this.phase === 'ended') return { state: 'ended', end: this.end };
+    if (this.phase === 'halted') return { state: 'halted', reason: this.haltReason, round };
+    return this.phase === 'starting' || this.drive !== null ? { state: 'running', round } : { state: 'waiting' };
+  }
+
+  connected(linked: LinkedMember): void {
+    const ours = this.desk?.connected(linked) ?? (this.phase === 'waiting' && this.isExpected(linked.member));
+    if (ours) this.logSite(linked.member, 'connected');
+    this.poke();
+  }
+
+  lost(linked: LinkedMember): void {
+    const ours = this.desk?.lost(linked) ?? (this.phase === 'waiting' && this.isExpected(linked.member));
+    if (ours) this.logSite(linked.member, 'lost');
+    this.poke();
+  }
+
+  receive(linked: LinkedMember, message: Answer | Refusal): void {
+    this.desk?.receive(linked, message);
+  }
+
+  /** Looks again whether the run may leave the waiting state. */
+  poke(): void {
+    if (this.phase === 'waiting') this.room?.check();
+  }
+
+  /** Ends the run as `cancelled`, now or as soon as the journal is free. False when it has ended already. */
+  cancel(): boolean {
+    if (this.phase === 'ended' || this.phase === 'halted' || this.end !== null) return false;
+    this.cancelled = true;
+    if (this.tasks === 0 && this.phase !== 'idle') void this.alone(() => this.endCancelled());
+    return true;
+  }
+
+  /** Stops without an outcome, as a crash would, but after the write in progress. */
+  async close(): Promise<void> {
+    if (this.phase !== 'ended') this.phase = 'stopped';
+    this.room?.close();
+    this.desk?.stop(null);
+    await this.work;
+    await this.parts.journal.close();
+  }
+
+  private async resume(replayed: Replayed): Promise<void> {
+    if (replayed.kind === 'ended') return this.endAgain(replayed);
+    if (replayed.kind === 'open') {
+      this.parts.log({ event: 'resumed', round: replayed.drive.round, at: this.now() });
+      return this.run(replayed.drive, replayed.turn);
+    }
+    if (this.phase === 'stopped') return;
+    this.phase = 'waiting';
+    if (this.cancelled) return this.endCancelled();
+    this.room = new WaitingRoom(this.parts, {
+      waiting: (sites) => this.parts.log({ event: 'waiting', sites, at: this.now() }),
+      ready: (roster) => {
+        this.phase = 'starting';
+        void this.alone(() => this.begin(roster));
+      },
+      giveUp: (missing) => void this.alone(() => this.endForced(siteMissing(missing))),
+    });
+    this.room.check();
+  }
+
+  private async begin(roster: readonly Member[]): Promise<void> {
+    const { accepted, journal, node } = this.parts;
+    const { run, canonical, digest } = accepted;
+    const opened: OpenedRecord = {
+      record: 'opened',
+      format: 1,
+      run,
+      specification: canonical,
+      digest,
+      roster: roster.map((member) => ({ ...member })),
+      software: SOFTWARE,
+      node,
+    };
+    const kept = await journal.append(opened);
+    if (!kept.ok) return this.halt(kept.failure);
+    const drive = this.openDrive(opened);
+    if (!drive.ok) return this.halt(drive.failure);
+    return this.run(drive.value, drive.value.begin());
+  }
+
+  private openDrive({ run, digest, roster }: OpenedRecord): Checked<Drive> {
+    const { accepted } = this.parts;
+    if (run !== accepted.run || digest !== accepted.digest) {
+      return fail('journal-broken', `The journal is of run ${run} with specification ${digest}.`);
+    }
+    this.drive = new Drive(
+      run,
+      roster,
+      (members) => this.parts.start(members),
+      (shown, measured) => this.logShown(shown, measured, roster),
+    );
+    return succeed(this.drive);
+  }
+
+  private async run(drive: Drive, turn: Turn): Promise<void> {
+    if (this.phase === 'stopped') return;
+    this.phase = 'running';
+    this.desk = new AskDesk(this.parts, drive.roster, {
+      pass: (asked, ask, replies, measured) => void this.alone(() => this.take(asked, ask, replies, measured)),
+      giveUp: (names) => void this.alone(() => this.endForced(siteMissing(names))),
+      late: (sites, waitedMs, patienceLeftMs) =>
+        this.parts.log({
+          event: 'late',
+          round: drive.survey === null ? 0 : drive.round + 1,
+          sites,
+          waitedMs,
+          patienceLeftMs,
+          at: this.now(),
+        }),
+    });
+    for (const linked of this.parts.connected()) this.desk.connected(linked);
+    this.onChange();
+    return this.go(turn);
+  }
+
+  /** Records the replies, then feeds them to the generator. */
+  private async take(asked: RunAsk, ask: number, replies: readonly Reply[], measured: Measured): Promise<void> {
+    const { drive } = this;
+    if (drive === null) throw new Error('replies before the run started');
+    const { run } = this.parts.accepted;
+    const kept = await this.parts.journal.append({
+      record: 'answered',
+      ask,
+      asked: drive.digestOf(asked),
+      replies: replies.map((reply) => encodeReply(run, ask, reply)),
+      measured,
+    });
+    if (!kept.ok) return this.halt(kept.failure);
+    if (this.phase === 'stopped') return;
+    if (this.cancelled) return this.endCancelled();
+    return this.go(drive.feed(asked, replies, measured));
+  }
+
+  private go(turn: Turn): Promise<void> | void {
+    if (turn.kind === 'end') return this.finish(turn.end, false);
+    if (turn.kind === 'defect') {
+      this.parts.notice({ level: 'error', code: 'internal', message: 'The run failed.', detail: turn.error });
+      return this.endForced({ outcome: 'broken', reason: `A defect of commonfit: ${String(turn.error)}` });
+    }
+    if (this.cancelled) return this.endCancelled();
+    this.desk?.open(turn.ask, turn.asked);
+  }
+
+  private endCancelled(): Promise<void> {
+    return this.endForced({ outcome: 'cancelled', reason: 'Cancelled by the analyst.' });
+  }
+
+  private endForced(ending: Ending): Promise<void> {
+    return this.finish(this.forced(ending), true);
+  }
+
+  private forced(ending: Ending): RunEnd {
+    const { specification, digest } = this.parts.accepted;
+    const { title, rounds } = specification;
+    const { drive } = this;
+    return forcedEnd(
+      ending,
+      { title, digest, tolerance: rounds.tolerance, software: SOFTWARE },
+      {
+        roster: drive?.roster ?? [],
+        survey: drive?.survey ?? null,
+        round: drive?.round ?? 0,
+        numbers: drive?.tally.numbers() ?? [],
+      },
+    );
+  }
+
+  private async finish(end: RunEnd, forced: boolean): Promise<void> {
+    this.room?.close();
+    this.desk?.stop(end.outcome);
+    const { outcome, reason } = end;
+    const kept = await this.parts.journal.append({ record: 'ended', outcome, reason, forced });
+    return kept.ok ? this.publish(end) : this.halt(kept.failure);
+  }
+
+  /** The journal holds the end, but the coordinator stopped before the result folder and the round log did. */
+  private endAgain({ turn, ended }: Extract<Replayed, { kind: 'ended' }>): Promise<void> | void {
+    if (ended.forced) return this.publish(this.forced(endingOf(ended)));
+    if (turn?.kind === 'end') return this.publish(turn.end);
+    return this.stopOnBrokenJournal(
+      fail('journal-broken', 'The journal says that the run has ended; the run itself goes on.').failure,
+    );
+  }
+
+  private async publish(end: RunEnd): Promise<void> {
+    const folder = await this.parts.keepResult(end);
+    if (!folder.ok) return this.halt(folder.failure);
+    this.end = end;
+    this.phase = 'ended';
+    this.parts.log(outcomeEvent(end, folder.value, this.now()));
+    this.onChange();
+  }
+
+  private stopOnBrokenJournal(failure: Failure): Promise<void> | void {
+    this.parts.notice({ level: 'error', code: failure.code, message: describeFailure(failure) });
+    if (failure.code !== 'journal-broken') return this.halt(failure);
+    return this.publish(this.forced({ outcome: 'broken', reason: describeFailure(failure) }));
+  }
+
+  private halt(failure: Failure): void {
+    this.phase = 'halted';
+    this.haltReason = describeFailure(failure);
+    this.desk?.stop(null);
+    this.parts.notice({ level: 'error', code: failure.code, message: this.haltReason });
+    this.onChange();
+  }
+
+  private logShown(shown: Shown, measured: Measured, roster: readonly Member[]): void {
+    const { survey, round } = this.parts.logged;
+    const known = shown.kind === 'survey' ? survey : shown.round <= round;
+    if (known) return;
+    const { most } = this.parts.accepted.specification.rounds;
+    this.parts.log(eventOfShown(shown, measured, roster, most));
+  }
+
+  private logSite(member: Member, change: 'connected' | 'lost'): void {
+    this.parts.log({ event: 'site', site: memberName(member), change, at: this.now() });
+  }
+
+  private isExpected({ site }: Member): boolean {
+    const { sites } = this.parts.accepted.specification;
+    return !('includes' in sites) || sites.includes(site);
+  }
+
+  private now(): string {
+    return new Date(this.parts.time.wallMs()).toISOString();
+  }
+
+  private alone(task: () => Promise<void> | void): Promise<void> {
+    this.tasks += 1;
+    this.work = this.work.then(task).then(
+      () => {
+        this.tasks -= 1;
+      },
+      (error) => {
+        this.tasks -= 1;
+        const reason = error instanceof Error ? error.message : String(error);
+        this.parts.notice({ level: 'error', code: 'internal', message: 'The run host failed.', detail: error });
+        this.halt(fail('internal', `A defect of commonfit: ${reason}.`).failure);
+      },
+    );
+    return this.work;
+  }
+}
+
+const siteMissing = (names: readonly string[]): Ending => ({
+  outcome: 'site-missing',
+  reason: `No answer within the patience of the run from ${names.join(', ')}.`,
+});
+
+const endingOf = ({ outcome, reason }: EndedRecord): Ending => ({
+  outcome: outcome as RunOutcome,
+  reason: reason ?? '',
+});

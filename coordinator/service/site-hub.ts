@@ -1,0 +1,129 @@
+import { CLOSE_CODES } from '../../protocol/close-codes.js';
+import { LIMITS } from '../../protocol/limits.js';
+import type { Link } from '../../protocol/link/link.js';
+import type { Answer, Refusal } from '../../protocol/messages/round.js';
+import type { Hello } from '../../protocol/messages/session.js';
+import type { ToCoordinator } from '../../protocol/messages/to-coordinator.js';
+import type { ToWorker } from '../../protocol/messages/to-worker.js';
+import { PROTOCOL_VERSION, SOFTWARE } from '../../protocol/version.js';
+import { type Member, memberName } from '../run/run.js';
+import type { HostTime, LinkedMember, Notice } from './host-parts.js';
+
+export interface HubReports {
+  connected(linked: LinkedMember): void;
+  lost(linked: LinkedMember): void;
+  message(linked: LinkedMember, message: Answer | Refusal): void;
+  notice(notice: Notice): void;
+}
+
+export interface SiteSummary {
+  readonly site: string;
+  readonly shard: { readonly index: number; readonly of: number };
+  readonly connected: boolean;
+  readonly software: string;
+  readonly kernel: string;
+}
+
+/** Shards a site may split its rows into. */
+const SHARDS_MOST = 1000;
+
+/**
+ * All links to workers. A link counts once its `hello` names the site of its token; of two links of the same member
+ * the newer wins. Members stay listed after their link is lost.
+ */
+export class SiteHub {
+  private readonly present = new Map<string, LinkedMember>();
+  private readonly seen = new Map<string, Omit<SiteSummary, 'connected'>>();
+  private readonly links = new Set<Link<ToWorker, ToCoordinator>>();
+
+  constructor(
+    private readonly time: Pick<HostTime, 'after'>,
+    private readonly reports: HubReports,
+  ) {}
+
+  /** Links there are, greeted or not. */
+  get linkCount(): number {
+    return this.links.size;
+  }
+
+  connected(): readonly LinkedMember[] {
+    return [...this.present.values()];
+  }
+
+  sites(): SiteSummary[] {
+    return [...this.seen.values()].map((summary) => ({ ...summary, connected: this.present.has(keyOf(summary)) }));
+  }
+
+  /** Takes a new link whose token speaks for `site`. */
+  add(link: Link<ToWorker, ToCoordinator>, site: string): void {
+    let linked: LinkedMember | null = null;
+    this.links.add(link);
+    const stopTimer = this.time.after(LIMITS.helloDeadlineMs, () =>
+      link.close(CLOSE_CODES.helloLate, `no hello within ${LIMITS.helloDeadlineMs} ms`),
+    );
+    link.onClose((code, reason) => {
+      stopTimer();
+      this.links.delete(link);
+      if (linked !== null) this.remove(linked);
+      const level = code === CLOSE_CODES.normal || code === CLOSE_CODES.goingAway ? 'info' : 'warn';
+      this.reports.notice({ level, message: `A link closed with code ${code}.`, site, detail: { code, reason } });
+    });
+    link.onMessage((message) => {
+      if (message.kind !== 'hello') {
+        if (linked === null) link.close(CLOSE_CODES.messageUnexpected, `${message.kind} before hello`);
+        else this.reports.message(linked, message);
+        return;
+      }
+      stopTimer();
+      if (linked === null) linked = this.greet(link, site, message);
+      else link.close(CLOSE_CODES.messageUnexpected, 'a second hello');
+    });
+  }
+
+  /** Closes every link because the process is stopping. */
+  close(): void {
+    for (const link of this.links) link.close(CLOSE_CODES.goingAway, 'the coordinator is stopping');
+  }
+
+  private greet(link: Link<ToWorker, ToCoordinator>, site: string, hello: Hello): LinkedMember | null {
+    const { shard, software, kernel } = hello;
+    if (hello.site !== site) {
+      link.close(CLOSE_CODES.tokenRefused, `the token is not one of site ${hello.site}`);
+      return null;
+    }
+    if (shard.index > shard.of || shard.of > SHARDS_MOST) {
+      link.close(CLOSE_CODES.messageUnexpected, `shard ${shard.index} of ${shard.of} (at most ${SHARDS_MOST})`);
+      return null;
+    }
+    const member: Member = { site, shard, kernel };
+    const linked: LinkedMember = {
+      member,
+      send: (message) => link.send(message),
+      close: (code, reason) => link.close(code, reason),
+    };
+    const name = keyOf(member);
+    const older = this.present.get(name);
+    if (older !== undefined) {
+      this.remove(older);
+      older.close(CLOSE_CODES.replaced, 'a newer link of the same member');
+    }
+    const { frameBytesMost } = LIMITS;
+    link.send({ kind: 'welcome', version: PROTOCOL_VERSION, software: SOFTWARE, frameBytesMost });
+    this.present.set(name, linked);
+    this.seen.set(memberName(member), { site, shard, software, kernel });
+    const message = `${memberName(member)} connected (${software}, ${kernel}).`;
+    this.reports.notice({ level: 'info', message, site });
+    this.reports.connected(linked);
+    return linked;
+  }
+
+  private remove(linked: LinkedMember): void {
+    const name = keyOf(linked.member);
+    if (this.present.get(name) !== linked) return;
+    this.present.delete(name);
+    this.reports.lost(linked);
+  }
+}
+
+/** Two splits of one site (1 of 2, 1 of 3) are different members. */
+const keyOf = ({ site, shard }: Pick<Member, 'site' | 'shard'>): string => `${site} ${shard.index}/${shard.of}`;

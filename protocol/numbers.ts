@@ -1,0 +1,57 @@
+/** Counting numbers, for policies (`numbers-most`, `curvature-most`) and for the traffic figures in the result. */
+import type { Work, WorkAnswer } from './messages/round.js';
+
+const lengthOf = (vector: Float64Array | null): number => vector?.length ?? 0;
+
+const sum = <T>(items: readonly T[], numbersOf: (item: T) => number): number =>
+  items.reduce((total, item) => total + numbersOf(item), 0);
+
+/** Real numbers a work item carries to a site. Problem and ask numbers are names and do not count. */
+export function numbersOfWork(work: Work): number {
+  switch (work.work) {
+    case 'survey':
+    case 'factor':
+      return 0;
+    case 'proximal':
+      return sum(
+        work.problems,
+        (problem) => 1 + problem.center.length + lengthOf(problem.diagonal) + lengthOf(problem.start),
+      );
+    case 'evaluate':
+      return sum(work.points, ({ point }) => point.length) + (work.ownFit === null ? 0 : 1);
+  }
+}
+
+/** Numbers in an answer that depend on the site's rows, `newtonSteps` and row counts among them. */
+export function numbersOfAnswer(answer: WorkAnswer): number {
+  switch (answer.work) {
+    case 'survey':
+      return 2 + answer.mean.length + answer.centredSquares.length + Object.keys(answer.response).length;
+    case 'proximal':
+      return sum(answer.problems, ({ point }) => point.length + 1);
+    case 'evaluate': {
+      const atPoints = sum(
+        answer.points,
+        ({ gradient, diagonal, curvature }) =>
+          1 + lengthOf(gradient) + lengthOf(diagonal) + lengthOf(curvature),
+      );
+      const { ownFit } = answer;
+      return atPoints + (ownFit === null ? 0 : ownFit.curvature.length + ownFit.linear.length);
+    }
+    case 'factor':
+      return answer.factor.length;
+  }
+}
+
+/** Full p × p matrices that the answer to this work holds: what `curvature-most` of a policy counts. */
+export function curvatureMatricesOf(work: Work): number {
+  switch (work.work) {
+    case 'survey':
+    case 'proximal':
+      return 0;
+    case 'evaluate':
+      return work.points.filter(({ want }) => want === 'curvature').length + (work.ownFit === null ? 0 : 1);
+    case 'factor':
+      return 1;
+  }
+}

@@ -1,0 +1,168 @@
+import type { FailureCode } from '../failure.js';
+import { LIMITS } from '../limits.js';
+import { designColumnCount, designColumns } from './design-columns.js';
+import { nearestName } from './nearest.js';
+import type { FitDocument, WrittenPenalty } from './schema.js';
+import type { Term } from './types.js';
+
+/** Takes a failure found at a field of the document. */
+export type Complain = (
+  path: readonly PropertyKey[],
+  code: FailureCode,
+  message: string,
+  remedy: string,
+) => void;
+
+/** Most coefficients: the wire carries their names in one list. */
+const COEFFICIENTS_MOST = Math.min(LIMITS.coefficientsMost, LIMITS.elementsMost);
+
+/** Rules that span fields, over the fields that are sound by themselves. */
+export function checkRules(
+  document: Partial<FitDocument>,
+  terms: readonly Term[] | null,
+  complain: Complain,
+): void {
+  checkOffsets(document, complain);
+  checkColumnRoles(document, complain);
+  for (const [index, penalty] of (document.penalty ?? []).entries()) checkMixture(penalty, index, complain);
+  checkLambdaLengths(document.penalty ?? [], complain);
+  if (terms !== null) checkTerms(document, terms, complain);
+}
+
+function checkOffsets(document: Partial<FitDocument>, complain: Complain): void {
+  if (document.exposure !== undefined && document.offset !== undefined) {
+    complain(
+      ['offset'],
+      'field-conflict',
+      'Found both exposure and offset; allowed: one of them.',
+      'Remove one of the two.',
+    );
+  }
+  if (
+    document.response?.positive !== undefined &&
+    document.loss !== undefined &&
+    document.loss !== 'logistic'
+  ) {
+    const message = `Found a positive value with the loss ${document.loss}; allowed: only with logistic.`;
+    complain(['response', 'positive'], 'field-conflict', message, 'Remove it, or use the logistic loss.');
+  }
+}
+
+/** A column is read once, as numbers or as levels; and the response explains nothing else. */
+function checkColumnRoles(document: Partial<FitDocument>, complain: Complain): void {
+  const response = document.response?.column;
+  for (const field of ['exposure', 'offset', 'weights'] as const) {
+    if (response !== undefined && document[field]?.column === response) {
+      const message = `Found the response column "${response}" as ${field}; allowed: another column.`;
+      complain([field, 'column'], 'field-conflict', message, 'Name another column.');
+    }
+  }
+  const numeric = new Set(
+    [document.exposure, document.offset, document.weights].map((field) => field?.column),
+  );
+  for (const term of document.terms ?? []) if (term.kind === 'numeric') numeric.add(term.column);
+  (document.terms ?? []).forEach((term, index) => {
+    if (term.kind === 'product') return;
+    const path = ['terms', index, 'column'];
+    if (term.column === response) {
+      const message = `Found the response column "${term.column}" as a term; allowed: other columns.`;
+      complain(path, 'field-conflict', message, 'Remove the term.');
+    } else if (term.kind === 'levels' && numeric.has(term.column)) {
+      const message = `Found "${term.column}" with levels and as a numeric column; allowed: one of the two.`;
+      complain(path, 'field-conflict', message, 'Keep one use of the column.');
+    }
+  });
+}
+
+function checkMixture(penalty: WrittenPenalty, index: number, complain: Complain): void {
+  const path = ['penalty', index, 'l1'];
+  if (penalty.kind === 'elastic-net' && penalty.l1 === undefined) {
+    const message = 'The field "l1" is missing; allowed: a number from 0 to 1.';
+    complain(path, 'field-missing', message, 'Add l1, the share of the lasso part.');
+  }
+  if (penalty.kind !== 'elastic-net' && penalty.l1 !== undefined) {
+    const message = `Found l1 with the kind ${penalty.kind}; allowed: only with elastic-net.`;
+    complain(path, 'field-conflict', message, 'Remove it, or use the kind elastic-net.');
+  }
+}
+
+function checkLambdaLengths(penalties: readonly WrittenPenalty[], complain: Complain): void {
+  const first = penalties.findIndex((penalty) => penalty.lambda.length > 1);
+  const length = penalties[first]?.lambda.length;
+  penalties.forEach((penalty, index) => {
+    if (penalty.lambda.length === 1 || penalty.lambda.length === length) return;
+    const message = `Found ${penalty.lambda.length} values, where penalty[${first}] has ${length}; allowed: ${length} or one.`;
+    complain(
+      ['penalty', index, 'lambda'],
+      'field-conflict',
+      message,
+      'Give lists of the same length: one fit for each place.',
+    );
+  });
+}
+
+function checkTerms(document: Partial<FitDocument>, terms: readonly Term[], complain: Complain): void {
+  const count = designColumnCount(terms);
+  if (count === 0 && document.intercept === 'none') {
+    const message = 'Found no terms and no intercept; allowed: a model with a coefficient.';
+    complain(['terms'], 'field-conflict', message, 'List a term, or use intercept: shared.');
+    return;
+  }
+  if (count > COEFFICIENTS_MOST) {
+    const message = `The terms have ${count} coefficients; allowed: at most ${COEFFICIENTS_MOST}.`;
+    complain(['terms'], 'field-value', message, 'Leave out products of columns with many levels.');
+    return;
+  }
+  const columns = designColumns({ terms });
+  checkNames(
+    terms,
+    columns.map((column) => column.term),
+    columns.map((column) => column.name),
+    complain,
+  );
+  checkPerTerm(
+    document.penalty ?? [],
+    [...new Set([...terms, ...columns].map((named) => named.name))],
+    complain,
+  );
+}
+
+function checkNames(
+  terms: readonly Term[],
+  termOf: readonly number[],
+  names: readonly string[],
+  complain: Complain,
+): void {
+  const owner = new Map<string, number>();
+  const told = new Set<number>();
+  names.forEach((name, at) => {
+    const term = termOf[at] ?? 0;
+    // The order of a product's factors does not make another column.
+    const key = terms[term]?.kind === 'product' ? name.split(':').sort().join(':') : name;
+    const first = owner.get(key);
+    if (first === undefined) owner.set(key, term);
+    else if (!told.has(term)) {
+      told.add(term);
+      const message = `Found the coefficient "${name}" a second time (terms[${first}] has it); allowed: each once.`;
+      complain(['terms', term], 'field-conflict', message, 'Remove one of the two terms.');
+    }
+  });
+}
+
+function checkPerTerm(
+  penalties: readonly WrittenPenalty[],
+  known: readonly string[],
+  complain: Complain,
+): void {
+  const set = new Set(known);
+  penalties.forEach((penalty, index) => {
+    for (const name of Object.keys(penalty['per-term'])) {
+      if (set.has(name)) continue;
+      const near = nearestName(name, known.slice(0, 2000));
+      const list = known.length > 20 ? `${known.slice(0, 20).join(', ')}, …` : known.join(', ');
+      const message = `Found "${name}", which is no term or coefficient; allowed: ${list}.`;
+      const remedy = near === null ? 'Name a term or a coefficient.' : `Did you mean "${near}"?`;
+      complain(['penalty', index, 'per-term', name], 'field-unknown', message, remedy);
+    }
+  });
+}

@@ -1,0 +1,164 @@
+import { z } from 'zod';
+import {
+  chosen,
+  columnName,
+  distinct,
+  duration,
+  isMapping,
+  levelText,
+  mapping,
+  notBuilt,
+  notBuiltField,
+  numberFrom,
+  siteName,
+  wholeFrom,
+  words,
+  wordsBuilt,
+} from './fields.js';
+import { writtenTerm } from './schema-terms.js';
+
+/**
+ * The fit specification as it is written, field by field. Parts of the format that this version cannot do are known
+ * here and refused as `not-supported`; rules that span several fields are in `rules.ts`.
+ */
+
+const sites = chosen(
+  (input): z.ZodType<string[] | { least: number }> =>
+    isMapping(input)
+      ? mapping({ least: wholeFrom(1, 10_000) })
+      : distinct(siteName, 'a list of site names, or {least: how many sites}'),
+);
+
+const response = chosen((input) =>
+  isMapping(input) && ('time' in input || 'event' in input)
+    ? notBuilt('Responses with an event time are', 'Use a response of one column.')
+    : mapping({
+        column: columnName,
+        /** The value that counts as 1. Default: the column is numeric, 0 or 1. */
+        positive: levelText.optional(),
+        classes: notBuiltField('Responses with several classes are'),
+      }),
+);
+
+const LOSSES_NOT_BUILT = {
+  gamma: 'Gamma losses are',
+  huber: 'Huber losses are',
+  quantile: 'Quantile losses are',
+  multinomial: 'Multinomial losses are',
+  hinge: 'Hinge losses are',
+  cox: 'Cox losses are',
+};
+
+const loss = chosen((input): z.ZodType<'squared' | 'logistic' | 'poisson'> => {
+  const kind = isMapping(input) ? input.kind : input;
+  if (isMapping(input) && (kind === 'huber' || kind === 'quantile')) {
+    return notBuilt(LOSSES_NOT_BUILT[kind], 'Use one of squared, logistic, poisson.');
+  }
+  return wordsBuilt(['squared', 'logistic', 'poisson'], LOSSES_NOT_BUILT);
+});
+
+/** A number, or a list: one fit each. */
+const lambda = chosen((input): z.ZodType<number[]> => {
+  if (isMapping(input) && ('count' in input || 'ratio' in input)) {
+    return notBuilt('Paths of lambda by count and ratio are', 'Write the values of lambda as a list.');
+  }
+  const allowed = 'a number of 0 or more, or a list of 1 to 1000 of them';
+  if (!Array.isArray(input))
+    return z
+      .number({ error: allowed })
+      .min(0, { error: allowed })
+      .transform((value) => [value]);
+  return z.array(numberFrom(0)).min(1, { error: allowed }).max(1000, { error: allowed });
+});
+
+const penalty = mapping({
+  kind: wordsBuilt(['ridge', 'lasso', 'elastic-net'], {
+    'group-lasso': 'Group penalties are',
+    'sparse-group-lasso': 'Group penalties are',
+    'total-variation': 'Total-variation penalties are',
+    'nuclear-norm': 'Nuclear-norm penalties are',
+  }),
+  lambda,
+  /** Share of the ℓ₁ part. Only for elastic-net, which has no default. */
+  l1: numberFrom(0, 1).optional(),
+  /** Default true: penalises b_j · sd_j, in units of the linear predictor; false: b_j itself. */
+  scaled: z.boolean({ error: 'true or false' }).default(true),
+  /** Multiplier by term or coefficient name. Default 1. */
+  'per-term': z
+    .record(z.string(), numberFrom(0), { error: 'a mapping from term or coefficient names to multipliers' })
+    .default({}),
+  groups: notBuiltField('Groups of coefficients are'),
+  order: notBuiltField('Orders of coefficients are'),
+});
+
+const toleranceAllowed = 'a number above 0 and below 1';
+
+const rounds = mapping({
+  /** Relative gap of the optimality certificate at which a fit is solved. Default 1e-8, no unit. */
+  tolerance: z
+    .number({ error: toleranceAllowed })
+    .gt(0, { error: toleranceAllowed })
+    .lt(1, { error: toleranceAllowed })
+    .default(1e-8),
+  /** Most rounds of the solve stage. Default 300. */
+  most: wholeFrom(1, 1_000_000).default(300),
+  /** Highest rung of the ladder that may be used. Default `highest`: what every site allows. */
+  rung: words('highest', 'pooled', 'curvature', 'sketched', 'proximal').default('highest'),
+});
+
+const barrier = mapping({
+  /** Time after which a site of a round counts as a straggler. Default 30s. */
+  deadline: duration.default(30_000),
+  /** Answers needed to end a round. Default and only choice: all. */
+  quorum: chosen((input) =>
+    typeof input === 'number' && Number.isInteger(input) && input >= 1
+      ? notBuilt('Rounds with a quorum of fewer than all sites are', 'Use all.')
+      : words('all'),
+  ).default('all'),
+  /** Age of an answer that may stand in for a missing one, in rounds. Default and only choice: 0. */
+  oldest: chosen(
+    (input): z.ZodType<number> =>
+      typeof input === 'number' && Number.isInteger(input) && input > 0
+        ? notBuilt('Older answers that stand in are', 'Use 0.')
+        : wholeFrom(0),
+  ).default(0),
+  /** Time to wait for a missing site before `missing` applies. Default 30m. */
+  patience: duration.default(1_800_000),
+  /** What to do then. Default and only choice: stop. */
+  missing: wordsBuilt(['stop'], { 'go-without': 'Runs that go on without a missing site are' }).default(
+    'stop',
+  ),
+});
+
+const oneColumn = mapping({ column: columnName });
+
+export const fitDocument = mapping({
+  /** Version of the format. */
+  commonfit: z.literal(1, { error: '1, the version of the format' }),
+  /** Free text for lists and reports. Default: empty. */
+  title: z.string({ error: 'a text' }).max(200, { error: 'a text of at most 200 characters' }).default(''),
+  sites,
+  /** Rows with a missing value in a used column: refuse the table, or drop and count them. Default refuse. */
+  missing: words('refuse', 'drop').default('refuse'),
+  response,
+  loss,
+  /** The offset is ln(exposure). Default: no offset. */
+  exposure: oneColumn.optional(),
+  /** The offset as it is, on the scale of the linear predictor. Default: no offset. */
+  offset: oneColumn.optional(),
+  /** Used as they are. Default: every weight 1. */
+  weights: oneColumn.optional(),
+  /** Default shared: one intercept for all sites, never penalised. */
+  intercept: wordsBuilt(['shared', 'none'], { 'per-site': 'Intercepts of each site are' }).default('shared'),
+  terms: z.array(writtenTerm, { error: 'a list of terms' }),
+  /** They add up. Default: none. */
+  penalty: z.array(penalty, { error: 'a list of penalties' }).default([]),
+  constraints: notBuiltField('Constraints on coefficients are'),
+  choose: notBuiltField('Choices of a fit by folds are'),
+  rounds: rounds.prefault({}),
+  barrier: barrier.prefault({}),
+  report: notBuiltField('Reports of covariances and comparisons are'),
+});
+
+export type FitDocument = z.output<typeof fitDocument>;
+export type WrittenPenalty = FitDocument['penalty'][number];

@@ -1,0 +1,128 @@
+import { curvatureRung } from '../../coordinator/consensus/curvature-rung.js';
+import type { Method, MethodEnd } from '../../coordinator/consensus/method.js';
+import { penaltyValue } from '../../coordinator/consensus/penalty.js';
+import { pooledRung } from '../../coordinator/consensus/pooled-rung.js';
+import type { ConsensusProblem } from '../../coordinator/consensus/problem.js';
+import { proximalRung } from '../../coordinator/consensus/proximal-rung.js';
+import { type LocalSolver, localSolver } from '../../worker/local/local-solver.js';
+import { lossNamed } from '../../worker/losses/index.js';
+import { driveMethods, must } from '../support/method-driver.js';
+import { type BenchProblem, makeProblem } from './problems.js';
+import { textbookRounds } from './textbook.js';
+
+export const METHODS = ['pooled', 'curvature', 'proximal', 'proximal-only', 'textbook'] as const;
+export type MethodName = (typeof METHODS)[number];
+
+const TOLERANCES = { '1e-6': 1e-6, '1e-8': 1e-8 } as const;
+/** Curvature matrices a site lets leave by default. */
+const DEFAULT_BUDGET = 3;
+
+export interface Row {
+  readonly problem: string;
+  readonly method: MethodName;
+  /** Rounds to a certified relative gap (uncertified for `textbook`), set-up and certificate included. */
+  readonly rounds: Readonly<Record<keyof typeof TOLERANCES, number | null>>;
+  /** Numbers one site sends and receives on the way to 1e-8. */
+  readonly numbersUp: number | null;
+  readonly numbersDown: number | null;
+  /** True relative gap at the point certified to 1e-8, against the pooled solve. */
+  readonly trueGap: number | null;
+  /** Why a rung did not end `solved`. */
+  readonly failure: string | null;
+  /** True where a certified point's true gap was above the tolerance certified. */
+  readonly contradicted: boolean;
+}
+
+/** All methods that take this problem. The optimum comes from a pooled high-accuracy solve, checked by its subgradient. */
+export function measureProblem(name: string): Row[] {
+  const problem = makeProblem(name);
+  const loss = lossNamed(problem.loss);
+  const sites = problem.shards.map((shard) => localSolver(shard, loss));
+  const pooled = localSolver(problem.pooled, loss);
+  const optimum = pooledOptimum(problem, pooled);
+  const rung = (method: MethodName, make: (problem: ConsensusProblem) => Method, budget: number): Row =>
+    measureRung(problem, method, make, budget, sites, pooled, optimum);
+  return [
+    ...(problem.loss === 'squared' ? [rung('pooled', pooledRung, DEFAULT_BUDGET)] : []),
+    rung('curvature', curvatureRung, Number.POSITIVE_INFINITY),
+    rung('proximal', proximalRung, DEFAULT_BUDGET),
+    rung('proximal-only', proximalRung, 0),
+    measureTextbook(problem, sites, optimum),
+  ];
+}
+
+export function consensusProblem(problem: BenchProblem, tolerance: number, budget: number): ConsensusProblem {
+  return {
+    p: problem.p,
+    siteWeights: problem.shards.map((shard) => shard.rowCount / shard.rowCountTotal),
+    penalty: problem.penalty,
+    start: problem.start,
+    tolerance,
+    roundsMost: 500,
+    quadratic: problem.loss === 'squared',
+    curvatureMost: budget,
+  };
+}
+
+/** F*, to about fifteen digits: one site with all rows, curvature allowed. */
+export function pooledOptimum(problem: BenchProblem, pooled: LocalSolver): number {
+  const alone = { ...consensusProblem(problem, 1e-14, Number.POSITIVE_INFINITY), siteWeights: [1] };
+  const [end] = driveMethods([curvatureRung(alone)], [pooled]).ends;
+  if (end.outcome !== 'solved' || end.certificate === null)
+    throw new Error(`${problem.name}: the pooled solve ended ${end.outcome}: ${end.reason}`);
+  return end.loss + end.penalty;
+}
+
+function measureRung(
+  problem: BenchProblem,
+  method: MethodName,
+  make: (problem: ConsensusProblem) => Method,
+  budget: number,
+  sites: readonly LocalSolver[],
+  pooled: LocalSolver,
+  optimum: number,
+): Row {
+  const gapOf = (end: MethodEnd): number => {
+    const value = must(pooled.evaluate(end.z, 'value')).value + penaltyValue(problem.penalty, end.z);
+    return (value - optimum) / Math.max(Math.abs(optimum), 1e-12);
+  };
+  const runs = Object.entries(TOLERANCES).map(([key, tolerance]) => {
+    const driven = driveMethods([make(consensusProblem(problem, tolerance, budget))], sites);
+    const [end] = driven.ends;
+    return { key, tolerance, driven, end, solved: end.outcome === 'solved', gap: gapOf(end) };
+  });
+  const fine = runs[runs.length - 1];
+  return {
+    problem: problem.name,
+    method,
+    rounds: {
+      '1e-6': runs[0].solved ? runs[0].driven.rounds : null,
+      '1e-8': fine.solved ? fine.driven.rounds : null,
+    },
+    numbersUp: fine.driven.traffic.up,
+    numbersDown: fine.driven.traffic.down,
+    trueGap: fine.gap,
+    failure: runs.find((run) => !run.solved)?.end.outcome ?? null,
+    contradicted: runs.some((run) => run.solved && run.gap > run.tolerance),
+  };
+}
+
+function measureTextbook(problem: BenchProblem, sites: readonly LocalSolver[], optimum: number): Row {
+  const [six, eight] = textbookRounds(
+    sites,
+    problem.penalty,
+    problem.start,
+    optimum,
+    Object.values(TOLERANCES),
+  );
+  return {
+    problem: problem.name,
+    method: 'textbook',
+    rounds: { '1e-6': six, '1e-8': eight },
+    numbersUp: eight === null ? null : eight * problem.p,
+    numbersDown: eight === null ? null : eight * problem.p,
+    trueGap: null,
+    failure: eight === null ? 'round-limit' : null,
+    contradicted: false,
+  };
+}

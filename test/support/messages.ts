@@ -1,0 +1,155 @@
+/** One message of every kind, with every field that may be null once there and once left out. */
+import type { Answer, Ask, Refusal } from '../../protocol/messages/round.js';
+import type { Prepare, RunEnd } from '../../protocol/messages/run.js';
+import type { Hello, Welcome } from '../../protocol/messages/session.js';
+import type { ToCoordinator } from '../../protocol/messages/to-coordinator.js';
+import type { ToWorker } from '../../protocol/messages/to-worker.js';
+
+const vector = (...values: number[]): Float64Array => Float64Array.from(values);
+
+export const hello: Hello = {
+  kind: 'hello',
+  version: 1,
+  site: 'lindell-bay',
+  shard: { index: 1, of: 2 },
+  software: 'commonfit 0.1.0',
+  kernel: 'typescript',
+};
+
+export const welcome: Welcome = {
+  kind: 'welcome',
+  version: 1,
+  software: 'commonfit 0.1.0',
+  frameBytesMost: 134217728,
+};
+
+export const prepare: Prepare = {
+  kind: 'prepare',
+  run: 'r1',
+  specification: '{"title":"Pipe breaks"}',
+  digest: '0123456789abcdef'.repeat(4),
+  scaling: { rowCountTotal: 1200, kept: [0, 2], center: vector(31.5, 0.25), scale: vector(12, 0.5) },
+};
+
+export const runEnd: RunEnd = { kind: 'run-end', run: 'r1', outcome: 'solved' };
+
+/** p = 2. */
+export const ask: Ask = {
+  kind: 'ask',
+  run: 'r1',
+  ask: 7,
+  work: [
+    { work: 'survey' },
+    {
+      work: 'proximal',
+      problems: [
+        {
+          problem: 0,
+          center: vector(1, -0.5),
+          scale: 0.25,
+          diagonal: vector(1, 2),
+          diagonalAsk: 7,
+          start: vector(0, 0),
+          startAsk: 7,
+        },
+        {
+          problem: 1,
+          center: vector(1, -0.5),
+          scale: 0.1,
+          diagonal: null,
+          diagonalAsk: 3,
+          start: null,
+          startAsk: 6,
+        },
+      ],
+    },
+    {
+      work: 'evaluate',
+      problem: 0,
+      points: [
+        { point: vector(1, 2), want: 'value' },
+        { point: vector(1, 2), want: 'gradient' },
+        { point: vector(1, 2), want: 'diagonal' },
+        { point: vector(1, 2), want: 'curvature' },
+      ],
+      ownFit: { at: 3, hold: 0.3 },
+    },
+    { work: 'evaluate', problem: 0, points: [{ point: vector(0, 0), want: 'value' }], ownFit: null },
+    { work: 'factor' },
+  ],
+};
+
+/** The answer to `ask`. */
+export const answer: Answer = {
+  kind: 'answer',
+  run: 'r1',
+  ask: 7,
+  work: [
+    {
+      work: 'survey',
+      rowsUsed: 300,
+      rowsDropped: 4,
+      columns: ['age_years', 'material=steel'],
+      mean: vector(30, 0.2),
+      centredSquares: vector(4000, 48),
+      response: {
+        weightSum: 300,
+        weightedSum: 120,
+        exposureSum: 310.5,
+        least: 0,
+        most: 9,
+        saturatedLoss: -12.75,
+      },
+      allowance: { leave: ['counts', 'moments'], curvatureMost: 3, numbersMost: null, roundsMost: 2000 },
+      notes: ['diameter_mm looks like inches'],
+    },
+    {
+      work: 'proximal',
+      problems: [
+        { problem: 0, point: vector(0.5, 0.1), newtonSteps: 3 },
+        { problem: 1, point: vector(0.5, 0.125), newtonSteps: 1 },
+      ],
+    },
+    {
+      work: 'evaluate',
+      problem: 0,
+      points: [
+        { value: 1.5, gradient: null, diagonal: null, curvature: null },
+        { value: 1.5, gradient: vector(1, 2), diagonal: null, curvature: null },
+        { value: 1.5, gradient: vector(1, 2), diagonal: vector(3, 4), curvature: null },
+        { value: 1.5, gradient: vector(1, 2), diagonal: vector(3, 4), curvature: vector(3, 0.5, 4) },
+      ],
+      ownFit: { curvature: vector(3, 0.5, 4), linear: vector(1, 1) },
+    },
+    {
+      work: 'evaluate',
+      problem: 0,
+      points: [{ value: 2, gradient: null, diagonal: null, curvature: null }],
+      ownFit: null,
+    },
+    { work: 'factor', factor: vector(1, 0.5, 2, 0.25, 0.125, 3) },
+  ],
+};
+
+export const refusal: Refusal = {
+  kind: 'refusal',
+  run: 'r1',
+  ask: 7,
+  code: 'policy-curvature',
+  message: 'The policy of this site lets no curvature matrix leave.',
+  remedy: null,
+};
+
+export const toWorkerMessages: readonly ToWorker[] = [
+  welcome,
+  prepare,
+  { ...prepare, scaling: null },
+  ask,
+  runEnd,
+];
+export const toCoordinatorMessages: readonly ToCoordinator[] = [
+  hello,
+  answer,
+  refusal,
+  { ...refusal, remedy: 'Lower the rung.' },
+];

@@ -1,0 +1,157 @@
+import { setTimeout as delay } from 'node:timers/promises';
+import { type Checked, type Failure, fail, succeed } from '../../protocol/failure.js';
+import { connectLink } from '../../protocol/link/websocket.js';
+import { PROTOCOL_VERSION, SOFTWARE } from '../../protocol/version.js';
+import { Ledger } from '../custody/ledger.js';
+import type { SiteFile } from '../custody/site-file.js';
+import { type Answerer, createAnswerer } from '../service/answerer.js';
+import { keepConnected, type Timers } from '../service/connection.js';
+import type { WorkerEvent } from '../service/events.js';
+import { besideSiteFile, ledgerOnDisk, readApprovals, readDocument } from '../service/site-folder.js';
+import { readTable } from '../source/read-table.js';
+import { readSiteFile } from './documents.js';
+import { EXIT, type ExitCode, exitCodeOf } from './exit-codes.js';
+import { levelOf, sentenceOf } from './log-lines.js';
+import { giveUp, tell } from './terminal.js';
+
+export interface JoinOptions {
+  readonly approvals?: string;
+  readonly once: boolean;
+  readonly plainText: boolean;
+  readonly json: boolean;
+}
+
+/** How long an answer in the making may take when the worker is told to stop. */
+const GRACE_MS = 10_000;
+
+/** Connects to the coordinator and answers until told to stop. */
+export async function join(siteFile: string, options: JoinOptions): Promise<ExitCode> {
+  const site = await readSiteFile(siteFile);
+  if (!site.ok) return giveUp(site.failures);
+  const onEvent = await eventLog(options.json);
+  const failure = await joinAs(site.value, options, onEvent);
+  onEvent({ event: 'stopped', failure });
+  return failure === null ? EXIT.ok : exitCodeOf(failure);
+}
+
+async function joinAs(
+  site: SiteFile,
+  options: JoinOptions,
+  onEvent: (event: WorkerEvent) => void,
+): Promise<Failure | null> {
+  const { url } = site.coordinator;
+  const plain = checkPlainText(site, options.plainText);
+  if (plain !== null) return plain;
+  const secrets = await readSecrets(site);
+  if (!secrets.ok) return secrets.failure;
+  const opened = await Ledger.open(ledgerOnDisk(besideSiteFile(site.file, 'ledger')), () => new Date());
+  if (!opened.ok) return opened.failure;
+  const { ledger, warning } = opened.value;
+  if (warning !== null) onEvent({ event: 'warning', message: warning });
+  const answerer = answererOf(site, options, ledger, onEvent);
+  return keepConnected({
+    url,
+    hello: {
+      kind: 'hello',
+      version: PROTOCOL_VERSION,
+      site: site.site,
+      shard: site.shard,
+      software: SOFTWARE,
+      kernel: `typescript, Node ${process.versions.node}`,
+    },
+    connect: () => connectLink({ url, ...secrets.value }),
+    answerer,
+    timers,
+    random: Math.random,
+    onEvent,
+    stop: stopSignal(),
+    graceMs: GRACE_MS,
+    once: options.once,
+  });
+}
+
+function answererOf(
+  site: SiteFile,
+  options: JoinOptions,
+  ledger: Ledger,
+  onEvent: (event: WorkerEvent) => void,
+): Answerer {
+  const approvalsFile = options.approvals ?? besideSiteFile(site.file, 'approvals');
+  return createAnswerer({
+    site: site.site,
+    shard: site.shard,
+    policy: site.policy,
+    approved: async () => {
+      if (site.policy.approvals === 'any') return succeed(new Set());
+      const approvals = await readApprovals(approvalsFile);
+      return approvals.ok ? succeed(new Set(approvals.value.map(({ digest }) => digest))) : approvals;
+    },
+    readTable: (request) => readTable(site.table, request),
+    ledger,
+    nowMs: () => performance.now(),
+    onEvent,
+    pause: () => new Promise((resolve) => setImmediate(resolve)),
+  });
+}
+
+const LOOPBACK = /^(localhost|127(\.\d{1,3}){3}|\[::1\])$/;
+
+/** The token goes over the link: in the clear only to this machine, or where the custodian says so by name. */
+function checkPlainText(site: SiteFile, allowed: boolean): Failure | null {
+  const { protocol, hostname } = new URL(site.coordinator.url);
+  if (protocol === 'wss:' || allowed || LOOPBACK.test(hostname)) return null;
+  return fail('field-value', `Found ${site.coordinator.url}, which would send the token unencrypted.`, {
+    remedy: 'Use a wss:// address, or say --plain-text if the network between is trusted.',
+    where: { file: site.file, field: 'coordinator.url' },
+  }).failure;
+}
+
+async function readSecrets(site: SiteFile): Promise<Checked<{ token: string; ca?: string }>> {
+  const { tokenFile, caFile } = site.coordinator;
+  const text = await readDocument(tokenFile);
+  if (!text.ok) return text;
+  const token = text.value.trim();
+  if (!/^\S+$/.test(token))
+    return fail('field-value', 'The token file does not hold one token.', {
+      remedy: 'Put the token that the analyst gave you into it, on one line.',
+      where: { file: tokenFile },
+    });
+  if (caFile === null) return succeed({ token });
+  const ca = await readDocument(caFile);
+  return ca.ok ? succeed({ token, ca: ca.value }) : ca;
+}
+
+const timers: Timers = {
+  wait: async (ms, signal) => {
+    try {
+      await delay(ms, undefined, { signal });
+    } catch (error) {
+      if (!signal.aborted) throw error;
+    }
+  },
+};
+
+/** The first signal stops in good order; a second one at once. */
+function stopSignal(): AbortSignal {
+  const stop = new AbortController();
+  const onSignal = (): void => {
+    if (stop.signal.aborted) process.exit(EXIT.defect);
+    stop.abort();
+  };
+  process.on('SIGTERM', onSignal);
+  process.on('SIGINT', onSignal);
+  return stop.signal;
+}
+
+/** Log lines to standard error: sentences with the time of day, or JSON lines. */
+async function eventLog(json: boolean): Promise<(event: WorkerEvent) => void> {
+  if (json) {
+    const { pino } = await import('pino');
+    const log = pino(
+      { base: null, timestamp: pino.stdTimeFunctions.isoTime, formatters: { level: (level) => ({ level }) } },
+      pino.destination({ dest: 2, sync: true }),
+    );
+    return (event) => log[levelOf(event)](event, sentenceOf(event));
+  }
+  return (event) => tell(`${new Date().toTimeString().slice(0, 8)}  ${sentenceOf(event)}`, 10);
+}

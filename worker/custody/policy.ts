@@ -1,0 +1,203 @@
+import { type Failure, type FailureCode, fail } from '../../protocol/failure.js';
+import type { Work } from '../../protocol/messages/round.js';
+import type { Allowance } from '../../protocol/messages/survey.js';
+import { curvatureMatricesOf } from '../../protocol/numbers.js';
+import { usedColumns } from '../../protocol/specification/design-columns.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+import type { Policy } from './site-file.js';
+
+/**
+ * What a custodian lets leave, checked where the rows are. Pure: each check takes the policy and what has left so far,
+ * and says why not, or null.
+ */
+
+export type LeaveKind = Allowance['leave'][number];
+
+/** What has left in one run so far. */
+export interface Departed {
+  readonly asks: number;
+  readonly numbers: number;
+  readonly curvature: CurvatureCount;
+}
+
+/** Curvature matrices by problem; `all` are those that serve every fit of the run (the factor). */
+export interface CurvatureCount {
+  readonly all: number;
+  readonly problems: ReadonlyMap<number, number>;
+}
+
+export const NOTHING_DEPARTED: Departed = {
+  asks: 0,
+  numbers: 0,
+  curvature: { all: 0, problems: new Map() },
+};
+
+const refused = (code: FailureCode, message: string, remedy: string): Failure =>
+  fail(code, message, { remedy }).failure;
+
+const listed = (words: readonly string[]): string => words.join(', ');
+
+/** Kinds of data that an answer to this work holds. */
+export function kindsOfWork(work: Work): LeaveKind[] {
+  switch (work.work) {
+    case 'survey':
+      return ['counts', 'moments'];
+    case 'proximal':
+      return ['proximal'];
+    case 'factor':
+      return ['curvature'];
+    case 'evaluate':
+      return curvatureMatricesOf(work) > 0 ? ['gradients', 'curvature'] : ['gradients'];
+  }
+}
+
+/** Curvature matrices that this ask makes leave, by problem. */
+export function curvatureOfWorks(works: readonly Work[]): CurvatureCount {
+  let all = 0;
+  const problems = new Map<number, number>();
+  for (const work of works) {
+    const matrices = curvatureMatricesOf(work);
+    if (work.work !== 'evaluate') all += matrices;
+    else if (matrices > 0) problems.set(work.problem, (problems.get(work.problem) ?? 0) + matrices);
+  }
+  return { all, problems };
+}
+
+export function addCurvature(a: CurvatureCount, b: CurvatureCount): CurvatureCount {
+  const problems = new Map(a.problems);
+  for (const [problem, matrices] of b.problems)
+    problems.set(problem, (problems.get(problem) ?? 0) + matrices);
+  return { all: a.all + b.all, problems };
+}
+
+export function curvatureTotal(count: CurvatureCount): number {
+  let total = count.all;
+  for (const matrices of count.problems.values()) total += matrices;
+  return total;
+}
+
+/** Most fits one run of this specification can hold: every combination of the penalties' λ. */
+export const fitsMost = (spec: FitSpecification): number =>
+  spec.penalties.reduce((product, penalty) => product * Math.max(1, penalty.lambda.length), 1);
+
+/** The part of the policy that the specification alone decides: columns and approval. */
+export function checkSpecification(
+  policy: Policy,
+  spec: FitSpecification,
+  digest: string,
+  approved: ReadonlySet<string>,
+): Failure | null {
+  return checkColumns(policy, spec) ?? checkApproval(policy, digest, approved);
+}
+
+export function checkColumns(policy: Policy, spec: FitSpecification): Failure | null {
+  const { columns } = policy;
+  if (columns === 'any') return null;
+  const allowed = new Set(columns);
+  const used = usedColumns(spec).find(({ column }) => !allowed.has(column));
+  if (used === undefined) return null;
+  const permitted = columns.length === 0 ? 'no column' : listed(columns);
+  return fail(
+    'policy-column',
+    `The specification uses column ${used.column} (as ${used.role}), the policy lets it use ${permitted}.`,
+    {
+      remedy: `Take ${used.column} out of the specification, or ask the custodian to add it to policy.columns.`,
+      where: { column: used.column },
+    },
+  ).failure;
+}
+
+export function checkApproval(policy: Policy, digest: string, approved: ReadonlySet<string>): Failure | null {
+  if (policy.approvals === 'any' || approved.has(digest)) return null;
+  return refused(
+    'policy-approval',
+    `The custodian has not approved this specification (digest ${digest}).`,
+    'The custodian can look at it with "commonfit-worker inspect" and let it in with "commonfit-worker approve".',
+  );
+}
+
+export function checkRows(policy: Policy, rowsUsed: number): Failure | null {
+  if (rowsUsed >= policy.rowsLeast) return null;
+  return refused(
+    'policy-rows',
+    `This specification would use ${rowsUsed} rows here, the policy asks for at least ${policy.rowsLeast}.`,
+    'Use terms with fewer missing values, run without this site, or ask the custodian to lower policy.rows-least.',
+  );
+}
+
+/** Whether a new ask may be answered after what has left so far. A repeated ask is not checked: it was counted once. */
+export function checkWorks(
+  policy: Policy,
+  departed: Departed,
+  works: readonly Work[],
+  fits: number,
+): Failure | null {
+  return (
+    checkKinds(policy, works) ??
+    checkRounds(policy, departed) ??
+    checkCurvature(policy, departed.curvature, curvatureOfWorks(works), fits)
+  );
+}
+
+function checkKinds(policy: Policy, works: readonly Work[]): Failure | null {
+  for (const work of works) {
+    const missing = kindsOfWork(work).filter((kind) => !policy.leave.includes(kind));
+    if (missing.length > 0)
+      return refused(
+        'policy-kind',
+        `An answer to ${work.work} holds ${listed(missing)}, the policy lets leave ${listed(policy.leave) || 'nothing'}.`,
+        `Choose a lower rung (rounds.rung), or ask the custodian to add ${listed(missing)} to policy.leave.`,
+      );
+  }
+  return null;
+}
+
+function checkRounds(policy: Policy, departed: Departed): Failure | null {
+  if (policy.roundsMost === 'any' || departed.asks < policy.roundsMost) return null;
+  return refused(
+    'policy-rounds',
+    `${departed.asks} asks of this run are answered, the policy allows ${policy.roundsMost}.`,
+    'Loosen rounds.tolerance, or ask the custodian to raise policy.rounds-most.',
+  );
+}
+
+/** The limit holds for each fit, and `fits` times for the run, so that made-up problem numbers gain nothing. */
+function checkCurvature(
+  policy: Policy,
+  before: CurvatureCount,
+  added: CurvatureCount,
+  fits: number,
+): Failure | null {
+  const most = policy.curvatureMost;
+  if (most === 'any' || curvatureTotal(added) === 0) return null;
+  const after = addCurvature(before, added);
+  const largest = after.all + Math.max(0, ...after.problems.values());
+  if (largest <= most && curvatureTotal(after) <= most * fits) return null;
+  return refused(
+    'policy-curvature',
+    `With this ask ${largest} curvature matrices of one fit (${curvatureTotal(after)} in the run) would have left, the policy allows ${most} a fit.`,
+    'Go on with proximal points, or ask the custodian to raise policy.curvature-most.',
+  );
+}
+
+/** `numbers`: what this ask's answer holds, `departed` without it. */
+export function checkNumbers(policy: Policy, departed: Departed, numbers: number): Failure | null {
+  const after = departed.numbers + numbers;
+  if (policy.numbersMost === 'any' || after <= policy.numbersMost) return null;
+  return refused(
+    'policy-numbers',
+    `With this answer ${after} numbers of this run would have left, the policy allows ${policy.numbersMost}.`,
+    'Use fewer terms or a lower rung (rounds.rung), or ask the custodian to raise policy.numbers-most.',
+  );
+}
+
+/** What the survey tells the coordinator, so that it can choose the rung without trying. */
+export function allowanceOf(policy: Policy): Allowance {
+  const limit = (value: number | 'any'): number | null => (value === 'any' ? null : value);
+  return {
+    leave: [...policy.leave],
+    curvatureMost: limit(policy.curvatureMost),
+    numbersMost: limit(policy.numbersMost),
+    roundsMost: limit(policy.roundsMost),
+  };
+}

@@ -1,0 +1,175 @@
+import { weightedGram } from '../../numerics/gram.js';
+import { packSymmetric } from '../../numerics/packed.js';
+import { addWeightedSquares } from '../../numerics/rows.js';
+import { FACTOR_BLOCK_ROWS, factorAccumulator } from '../../numerics/triangular-factor.js';
+import { allFinite, maxOf } from '../../numerics/vector.js';
+import { type Checked, fail, succeed } from '../../protocol/failure.js';
+import type { Want } from '../../protocol/messages/evaluate.js';
+import type { Shard } from '../design/shard.js';
+import type { Loss } from '../losses/loss.js';
+import { notFinite, notPositiveDefinite } from './failures.js';
+import { type NewtonEnd, type NewtonLimits, newtonProximal } from './newton.js';
+import { type Quadratic, quadratic, targetOf, weightOf } from './quadratic.js';
+import { rowCurvatures, rowPass, rowState } from './row-pass.js';
+
+/**
+ * What a worker computes on its rows. p is the number of solver columns; every vector has p numbers unless stated. The
+ * answers depend on the arguments alone: the same bits whatever was asked before.
+ */
+export interface LocalSolver {
+  /**
+   * x = argmin φ(x) + ½ (x − center)ᵀ M (x − center), M = scale · diag(diagonal), positive. Smooth losses begin at
+   * `start`; the squared loss is solved in one step. Fails with `not-positive-definite`, `number-not-finite`, `stalled`.
+   */
+  proximal(
+    center: Float64Array,
+    scale: number,
+    diagonal: Float64Array,
+    start: Float64Array,
+  ): Checked<{ point: Float64Array; newtonSteps: number }>;
+  /** φ and, as far as wanted, ∇φ, diag ∇²φ and ∇²φ (packed lower triangle) at the point. */
+  evaluate(point: Float64Array, want: Want): Checked<Evaluation>;
+  /**
+   * The quadratic at this shard's own fit x = argmin φ(x) + ½ · hold · ‖x − point‖²_D, D the floored diagonal curvature
+   * at the point: packed ∇²φ(x), and ∇²φ(x) x − ∇φ(x). x is near enough to the minimiser after at most 20 steps; the
+   * quadratic is exact at x wherever that is.
+   */
+  ownFit(point: Float64Array, hold: number): Checked<{ curvature: Float64Array; linear: Float64Array }>;
+  /** Packed triangular factor of √(w/N) · [X, y − offset], p + 1 columns (mathematics.md §2, rung `pooled`). */
+  factor(): Checked<Float64Array>;
+}
+
+export interface Evaluation {
+  readonly value: number;
+  readonly gradient: Float64Array | null;
+  readonly diagonal: Float64Array | null;
+  readonly curvature: Float64Array | null;
+}
+
+const PROXIMAL_LIMITS: NewtonLimits = { stepsMost: 200, accuracy: 1e-13 };
+const OWN_FIT_LIMITS: NewtonLimits = { stepsMost: 20, accuracy: 1e-8 };
+/** A value beyond this is reported as this: the wire carries finite numbers only, and any comparison refuses it. */
+const VALUE_MOST = 1e300;
+/** Floor of the own-fit metric: share of the largest diagonal curvature, and share of the shard's weight in the rows. */
+const OWN_FIT_FLOOR = 1e-3;
+
+export function localSolver(shard: Shard, loss: Loss): LocalSolver {
+  const squares: Quadratic | null = loss.quadratic ? quadratic(shard) : null;
+  return {
+    proximal: (center, scale, diagonal, start) => {
+      const metric = diagonal.map((d) => scale * d);
+      for (let j = 0; j < metric.length; j++) {
+        if (!(metric[j] > 0)) return notPositiveDefinite(`The metric (entry ${j} is ${metric[j]})`);
+      }
+      if (squares !== null) {
+        const point = squares.proximalPoint(center, metric);
+        return point.ok ? succeed({ point: point.value, newtonSteps: 1 }) : point;
+      }
+      return finished(newtonProximal({ shard, loss, center, metric, start }, PROXIMAL_LIMITS));
+    },
+    evaluate: (point, want) => evaluate(shard, loss, squares, point, want),
+    ownFit: (point, hold) =>
+      squares === null ? ownFit(shard, loss, point, hold) : quadraticOwnFit(shard, squares),
+    factor: () => factor(shard),
+  };
+}
+
+function finished(end: Checked<NewtonEnd>): Checked<{ point: Float64Array; newtonSteps: number }> {
+  if (!end.ok) return end;
+  const { point, newtonSteps, converged } = end.value;
+  if (!converged) {
+    return fail('stalled', `Newton's method has not converged in ${newtonSteps} steps on this shard.`, {
+      remedy: 'Look for columns on very different scales or extreme values, or raise the metric.',
+    });
+  }
+  return allFinite(point) ? succeed({ point, newtonSteps }) : notFinite('The proximal point');
+}
+
+function evaluate(
+  shard: Shard,
+  loss: Loss,
+  squares: Quadratic | null,
+  point: Float64Array,
+  want: Want,
+): Checked<Evaluation> {
+  const { p, rowCount, x } = shard;
+  const rows = rowState(rowCount);
+  const gradient = want === 'value' ? null : new Float64Array(p);
+  const pass = rowPass(shard, loss, point, rows, gradient);
+  if (Number.isNaN(pass.value) || pass.value === Number.NEGATIVE_INFINITY) return notFinite('The loss');
+  const value = Math.min(pass.value, VALUE_MOST);
+  if (gradient !== null && !allFinite(gradient)) return notFinite('The gradient');
+  let diagonal: Float64Array | null = null;
+  let curvature: Float64Array | null = null;
+  if (want === 'diagonal' || want === 'curvature') {
+    const weights = rowCurvatures(shard, loss, rows.eta);
+    diagonal = new Float64Array(p);
+    addWeightedSquares(x, p, 0, rowCount, weights, diagonal);
+    if (want === 'curvature') {
+      curvature = packSymmetric(squares?.gram() ?? weightedGram(x, rowCount, p, weights, 1), p);
+    }
+    if (!allFinite(diagonal) || (curvature !== null && !allFinite(curvature)))
+      return notFinite('The curvature');
+  }
+  return succeed({ value, gradient, diagonal, curvature });
+}
+
+function ownFit(
+  shard: Shard,
+  loss: Loss,
+  point: Float64Array,
+  hold: number,
+): Checked<{ curvature: Float64Array; linear: Float64Array }> {
+  const { p, rowCount, x } = shard;
+  const there = evaluate(shard, loss, null, point, 'diagonal');
+  if (!there.ok) return there;
+  const diagonal = there.value.diagonal ?? new Float64Array(p);
+  const floor = Math.max(OWN_FIT_FLOOR * maxOf(diagonal), (OWN_FIT_FLOOR * rowCount) / shard.rowCountTotal);
+  const metric = diagonal.map((d) => hold * Math.max(d, floor));
+  const fit = newtonProximal({ shard, loss, center: point, metric, start: point }, OWN_FIT_LIMITS);
+  if (!fit.ok) return fit;
+  const rows = rowState(rowCount);
+  const linear = new Float64Array(p);
+  rowPass(shard, loss, fit.value.point, rows, linear);
+  const full = weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
+  for (let j = 0; j < p; j++) {
+    let sum = 0;
+    for (let k = 0; k < p; k++) sum += full[j * p + k] * fit.value.point[k];
+    linear[j] = sum - linear[j];
+  }
+  const curvature = packSymmetric(full, p);
+  return allFinite(curvature) && allFinite(linear)
+    ? succeed({ curvature, linear })
+    : notFinite('The quadratic at the own fit');
+}
+
+/** The squared loss is its own quadratic at every point: no fit is needed. */
+function quadraticOwnFit(
+  shard: Shard,
+  squares: Quadratic,
+): Checked<{ curvature: Float64Array; linear: Float64Array }> {
+  const curvature = packSymmetric(squares.gram(), shard.p);
+  const linear = Float64Array.from(squares.linear());
+  return allFinite(curvature) && allFinite(linear)
+    ? succeed({ curvature, linear })
+    : notFinite('The curvature');
+}
+
+function factor(shard: Shard): Checked<Float64Array> {
+  const { p, rowCount, x } = shard;
+  const columns = p + 1;
+  const accumulator = factorAccumulator(columns);
+  const block = new Float64Array(FACTOR_BLOCK_ROWS * columns);
+  for (let from = 0; from < rowCount; from += FACTOR_BLOCK_ROWS) {
+    const to = Math.min(from + FACTOR_BLOCK_ROWS, rowCount);
+    for (let r = from; r < to; r++) {
+      const root = Math.sqrt(weightOf(shard, r));
+      const row = (r - from) * columns;
+      for (let j = 0; j < p; j++) block[row + j] = root * x[r * p + j];
+      block[row + p] = root * targetOf(shard, r);
+    }
+    accumulator.append(block, to - from);
+  }
+  const packed = accumulator.packed();
+  return allFinite(packed) ? succeed(packed) : notFinite('The triangular factor');
+}

@@ -1,0 +1,12 @@
+import type { Loss } from './loss.js';
+
+/** ½ (y − η)²: least squares. */
+export const squared: Loss = {
+  name: 'squared',
+  quadratic: true,
+  value: (y, eta) => 0.5 * (y - eta) * (y - eta),
+  slope: (y, eta) => eta - y,
+  curvature: () => 1,
+  mean: (eta) => eta,
+  saturated: () => 0,
+};

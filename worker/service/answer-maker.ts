@@ -1,0 +1,185 @@
+import { checkAsk } from '../../protocol/check-answer.js';
+import { type Checked, fail, succeed } from '../../protocol/failure.js';
+import type { Answer, Ask } from '../../protocol/messages/round.js';
+import { numbersOfAnswer } from '../../protocol/numbers.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+import { contentDigest, type FilledWork } from '../custody/content.js';
+import type { Ledger } from '../custody/ledger.js';
+import {
+  allowanceOf,
+  checkNumbers,
+  checkRows,
+  checkSpecification,
+  checkWorks,
+  curvatureOfWorks,
+  curvatureTotal,
+  fitsMost,
+  kindsOfWork,
+} from '../custody/policy.js';
+import type { Policy } from '../custody/site-file.js';
+import type { RawShard } from '../design/shard.js';
+import { lossNamed } from '../losses/index.js';
+import type { Table, TableRequest } from '../source/table.js';
+import { workInWords } from './ask-words.js';
+import { computeWorks } from './compute.js';
+import type { WorkerEvent } from './events.js';
+import { type LiveRun, type RawShards, solverColumns, solverOf, specificationOf } from './live-run.js';
+import { fillWorks, rememberAsked } from './memory.js';
+
+/** Everything a worker's answers need from outside. */
+export interface AnswerMeans {
+  readonly site: string;
+  readonly shard: { readonly index: number; readonly of: number };
+  readonly policy: Policy;
+  /** Approved digests, read at every ask: an approval taken back holds from then on. */
+  readonly approved: () => Promise<Checked<ReadonlySet<string>>>;
+  readonly readTable: (request: TableRequest) => Promise<Checked<Table>>;
+  readonly ledger: Pick<Ledger, 'departed' | 'look' | 'append'>;
+  readonly nowMs: () => number;
+  readonly onEvent: (event: WorkerEvent) => void;
+  /** Lets sockets and signals in between two problems of one ask. */
+  readonly pause: () => Promise<void>;
+}
+
+/** Makes the answer to one ask: checks, computes, writes the ledger, remembers. One ask at a time. */
+export class AnswerMaker {
+  readonly #means: AnswerMeans;
+  readonly #shards: RawShards;
+
+  constructor(means: AnswerMeans, shards: RawShards) {
+    this.#means = means;
+    this.#shards = shards;
+  }
+
+  async make(ask: Ask, live: LiveRun): Promise<Checked<Answer>> {
+    const started = this.#means.nowMs();
+    const spec = await this.#admit(live);
+    if (!spec.ok) return spec;
+    const wrong = checkAsk(ask, solverColumns(spec.value, live.message.scaling));
+    if (wrong !== null) return { ok: false, failure: wrong };
+    const filled = fillWorks(ask, live.memory);
+    if (!filled.ok) return filled;
+    return this.#answerFilled(ask, live, spec.value, filled.value, started);
+  }
+
+  /** The checks that need no row: digest, roster, policy. */
+  async #admit(live: LiveRun): Promise<Checked<FitSpecification>> {
+    const spec = specificationOf(live);
+    if (!spec.ok) return spec;
+    const { run, digest } = live.message;
+    const { site, policy } = this.#means;
+    if (!live.announced) this.#means.onEvent({ event: 'run', run, title: spec.value.title, digest: digest });
+    live.announced = true;
+    const { sites } = spec.value;
+    if (!('least' in sites) && !sites.includes(site))
+      return fail('site-unknown', `The specification does not name site ${site}.`);
+    const approved = await this.#means.approved();
+    if (!approved.ok) return approved;
+    const refused = checkSpecification(policy, spec.value, digest, approved.value);
+    return refused === null ? spec : { ok: false, failure: refused };
+  }
+
+  async #answerFilled(
+    ask: Ask,
+    live: LiveRun,
+    spec: FitSpecification,
+    works: readonly FilledWork[],
+    started: number,
+  ): Promise<Checked<Answer>> {
+    const { ledger, policy } = this.#means;
+    const { digest, scaling } = live.message;
+    const content = contentDigest(digest, scaling, works);
+    const look = ledger.look(ask.run, digest, ask.ask, content);
+    if (!look.ok) return look;
+    const repeated = look.value === 'repeat';
+    const refused = repeated ? null : checkWorks(policy, ledger.departed(ask.run), ask.work, fitsMost(spec));
+    if (refused !== null) return { ok: false, failure: refused };
+    rememberAsked(ask, live.memory);
+    const same = live.last !== null && live.last.answer.ask === ask.ask && live.last.content === content;
+    const made =
+      same && live.last !== null ? succeed(live.last.answer) : await this.#compute(ask, live, spec, works);
+    if (!made.ok) return made;
+    const numbers = made.value.work.reduce((sum, item) => sum + numbersOfAnswer(item), 0);
+    if (!repeated) {
+      const recorded = await this.#record(ask, digest, content, numbers);
+      if (!recorded.ok) return recorded;
+    }
+    this.#keep(live, made.value, content);
+    this.#tell(ask, numbers, repeated, started);
+    return made;
+  }
+
+  async #compute(
+    ask: Ask,
+    live: LiveRun,
+    spec: FitSpecification,
+    works: readonly FilledWork[],
+  ): Promise<Checked<Answer>> {
+    const raw = await this.#rows(ask.run, spec);
+    if (!raw.ok) return raw;
+    const solver = solverOf(live, spec, raw.value);
+    if (!solver.ok) return solver;
+    const computed = await computeWorks(works, {
+      raw: raw.value,
+      loss: lossNamed(spec.loss),
+      solver: solver.value,
+      allowance: allowanceOf(this.#means.policy),
+      breathe: async () => {
+        await this.#means.pause();
+        return live.ended ? 'stop' : 'go-on';
+      },
+    });
+    return computed.ok
+      ? succeed({ kind: 'answer', run: ask.run, ask: ask.ask, work: computed.value })
+      : computed;
+  }
+
+  async #rows(run: string, spec: FitSpecification): Promise<Checked<RawShard>> {
+    const started = this.#means.nowMs();
+    const got = await this.#shards.get(run, spec);
+    if (!got.ok) return got;
+    const { raw, fresh } = got.value;
+    if (fresh) {
+      const { rowCount: rowsUsed, rowsDropped, columns } = raw;
+      const tookMs = this.#means.nowMs() - started;
+      this.#means.onEvent({ event: 'table', run, rowsUsed, rowsDropped, columns: columns.length, tookMs });
+    }
+    const refused = checkRows(this.#means.policy, raw.rowCount);
+    return refused === null ? succeed(raw) : { ok: false, failure: refused };
+  }
+
+  async #record(ask: Ask, digest: string, content: string, numbers: number): Promise<Checked<null>> {
+    const { ledger, policy } = this.#means;
+    const { run } = ask;
+    const refused = checkNumbers(policy, ledger.departed(run), numbers);
+    if (refused !== null) return { ok: false, failure: refused };
+    const kinds = [...new Set(ask.work.flatMap(kindsOfWork))];
+    const curvature = curvatureOfWorks(ask.work);
+    return ledger.append({ run, digest, ask: ask.ask, kinds, numbers, curvature, content });
+  }
+
+  #keep(live: LiveRun, answer: Answer, content: string): void {
+    live.last = { content, answer };
+    for (const item of answer.work)
+      if (item.work === 'proximal')
+        for (const { problem, point } of item.problems)
+          live.memory.remember('point', problem, answer.ask, point);
+  }
+
+  #tell(ask: Ask, numbers: number, repeated: boolean, started: number): void {
+    const run = this.#means.ledger.departed(ask.run);
+    this.#means.onEvent({
+      event: 'answered',
+      run: ask.run,
+      ask: ask.ask,
+      asked: ask.work.map(workInWords),
+      kinds: [...new Set(ask.work.flatMap(kindsOfWork))],
+      numbers,
+      curvature: curvatureTotal(curvatureOfWorks(ask.work)),
+      runNumbers: run.numbers,
+      runCurvature: curvatureTotal(run.curvature),
+      repeated,
+      tookMs: this.#means.nowMs() - started,
+    });
+  }
+}

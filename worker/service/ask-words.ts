@@ -1,0 +1,21 @@
+import type { Work } from '../../protocol/messages/round.js';
+
+const several = (count: number, one: string, many: string): string =>
+  count === 1 ? one : `${count} ${many}`;
+
+/** What a work item asks for, in the words of the log. */
+export function workInWords(work: Work): string {
+  switch (work.work) {
+    case 'survey':
+      return 'the survey';
+    case 'factor':
+      return 'the triangular factor';
+    case 'proximal':
+      return several(work.problems.length, 'a proximal point', 'proximal points');
+    case 'evaluate': {
+      const wants = [...new Set(work.points.map(({ want }) => want))].join(' and ');
+      const points = `${wants} at ${several(work.points.length, 'a point', 'points')}`;
+      return work.ownFit === null ? points : `${points}, and its own fit`;
+    }
+  }
+}

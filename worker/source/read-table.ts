@@ -1,0 +1,155 @@
+import { type Checked, fail, succeed } from '../../protocol/failure.js';
+import { createEnumSql, levelsSql, numericSql, textSql } from './column-sql.js';
+import { diagnose } from './diagnose.js';
+import { type Engine, openEngine, textRows } from './duckdb.js';
+import { inFolder } from './in-folder.js';
+import { jsonNames, missingColumn, openRelation, type Relation } from './relation.js';
+import { type Scan, type ScanColumn, scanRelation } from './scan.js';
+import type { LevelColumn, LevelsRequest, Table, TableRequest, TableSource } from './table.js';
+
+// a bound on memory: DuckDB buffers tens of megabytes of CSV per thread
+const fileThreads = 4;
+// with one thread a query without `order by` still gives its rows in the same order each time
+const queryThreads = 1;
+
+/**
+ * Reads the columns asked for. Empty text is a missing value; numbers are the doubles nearest to their decimal form.
+ *
+ * Fails with `table-missing`, `table-empty`, `table-unreadable` (with DuckDB's words), `header-duplicate`,
+ * `column-missing`, `column-not-numeric`, `value-not-finite`, `value-missing` (unless dropped), `level-unknown`,
+ * `response-range` (a third class); the last five name the first row and column. Messages quote values of the table: they are for the custodian,
+ * and only their code may leave the site.
+ */
+export async function readTable(source: TableSource, request: TableRequest): Promise<Checked<Table>> {
+  const read = async (): Promise<Checked<Table>> => {
+    const engine = await openEngine({ threads: source.kind === 'query' ? queryThreads : fileThreads });
+    try {
+      return await readWith(engine, source, request);
+    } finally {
+      engine.close();
+    }
+  };
+  if (source.kind !== 'query') return read();
+  return inFolder(source.folder, read);
+}
+
+async function readWith(
+  engine: Engine,
+  source: TableSource,
+  request: TableRequest,
+): Promise<Checked<Table>> {
+  const used = [...new Set([...request.numeric, ...request.levels.map((levels) => levels.column)])];
+  const relation = await openRelation(engine, source, used);
+  if (!relation.ok) return relation;
+  const absent = missingColumn([...relation.value.columns.keys()], used, relation.value.where);
+  if (absent !== null) return absent;
+  const permitted = await permittedLevels(engine, relation.value, request.levels);
+  if (!permitted.ok) return permitted;
+
+  const columns = scanColumns(relation.value, request, permitted.value);
+  const scan = await scanRelation(engine, relation.value, columns, request);
+  if (!scan.ok) return scan;
+  const found = scan.value;
+  if (source.kind === 'jsonl' && (found.found === 'missing' || (found.found === null && found.rowCount === 0))) {
+    const names = await jsonNames(engine, source.path);
+    if (!names.ok) return names;
+    const unknown = names.value.length === 0 ? null : missingColumn(names.value, used, relation.value.where);
+    if (unknown !== null) return unknown;
+  }
+  if (found.found !== null) {
+    const position = found.column - request.numeric.length;
+    const levels = position < 0 ? null : { request: request.levels[position], permitted: permitted.value[position] };
+    return { ok: false, failure: await diagnose(engine, relation.value, columns[found.column], found, levels) };
+  }
+  if (found.rowsSeen === 0)
+    return fail('table-empty', 'The table has no rows.', {
+      where: relation.value.where,
+      remedy: 'Check that the table entry of the site file names the right table.',
+    });
+  return succeed(tableOf(found, request, permitted.value));
+}
+
+/** The levels of each request in code order: those asked for and, where one more is admitted, the first other value. */
+async function permittedLevels(
+  engine: Engine,
+  relation: Relation,
+  requests: readonly LevelsRequest[],
+): Promise<Checked<string[][]>> {
+  const permitted: string[][] = [];
+  for (const [position, request] of requests.entries()) {
+    const levels = [...request.levels];
+    if (request.others === 'one') {
+      const other = await firstOther(engine, relation, request, `asked${position}`);
+      if (!other.ok) return other;
+      if (other.value !== null) levels.push(other.value);
+    }
+    const created = await textRows(engine, createEnumSql(enumName(position), levels), relation.where);
+    if (!created.ok) return created;
+    permitted.push(levels);
+  }
+  return succeed(permitted);
+}
+
+async function firstOther(
+  engine: Engine,
+  relation: Relation,
+  request: LevelsRequest,
+  asked: string,
+): Promise<Checked<string | null>> {
+  const created = await textRows(engine, createEnumSql(asked, request.levels), relation.where);
+  if (!created.ok) return created;
+  const column = relation.columns.get(request.column);
+  if (column === undefined) throw new Error(`the relation has no column ${request.column}`);
+  const rows = await textRows(
+    engine,
+    `select ${textSql(column)} from ${relation.from} where ${levelsSql(column, request.levels, asked)} = -1 limit 1`,
+    relation.where,
+  );
+  return rows.ok ? succeed(rows.value[0]?.[0] ?? null) : rows;
+}
+
+const enumName = (position: number): string => `levels${position}`;
+
+/** Numeric columns first, then level columns, in the order of the request. */
+function scanColumns(
+  relation: Relation,
+  request: TableRequest,
+  permitted: readonly (readonly string[])[],
+): ScanColumn[] {
+  const columnOf = (name: string) => {
+    const column = relation.columns.get(name);
+    if (column === undefined) throw new Error(`the relation has no column ${name}`);
+    return column;
+  };
+  return [
+    ...request.numeric.map(
+      (name): ScanColumn => ({ name, kind: 'numeric', sql: numericSql(columnOf(name)) }),
+    ),
+    ...request.levels.map(
+      ({ column }, position): ScanColumn => ({
+        name: column,
+        kind: 'levels',
+        sql: levelsSql(columnOf(column), permitted[position], enumName(position)),
+      }),
+    ),
+  ];
+}
+
+function tableOf(scan: Scan, request: TableRequest, permitted: readonly (readonly string[])[]): Table {
+  const numeric = new Map<string, Float64Array>();
+  const levels = new Map<string, LevelColumn>();
+  scan.values.forEach((values, position) => {
+    if (values instanceof Float64Array) numeric.set(request.numeric[position], values);
+    else {
+      const place = position - request.numeric.length;
+      levels.set(request.levels[place].column, { levels: permitted[place], codes: values });
+    }
+  });
+  return {
+    rowCount: scan.rowCount,
+    rowsDropped: scan.rowsDropped,
+    ...(scan.rowNumbers === null ? {} : { rowNumbers: scan.rowNumbers }),
+    numeric,
+    levels,
+  };
+}
