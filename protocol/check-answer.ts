@@ -29,7 +29,7 @@ function firstOf<T>(items: readonly T[], check: (item: T, index: number) => Fail
 /**
  * Null where a worker may compute this ask; p is null until the scaling is known. Codes: `dimension-wrong` (a length,
  * a repeated problem, an index, work that needs the scaling), `memory-missing` (a diagonal or start left out without
- * an earlier ask to take it from).
+ * an ask to take it from).
  */
 export function checkAsk(ask: Ask, p: number | null): Failure | null {
   const seen = new Set<number>();
@@ -59,8 +59,9 @@ function checkProximalWork(
     seen.add(problem.problem);
     return (
       lengthIs(problem.center, p, `${at}.center`) ??
+      // An ask sent again may leave out the diagonal it first came with; its start is never its own answer.
       lengthOrMemory(problem.diagonal, problem.diagonalAsk, askNumber, p, `${at}.diagonal`) ??
-      lengthOrMemory(problem.start, problem.startAsk, askNumber, p, `${at}.start`)
+      lengthOrMemory(problem.start, problem.startAsk, askNumber - 1, p, `${at}.start`)
     );
   });
 }
@@ -68,13 +69,13 @@ function checkProximalWork(
 function lengthOrMemory(
   vector: Float64Array | null,
   fromAsk: number,
-  askNumber: number,
+  askMost: number,
   p: number,
   field: string,
 ): Failure | null {
   if (vector !== null) return lengthIs(vector, p, field);
-  if (fromAsk >= 1 && fromAsk < askNumber) return null;
-  return wrong('memory-missing', field, `Left out, but ask ${fromAsk} is none before ask ${askNumber}.`);
+  if (fromAsk >= 1 && fromAsk <= askMost) return null;
+  return wrong('memory-missing', field, `Left out, but ask ${fromAsk} cannot have brought it.`);
 }
 
 function checkEvaluateWork(work: EvaluateWork, p: number, field: string): Failure | null {

@@ -3,7 +3,9 @@ import { EXIT, exitCodeTable } from './exit-codes.js';
 import { complain } from './terminal.js';
 
 /** Runs a command's work and sets the exit code it returns; what it throws is a defect and is told as one. */
-export function acting<A extends unknown[]>(work: (...args: A) => Promise<number>): (...args: A) => Promise<void> {
+export function acting<A extends unknown[]>(
+  work: (...args: A) => Promise<number>,
+): (...args: A) => Promise<void> {
   return async (...args) => {
     try {
       process.exitCode = await work(...args);

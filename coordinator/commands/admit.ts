@@ -1,10 +1,11 @@
 import { writeFile } from 'node:fs/promises';
 import { Command } from 'commander';
+import { siteName } from '../../protocol/specification/fields.js';
 import { openTokens } from '../service/tokens.js';
 import { acting, withTail } from './action.js';
 import { EXIT } from './exit-codes.js';
-import { type Attempt, complain, done, ending, say, sayEnding } from './terminal.js';
 import { STATE_DEFAULT } from './serve.js';
+import { type Attempt, complain, done, ending, say, sayEnding } from './terminal.js';
 
 export function admitCommand(): Command {
   const command = new Command('admit')
@@ -27,13 +28,16 @@ interface AdmitOptions {
   readonly out?: string;
 }
 
-/** What site names may be, as in fit specifications and site files. */
-const NAME = /^[a-z0-9][a-z0-9._-]{0,63}$/i;
-
 async function admit(site: string | undefined, options: AdmitOptions): Promise<number> {
   const name = site ?? options.analyst;
-  if (name === undefined || (site !== undefined && options.analyst !== undefined) || !NAME.test(name)) {
-    complain('Give one name, of a site or with --analyst: letters, digits, `.`, `_` and `-`, at most 64.');
+  if (
+    name === undefined ||
+    (site !== undefined && options.analyst !== undefined) ||
+    !siteName.safeParse(name).success
+  ) {
+    complain(
+      'Give one name, of a site or with --analyst: at most 64 letters, digits, hyphens, dots and underscores, the first a letter or digit.',
+    );
     return EXIT.usage;
   }
   const kind = site === undefined ? 'analyst' : 'site';
@@ -45,7 +49,10 @@ async function admit(site: string | undefined, options: AdmitOptions): Promise<n
   if (!issued.ok) return sayEnding(ending(EXIT.machine, [issued.failure]).ending, false);
   if (options.out === undefined) say([issued.value]);
   else await writeFile(options.out, `${issued.value}\n`);
-  const where = options.out === undefined ? 'Hand it over by a safe way; it is not shown again' : `It is in ${options.out}`;
+  const where =
+    options.out === undefined
+      ? 'Hand it over by a safe way; it is not shown again'
+      : `It is in ${options.out}`;
   complain(`This is the token of ${kind} ${name}. ${where}.`);
   return EXIT.ok;
 }

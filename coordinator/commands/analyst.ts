@@ -1,7 +1,7 @@
 import { readFile } from 'node:fs/promises';
 import { type Command, Option } from 'commander';
 import { z } from 'zod';
-import { type Failure, FAILURE_CODES } from '../../protocol/failure.js';
+import { FAILURE_CODES, type Failure } from '../../protocol/failure.js';
 import { EXIT } from './exit-codes.js';
 import { type Attempt, done, ending } from './terminal.js';
 
@@ -25,7 +25,9 @@ const REPLY_DEADLINE_MS = 30_000;
 /** Adds `--url` and `--token-file` to a command. */
 export function withAnalyst(command: Command): Command {
   return command
-    .addOption(new Option('--url <url>', 'where the coordinator is').default(URL_DEFAULT).env('COMMONFIT_URL'))
+    .addOption(
+      new Option('--url <url>', 'where the coordinator is').default(URL_DEFAULT).env('COMMONFIT_URL'),
+    )
     .addOption(
       new Option(
         '--token-file <file>',
@@ -152,7 +154,8 @@ export function readReply<T>(analyst: Analyst, path: string, schema: z.ZodType<T
 
 export function unreachable(analyst: Analyst, error: unknown): Attempt<never> {
   const cause = error instanceof Error && error.cause instanceof Error ? error.cause : error;
-  const text = cause instanceof Error ? ((cause as NodeJS.ErrnoException).code ?? cause.message) : String(cause);
+  const text =
+    cause instanceof Error ? ((cause as NodeJS.ErrnoException).code ?? cause.message) : String(cause);
   return ending(EXIT.unreachable, [
     {
       code: 'link-lost',
@@ -169,7 +172,8 @@ async function refusedBy(response: Response): Promise<Attempt<never>> {
     code: problem.code ?? 'internal',
     message: problem.detail ?? problem.title ?? `The coordinator answered with status ${response.status}.`,
   };
-  const failures = problem.failures === undefined || problem.failures.length === 0 ? [failure] : problem.failures;
+  const failures =
+    problem.failures === undefined || problem.failures.length === 0 ? [failure] : problem.failures;
   return ending(exitOf(response.status, problem.failures !== undefined), failures as readonly Failure[]);
 }
 

@@ -20,7 +20,8 @@ async function check(file: string, json: boolean): Promise<number> {
   if (!read.ok) return sayEnding(read.ending, json);
   const { specification, digest } = read.value;
   const columns = designColumns(specification);
-  if (json) sayJson({ event: 'checked', digest, specification, coefficients: columns.map(({ name }) => name) });
+  if (json)
+    sayJson({ event: 'checked', digest, specification, coefficients: columns.map(({ name }) => name) });
   else say(specificationText(specification, columns, digest, terminalOf(process.stdout).width));
   return EXIT.ok;
 }

@@ -7,7 +7,7 @@ import { type Document, readDocument } from './document.js';
 import { EXIT } from './exit-codes.js';
 import { interrupted, type LocalSite } from './on-this-machine.js';
 import { type Attempt, done, ending } from './terminal.js';
-import { runProgram } from './worker-process.js';
+import { runProgram, runWorkerCommand } from './worker-process.js';
 
 /** Writes the tables, the site files and the specification of the pipe-breaks scenario. */
 const GENERATOR = fileURLToPath(new URL('../../examples/pipe-breaks/generate.js', import.meta.url));
@@ -18,7 +18,7 @@ const siteFileSchema = z.looseObject({
   coordinator: z.looseObject({ 'token-file': z.string() }),
 });
 
-/** Generates the scenario into a folder, and finds its site files. */
+/** Generates the scenario into a folder; each custodian approves its specification, as the policies ask for. */
 export async function generatedSites(
   folder: string,
   url: string,
@@ -38,14 +38,25 @@ export async function generatedSites(
     const { site, coordinator } = siteFileSchema.parse(parse(await readFile(siteFile, 'utf8')));
     sites.push({ site, siteFile, tokenFile: resolve(folder, coordinator['token-file']) });
   }
-  return done(sites);
+  const document = await specificationIn(folder);
+  const approved = await Promise.all(
+    sites.map(({ siteFile }) => runWorkerCommand(['approve', siteFile, document], signal)),
+  );
+  if (signal.aborted) return interrupted();
+  const refused = approved.find(({ code }) => code !== 0);
+  if (refused === undefined) return done(sites);
+  const texts = ['A specification could not be approved.', ...refused.stderr.trimEnd().split('\n')];
+  return { ok: false, ending: { exit: EXIT.defect, texts, failures: [] } };
 }
 
 /** The specification that the generator wrote. */
-export async function generatedDocument(folder: string): Promise<Attempt<Document>> {
+export const generatedDocument = async (folder: string): Promise<Attempt<Document>> =>
+  readDocument(await specificationIn(folder));
+
+async function specificationIn(folder: string): Promise<string> {
   const [file] = await filesEnding(folder, '.fit.yaml');
   if (file === undefined) throw new Error(`the generator wrote no fit specification into ${folder}`);
-  return await readDocument(join(folder, file));
+  return join(folder, file);
 }
 
 /** Removes what an earlier demo left in a folder; a folder that is not a demo's is left alone and refused. */

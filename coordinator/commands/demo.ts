@@ -59,7 +59,12 @@ async function demo(options: { out: string }): Promise<number> {
     say(['', 'The two runs side by side, by curvature matrices a site lets leave:']);
     say(comparisonText(first, second, width));
     const places = SCENES.map((scene) => relative('.', join(out, scene.folder, 'result')));
-    say(wrapped(`The results are in ${places.join(' and ')}; the tables and site files are beside them.`, width));
+    say(
+      wrapped(
+        `The results are in ${places.join(' and ')}; the tables and site files are beside them.`,
+        width,
+      ),
+    );
     say(wrapped('The rows are made up. Nothing here says anything about real pipes.', width));
     return Math.max(...shown.map(({ result }) => exitCodeOf(result.outcome)));
   });

@@ -5,7 +5,16 @@ import type { LogEvent } from '../run/log-event.js';
 import { type Analyst, send, unreachable } from './analyst.js';
 import { eventCutter } from './event-stream.js';
 import { EXIT, exitCodeOf } from './exit-codes.js';
-import { type Attempt, complain, done, type Ending, say, sayEnding, sayJson, terminalOf } from './terminal.js';
+import {
+  type Attempt,
+  complain,
+  done,
+  type Ending,
+  say,
+  sayEnding,
+  sayJson,
+  terminalOf,
+} from './terminal.js';
 
 /** Times a broken log is picked up again without anything new in between, and the longest pause before one. */
 const TRIES_MOST = 12;

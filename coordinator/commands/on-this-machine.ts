@@ -5,11 +5,11 @@ import type { Analyst } from './analyst.js';
 import type { Document } from './document.js';
 import { EXIT, exitCodeOf } from './exit-codes.js';
 import { followRun, type OutcomeEvent } from './follow.js';
+import { type LocalCoordinator, startLocalCoordinator } from './local-coordinator.js';
 import { type Fetched, fetchResult } from './result-folder.js';
 import { submitDocument } from './submit.js';
 import { type Attempt, done } from './terminal.js';
 import { startWorker, tailOf, type WorkerProcess } from './worker-process.js';
-import { type LocalCoordinator, startLocalCoordinator } from './local-coordinator.js';
 
 /** One site of a run on this machine: its site file, and where that file says its token is. */
 export interface LocalSite {
@@ -98,7 +98,11 @@ async function followed(
 
 export const interrupted = (): Attempt<never> => ({
   ok: false,
-  ending: { exit: EXIT.interrupted, texts: ['Interrupted: the workers and the coordinator are stopped.'], failures: [] },
+  ending: {
+    exit: EXIT.interrupted,
+    texts: ['Interrupted: the workers and the coordinator are stopped.'],
+    failures: [],
+  },
 });
 
 async function workerEnded(
@@ -111,7 +115,10 @@ async function workerEnded(
     ok: false,
     ending: {
       exit: exitCodeOf('site-missing'),
-      texts: [`The worker of ${reason.name} ended before the run did (${reason.how}). It last said:`, ...tail],
+      texts: [
+        `The worker of ${reason.name} ended before the run did (${reason.how}). It last said:`,
+        ...tail,
+      ],
       failures: [
         {
           code: 'site-missing',

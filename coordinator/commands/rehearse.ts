@@ -24,7 +24,10 @@ export function rehearseCommand(): Command {
     .requiredOption('--rows <table>', 'the table with the rows of all sites: .csv, .parquet or .jsonl')
     .requiredOption('--by <column>', 'the column that says which site a row belongs to')
     .requiredOption('--out <folder>', 'where the result goes')
-    .option('--keep', "keep the split tables, site files, workers' logs and coordinator's state, in <folder>/rehearsal")
+    .option(
+      '--keep',
+      "keep the split tables, site files, workers' logs and coordinator's state, in <folder>/rehearsal",
+    )
     .option('--json', 'the round log as JSON lines instead of sentences')
     .action(acting(rehearse));
   return withTail(command, {
@@ -122,7 +125,10 @@ async function splitIntoSites(
     return ending(EXIT.document, [
       {
         code: 'site-missing',
-        message: `No row of ${options.rows} has ${options.by} ${listed(absent)}; the values are ${listed(parts.map(({ site }) => site), 12)}.`,
+        message: `No row of ${options.rows} has ${options.by} ${listed(absent)}; the values are ${listed(
+          parts.map(({ site }) => site),
+          12,
+        )}.`,
         remedy: 'Name the sites in the specification as that column does.',
         where: { file: document.file, field: 'sites' },
       },

@@ -2,7 +2,14 @@ import { Command } from 'commander';
 import { z } from 'zod';
 import { counted, wrapped } from '../report/phrases.js';
 import { acting, withTail } from './action.js';
-import { type AnalystOptions, analystOf, ask, type RunSummary, runSummarySchema, withAnalyst } from './analyst.js';
+import {
+  type AnalystOptions,
+  analystOf,
+  ask,
+  type RunSummary,
+  runSummarySchema,
+  withAnalyst,
+} from './analyst.js';
 import { EXIT } from './exit-codes.js';
 import { say, sayEnding, sayJson, terminalOf } from './terminal.js';
 

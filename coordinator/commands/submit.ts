@@ -1,13 +1,13 @@
 import { basename } from 'node:path';
 import { Command } from 'commander';
 import { z } from 'zod';
+import { wrapped } from '../report/phrases.js';
 import { acting, withTail } from './action.js';
 import { type Analyst, type AnalystOptions, analystOf, ask, withAnalyst } from './analyst.js';
 import { type Document, readDocument } from './document.js';
 import { EXIT } from './exit-codes.js';
 import { watchRun } from './follow.js';
 import { type Attempt, say, sayEnding, sayJson, terminalOf } from './terminal.js';
-import { wrapped } from '../report/phrases.js';
 
 export function submitCommand(): Command {
   const command = withAnalyst(

@@ -5,7 +5,10 @@ import { wrapped } from '../report/phrases.js';
 const WIDTH_DEFAULT = 80;
 
 /** Columns and colour of a stream: 80 columns where it is no terminal; no colour there, or under NO_COLOR. */
-export function terminalOf(stream: { isTTY?: boolean; columns?: number }): { width: number; colour: boolean } {
+export function terminalOf(stream: { isTTY?: boolean; columns?: number }): {
+  width: number;
+  colour: boolean;
+} {
   const isTerminal = stream.isTTY === true;
   const columns = isTerminal ? (stream.columns ?? 0) : 0;
   const plain = (process.env['NO_COLOR'] ?? '') !== '' || process.env['TERM'] === 'dumb';
@@ -35,7 +38,9 @@ export interface Ending {
   readonly failures: readonly Failure[];
 }
 
-export type Attempt<T> = { readonly ok: true; readonly value: T } | { readonly ok: false; readonly ending: Ending };
+export type Attempt<T> =
+  | { readonly ok: true; readonly value: T }
+  | { readonly ok: false; readonly ending: Ending };
 
 export const done = <T>(value: T): Attempt<T> => ({ ok: true, value });
 

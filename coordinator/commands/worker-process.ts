@@ -23,7 +23,9 @@ export function startWorker(
   logFile: string,
   ended: (site: string, how: string) => void,
 ): WorkerProcess {
-  const child = spawn(process.execPath, [WORKER_PROGRAM, 'join', siteFile], { stdio: ['ignore', 'pipe', 'pipe'] });
+  const child = spawn(process.execPath, [WORKER_PROGRAM, 'join', siteFile], {
+    stdio: ['ignore', 'pipe', 'pipe'],
+  });
   const log = createWriteStream(logFile, { mode: 0o600 });
   child.stdout.pipe(log, { end: false });
   child.stderr.pipe(log, { end: false });

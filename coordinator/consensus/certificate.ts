@@ -18,6 +18,8 @@ export interface ModelStep {
   readonly direction: Float64Array;
   /** e = −(∇f(z)ᵀΔ + ½ ΔᵀMΔ + g(z + Δ) − g(z)) ≥ 0. */
   readonly decrement: number;
+  /** ΔᵀMΔ. */
+  readonly bend: number;
 }
 
 /**
@@ -39,10 +41,10 @@ export function modelStep(
   );
   if (next === null) return null;
   const direction = next.map((value, j) => value - z[j]);
-  const bend = 0.5 * dot(direction, symmetricTimes(metric, direction));
-  const change = dot(gradient, direction) + bend + penaltyValue(g, next) - penaltyValue(g, z);
+  const bend = dot(direction, symmetricTimes(metric, direction));
+  const change = dot(gradient, direction) + 0.5 * bend + penaltyValue(g, next) - penaltyValue(g, z);
   // the model is strongly convex, so its decrease is at least ½‖Δ‖²: guards the difference against rounding
-  return { z: next, direction, decrement: Math.max(-change, bend) };
+  return { z: next, direction, decrement: Math.max(-change, 0.5 * bend), bend };
 }
 
 export const relativeTo = (objective: number): number => Math.max(Math.abs(objective), OBJECTIVE_LEAST);

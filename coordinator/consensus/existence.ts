@@ -1,5 +1,4 @@
-import { dot, maxAbs } from '../../numerics/vector.js';
-import { symmetricTimes } from './matrix.js';
+import { maxAbs } from '../../numerics/vector.js';
 import type { Penalty } from './penalty.js';
 
 /** A pivot this small, relative to its column, is rounding: the column is a combination of those before it. */
@@ -41,20 +40,19 @@ export function aliasedColumns(curvature: Float64Array, g: Penalty): number[] {
 
 /**
  * Columns along which a smooth loss has no minimiser: at a point whose gap is certified small, the Newton step is still
- * large and the curvature along it a small share of what it was at the start (separable classes, a level without
- * events: Albert and Anderson 1984). Empty where the optimum exists.
+ * large, and `bend` = ΔᵀHΔ, the curvature along it, a small share of what it was at the start (separable classes, a
+ * level without events: Albert and Anderson 1984). Empty where the optimum exists.
  */
 export function runawayColumns(
   z: Float64Array,
   step: Float64Array,
-  curvature: Float64Array,
+  bend: number,
   startDiagonal: Float64Array,
 ): number[] {
   const longest = maxAbs(step);
   if (!(longest > STEP_SHARE * maxAbs(z)) || longest < STEP_SHARE) return [];
-  const now = dot(step, symmetricTimes(curvature, step));
   let before = 0;
   for (let j = 0; j < z.length; j++) before += startDiagonal[j] * step[j] * step[j];
-  if (now > CURVATURE_SHARE * before) return [];
+  if (bend > CURVATURE_SHARE * before) return [];
   return [...step.keys()].filter((j) => Math.abs(step[j]) >= 0.5 * longest);
 }

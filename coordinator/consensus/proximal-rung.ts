@@ -1,8 +1,9 @@
 import { Acceleration } from './acceleration.js';
 import { estimatedCertificate } from './certificate.js';
+import { runawayColumns } from './existence.js';
 import type { Certificate, Method, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
 import { flooredDiagonal } from './metric.js';
-import { penaltyValue } from './penalty.js';
+import { leastSubgradient, penaltyValue } from './penalty.js';
 import { evaluate, type PooledEvaluation, required } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 import { balancingFactor, normalisedResiduals, type Residuals } from './residuals.js';
@@ -204,20 +205,24 @@ function estimate(
   z: Float64Array,
   answers: PooledEvaluation,
 ): MethodEnd | null {
+  const g = problem.penalty;
   const [at] = answers.points;
-  const objective = at.value + penaltyValue(problem.penalty, z);
+  const objective = at.value + penaltyValue(g, z);
   const gradient = required(at.gradient, 'gradient');
-  const certificate = estimatedCertificate(
-    problem.penalty,
-    z,
-    gradient,
-    required(at.diagonal, 'diagonal'),
-    objective,
-  );
+  const diagonal = required(at.diagonal, 'diagonal');
+  const certificate = estimatedCertificate(g, z, gradient, diagonal, objective);
   state.objective = objective;
   state.certificate = certificate;
   if (certificate.relativeGap > problem.tolerance) return null;
-  return ending(problem, state, 'solved', z, at.value, certificate, null);
+  const step = leastSubgradient(g, z, gradient).map(
+    (slope, j) => -slope / Math.max(diagonal[j] + g.l2[j], 1e-300),
+  );
+  const bend = step.reduce((sum, value, j) => sum + (diagonal[j] + g.l2[j]) * value * value, 0);
+  const runaway = runawayColumns(z, step, bend, state.diagonal);
+  const ended = ending(problem, state, 'solved', z, at.value, certificate, null);
+  return runaway.length === 0
+    ? ended
+    : { ...ended, outcome: 'unbounded', reason: 'separable', columnsAtFault: runaway };
 }
 
 function* tryFinish(

@@ -92,7 +92,11 @@ async function wholeRecordAfter(
     const chunk = await store.read(at, SCAN_BYTES + HEADER_BYTES);
     if (!chunk.ok) return chunk;
     const bytes = Buffer.from(chunk.value.buffer, chunk.value.byteOffset, chunk.value.byteLength);
-    for (let hit = bytes.indexOf(marker); hit >= 0 && hit < SCAN_BYTES; hit = bytes.indexOf(marker, hit + 1)) {
+    for (
+      let hit = bytes.indexOf(marker);
+      hit >= 0 && hit < SCAN_BYTES;
+      hit = bytes.indexOf(marker, hit + 1)
+    ) {
       const header = readHeader(bytes.subarray(hit, hit + HEADER_BYTES));
       if (header === null || at + hit + HEADER_BYTES + header.length > size) continue;
       const payload = await store.read(at + hit + HEADER_BYTES, header.length);

@@ -1,7 +1,13 @@
 import type { Work } from '../../protocol/messages/round.js';
 import { numbersOfAnswer, numbersOfWork } from '../../protocol/numbers.js';
 import { isRefusal, type Reply } from './panel.js';
-import { type ConnectionMemory, EMPTY_MEMORY, rememberAnswered, rememberSent, slimWorks } from './slim-ask.js';
+import {
+  type ConnectionMemory,
+  EMPTY_MEMORY,
+  rememberAnswered,
+  rememberSent,
+  slimWorks,
+} from './slim-ask.js';
 
 /**
  * Numbers to and from each member, in roster order, as they are when no link is lost and nothing is asked twice: the

@@ -39,7 +39,10 @@ function gapText(result: ResultDocument): string {
 }
 
 /** Largest |a − b| / max(|a|, |b|) over all coefficients of all fits, 0 where both are 0; null where names differ. */
-export function largestDifference(a: ResultDocument, b: ResultDocument): { name: string; size: number } | null {
+export function largestDifference(
+  a: ResultDocument,
+  b: ResultDocument,
+): { name: string; size: number } | null {
   if (a.fits.length !== b.fits.length || a.fits.length === 0) return null;
   let largest = { name: '', size: 0 };
   for (const [at, fit] of a.fits.entries()) {

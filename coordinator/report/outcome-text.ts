@@ -17,8 +17,12 @@ export const OUTCOME_HEAD: Readonly<Record<RunOutcome, string>> = {
 };
 
 /** What the certificate says of the point the run stands by. */
-export function certificateText(kind: Certificate['kind'] | string | null, relativeGap: number | null): string {
-  if (kind === null || relativeGap === null) return 'No certificate: nothing shows how far this is from the optimum.';
+export function certificateText(
+  kind: Certificate['kind'] | string | null,
+  relativeGap: number | null,
+): string {
+  if (kind === null || relativeGap === null)
+    return 'No certificate: nothing shows how far this is from the optimum.';
   const gap = roughly(relativeGap);
   switch (kind) {
     case 'measured':

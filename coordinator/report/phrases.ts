@@ -12,10 +12,7 @@ export function roughly(value: number): string {
   if (value === 0) return '0';
   const size = Math.abs(value);
   if (size >= 1e-3 && size < 1e4) return String(Number(value.toPrecision(2)));
-  return value
-    .toExponential(1)
-    .replace('.0e', 'e')
-    .replace('e+', 'e');
+  return value.toExponential(1).replace('.0e', 'e').replace('e+', 'e');
 }
 
 /** `0.12 s`, `4.2 s`, `38 s`, `12 min`, `3.5 h`. */

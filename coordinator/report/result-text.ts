@@ -29,7 +29,7 @@ export function resultText(result: ResultDocument, width: number): string[] {
     '',
     ...wrapped(wayText(result), room),
     ...result.notes.flatMap((note) => wrapped(`Note: ${sentence(note)}`, room, 2)),
-    ...wrapped(`Specification ${result.specification.slice(0, 16)}, commonfit ${result.software}.`, room),
+    ...wrapped(`Specification ${result.specification.slice(0, 16)}, ${result.software}.`, room),
     '',
     ...CAUTIONS.flatMap((caution) => wrapped(caution, room)),
   ];
@@ -66,7 +66,11 @@ function fitText(fit: FitDocument, at: number, result: ResultDocument, width: nu
       : []),
     ...(fit.dropped.length === 0
       ? []
-      : wrapped(`No coefficient, as the column has no spread at any site: ${listed(fit.dropped)}.`, width, 2)),
+      : wrapped(
+          `No coefficient, as the column has no spread at any site: ${listed(fit.dropped)}.`,
+          width,
+          2,
+        )),
     ...wrapped(measuresText(fit), width),
     ...wrapped(certificateText(fit.certificate?.kind ?? null, fit.certificate?.relativeGap ?? null), width),
     ...(fit.certificate === null
@@ -116,7 +120,8 @@ function sitesText(result: ResultDocument, width: number): string[] {
     const rows = site.rowsUsed === null ? 'not surveyed' : counted(site.rowsUsed, 'row');
     const dropped =
       site.rowsDropped === null || site.rowsDropped === 0 ? '' : ` (${grouped(site.rowsDropped)} left out)`;
-    const numbers = sent === undefined ? '' : `; sent ${counted(sent.up, 'number')}, received ${grouped(sent.down)}`;
+    const numbers =
+      sent === undefined ? '' : `; sent ${counted(sent.up, 'number')}, received ${grouped(sent.down)}`;
     return `${site.site}: ${rows}${dropped}${numbers}; kernel ${site.kernel}.`;
   });
   return [

@@ -30,7 +30,8 @@ export function roundSentence(round: RoundEvent, leftMs: number | null, width: n
 
 function* wordings(round: RoundEvent, leftMs: number | null, width: number): Generator<string> {
   const left = leftMs === null ? '' : `; ${duration(leftMs)} left`;
-  const fits = round.fitsTotal > 1 && round.fitsOpen > 0 ? `, ${round.fitsOpen} of ${round.fitsTotal} fits open` : '';
+  const fits =
+    round.fitsTotal > 1 && round.fitsOpen > 0 ? `, ${round.fitsOpen} of ${round.fitsTotal} fits open` : '';
   const slow = round.slowest;
   if (width >= 80) {
     const last = slow === null ? '' : `; ${slow.site} answered last, after ${duration(slow.ms)}`;
@@ -55,5 +56,7 @@ function standing(round: RoundEvent, length: 'long' | 'middle' | 'short'): strin
   if (gap === null) return `${head} gathered ${round.purpose}`;
   const size = `${round.gapMeasured ? '' : 'about '}${roughly(gap)}`;
   const off = length === 'short' ? 'off' : 'off the optimum';
-  return length === 'long' ? `${head} gathered ${round.purpose}: ${size} ${off}` : `${head} is ${size} ${off}`;
+  return length === 'long'
+    ? `${head} gathered ${round.purpose}: ${size} ${off}`
+    : `${head} is ${size} ${off}`;
 }

@@ -171,7 +171,9 @@ function outcomeLines(
     shown,
     ...rest,
     ...wrapped(`The result folder, on the coordinator's machine: ${event.folder}`, width),
-    ...(memory.run === null ? [] : wrapped(`To read the coefficients: commonfit result ${memory.run}`, width)),
+    ...(memory.run === null
+      ? []
+      : wrapped(`To read the coefficients: commonfit result ${memory.run}`, width)),
   ];
 }
 

@@ -1,4 +1,10 @@
-import type { DesignColumn, FitSpecification, Penalty, Term, Transform } from '../../protocol/specification/types.js';
+import type {
+  DesignColumn,
+  FitSpecification,
+  Penalty,
+  Term,
+  Transform,
+} from '../../protocol/specification/types.js';
 import { counted, duration, listed, wrapped } from './phrases.js';
 
 /** Design columns named one by one before the rest is only counted. */
@@ -69,14 +75,16 @@ function sitesText(spec: FitSpecification): string {
 function columnText(spec: FitSpecification, column: DesignColumn): string {
   const term = spec.terms[column.term];
   const factors = column.factors.map((factor) =>
-    factor.kind === 'level' ? `1 where ${factor.column} is ${factor.level}` : transformed(factor.column, factor.transform),
+    factor.kind === 'level'
+      ? `1 where ${factor.column} is ${factor.level}`
+      : transformed(factor.column, factor.transform),
   );
   const detail = term === undefined ? '' : termDetail(term);
   return `${column.name}: ${factors.join(', times ')}${detail}`;
 }
 
 function termDetail(term: Term): string {
-  if (term.kind === 'numeric') return term.unit === null ? '' : ` (${term.column} in ${term.unit})`;
+  if (term.kind === 'numeric') return term.unit === null ? '' : ` [${term.unit}]`;
   if (term.kind === 'levels') return term.baseline === null ? ', no baseline' : `, against ${term.baseline}`;
   return '';
 }
@@ -95,7 +103,9 @@ function penaltyText(penalty: Penalty): string {
       ? `λ = ${lambdas[0]}`
       : `λ = ${listed(lambdas.map(String), 6)}, ${lambdas.length} fits`;
   const share = penalty.kind === 'elastic-net' ? `, ${penalty.l1} of it on absolute values` : '';
-  const scale = penalty.scaled ? 'coefficients times the standard deviation of their column' : 'coefficients as they are';
+  const scale = penalty.scaled
+    ? 'coefficients times the standard deviation of their column'
+    : 'coefficients as they are';
   const factors = Object.entries(penalty.perTerm).map(([name, factor]) =>
     factor === 0 ? `${name} left out` : `${name} times ${factor}`,
   );

@@ -61,4 +61,5 @@ const number = (value: number): string => (Object.is(value, -0) ? '-0' : String(
 const csv = (rows: readonly (readonly string[])[]): string =>
   rows.map((row) => `${row.map(quoted).join(',')}\r\n`).join('');
 
-const quoted = (field: string): string => (/[",\r\n]/.test(field) ? `"${field.replaceAll('"', '""')}"` : field);
+const quoted = (field: string): string =>
+  /[",\r\n]/.test(field) ? `"${field.replaceAll('"', '""')}"` : field;

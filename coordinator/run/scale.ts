@@ -1,4 +1,5 @@
 import type { Scaling } from '../../protocol/messages/run.js';
+import { perTermMultipliers } from '../../protocol/specification/design-columns.js';
 import type { DesignColumn, FitSpecification } from '../../protocol/specification/types.js';
 import { noPenalty, type Penalty } from '../consensus/penalty.js';
 import type { PooledSurvey } from './survey.js';
@@ -65,9 +66,8 @@ export function penaltyOn(specification: FitSpecification, frame: Frame, fit: nu
   const first = frame.intercept ? 1 : 0;
   for (const penalty of specification.penalties) {
     const lambda = penalty.lambda[Math.min(fit, penalty.lambda.length - 1)];
-    frame.kept.forEach((column, j) => {
-      const term = specification.terms[column.term];
-      const multiplier = penalty.perTerm[column.name] ?? penalty.perTerm[term.name] ?? 1;
+    const multipliers = perTermMultipliers(penalty, specification.terms, frame.kept);
+    multipliers.forEach((multiplier, j) => {
       const factor = (penalty.scaled ? frame.sd[j] : 1) / frame.scaling.scale[j];
       out.l1[first + j] += lambda * penalty.l1 * multiplier * factor;
       out.l2[first + j] += lambda * (1 - penalty.l1) * multiplier * factor * factor;
@@ -100,12 +100,10 @@ export function originalScale(
   theta: Float64Array,
 ): { readonly intercept: number | null; readonly coefficients: Record<string, number> } {
   const first = frame.intercept ? 1 : 0;
-  const coefficients: Record<string, number> = {};
-  let shift = 0;
-  frame.kept.forEach((column, j) => {
-    const value = theta[first + j] / frame.scaling.scale[j];
-    coefficients[column.name] = value;
-    shift += value * frame.scaling.center[j];
-  });
-  return { intercept: frame.intercept ? theta[0] - shift : null, coefficients };
+  const values = frame.kept.map((_, j) => theta[first + j] / frame.scaling.scale[j]);
+  const shift = values.reduce((sum, value, j) => sum + value * frame.scaling.center[j], 0);
+  return {
+    intercept: frame.intercept ? theta[0] - shift : null,
+    coefficients: Object.fromEntries(frame.kept.map((column, j) => [column.name, values[j]])),
+  };
 }

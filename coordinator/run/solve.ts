@@ -105,14 +105,16 @@ function shownProgress(lockstep: Lockstep, tolerance: number): Progress {
     (b.relativeGap ?? Number.POSITIVE_INFINITY) > (a.relativeGap ?? Number.POSITIVE_INFINITY) ? b : a;
   if (open.length > 0) return open.reduce(farthest);
   return lockstep.ends
-    .map((end): Progress => ({
-      rung: end.rung,
-      purpose: 'certificate',
-      primalResidual: null,
-      dualResidual: null,
-      relativeGap: end.certificate?.relativeGap ?? null,
-      gapMeasured: (end.certificate?.relativeGap ?? Number.POSITIVE_INFINITY) <= tolerance,
-      objective: end.loss + end.penalty,
-    }))
+    .map(
+      (end): Progress => ({
+        rung: end.rung,
+        purpose: 'certificate',
+        primalResidual: null,
+        dualResidual: null,
+        relativeGap: end.certificate?.relativeGap ?? null,
+        gapMeasured: (end.certificate?.relativeGap ?? Number.POSITIVE_INFINITY) <= tolerance,
+        objective: end.loss + end.penalty,
+      }),
+    )
     .reduce(farthest);
 }

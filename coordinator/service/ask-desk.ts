@@ -149,7 +149,8 @@ export class AskDesk {
         this.reports.giveUp(this.namesOf(effect.members), effect.waitedMs);
         return;
       case 'pass':
-        if (current !== null) this.reports.pass(current.asked, current.ask, effect.replies, this.measure(effect));
+        if (current !== null)
+          this.reports.pass(current.asked, current.ask, effect.replies, this.measure(effect));
         return;
     }
   }

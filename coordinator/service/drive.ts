@@ -1,6 +1,6 @@
+import { digestOfAsk, type Measured } from '../journal/records.js';
 import type { Reply } from '../panel/panel.js';
 import { NumbersTally } from '../panel/tally.js';
-import { digestOfAsk, type Measured } from '../journal/records.js';
 import type { Member, Run, RunAsk, RunEnd, Shown } from '../run/run.js';
 
 /** Where a run's generator stands: at an ask, at its end, or broken by a defect of this program. */

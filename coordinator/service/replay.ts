@@ -8,7 +8,12 @@ import type { Drive, Turn } from './drive.js';
 export type Replayed =
   | { readonly kind: 'empty' }
   | { readonly kind: 'open'; readonly drive: Drive; readonly turn: Turn }
-  | { readonly kind: 'ended'; readonly drive: Drive | null; readonly turn: Turn | null; readonly ended: EndedRecord };
+  | {
+      readonly kind: 'ended';
+      readonly drive: Drive | null;
+      readonly turn: Turn | null;
+      readonly ended: EndedRecord;
+    };
 
 /**
  * Runs the recorded answers through the generator again. Fails with `journal-broken` where the journal is damaged or

@@ -70,7 +70,12 @@ export interface KnownSoFar {
 /** The end of a run that did not return by itself: no fit, and whatever is known about the sites. */
 export function forcedEnd(
   ending: { readonly outcome: RunEnd['outcome']; readonly reason: string },
-  about: { readonly title: string; readonly digest: string; readonly tolerance: number; readonly software: string },
+  about: {
+    readonly title: string;
+    readonly digest: string;
+    readonly tolerance: number;
+    readonly software: string;
+  },
   known: KnownSoFar,
 ): RunEnd {
   const { roster, survey, round, numbers } = known;

@@ -5,7 +5,7 @@ import type { LogEvent } from '../run/log-event.js';
 import type { RunEnd } from '../run/run.js';
 import { writeWhole } from './files.js';
 import type { RunHost } from './run-host.js';
-import { readLog, type RunLog } from './run-log.js';
+import { type RunLog, readLog } from './run-log.js';
 
 /** A run as the service lists it. */
 export interface RunSummary {

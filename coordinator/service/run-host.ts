@@ -3,7 +3,14 @@ import type { Answer, Refusal } from '../../protocol/messages/round.js';
 import { SOFTWARE } from '../../protocol/version.js';
 import { type EndedRecord, encodeReply, type Measured, type OpenedRecord } from '../journal/records.js';
 import type { Reply } from '../panel/panel.js';
-import { type Member, memberName, type RunAsk, type RunEnd, type RunOutcome, type Shown } from '../run/run.js';
+import {
+  type Member,
+  memberName,
+  type RunAsk,
+  type RunEnd,
+  type RunOutcome,
+  type Shown,
+} from '../run/run.js';
 import { AskDesk } from './ask-desk.js';
 import { Drive, type Turn } from './drive.js';
 import type { HostParts, HostState, LinkedMember } from './host-parts.js';
@@ -54,7 +61,9 @@ export class RunHost {
     const round = this.drive?.round ?? 0;
     if (this.end !== null && this.phase === 'ended') return { state: 'ended', end: this.end };
     if (this.phase === 'halted') return { state: 'halted', reason: this.haltReason, round };
-    return this.phase === 'starting' || this.drive !== null ? { state: 'running', round } : { state: 'waiting' };
+    return this.phase === 'starting' || this.drive !== null
+      ? { state: 'running', round }
+      : { state: 'waiting' };
   }
 
   connected(linked: LinkedMember): void {
@@ -153,7 +162,8 @@ export class RunHost {
     if (this.phase === 'stopped') return;
     this.phase = 'running';
     this.desk = new AskDesk(this.parts, drive.roster, {
-      pass: (asked, ask, replies, measured) => void this.alone(() => this.take(asked, ask, replies, measured)),
+      pass: (asked, ask, replies, measured) =>
+        void this.alone(() => this.take(asked, ask, replies, measured)),
       giveUp: (names) => void this.alone(() => this.endForced(siteMissing(names))),
       late: (sites, waitedMs, patienceLeftMs) =>
         this.parts.log({
@@ -171,7 +181,12 @@ export class RunHost {
   }
 
   /** Records the replies, then feeds them to the generator. */
-  private async take(asked: RunAsk, ask: number, replies: readonly Reply[], measured: Measured): Promise<void> {
+  private async take(
+    asked: RunAsk,
+    ask: number,
+    replies: readonly Reply[],
+    measured: Measured,
+  ): Promise<void> {
     const { drive } = this;
     if (drive === null) throw new Error('replies before the run started');
     const { run } = this.parts.accepted;
@@ -292,7 +307,12 @@ export class RunHost {
       (error) => {
         this.tasks -= 1;
         const reason = error instanceof Error ? error.message : String(error);
-        this.parts.notice({ level: 'error', code: 'internal', message: 'The run host failed.', detail: error });
+        this.parts.notice({
+          level: 'error',
+          code: 'internal',
+          message: 'The run host failed.',
+          detail: error,
+        });
         this.halt(fail('internal', `A defect of commonfit: ${reason}.`).failure);
       },
     );

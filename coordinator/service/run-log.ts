@@ -60,7 +60,7 @@ export class RunLog {
 export class LogReader {
   private offset = 0;
   private lines = 0;
-  private rest = Buffer.alloc(0);
+  private rest: Buffer = Buffer.alloc(0);
 
   constructor(private readonly path: string) {}
 
@@ -114,4 +114,3 @@ function cutTornLine(fd: number): void {
   const whole = size - piece.length + piece.lastIndexOf(10) + 1;
   if (whole < size) ftruncateSync(fd, whole);
 }
-

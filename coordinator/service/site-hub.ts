@@ -51,7 +51,10 @@ export class SiteHub {
   }
 
   sites(): SiteSummary[] {
-    return [...this.seen.values()].map((summary) => ({ ...summary, connected: this.present.has(keyOf(summary)) }));
+    return [...this.seen.values()].map((summary) => ({
+      ...summary,
+      connected: this.present.has(keyOf(summary)),
+    }));
   }
 
   /** Takes a new link whose token speaks for `site`. */
@@ -66,7 +69,12 @@ export class SiteHub {
       this.links.delete(link);
       if (linked !== null) this.remove(linked);
       const level = code === CLOSE_CODES.normal || code === CLOSE_CODES.goingAway ? 'info' : 'warn';
-      this.reports.notice({ level, message: `A link closed with code ${code}.`, site, detail: { code, reason } });
+      this.reports.notice({
+        level,
+        message: `A link closed with code ${code}.`,
+        site,
+        detail: { code, reason },
+      });
     });
     link.onMessage((message) => {
       if (message.kind !== 'hello') {
@@ -92,7 +100,10 @@ export class SiteHub {
       return null;
     }
     if (shard.index > shard.of || shard.of > SHARDS_MOST) {
-      link.close(CLOSE_CODES.messageUnexpected, `shard ${shard.index} of ${shard.of} (at most ${SHARDS_MOST})`);
+      link.close(
+        CLOSE_CODES.messageUnexpected,
+        `shard ${shard.index} of ${shard.of} (at most ${SHARDS_MOST})`,
+      );
       return null;
     }
     const member: Member = { site, shard, kernel };
@@ -126,4 +137,5 @@ export class SiteHub {
 }
 
 /** Two splits of one site (1 of 2, 1 of 3) are different members. */
-const keyOf = ({ site, shard }: Pick<Member, 'site' | 'shard'>): string => `${site} ${shard.index}/${shard.of}`;
+const keyOf = ({ site, shard }: Pick<Member, 'site' | 'shard'>): string =>
+  `${site} ${shard.index}/${shard.of}`;

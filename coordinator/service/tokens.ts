@@ -57,8 +57,14 @@ export function openTokens(stateFolder: string): Tokens {
       const folder = await makeFolder(stateFolder);
       if (!folder.ok) return folder;
       const token = randomBytes(TOKEN_BYTES).toString('base64url');
-      const others = before.value.tokens.filter(({ kind, name }) => kind !== holder.kind || name !== holder.name);
-      const issued = { ...holder, sha256: digestOf(token).toString('hex'), issuedAt: new Date().toISOString() };
+      const others = before.value.tokens.filter(
+        ({ kind, name }) => kind !== holder.kind || name !== holder.name,
+      );
+      const issued = {
+        ...holder,
+        sha256: digestOf(token).toString('hex'),
+        issuedAt: new Date().toISOString(),
+      };
       const next: TokenDocument = { format: 1, tokens: [...others, issued] };
       const kept = await writeWhole(path, `${JSON.stringify(next, null, 2)}\n`, 0o600);
       return kept.ok ? succeed(token) : kept;

@@ -74,7 +74,12 @@ async function main(): Promise<void> {
     .description('Writes the pipe-breaks example: tables and site files of four invented utilities.')
     .requiredOption('--out <folder>', 'folder to write to')
     .option('--url <address>', 'coordinator for the site files', 'ws://127.0.0.1:7443/v1/site')
-    .option('--curvature-most <count>', 'curvature matrices a fit that each site lets leave', curvatureMost, 3)
+    .option(
+      '--curvature-most <count>',
+      'curvature matrices a fit that each site lets leave',
+      curvatureMost,
+      3,
+    )
     .option('--seed <number>', 'seed of the invented rows', seedOf, 1)
     .parse();
   const options = command.opts<ExampleOptions>();

@@ -130,7 +130,7 @@ function logRate(pipe: Pipe): number {
   const soil = { sand: 0, clay: 0.32, loam: 0.08, peat: 0.47 }[pipe.soil];
   const traffic = { light: 0, medium: 0.06, heavy: 0.17 }[pipe.traffic];
   return (
-    -2.0 +
+    -2.35 +
     material +
     soil +
     traffic +

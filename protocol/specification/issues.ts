@@ -71,9 +71,11 @@ function unknownField(path: FieldPath, known: readonly string[], where: Failure[
 
 function codeOf(issue: Issue, found: unknown): FailureCode {
   if (issue.code === 'invalid_type') {
-    const expected = issue.expected === 'int' ? 'number' : issue.expected;
-    return found !== null && typeof found === expected ? 'field-value' : 'field-type';
+    // Infinite numbers and fractions are numbers, but not these.
+    const numeric = issue.expected === 'number' || issue.expected === 'int';
+    return numeric && typeof found === 'number' ? 'field-value' : 'field-type';
   }
+  if (issue.code === 'invalid_value' && typeof found === 'object') return 'field-type';
   if (issue.code === 'invalid_union') {
     const typesOnly = issue.errors.every((branch) => branch.every((inner) => inner.code === 'invalid_type'));
     return typesOnly ? 'field-type' : 'field-value';

@@ -50,6 +50,8 @@ const numericTerm = mapping({
   unit: text('a unit as text', 40).optional(),
   /** Default none: the column as it is. Logarithms are natural. */
   transform: transform.default('none'),
+  /** Known here so that messages name it; a term that has it is a levels term. */
+  levels: z.undefined().optional(),
   baseline: refused(
     'field-conflict',
     'Found a baseline; allowed: only beside levels.',

@@ -65,12 +65,15 @@ export function readYaml(text: string, file: string): Parsed<DocumentSource> {
     if (problems.length > 0) {
       return { ok: false, failures: problems.map((problem) => syntaxFailure(problem, lines, file)) };
     }
-    if (document.directives?.yaml.version !== '1.2')
+    if (document.directives?.yaml.version !== '1.2') {
       return unreadable(file, 'The file asks for YAML 1.1; allowed: YAML 1.2.');
+    }
     const check: NodeCheck = { document, lines, file, failures: [], references: 0 };
     checkNode(document.contents, [], check);
-    if (check.failures.some((failure) => failure.code === 'yaml-invalid'))
+    // With fields only written twice there is still a document to check further.
+    if (check.failures.some((failure) => failure.code !== 'field-conflict')) {
       return { ok: false, failures: check.failures };
+    }
     const lineOf = (path: FieldPath) => lineOfPath(document, lines, path);
     const value: unknown = document.toJS({ maxAliasCount: REFERENCES_MOST });
     return { ok: true, value: { file, value, lineOf, failures: check.failures } };

@@ -99,7 +99,7 @@ function seedOf(name: string): number {
 }
 
 /** First-order autoregressive columns; a `levels` design turns the last two thirds into indicators, some of them rare. */
-function drawColumns(
+export function drawColumns(
   random: Random,
   shape: { rows: number; columns: number; correlation: number },
   design: DesignKind,
@@ -119,7 +119,7 @@ function drawColumns(
 }
 
 /** Row-major with an intercept column; the other columns centred and scaled over all rows. */
-function standardised(raw: Float64Array, rows: number, columns: number): Float64Array {
+export function standardised(raw: Float64Array, rows: number, columns: number): Float64Array {
   const p = columns + 1;
   const x = new Float64Array(rows * p);
   for (let i = 0; i < rows; i++) x[i * p] = 1;
@@ -142,13 +142,13 @@ function drawTruth(random: Random, columns: number, sparse: boolean): Float64Arr
   return truth;
 }
 
-function linearPredictor(x: Float64Array, rows: number, p: number, truth: Float64Array): Float64Array {
+export function linearPredictor(x: Float64Array, rows: number, p: number, truth: Float64Array): Float64Array {
   const eta = new Float64Array(rows);
   for (let i = 0; i < rows; i++) for (let j = 1; j < p; j++) eta[i] += x[i * p + j] * truth[j - 1];
   return eta;
 }
 
-function drawResponse(
+export function drawResponse(
   random: Random,
   loss: LossKind,
   eta: Float64Array,
@@ -166,7 +166,7 @@ function drawResponse(
   return { y, offset };
 }
 
-function splitRows(
+export function splitRows(
   random: Random,
   split: SplitKind,
   sites: number,
@@ -229,7 +229,7 @@ function makePenalty(kind: PenaltyKind, x: Float64Array, y: Float64Array, p: num
   return penalty;
 }
 
-function interceptOnly(
+export function interceptOnly(
   loss: LossKind,
   y: Float64Array,
   offset: Float64Array | null,

@@ -167,13 +167,13 @@ describe('proximal', () => {
 
   test('a far start ends at the same point as a near one', () => {
     fc.assert(
-      fc.property(caseOf([20, 60], [1, 6]), (given) => {
+      fc.property(fc.oneof(caseOf([20, 60], [1, 6]), caseOf([1, 10], [21, 40])), (given) => {
         const random = seededRandom(given.seed);
         const shard = shardOf(given, random);
         const solver = localSolver(shard, lossNamed(given.loss));
         const { center, diagonal } = problemOf(shard, random);
         const near = expectOk(solver.proximal(center, 0.1, diagonal, center));
-        const far = expectOk(solver.proximal(center, 0.1, diagonal, normals(random, shard.p, 5)));
+        const far = expectOk(solver.proximal(center, 0.1, diagonal, normals(random, shard.p, 3)));
         expectNear(far.point, near.point, 1e-9, 1 + largest(near.point));
       }),
       { numRuns: 100 },

@@ -23,15 +23,21 @@ describe('event stream', () => {
 
   test('where the pieces are cut does not matter, for any line ending', () => {
     fc.assert(
-      fc.property(fc.constantFrom('\n', '\r\n', '\r'), fc.array(fc.nat(60), { maxLength: 6 }), (end, cuts) => {
-        const text = `id: 1${end}data: one${end}${end}: note${end}id: 2${end}data: two${end}data: more${end}${end}x${end}`;
-        const places = [...new Set([0, ...cuts.filter((at) => at < text.length), text.length])].sort((a, b) => a - b);
-        const pieces = places.slice(1).map((at, index) => text.slice(places[index], at));
-        expect(cut(...pieces)).toEqual([
-          { id: '1', data: 'one' },
-          { id: '2', data: 'two\nmore' },
-        ]);
-      }),
+      fc.property(
+        fc.constantFrom('\n', '\r\n', '\r'),
+        fc.array(fc.nat(60), { maxLength: 6 }),
+        (end, cuts) => {
+          const text = `id: 1${end}data: one${end}${end}: note${end}id: 2${end}data: two${end}data: more${end}${end}x${end}`;
+          const places = [...new Set([0, ...cuts.filter((at) => at < text.length), text.length])].sort(
+            (a, b) => a - b,
+          );
+          const pieces = places.slice(1).map((at, index) => text.slice(places[index], at));
+          expect(cut(...pieces)).toEqual([
+            { id: '1', data: 'one' },
+            { id: '2', data: 'two\nmore' },
+          ]);
+        },
+      ),
     );
   });
 

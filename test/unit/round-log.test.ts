@@ -32,12 +32,20 @@ const EVENTS: LogEvent[] = [
   {
     event: 'accepted',
     run: '4f6c2a91',
-    title: 'Pipe breaks per kilometre-year, all mains laid before the great renewal of the network, by material',
+    title:
+      'Pipe breaks per kilometre-year, all mains laid before the great renewal of the network, by material',
     digest: 'ab'.repeat(32),
     sites: ['harrowmere', 'lindell-bay', 'castlefen', 'oakhythe'],
     at,
   },
-  { event: 'accepted', run: '4f6c2a91', title: 'Pipe breaks', digest: 'ab'.repeat(32), sites: { least: 3 }, at },
+  {
+    event: 'accepted',
+    run: '4f6c2a91',
+    title: 'Pipe breaks',
+    digest: 'ab'.repeat(32),
+    sites: { least: 3 },
+    at,
+  },
   { event: 'waiting', sites: ['castlefen', 'oakhythe'], at },
   { event: 'waiting', sites: Array.from({ length: 60 }, (_, site) => `utility-${site}`), at },
   { event: 'site', site: LONG_SITE, change: 'connected', at },
@@ -64,7 +72,14 @@ const EVENTS: LogEvent[] = [
   round(5, { relativeGap: 0, gapMeasured: true }),
   round(6, { relativeGap: 1234.5 }),
   round(7, { purpose: 'gradient and diagonal curvature at the start', relativeGap: null }),
-  { event: 'late', round: 4, sites: [LONG_SITE, 'oakhythe'], waitedMs: 30_000, patienceLeftMs: 1_740_000, at },
+  {
+    event: 'late',
+    round: 4,
+    sites: [LONG_SITE, 'oakhythe'],
+    waitedMs: 30_000,
+    patienceLeftMs: 1_740_000,
+    at,
+  },
   { event: 'resumed', round: 0, at },
   { event: 'resumed', round: 17, at },
   {
@@ -115,7 +130,9 @@ describe('round log', () => {
 
   test('every other event ends its last line as a sentence, or names the specification, folder or run', () => {
     for (const event of EVENTS) {
-      expect(linesAt(80, [event]).at(-1)).toMatch(/(\.|^Specification [0-9a-f]{16}|^The result folder.*|^\/srv.*)$/);
+      expect(linesAt(80, [event]).at(-1)).toMatch(
+        /(\.|^Specification [0-9a-f]{16}|^The result folder.*|^\/srv.*)$/,
+      );
     }
   });
 
@@ -137,7 +154,9 @@ describe('round log', () => {
   });
 
   test('the open fits of a path are counted', () => {
-    expect(only(round(4, { fitsOpen: 13, fitsTotal: 100 }))).toContain('off, 13 fits open; lindell-bay last (0.18 s).');
+    expect(only(round(4, { fitsOpen: 13, fitsTotal: 100 }))).toContain(
+      'off, 13 fits open; lindell-bay last (0.18 s).',
+    );
   });
 
   test('the time left stands at the end of a round that shows a trend', () => {
@@ -152,10 +171,10 @@ describe('round log', () => {
   test('without colour there is no escape sequence; with colour the same text is inside', () => {
     const plain = linesAt(80);
     const coloured = linesAt(80, EVENTS, true);
-    const escape = new RegExp(`${String.fromCharCode(27)}\\[[\\d;]*m`, 'g');
-    expect(plain.join('\n')).not.toMatch(escape);
-    expect(coloured.join('\n')).toMatch(escape);
-    expect(coloured.map((line) => line.replace(escape, ''))).toEqual(plain);
+    const sequence = new RegExp(`${String.fromCharCode(27)}\\[[\\d;]*m`, 'g');
+    expect(plain.join('\n')).not.toMatch(sequence);
+    expect(coloured.join('\n')).toMatch(sequence);
+    expect(coloured.map((line) => line.replace(sequence, ''))).toEqual(plain);
   });
 
   test('the survey says rows, left-out rows, the rung and why', () => {
@@ -216,8 +235,12 @@ describe('time left', () => {
   });
 
   test('nothing is said of a gap that does not fall, or only scatters', () => {
-    expect(timeLeftMs([round(1), round(2), round(3)].map((event) => ({ ...event, relativeGap: 0.1 })))).toBeNull();
-    const scattered = [1e-1, 1e-4, 1e-1, 1e-4, 1e-2, 1e-1].map((gap, at) => round(at + 1, { relativeGap: gap }));
+    expect(
+      timeLeftMs([round(1), round(2), round(3)].map((event) => ({ ...event, relativeGap: 0.1 }))),
+    ).toBeNull();
+    const scattered = [1e-1, 1e-4, 1e-1, 1e-4, 1e-2, 1e-1].map((gap, at) =>
+      round(at + 1, { relativeGap: gap }),
+    );
     expect(timeLeftMs(scattered)).toBeNull();
   });
 

@@ -36,6 +36,7 @@ const cases: [string, string, string][] = [
     breaksWith({}, ['weights: {column: breaks}']),
     'field-conflict 16 weights.column',
   ],
+  ['a term that is a list', breaksWith({ 9: '  - [diameter_mm]' }), 'field-type 9 terms[1]'],
   ['the response as a term', breaksWith({ 9: '  - {column: breaks}' }), 'field-conflict 9 terms[1].column'],
   [
     'the exposure with levels',
@@ -285,6 +286,10 @@ describe('text that is not YAML is refused', () => {
     expect(first).toMatchObject({ code: 'yaml-invalid', where: { file: 'breaks.fit.yaml', line } });
   });
 
+  test('for YAML 1.1, where yes is no text', () => {
+    expect(failures(`%YAML 1.1\n---\n${breaksWith({})}`)[0]?.code).toBe('yaml-invalid');
+  });
+
   test('for two documents in one file', () => {
     expect(failures(`${breaksWith({})}\n---\n${breaksWith({})}`)[0]?.code).toBe('yaml-invalid');
   });
@@ -302,7 +307,7 @@ describe('text that is not YAML is refused', () => {
   });
 
   test('for nesting that would exhaust the stack', () => {
-    expect(failures(`title: ${'['.repeat(200_000)}`)[0]?.code).toBe('yaml-invalid');
+    expect(failures(`title: ${'['.repeat(20_000)}`)[0]?.code).toBe('yaml-invalid');
   });
 
   test('for a file too large to be one', () => {

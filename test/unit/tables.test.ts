@@ -6,7 +6,7 @@ import { coefficientsCsv, roundsCsv } from '../../coordinator/report/tables.js';
 import type { LogEvent } from '../../coordinator/run/log-event.js';
 import type { FitDocument, ResultDocument } from '../../coordinator/run/result.js';
 
-const fit = (more: Partial<FitDocument> = {}): FitDocument => ({
+const fitted = (more: Partial<FitDocument> = {}): FitDocument => ({
   lambda: 0.01,
   outcome: 'solved',
   reason: null,
@@ -28,7 +28,7 @@ const result = (more: Partial<ResultDocument> = {}): ResultDocument => ({
   reason: null,
   title: 'Pipe breaks',
   specification: 'ab'.repeat(32),
-  software: '0.1.0',
+  software: 'commonfit 0.1.0',
   sites: [
     { site: 'harrowmere', rowsUsed: 3000, rowsDropped: 12, kernel: 'plain' },
     { site: 'oakhythe', rowsUsed: null, rowsDropped: null, kernel: 'plain' },
@@ -37,7 +37,7 @@ const result = (more: Partial<ResultDocument> = {}): ResultDocument => ({
   rung: 'curvature',
   rungReason: 'every site lets curvature leave',
   tolerance: 1e-8,
-  fits: [fit()],
+  fits: [fitted()],
   notes: ['material=lead has no rows'],
   rounds: 6,
   numbersSent: [
@@ -84,7 +84,10 @@ describe('coefficients.csv', () => {
   });
 
   test('without a penalty λ is empty, of several penalties all stand; without an intercept there is no row for it', () => {
-    const fits = [fit({ lambda: null, intercept: null }), fit({ lambda: [0.5, 1e-7], intercept: null })];
+    const fits = [
+      fitted({ lambda: null, intercept: null }),
+      fitted({ lambda: [0.5, 1e-7], intercept: null }),
+    ];
     const rows = readCsv(coefficientsCsv(result({ fits })));
     expect(rows.slice(1).map((row) => row.slice(0, 2))).toEqual([
       ...Array(3).fill(['1', '']),
@@ -97,7 +100,9 @@ describe('coefficients.csv', () => {
     const name = fc.string({ unit: 'binary', minLength: 1 }).filter((text) => text !== '__proto__');
     fc.assert(
       fc.property(fc.dictionary(name, coefficient, { noNullPrototype: false }), (coefficients) => {
-        const rows = readCsv(coefficientsCsv(result({ fits: [fit({ intercept: null, coefficients })] }))).slice(1);
+        const rows = readCsv(
+          coefficientsCsv(result({ fits: [fitted({ intercept: null, coefficients })] })),
+        ).slice(1);
         expect(rows.map((row) => row[2])).toEqual(Object.keys(coefficients));
         for (const row of rows) expect(Number(row[3])).toBe(coefficients[row[2] as string]);
       }),
@@ -142,7 +147,9 @@ describe('the result as text', () => {
   const text = (document: ResultDocument): string => resultText(document, 100).join(' ');
 
   test('decimal points stand under each other', () => {
-    const lines = resultText(result(), 80).filter((line) => /^ {2}(intercept|age_years|material=steel)/.test(line));
+    const lines = resultText(result(), 80).filter((line) =>
+      /^ {2}(intercept|age_years|material=steel)/.test(line),
+    );
     expect(lines).toEqual([
       '  intercept          -3.25',
       '  age_years           0.3',
@@ -153,48 +160,58 @@ describe('the result as text', () => {
   test('it says the certificate in words, dropped columns, rows and numbers of each site', () => {
     expect(text(result())).toContain('bound its distance to the optimum by 2.4e-10');
     expect(text(result())).toContain('no spread at any site: material=lead');
-    expect(text(result())).toContain('harrowmere: 3,000 rows (12 left out); sent 12,345 numbers, received 678');
+    expect(text(result())).toContain(
+      'harrowmere: 3,000 rows (12 left out); sent 12,345 numbers, received 678',
+    );
     expect(text(result())).toContain('oakhythe: not surveyed');
   });
 
   test('an estimated certificate is called an estimate, a missing one is named', () => {
-    const estimate = fit({ certificate: { kind: 'estimate', gap: 1e-9, relativeGap: 1e-9, kkt: 1e-6 } });
+    const estimate = fitted({ certificate: { kind: 'estimate', gap: 1e-9, relativeGap: 1e-9, kkt: 1e-6 } });
     expect(text(result({ fits: [estimate] }))).toContain('an estimate only');
-    expect(text(result({ fits: [fit({ certificate: null })] }))).toContain('No certificate');
+    expect(text(result({ fits: [fitted({ certificate: null })] }))).toContain('No certificate');
   });
 
   test('the cautions close every result, one without a fit included', () => {
-    const none = text(result({ outcome: 'cancelled', fits: [], rowsTotal: null, rung: null, rungReason: null }));
+    const none = text(
+      result({ outcome: 'cancelled', fits: [], rowsTotal: null, rung: null, rungReason: null }),
+    );
     expect(none).toContain('Not solved: the run was cancelled.');
     for (const caution of CAUTIONS) expect(none).toContain(caution);
   });
 
   test('of many fits the first are shown and the rest counted', () => {
-    const fits = Array.from({ length: 12 }, (_, at) => fit({ lambda: 2 ** -at }));
+    const fits = Array.from({ length: 12 }, (_, at) => fitted({ lambda: 2 ** -at }));
     expect(text(result({ fits }))).toContain('Fit 5 of 12, λ = 0.0625.');
     expect(text(result({ fits }))).toContain('7 more fits in coefficients.csv');
   });
 
   test.each([40, 60, 80])('nothing is wider than %i columns', (width) => {
-    const long = fit({ coefficients: { [`a${'b'.repeat(120)}`]: 1 / 3, c: -1e300 } });
-    expect(resultText(result({ fits: [long] }), width).filter((line) => [...line].length > width)).toEqual([]);
+    const long = fitted({ coefficients: { [`a${'b'.repeat(120)}`]: 1 / 3, c: -1e300 } });
+    expect(resultText(result({ fits: [long] }), width).filter((line) => [...line].length > width)).toEqual(
+      [],
+    );
   });
 });
 
 describe('two results side by side', () => {
   test('the largest relative difference of a coefficient is named', () => {
-    const other = result({ fits: [fit({ coefficients: { ...fit().coefficients, age_years: 0.3 * (1 + 1e-6) } })] });
+    const other = result({
+      fits: [fitted({ coefficients: { ...fitted().coefficients, age_years: 0.3 * (1 + 1e-6) } })],
+    });
     expect(largestDifference(result(), other)?.name).toBe('age_years');
     expect(largestDifference(result(), other)?.size).toBeCloseTo(1e-6, 9);
-    expect(comparisonText({ name: 'one', result: result() }, { name: 'two', result: other }, 80).join(' ')).toContain(
-      'at most 1e-6 (age_years)',
-    );
+    expect(
+      comparisonText({ name: 'one', result: result() }, { name: 'two', result: other }, 80).join(' '),
+    ).toContain('at most 1e-6 (age_years)');
   });
 
   test('equal results agree to the last bit; different coefficients are not compared', () => {
     const pair = (b: ResultDocument): string =>
       comparisonText({ name: 'one', result: result() }, { name: 'two', result: b }, 80).join(' ');
     expect(pair(result())).toContain('the same to the last bit');
-    expect(pair(result({ fits: [fit({ coefficients: { x: 1 } })] }))).toContain('do not have the same coefficients');
+    expect(pair(result({ fits: [fitted({ coefficients: { x: 1 } })] }))).toContain(
+      'do not have the same coefficients',
+    );
   });
 });

@@ -76,9 +76,9 @@ export function curvatureTotal(count: CurvatureCount): number {
   return total;
 }
 
-/** Most fits one run of this specification can hold: every combination of the penalties' λ. */
-export const fitsMost = (spec: FitSpecification): number =>
-  spec.penalties.reduce((product, penalty) => product * Math.max(1, penalty.lambda.length), 1);
+/** Fits in one run of this specification: the λ lists of its penalties run in parallel. */
+export const fitCount = (spec: FitSpecification): number =>
+  Math.max(1, ...spec.penalties.map((penalty) => penalty.lambda.length));
 
 /** The part of the policy that the specification alone decides: columns and approval. */
 export function checkSpecification(

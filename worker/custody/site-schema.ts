@@ -99,7 +99,7 @@ const policy = mapping({
   /** Least rows a fit must use here. Default 50. */
   'rows-least': wholeFrom(1).default(50),
   /** Kinds of answer that may leave. */
-  leave: distinct(leaveKind, 'a list of kinds of answer').default([
+  leave: distinct(leaveKind, 'a list of kinds of answer', 0).default([
     'counts',
     'moments',
     'proximal',

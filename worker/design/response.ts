@@ -27,7 +27,9 @@ function responseValues(spec: FitSpecification, table: Table): Checked<Float64Ar
     return succeed(Float64Array.from(read.codes, (other) => (other === code ? 1 : 0)));
   }
   const y = numericColumn(table, column);
-  const allowed: Readonly<Record<FitSpecification['loss'], { fits: (value: number) => boolean; text: string }>> = {
+  const allowed: Readonly<
+    Record<FitSpecification['loss'], { fits: (value: number) => boolean; text: string }>
+  > = {
     squared: {
       fits: (value) => Math.abs(value) <= VALUE_MOST,
       text: `a number of size ${VALUE_MOST} at most`,
@@ -63,13 +65,12 @@ function weightValues(column: string, table: Table): Checked<Float64Array> {
       remedy: 'Weights are zero or more; a row with weight zero does not count.',
     });
   const large = weights.findIndex((weight) => weight > VALUE_MOST);
-  return large < 0 ? succeed(weights) : outOfReach(weights[large], VALUE_MOST, 'weight', table, large, column);
+  return large < 0
+    ? succeed(weights)
+    : outOfReach(weights[large], VALUE_MOST, 'weight', table, large, column);
 }
 
-function offsetValues(
-  offset: NonNullable<FitSpecification['offset']>,
-  table: Table,
-): Checked<Float64Array> {
+function offsetValues(offset: NonNullable<FitSpecification['offset']>, table: Table): Checked<Float64Array> {
   const { column, kind } = offset;
   const values = numericColumn(table, column);
   if (kind === 'offset') {

@@ -57,16 +57,18 @@ function denseSystem(shard: Shard, metric: Float64Array): NewtonSystem {
 }
 
 /**
- * The same step through the rows. With S the row curvatures, ρ the slopes and η' = Xx, the minimiser of the quadratic
- * model is center + M⁻¹Xᵀα, α = S^½ b − ρ, (I + S^½ K S^½) b = S^½ (η' − X center + K ρ): no division by a curvature that
- * may vanish, no cancellation where M is small.
+ * The same step through the rows. With S² the row curvatures, ρ the slopes and δ = X (x − center), the minimiser of the
+ * quadratic model is center + M⁻¹Xᵀα with α + S²Kα = S²δ − ρ. Writing α = S b − τ gives the symmetric system
+ * (I + SKS) b = S (δ + Kτ) + (τ − ρ) / S for any τ. τ = ρ in rows whose curvature is small (S² K_rr < 1: no division by
+ * what may vanish), τ = 0 in the others (no cancellation where slopes are huge).
  */
 function rowSpaceSystem(shard: Shard, metric: Float64Array, center: Float64Array): NewtonSystem {
   const { rowCount, p, x, offset } = shard;
   const kernel = rowKernel(shard, metric);
   const atCenter = new Float64Array(rowCount);
   rowProducts(x, p, 0, rowCount, center, atCenter);
-  const bent = new Float64Array(rowCount);
+  const shifted = new Float64Array(rowCount);
+  const right = new Float64Array(rowCount);
   let roots: Float64Array = new Float64Array(rowCount);
   let factor: Float64Array = new Float64Array(0);
   return {
@@ -78,13 +80,18 @@ function rowSpaceSystem(shard: Shard, metric: Float64Array, center: Float64Array
       return made !== null;
     },
     step({ x: at, rows }) {
-      rowProducts(kernel, rowCount, 0, rowCount, rows.slopes, bent);
       for (let r = 0; r < rowCount; r++) {
-        const eta = rows.eta[r] - (offset === null ? 0 : offset[r]);
-        bent[r] = roots[r] * (eta - atCenter[r] + bent[r]);
+        const steep = roots[r] * roots[r] * kernel[r * rowCount + r] >= 1;
+        shifted[r] = steep ? 0 : rows.slopes[r];
       }
-      const alpha = choleskySolve(factor, rowCount, bent);
-      for (let r = 0; r < rowCount; r++) alpha[r] = roots[r] * alpha[r] - rows.slopes[r];
+      rowProducts(kernel, rowCount, 0, rowCount, shifted, right);
+      for (let r = 0; r < rowCount; r++) {
+        const moved = rows.eta[r] - (offset === null ? 0 : offset[r]) - atCenter[r];
+        const rest = shifted[r] - rows.slopes[r];
+        right[r] = roots[r] * (moved + right[r]) + (rest === 0 ? 0 : rest / roots[r]);
+      }
+      const alpha = choleskySolve(factor, rowCount, right);
+      for (let r = 0; r < rowCount; r++) alpha[r] = roots[r] * alpha[r] - shifted[r];
       const pulled = new Float64Array(p);
       addWeightedRows(x, p, 0, rowCount, alpha, pulled);
       const target = pointFromRows(shard, metric, center, pulled);

@@ -26,7 +26,7 @@ export function rowFactor(kernel: Float64Array, roots: Float64Array): Float64Arr
   return cholesky(a, n);
 }
 
-/** center + M⁻¹ Xᵀ alpha. */
+/** center + M⁻¹ pulled, with pulled = Xᵀα. */
 export function pointFromRows(
   shard: Shard,
   metric: Float64Array,

@@ -13,7 +13,7 @@ import {
   checkWorks,
   curvatureOfWorks,
   curvatureTotal,
-  fitsMost,
+  fitCount,
   kindsOfWork,
 } from '../custody/policy.js';
 import type { Policy } from '../custody/site-file.js';
@@ -92,7 +92,7 @@ export class AnswerMaker {
     const look = ledger.look(ask.run, digest, ask.ask, content);
     if (!look.ok) return look;
     const repeated = look.value === 'repeat';
-    const refused = repeated ? null : checkWorks(policy, ledger.departed(ask.run), ask.work, fitsMost(spec));
+    const refused = repeated ? null : checkWorks(policy, ledger.departed(ask.run), ask.work, fitCount(spec));
     if (refused !== null) return { ok: false, failure: refused };
     rememberAsked(ask, live.memory);
     const same = live.last !== null && live.last.answer.ask === ask.ask && live.last.content === content;

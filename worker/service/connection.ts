@@ -82,9 +82,13 @@ function finalFailure(code: number, reason: string): Failure | null {
         remedy: 'Run the same release of commonfit on both sides.',
       }).failure;
     case CLOSE_CODES.replaced:
-      return fail('site-taken', 'Another worker joined as this site and shard; this one leaves the place to it.', {
-        remedy: 'Run one worker for each site, or give each its own shard in the site file.',
-      }).failure;
+      return fail(
+        'site-taken',
+        'Another worker joined as this site and shard; this one leaves the place to it.',
+        {
+          remedy: 'Run one worker for each site, or give each its own shard in the site file.',
+        },
+      ).failure;
     default:
       return null;
   }

@@ -106,9 +106,13 @@ class Session {
     const most = Math.min(this.#frameBytesMost ?? 0, LIMITS.frameBytesMost);
     const bytes = 8 * answer.work.reduce((sum, item) => sum + numbersOfAnswer(item), 0) + ENVELOPE_BYTES;
     if (bytes <= most) return answer;
-    const { failure } = fail('frame-too-large', `The answer needs ${bytes} bytes; a frame may have ${most}.`, {
-      remedy: 'Choose a lower rung (rounds.rung) or fewer terms.',
-    });
+    const { failure } = fail(
+      'frame-too-large',
+      `The answer needs ${bytes} bytes; a frame may have ${most}.`,
+      {
+        remedy: 'Choose a lower rung (rounds.rung) or fewer terms.',
+      },
+    );
     this.#deps.onEvent({ event: 'refused', run: answer.run, ask: answer.ask, failure });
     return refusalOf(answer, failure);
   }

@@ -33,11 +33,7 @@ export async function readTable(source: TableSource, request: TableRequest): Pro
   return inFolder(source.folder, read);
 }
 
-async function readWith(
-  engine: Engine,
-  source: TableSource,
-  request: TableRequest,
-): Promise<Checked<Table>> {
+async function readWith(engine: Engine, source: TableSource, request: TableRequest): Promise<Checked<Table>> {
   const used = [...new Set([...request.numeric, ...request.levels.map((levels) => levels.column)])];
   const relation = await openRelation(engine, source, used);
   if (!relation.ok) return relation;
@@ -50,7 +46,10 @@ async function readWith(
   const scan = await scanRelation(engine, relation.value, columns, request);
   if (!scan.ok) return scan;
   const found = scan.value;
-  if (source.kind === 'jsonl' && (found.found === 'missing' || (found.found === null && found.rowCount === 0))) {
+  if (
+    source.kind === 'jsonl' &&
+    (found.found === 'missing' || (found.found === null && found.rowCount === 0))
+  ) {
     const names = await jsonNames(engine, source.path);
     if (!names.ok) return names;
     const unknown = names.value.length === 0 ? null : missingColumn(names.value, used, relation.value.where);
@@ -58,8 +57,12 @@ async function readWith(
   }
   if (found.found !== null) {
     const position = found.column - request.numeric.length;
-    const levels = position < 0 ? null : { request: request.levels[position], permitted: permitted.value[position] };
-    return { ok: false, failure: await diagnose(engine, relation.value, columns[found.column], found, levels) };
+    const levels =
+      position < 0 ? null : { request: request.levels[position], permitted: permitted.value[position] };
+    return {
+      ok: false,
+      failure: await diagnose(engine, relation.value, columns[found.column], found, levels),
+    };
   }
   if (found.rowsSeen === 0)
     return fail('table-empty', 'The table has no rows.', {

@@ -91,9 +91,13 @@ const columnsListedMost = 40;
 /** The keys of a JSON lines file: read only when a column has no value, because it takes a pass over the file. */
 export async function jsonNames(engine: Engine, path: string): Promise<Checked<string[]>> {
   const from = `read_ndjson_objects(${sqlPath(path)})`;
-  const rows = await textRows(engine, `select distinct unnest(json_keys(json)) as k from ${from} order by k`, {
-    file: path,
-  });
+  const rows = await textRows(
+    engine,
+    `select distinct unnest(json_keys(json)) as k from ${from} order by k`,
+    {
+      file: path,
+    },
+  );
   return rows.ok ? succeed(rows.value.map((row) => row[0] ?? '')) : rows;
 }
 
@@ -166,7 +170,9 @@ async function described(
   const columns = rows.value.map(([described, type], position): [string, RelationColumn] => [
     names?.[position] ?? described ?? '',
     {
-      sql: numberTypes.has(type ?? '') ? sqlName(described ?? '') : `cast(${sqlName(described ?? '')} as varchar)`,
+      sql: numberTypes.has(type ?? '')
+        ? sqlName(described ?? '')
+        : `cast(${sqlName(described ?? '')} as varchar)`,
       type: numberTypes.has(type ?? '') ? 'number' : 'text',
     },
   ]);

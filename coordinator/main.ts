@@ -1,0 +1,48 @@
+#!/usr/bin/env node
+import { Command, CommanderError } from 'commander';
+import { SOFTWARE } from '../protocol/version.js';
+import { admitCommand } from './commands/admit.js';
+import { cancelCommand } from './commands/cancel.js';
+import { checkCommand } from './commands/check.js';
+import { demoCommand } from './commands/demo.js';
+import { EXIT } from './commands/exit-codes.js';
+import { rehearseCommand } from './commands/rehearse.js';
+import { resultCommand } from './commands/result.js';
+import { runsCommand } from './commands/runs.js';
+import { serveCommand } from './commands/serve.js';
+import { submitCommand } from './commands/submit.js';
+import { watchCommand } from './commands/watch.js';
+
+const program = new Command('commonfit')
+  .description(
+    'Fits one regression model over rows that stay at several sites.\nSites join with the command commonfit-worker.',
+  )
+  .version(SOFTWARE, '--version', 'name and version')
+  .addHelpText(
+    'after',
+    '\nTo see it work on this machine: commonfit demo\nOptions and exit codes of a command: commonfit COMMAND --help',
+  );
+
+const commands = [
+  checkCommand(),
+  rehearseCommand(),
+  serveCommand(),
+  admitCommand(),
+  submitCommand(),
+  watchCommand(),
+  runsCommand(),
+  resultCommand(),
+  cancelCommand(),
+  demoCommand(),
+];
+for (const command of [program, ...commands]) command.exitOverride();
+for (const command of commands) program.addCommand(command);
+
+try {
+  await program.parseAsync();
+} catch (error) {
+  if (!(error instanceof CommanderError)) throw error;
+  // The library has said what is wrong; asking for help or the version is no error.
+  const asked = error.code === 'commander.helpDisplayed' || error.code === 'commander.version';
+  process.exitCode = asked ? EXIT.ok : EXIT.usage;
+}

@@ -1,0 +1,114 @@
+/** protocol/messages.cddl and protocol/README.md say what the code does, no more and no less. */
+import { readFileSync } from 'node:fs';
+import { describe, expect, test } from 'vitest';
+import { CLOSE_CODES } from '../../protocol/close-codes.js';
+import { decodeToCoordinator, encodeMessage } from '../../protocol/codec.js';
+import { FAILURE_CODES } from '../../protocol/failure.js';
+import { LIMITS } from '../../protocol/limits.js';
+import { toCoordinator } from '../../protocol/messages/to-coordinator.js';
+import { toWorker } from '../../protocol/messages/to-worker.js';
+import { PROTOCOL_VERSION, SUBPROTOCOL } from '../../protocol/version.js';
+import { cddlRules, formOfCddl, formOfSchema } from '../support/cddl.js';
+
+const read = (name: string): string =>
+  readFileSync(new URL(`../../protocol/${name}`, import.meta.url), 'utf8');
+const readme = read('README.md');
+const rules = cddlRules(read('messages.cddl'));
+
+/** Rows of the table under a heading of the README, cells without back quotes. */
+function tableUnder(heading: string): string[][] {
+  const section = readme.split(/^## /m).find((part) => part.startsWith(`${heading}\n`)) ?? '';
+  return section
+    .split('\n')
+    .filter((line) => line.startsWith('| '))
+    .slice(1)
+    .map((line) =>
+      line
+        .slice(1, -1)
+        .split('|')
+        .map((cell) => cell.trim().replaceAll('`', '')),
+    );
+}
+
+const kindsOf = (union: typeof toWorker | typeof toCoordinator): string[] =>
+  union.options.map((option) => option.shape.kind.value);
+
+describe('messages.cddl', () => {
+  test.each(
+    [...toWorker.options, ...toCoordinator.options].map((schema) => [schema.shape.kind.value, schema]),
+  )('%s has the fields and types of the schema', (kind, schema) => {
+    expect(formOfCddl(String(kind), rules)).toBe(formOfSchema(schema as typeof toWorker));
+  });
+
+  test('each direction takes the kinds of its schema', () => {
+    expect(rules.get('to-worker')?.split(' / ')).toEqual(kindsOf(toWorker));
+    expect(rules.get('to-coordinator')?.split(' / ')).toEqual(kindsOf(toCoordinator));
+  });
+
+  test('every rule is used', () => {
+    const bodies = [...rules.values()].join(' ');
+    const unused = [...rules.keys()].filter(
+      (name) => !name.startsWith('to-') && !new RegExp(`(?<![\\w"-])${name}(?![\\w"-])`).test(bodies),
+    );
+    expect(unused).toEqual([]);
+  });
+
+  test('the comparison notices a field that is missing, renamed or of another type', () => {
+    const schema = formOfSchema(toCoordinator);
+    const spoilt = (from: string, to: string): string =>
+      formOfCddl('to-coordinator', cddlRules(read('messages.cddl').replace(from, to)));
+    expect(formOfCddl('to-coordinator', rules)).toBe(schema);
+    expect(spoilt('  newtonSteps: count,\n', '')).not.toBe(schema);
+    expect(spoilt('newtonSteps:', 'steps:')).not.toBe(schema);
+    expect(spoilt('newtonSteps: count', 'newtonSteps: number')).not.toBe(schema);
+    expect(spoilt('gradient: vector / null', 'gradient: vector')).not.toBe(schema);
+    expect(spoilt('1*4096 proximal-point', '1*4095 proximal-point')).not.toBe(schema);
+  });
+});
+
+describe('README.md', () => {
+  test('limits', () => {
+    const documented = tableUnder('Limits').map(([name, value]) => [name, Number(value)]);
+    expect(Object.fromEntries(documented)).toEqual(LIMITS);
+  });
+
+  test('close codes', () => {
+    const documented = tableUnder('Close codes').map(([code, name]) => [name, Number(code)]);
+    expect(Object.fromEntries(documented)).toEqual(CLOSE_CODES);
+  });
+
+  test('failure codes, in the order of the code', () => {
+    expect(tableUnder('Failure codes').map(([code]) => code)).toEqual([...FAILURE_CODES]);
+  });
+
+  test('version and subprotocol', () => {
+    expect(readme).toMatch(new RegExp(`^# The commonfit protocol, version ${PROTOCOL_VERSION}$`, 'm'));
+    expect(readme).toContain(`Subprotocol \`${SUBPROTOCOL}\``);
+  });
+
+  test('every kind of message and of work is explained', () => {
+    for (const kind of [...kindsOf(toWorker), ...kindsOf(toCoordinator)])
+      expect(readme).toContain(`\`${kind}\``);
+    for (const work of ['survey', 'proximal', 'evaluate', 'factor'])
+      expect(readme).toContain(`**\`${work}\`**`);
+  });
+
+  test('the worked message is one, and is what we would send', () => {
+    const block = /```hex\n([\s\S]*?)```/.exec(readme)?.[1] ?? '';
+    const hex = block
+      .split('\n')
+      .map((line) => /^ *((?:[0-9a-f]{2,} +|[0-9a-f]{2,}$)*)/.exec(line)?.[1].replaceAll(' ', '') ?? '')
+      .join('');
+    const message = decodeToCoordinator(Uint8Array.from(Buffer.from(hex, 'hex')));
+    const problem = { problem: 0, point: Float64Array.from([0.5, -2]), newtonSteps: 3 };
+    const expected = {
+      kind: 'answer' as const,
+      run: 'r1',
+      ask: 7,
+      work: [{ work: 'proximal' as const, problems: [problem] }],
+    };
+    expect(message).toEqual({ ok: true, value: expected });
+    expect(Buffer.from(encodeMessage(expected)).toString('hex')).toBe(hex);
+    expect(readme).toContain(`in 3 steps. ${hex.length / 2} bytes.`);
+  });
+});

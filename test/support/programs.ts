@@ -1,0 +1,16 @@
+import { existsSync } from 'node:fs';
+import { dirname, join } from 'node:path';
+import { fileURLToPath } from 'node:url';
+
+const dist = join(dirname(fileURLToPath(import.meta.url)), '../../dist');
+
+/** The two compiled programs; `npm test` builds them first. */
+export const programs = {
+  commonfit: join(dist, 'coordinator/main.js'),
+  worker: join(dist, 'worker/main.js'),
+  generateDemo: join(dist, 'examples/pipe-breaks/generate.js'),
+};
+
+for (const path of Object.values(programs))
+  if (!existsSync(path))
+    throw new Error(`${path} is missing: run \`npm run build\` first (\`npm test\` does).`);

@@ -1,0 +1,188 @@
+import { describe, expect, test } from 'vitest';
+import type { EvaluateWork, Want } from '../../protocol/messages/evaluate.js';
+import type { Work } from '../../protocol/messages/round.js';
+import {
+  addCurvature,
+  allowanceOf,
+  checkNumbers,
+  checkRows,
+  checkSpecification,
+  checkWorks,
+  curvatureOfWorks,
+  type Departed,
+  fitCount,
+  NOTHING_DEPARTED,
+} from '../../worker/custody/policy.js';
+import type { Policy } from '../../worker/custody/site-file.js';
+import { OPEN_POLICY, specification } from '../support/worker-site.js';
+
+const DIGEST = 'a'.repeat(64);
+const policyWith = (more: Partial<Policy>): Policy => ({ ...OPEN_POLICY, ...more });
+
+const survey: Work = { work: 'survey' };
+const factor: Work = { work: 'factor' };
+const proximal: Work = {
+  work: 'proximal',
+  problems: [
+    {
+      problem: 0,
+      center: Float64Array.of(0),
+      scale: 1,
+      diagonal: Float64Array.of(1),
+      diagonalAsk: 1,
+      start: Float64Array.of(0),
+      startAsk: 1,
+    },
+  ],
+};
+const evaluate = (want: Want, more: Partial<EvaluateWork> = {}): Work => ({
+  work: 'evaluate',
+  problem: 0,
+  points: [{ point: Float64Array.of(0), want }],
+  ownFit: null,
+  ...more,
+});
+
+/** What has left after these asks were answered. */
+const after = (...asks: Work[][]): Departed => ({
+  asks: asks.length,
+  numbers: 0,
+  curvature: asks.map(curvatureOfWorks).reduce(addCurvature, NOTHING_DEPARTED.curvature),
+});
+
+const codeFor = (policy: Policy, departed: Departed, works: Work[], fits = 1): string | null =>
+  checkWorks(policy, departed, works, fits)?.code ?? null;
+
+describe('columns and approval', () => {
+  test('a column that the policy does not list is named, with the part it plays', () => {
+    const policy = policyWith({ columns: ['breaks', 'km_years', 'age_years'] });
+    const failure = checkSpecification(policy, specification(), DIGEST, new Set());
+    expect(failure).toMatchObject({ code: 'policy-column', where: { column: 'pressure_bar' } });
+    expect(failure?.message).toContain('pressure_bar (as term)');
+  });
+
+  test.each([
+    ['response', 'breaks'],
+    ['exposure', 'km_years'],
+    ['term', 'age_years'],
+  ])('the %s column needs a permission like any other', (_role, column) => {
+    const columns = ['breaks', 'km_years', 'age_years', 'pressure_bar'].filter((name) => name !== column);
+    const failure = checkSpecification(policyWith({ columns }), specification(), DIGEST, new Set());
+    expect(failure?.where?.column).toBe(column);
+  });
+
+  test('the weights column needs a permission', () => {
+    const spec = specification(['weights: {column: w}']);
+    const columns = ['breaks', 'km_years', 'age_years', 'pressure_bar'];
+    expect(checkSpecification(policyWith({ columns }), spec, DIGEST, new Set())?.where?.column).toBe('w');
+  });
+
+  test('where approvals are listed, only a listed digest is let in', () => {
+    const policy = policyWith({ approvals: 'listed' });
+    expect(checkSpecification(policy, specification(), DIGEST, new Set(['b'.repeat(64)]))?.code).toBe(
+      'policy-approval',
+    );
+    expect(checkSpecification(policy, specification(), DIGEST, new Set([DIGEST]))).toBeNull();
+  });
+});
+
+describe('rows', () => {
+  test('rows-least is the least number that is let in', () => {
+    expect(checkRows(policyWith({ rowsLeast: 50 }), 49)?.code).toBe('policy-rows');
+    expect(checkRows(policyWith({ rowsLeast: 50 }), 50)).toBeNull();
+  });
+});
+
+describe('kinds of answer', () => {
+  test.each<[string, Work, Policy['leave']]>([
+    ['a survey', survey, ['counts', 'moments']],
+    ['a proximal point', proximal, ['proximal']],
+    ['a value', evaluate('value'), ['gradients']],
+    ['a gradient', evaluate('gradient'), ['gradients']],
+    ['a diagonal', evaluate('diagonal'), ['gradients']],
+    ['a curvature matrix', evaluate('curvature'), ['gradients', 'curvature']],
+    ['a fit of its own', evaluate('value', { ownFit: { at: 0, hold: 0.3 } }), ['gradients', 'curvature']],
+    ['a factor', factor, ['curvature']],
+  ])('%s leaves with its kinds and with none of them missing', (_name, work, kinds) => {
+    expect(codeFor(policyWith({ leave: kinds }), NOTHING_DEPARTED, [work])).toBeNull();
+    for (const kind of kinds) {
+      const leave = OPEN_POLICY.leave.filter((other) => other !== kind);
+      expect(codeFor(policyWith({ leave }), NOTHING_DEPARTED, [work])).toBe('policy-kind');
+    }
+  });
+
+  test('one forbidden item refuses the whole ask', () => {
+    const policy = policyWith({ leave: ['counts', 'moments', 'gradients'] });
+    expect(codeFor(policy, NOTHING_DEPARTED, [evaluate('gradient'), proximal])).toBe('policy-kind');
+  });
+});
+
+describe('curvature matrices', () => {
+  const three = policyWith({ curvatureMost: 3 });
+  const one = [evaluate('curvature')];
+
+  test('as many as the policy says leave, and not one more', () => {
+    expect(codeFor(three, after(one, one), one)).toBeNull();
+    expect(codeFor(three, after(one, one, one), one)).toBe('policy-curvature');
+  });
+
+  test('a fit of its own and every point of an ask count', () => {
+    const point = { point: Float64Array.of(0), want: 'curvature' as const };
+    const four = evaluate('curvature', { points: [point, point, point], ownFit: { at: 0, hold: 0.3 } });
+    expect(codeFor(three, NOTHING_DEPARTED, [four])).toBe('policy-curvature');
+  });
+
+  test('what needs no matrix goes on leaving after the last one', () => {
+    expect(codeFor(three, after(one, one, one), [proximal])).toBeNull();
+  });
+
+  test('none means none, the factor included', () => {
+    expect(codeFor(policyWith({ curvatureMost: 0 }), NOTHING_DEPARTED, [factor])).toBe('policy-curvature');
+  });
+
+  test('each fit of a path has its own allowance', () => {
+    const other = [evaluate('curvature', { problem: 1 })];
+    expect(codeFor(three, after(one, one, one), other, 2)).toBeNull();
+    expect(codeFor(three, after(one, one, one, other, other, other), other, 2)).toBe('policy-curvature');
+  });
+
+  test('problem numbers beyond the fits of the specification gain nothing', () => {
+    const other = [evaluate('curvature', { problem: 999 })];
+    expect(codeFor(three, after(one, one, one), other, 1)).toBe('policy-curvature');
+  });
+
+  test('the factor serves every fit and counts for each', () => {
+    expect(codeFor(three, after([factor], one, one), one, 5)).toBe('policy-curvature');
+  });
+});
+
+describe('numbers and rounds', () => {
+  test('numbers of a run add up to the limit and no further', () => {
+    const policy = policyWith({ numbersMost: 100 });
+    expect(checkNumbers(policy, { ...NOTHING_DEPARTED, numbers: 90 }, 10)).toBeNull();
+    expect(checkNumbers(policy, { ...NOTHING_DEPARTED, numbers: 90 }, 11)?.code).toBe('policy-numbers');
+  });
+
+  test('asks of a run are counted up to the limit', () => {
+    const policy = policyWith({ roundsMost: 2 });
+    expect(codeFor(policy, after([proximal]), [proximal])).toBeNull();
+    expect(codeFor(policy, after([proximal], [proximal]), [proximal])).toBe('policy-rounds');
+  });
+});
+
+test('the allowance tells the coordinator the limits, null where there is none', () => {
+  const policy = policyWith({ leave: ['counts', 'moments', 'proximal'], curvatureMost: 0, roundsMost: 7 });
+  expect(allowanceOf(policy)).toEqual({
+    leave: ['counts', 'moments', 'proximal'],
+    curvatureMost: 0,
+    numbersMost: null,
+    roundsMost: 7,
+  });
+});
+
+test('a run holds one fit for each λ', () => {
+  expect(fitCount(specification())).toBe(1);
+  expect(fitCount(specification(['penalty: [{kind: lasso, lambda: [1, 0.1, 0.01]}]']))).toBe(3);
+  const both = ['penalty: [{kind: lasso, lambda: [1, 0.1, 0.01]}, {kind: ridge, lambda: 2}]'];
+  expect(fitCount(specification(both))).toBe(3);
+});

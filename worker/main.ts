@@ -1,0 +1,132 @@
+#!/usr/bin/env node
+import { realpathSync } from 'node:fs';
+import { pathToFileURL } from 'node:url';
+import { Command } from 'commander';
+import { SOFTWARE } from '../protocol/version.js';
+import { EXIT, type ExitCode, exitCodeTable } from './commands/exit-codes.js';
+
+/**
+ * The custodian's command line. What a command does is imported when it runs, so that `--help` and a quick command do
+ * not wait for what they do not use.
+ */
+export function program(): Command {
+  const main = new Command('commonfit-worker')
+    .description('Takes part in fits of a shared regression model with rows that stay on this machine.')
+    .version(SOFTWARE)
+    .showHelpAfterError('Say --help for what is allowed.')
+    .exitOverride((error) => {
+      process.exit(error.exitCode === 0 ? EXIT.ok : EXIT.usage);
+    });
+  for (const command of [joinCommand(), inspectCommand(), approveCommand(), splitCommand()])
+    main.addCommand(command.copyInheritedSettings(main));
+  return main;
+}
+
+function joinCommand(): Command {
+  const command = new Command('join')
+    .summary('answer what the policy allows')
+    .description('connect to the coordinator and answer what the policy allows, until stopped')
+    .argument('<site-file>', 'where the rows are and what may leave: NAME.site.yaml')
+    .option('--approvals <file>', 'approved specifications (default: NAME.approvals beside the site file)')
+    .option('--once', 'leave after the first run that ends', false)
+    .option('--plain-text', 'allow a ws:// address that is not this machine', false)
+    .option('--json', 'log as JSON lines', false)
+    .action(
+      acting(async (site: string, options) => {
+        const { join } = await import('./commands/join.js');
+        return join(site, options);
+      }),
+    );
+  return withTail(command, {
+    example: 'commonfit-worker join harrowmere.site.yaml',
+    more: 'The log goes to standard error. What left is recorded in NAME.ledger beside the site file.\nSIGTERM or Ctrl-C finishes the answer in the making and leaves.',
+    exits: [EXIT.document, EXIT.coordinator, EXIT.machine],
+  });
+}
+
+function inspectCommand(): Command {
+  const command = new Command('inspect')
+    .summary('show what would be read and leave')
+    .description('show what a specification would read here and what would leave; connects to nothing')
+    .argument('<site-file>', 'NAME.site.yaml')
+    .argument('<specification>', 'NAME.fit.yaml')
+    .option('--approvals <file>', 'approved specifications (default: NAME.approvals beside the site file)')
+    .option('--json', 'as one line of JSON', false)
+    .action(
+      acting(async (site: string, specification: string, options) => {
+        const { inspect } = await import('./commands/inspect.js');
+        return inspect(site, specification, options);
+      }),
+    );
+  return withTail(command, {
+    example: 'commonfit-worker inspect harrowmere.site.yaml breaks.fit.yaml',
+    exits: [EXIT.document, EXIT.table, EXIT.policy],
+  });
+}
+
+function approveCommand(): Command {
+  const command = new Command('approve')
+    .summary('let one specification in')
+    .description('let one specification in, where the policy says "approvals: listed"')
+    .argument('<site-file>', 'NAME.site.yaml')
+    .argument('<what>', 'the specification, NAME.fit.yaml, or its digest')
+    .option('--approvals <file>', 'approved specifications (default: NAME.approvals beside the site file)')
+    .option('--json', 'as one line of JSON', false)
+    .action(
+      acting(async (site: string, what: string, options) => {
+        const { approve } = await import('./commands/approve.js');
+        return approve(site, what, options);
+      }),
+    );
+  return withTail(command, {
+    example: 'commonfit-worker approve harrowmere.site.yaml breaks.fit.yaml',
+    exits: [EXIT.document, EXIT.machine],
+  });
+}
+
+function splitCommand(): Command {
+  const command = new Command('split')
+    .summary('split a table into sites')
+    .description('split one table into a file for each value of a column, to try things out')
+    .argument('<table>', 'a .csv, .parquet or .jsonl file')
+    .requiredOption('--by <column>', 'the column that says which site a row belongs to')
+    .requiredOption('--out <folder>', 'where the parts go')
+    .option('--json', 'the parts as one line of JSON: a list of {site, file, rows}', false)
+    .action(
+      acting(async (table: string, options) => {
+        const { split } = await import('./commands/split.js');
+        return split(table, options);
+      }),
+    );
+  return withTail(command, {
+    example: 'commonfit-worker split all-pipes.csv --by utility --out ./parts',
+    exits: [EXIT.table, EXIT.machine],
+  });
+}
+
+/** Sets the exit code a command returns; what it throws is a defect and is told as one. */
+function acting<A extends unknown[]>(work: (...args: A) => Promise<ExitCode>): (...args: A) => Promise<void> {
+  return async (...args) => {
+    try {
+      process.exitCode = await work(...args);
+    } catch (error) {
+      const text = error instanceof Error ? (error.stack ?? error.message) : String(error);
+      process.stderr.write(`This is a defect of commonfit-worker, please report it:\n${text}\n`);
+      process.exitCode = EXIT.defect;
+    }
+  };
+}
+
+/** The tail of a command's `--help`: an example and the exit codes it can end with. */
+function withTail(
+  command: Command,
+  tail: { readonly example: string; readonly more?: string; readonly exits: readonly ExitCode[] },
+): Command {
+  const more = tail.more === undefined ? '' : `\n${tail.more}\n`;
+  const exits = exitCodeTable([EXIT.ok, EXIT.defect, EXIT.usage, ...tail.exits]);
+  return command.addHelpText('after', `${more}\nExample:\n  ${tail.example}\n\nExit codes:\n${exits}`);
+}
+
+const started = process.argv[1];
+if (started !== undefined && pathToFileURL(realpathSync(started)).href === import.meta.url)
+  await program().parseAsync();
