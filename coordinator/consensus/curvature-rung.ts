@@ -46,7 +46,7 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
     if (problem.quadratic) return quadraticEnd(problem, here, step, metric, rounds);
     const certificate = measuredCertificate(g, here.z, here.gradient, step.decrement, here.objective);
     if (certificate.relativeGap <= problem.tolerance) {
-      const runaway = runawayColumns(here.z, step.direction, step.bend, startDiagonal);
+      const runaway = runawayColumns(step.direction, step.bend, startDiagonal);
       return runaway.length > 0
         ? ending(problem, here, certificate, rounds, 'unbounded', 'separable', runaway)
         : ending(problem, here, certificate, rounds, 'solved', null);

@@ -3,8 +3,8 @@ import type { Penalty } from './penalty.js';
 
 /** A pivot this small, relative to its column, is rounding: the column is a combination of those before it. */
 const PIVOT_LEAST = 1e-11;
-/** A step that still moves a coefficient by this share of the largest, along which curvature has all but gone. */
-const STEP_SHARE = 0.02;
+/** A step that still moves a coefficient (of a column with unit spread) by this much, where curvature has all but gone. */
+const STEP_LEAST = 0.02;
 const CURVATURE_SHARE = 0.01;
 
 /**
@@ -43,16 +43,11 @@ export function aliasedColumns(curvature: Float64Array, g: Penalty): number[] {
  * large, and `bend` = ΔᵀHΔ, the curvature along it, a small share of what it was at the start (separable classes, a
  * level without events: Albert and Anderson 1984). Empty where the optimum exists.
  */
-export function runawayColumns(
-  z: Float64Array,
-  step: Float64Array,
-  bend: number,
-  startDiagonal: Float64Array,
-): number[] {
+export function runawayColumns(step: Float64Array, bend: number, startDiagonal: Float64Array): number[] {
   const longest = maxAbs(step);
-  if (!(longest > STEP_SHARE * maxAbs(z)) || longest < STEP_SHARE) return [];
+  if (longest < STEP_LEAST) return [];
   let before = 0;
-  for (let j = 0; j < z.length; j++) before += startDiagonal[j] * step[j] * step[j];
+  for (let j = 0; j < step.length; j++) before += startDiagonal[j] * step[j] * step[j];
   if (bend > CURVATURE_SHARE * before) return [];
   return [...step.keys()].filter((j) => Math.abs(step[j]) >= 0.5 * longest);
 }

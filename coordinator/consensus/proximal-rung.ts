@@ -218,7 +218,7 @@ function estimate(
     (slope, j) => -slope / Math.max(diagonal[j] + g.l2[j], 1e-300),
   );
   const bend = step.reduce((sum, value, j) => sum + (diagonal[j] + g.l2[j]) * value * value, 0);
-  const runaway = runawayColumns(z, step, bend, state.diagonal);
+  const runaway = runawayColumns(step, bend, state.diagonal);
   const ended = ending(problem, state, 'solved', z, at.value, certificate, null);
   return runaway.length === 0
     ? ended

@@ -79,7 +79,7 @@ export function* secondOrderFinish(
     const certified = certificate !== null && certificate.relativeGap <= problem.tolerance;
     const aliased = spent === 1 ? aliasedColumns(curvature, g) : [];
     const runaway =
-      certified && step !== null ? runawayColumns(z, step.direction, step.bend, startDiagonal) : [];
+      certified && step !== null ? runawayColumns(step.direction, step.bend, startDiagonal) : [];
     const flaw =
       aliased.length > 0
         ? { reason: 'rank-deficient' as const, columns: aliased }

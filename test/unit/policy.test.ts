@@ -44,7 +44,7 @@ const evaluate = (want: Want, more: Partial<EvaluateWork> = {}): Work => ({
 });
 
 /** What has left after these asks were answered. */
-const after = (...asks: Work[][]): Departed => ({
+const departedAfter = (...asks: Work[][]): Departed => ({
   asks: asks.length,
   numbers: 0,
   curvature: asks.map(curvatureOfWorks).reduce(addCurvature, NOTHING_DEPARTED.curvature),
@@ -122,8 +122,8 @@ describe('curvature matrices', () => {
   const one = [evaluate('curvature')];
 
   test('as many as the policy says leave, and not one more', () => {
-    expect(codeFor(three, after(one, one), one)).toBeNull();
-    expect(codeFor(three, after(one, one, one), one)).toBe('policy-curvature');
+    expect(codeFor(three, departedAfter(one, one), one)).toBeNull();
+    expect(codeFor(three, departedAfter(one, one, one), one)).toBe('policy-curvature');
   });
 
   test('a fit of its own and every point of an ask count', () => {
@@ -133,7 +133,7 @@ describe('curvature matrices', () => {
   });
 
   test('what needs no matrix goes on leaving after the last one', () => {
-    expect(codeFor(three, after(one, one, one), [proximal])).toBeNull();
+    expect(codeFor(three, departedAfter(one, one, one), [proximal])).toBeNull();
   });
 
   test('none means none, the factor included', () => {
@@ -142,17 +142,19 @@ describe('curvature matrices', () => {
 
   test('each fit of a path has its own allowance', () => {
     const other = [evaluate('curvature', { problem: 1 })];
-    expect(codeFor(three, after(one, one, one), other, 2)).toBeNull();
-    expect(codeFor(three, after(one, one, one, other, other, other), other, 2)).toBe('policy-curvature');
+    expect(codeFor(three, departedAfter(one, one, one), other, 2)).toBeNull();
+    expect(codeFor(three, departedAfter(one, one, one, other, other, other), other, 2)).toBe(
+      'policy-curvature',
+    );
   });
 
   test('problem numbers beyond the fits of the specification gain nothing', () => {
     const other = [evaluate('curvature', { problem: 999 })];
-    expect(codeFor(three, after(one, one, one), other, 1)).toBe('policy-curvature');
+    expect(codeFor(three, departedAfter(one, one, one), other, 1)).toBe('policy-curvature');
   });
 
   test('the factor serves every fit and counts for each', () => {
-    expect(codeFor(three, after([factor], one, one), one, 5)).toBe('policy-curvature');
+    expect(codeFor(three, departedAfter([factor], one, one), one, 5)).toBe('policy-curvature');
   });
 });
 
@@ -165,8 +167,8 @@ describe('numbers and rounds', () => {
 
   test('asks of a run are counted up to the limit', () => {
     const policy = policyWith({ roundsMost: 2 });
-    expect(codeFor(policy, after([proximal]), [proximal])).toBeNull();
-    expect(codeFor(policy, after([proximal], [proximal]), [proximal])).toBe('policy-rounds');
+    expect(codeFor(policy, departedAfter([proximal]), [proximal])).toBeNull();
+    expect(codeFor(policy, departedAfter([proximal], [proximal]), [proximal])).toBe('policy-rounds');
   });
 });
 

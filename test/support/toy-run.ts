@@ -1,0 +1,123 @@
+import type { Member, Run, RunAsk, Shown } from '../../coordinator/run/run.js';
+import { memberName } from '../../coordinator/run/run.js';
+import type { Answer, Ask } from '../../protocol/messages/round.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+
+/** The mean of one number per site by gradient steps: a run small enough to be checked by hand. */
+export const TOY_ROUNDS = 3;
+
+export const toySpecification = (sites: FitSpecification['sites']): FitSpecification => ({
+  title: 'Mean pressure',
+  sites,
+  missing: 'refuse',
+  response: { column: 'pressure_bar', positive: null },
+  loss: 'squared',
+  offset: null,
+  weights: null,
+  intercept: 'shared',
+  terms: [],
+  penalties: [],
+  rounds: { tolerance: 1e-8, most: 300, rung: 'highest' },
+  barrier: { deadlineMs: 1000, quorum: 'all', oldest: 0, patienceMs: 5000, missing: 'stop' },
+});
+
+export function* toyRun(specification: FitSpecification, digest: string, roster: readonly Member[]): Run {
+  const scaling = {
+    rowCountTotal: 10,
+    kept: [],
+    center: new Float64Array(),
+    scale: new Float64Array(),
+  };
+  let z = 0;
+  let shown: Shown | null = null;
+  let refused: string | null = null;
+  for (let round = 1; round <= TOY_ROUNDS && refused === null; round++) {
+    const ask: RunAsk = {
+      stage: 'solve',
+      works: roster.map(() => [
+        {
+          work: 'evaluate',
+          problem: 0,
+          points: [{ point: Float64Array.of(z), want: 'gradient' }],
+          ownFit: null,
+        },
+      ]),
+      scaling,
+      shown,
+    };
+    const answers = yield ask;
+    let sum = 0;
+    for (const [index, answer] of answers.entries()) {
+      if ('code' in answer) refused = `${memberName(roster[index])} refused: ${answer.code}`;
+      else if (answer[0].work === 'evaluate') sum += answer[0].points[0].gradient?.[0] ?? Number.NaN;
+    }
+    if (refused === null) z -= (0.7 * sum) / roster.length;
+    shown = shownRound(round, z);
+  }
+  const outcome = refused === null ? 'solved' : 'refused';
+  return {
+    outcome,
+    reason: refused,
+    shown,
+    result: {
+      format: 1,
+      outcome,
+      reason: refused,
+      title: specification.title,
+      specification: digest,
+      software: 'toy',
+      sites: roster.map((member) => ({
+        site: memberName(member),
+        rowsUsed: null,
+        rowsDropped: null,
+        kernel: member.kernel,
+      })),
+      rowsTotal: null,
+      rung: 'pooled',
+      rungReason: null,
+      tolerance: 1e-8,
+      fits: [],
+      notes: [String(z)],
+      rounds: TOY_ROUNDS,
+      numbersSent: [],
+    },
+  };
+}
+
+function shownRound(round: number, objective: number): Shown {
+  return {
+    kind: 'round',
+    round,
+    tolerance: 1e-8,
+    fitsOpen: 1,
+    fitsTotal: 1,
+    progress: {
+      rung: 'pooled',
+      purpose: 'gradient',
+      primalResidual: null,
+      dualResidual: null,
+      relativeGap: null,
+      gapMeasured: false,
+      objective,
+    },
+  };
+}
+
+/** What a toy site with this mean answers. */
+export function toyAnswer(ask: Ask, mean: number): Answer {
+  return {
+    kind: 'answer',
+    run: ask.run,
+    ask: ask.ask,
+    work: ask.work.map((work) => {
+      if (work.work !== 'evaluate') throw new Error(`a toy site has no answer to ${work.work}`);
+      const points = work.points.map(({ point }) => ({
+        value: 0,
+        gradient: Float64Array.of(point[0] - mean),
+        diagonal: null,
+        curvature: null,
+      }));
+      return { work: 'evaluate', problem: work.problem, points, ownFit: null };
+    }),
+  };
+}
