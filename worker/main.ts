@@ -33,8 +33,8 @@ function joinCommand(): Command {
     .option('--json', 'log as JSON lines', false)
     .action(
       acting(async (site: string, options) => {
-        const { join } = await import('./commands/join.js');
-        return join(site, options);
+        const { joinAndLeave } = await import('./commands/join.js');
+        return joinAndLeave(site, options);
       }),
     );
   return withTail(command, {

@@ -48,7 +48,7 @@ export async function analystOf(options: AnalystOptions): Promise<Attempt<Analys
       },
     ]);
   }
-  const file = options.tokenFile ?? process.env['COMMONFIT_TOKEN_FILE'] ?? TOKEN_FILE_DEFAULT;
+  const file = options.tokenFile ?? process.env.COMMONFIT_TOKEN_FILE ?? TOKEN_FILE_DEFAULT;
   try {
     const token = (await readFile(file, 'utf8')).trim();
     if (token !== '' && !/\s/.test(token)) {

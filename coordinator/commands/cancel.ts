@@ -13,7 +13,7 @@ export function cancelCommand(): Command {
       .option('--json', 'one JSON object instead of words'),
   ).action(acting(cancel));
   return withTail(command, {
-    examples: ['commonfit cancel 4f6c2a'],
+    examples: ['commonfit cancel 20310504-101500-4f6c2a91'],
     exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.notFound],
   });
 }

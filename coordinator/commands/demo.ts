@@ -77,7 +77,7 @@ async function play(scene: Scene, folder: string, signal: AbortSignal): Promise<
     folder,
     sites: (url) => generatedSites(folder, url, scene.most, signal),
     document: () => generatedDocument(folder),
-    sink: logSink(false),
+    sink: logSink(false, false),
     signal,
   });
   if (!run.ok) return run;

@@ -102,10 +102,10 @@ const brokenOff = (analyst: Analyst, run: string): Ending => ({
   texts: [`The coordinator at ${analyst.url} ends the log of ${run} before the run has an outcome.`],
 });
 
-/** A sink that shows the log on standard output: sentences, or one JSON object a line. */
-export function logSink(json: boolean): (event: LogEvent) => void {
+/** A sink that shows the log on standard output: sentences, or one JSON object a line. `served`: see `RoundLogOptions`. */
+export function logSink(json: boolean, served: boolean): (event: LogEvent) => void {
   if (json) return sayJson;
-  const log = roundLog(terminalOf(process.stdout));
+  const log = roundLog({ ...terminalOf(process.stdout), served });
   return (event) => say(log.linesFor(event));
 }
 
@@ -116,7 +116,7 @@ export async function watchRun(analyst: Analyst, run: string, json: boolean): Pr
   process.once('SIGINT', onInterrupt);
   process.once('SIGTERM', onInterrupt);
   try {
-    const followed = await followRun(analyst, run, logSink(json), stop.signal);
+    const followed = await followRun(analyst, run, logSink(json, true), stop.signal);
     if (followed.kind === 'outcome') return exitCodeOf(followed.event.outcome);
     if (followed.kind === 'ending') return sayEnding(followed.ending, json);
     complain(`You stopped watching; the run goes on. To come back: commonfit watch ${run}`);

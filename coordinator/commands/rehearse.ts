@@ -12,7 +12,7 @@ import { logSink } from './follow.js';
 import { interruptible } from './interrupt.js';
 import { interrupted, type LocalSite, runOnThisMachine } from './on-this-machine.js';
 import { writeResultFolder } from './result-folder.js';
-import { type Attempt, complain, done, ending, sayEnding } from './terminal.js';
+import { type Attempt, done, ending, say, sayEnding } from './terminal.js';
 import { runWorkerCommand } from './worker-process.js';
 
 export function rehearseCommand(): Command {
@@ -72,13 +72,13 @@ async function rehearseIn(
     folder,
     sites: (url) => splitIntoSites(url, folder, document, options, signal),
     document: async () => done(document),
-    sink: logSink(json),
+    sink: logSink(json, false),
     signal,
   });
   if (!run.ok) return sayEnding(run.ending, json);
   const written = await writeResultFolder(out, run.value.result, run.value.events);
   if (!written.ok) return sayEnding(written.ending, json);
-  if (!json) complain(`The result is in ${options.out}.`);
+  if (!json) say([`The result is in ${options.out}: result.json, coefficients.csv and rounds.csv.`]);
   return exitCodeOf(run.value.outcome.outcome);
 }
 

@@ -17,7 +17,10 @@ export function resultCommand(): Command {
       .option('--out <folder>', 'write result.json, coefficients.csv and rounds.csv there as well'),
   ).action(acting(result));
   return withTail(command, {
-    examples: ['commonfit result 4f6c2a', 'commonfit result 4f6c2a --out ./breaks-result'],
+    examples: [
+      'commonfit result 20310504-101500-4f6c2a91',
+      'commonfit result 20310504-101500-4f6c2a91 --out ./breaks-result',
+    ],
     exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.notFound, EXIT.machine],
     outcomes: true,
   });

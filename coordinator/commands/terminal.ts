@@ -11,7 +11,7 @@ export function terminalOf(stream: { isTTY?: boolean; columns?: number }): {
 } {
   const isTerminal = stream.isTTY === true;
   const columns = isTerminal ? (stream.columns ?? 0) : 0;
-  const plain = (process.env['NO_COLOR'] ?? '') !== '' || process.env['TERM'] === 'dumb';
+  const plain = (process.env.NO_COLOR ?? '') !== '' || process.env.TERM === 'dumb';
   return { width: columns > 0 ? columns : WIDTH_DEFAULT, colour: isTerminal && !plain };
 }
 

@@ -13,7 +13,7 @@ export function watchCommand(): Command {
       .option('--json', 'the events as JSON lines instead of sentences'),
   ).action(acting(watch));
   return withTail(command, {
-    examples: ['commonfit watch 4f6c2a'],
+    examples: ['commonfit watch 20310504-101500-4f6c2a91'],
     exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.notFound, EXIT.interrupted],
     outcomes: true,
     more: 'Ctrl-C ends the watching; the run goes on.',

@@ -1,5 +1,6 @@
 import { Acceleration } from './acceleration.js';
 import { estimatedCertificate } from './certificate.js';
+import { curvatureRung } from './curvature-rung.js';
 import { runawayColumns } from './existence.js';
 import type { Certificate, Method, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
 import { flooredDiagonal } from './metric.js';
@@ -30,12 +31,10 @@ const TRIGGER_FINISH_SHRINK = 10;
  *     s_i ← s_i + α (x_i − z)
  */
 export function* proximalRung(problem: ConsensusProblem): Method {
+  // the model of a squared loss is the function: one matrix, anywhere, solves it
+  if (problem.quadratic && problem.curvatureMost > 0)
+    return { ...(yield* curvatureRung(problem)), rung: 'proximal' as const };
   const state = yield* setUp(problem);
-  if (problem.quadratic && state.matricesLeft > 0) {
-    // the model of a squared loss is the function: one matrix anywhere solves it
-    const ended = yield* tryFinish(problem, state, problem.start);
-    if (ended !== null) return ended;
-  }
   const acceleration = new Acceleration();
   let scale = 1;
   let s: Float64Array[] = problem.siteWeights.map(() => problem.start);

@@ -26,12 +26,12 @@ export function certificateText(
   const gap = roughly(relativeGap);
   switch (kind) {
     case 'measured':
-      return `Certificate: gradients and curvature measured at this very point bound its distance to the optimum by ${gap} of the objective.`;
+      return `Certificate, from gradients and curvature measured at this very point: its objective is at most ${gap} above the optimum (relative).`;
     case 'sketched':
-      return `Certificate: gradients measured and curvature sketched at this very point put its distance to the optimum at no more than about ${gap} of the objective.`;
+      return `Certificate, from gradients measured and curvature sketched at this very point: its objective is at most about ${gap} above the optimum (relative).`;
     case 'duality-gap':
-      return `Certificate: the duality gap at this very point bounds its distance to the optimum by ${gap} of the objective.`;
+      return `Certificate, from the duality gap at this very point: its objective is at most ${gap} above the optimum (relative).`;
     default:
-      return `Certificate: an estimate only, from gradients and diagonal curvature at this very point; it puts the distance to the optimum at about ${gap} of the objective.`;
+      return `Certificate, an estimate only, from gradients and diagonal curvature at this very point: its objective is about ${gap} above the optimum (relative).`;
   }
 }

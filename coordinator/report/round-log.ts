@@ -1,6 +1,7 @@
 import type { LogEvent, RoundEvent } from '../run/log-event.js';
 import { certificateText, OUTCOME_HEAD } from './outcome-text.js';
 import { counted, duration, grouped, listed, sentence, shortened, wrapped } from './phrases.js';
+import { namesWithin, Presence } from './presence.js';
 import { bar, barWidth, MARKS, roundSentence } from './round-line.js';
 import { timeLeftMs } from './time-left.js';
 
@@ -13,6 +14,8 @@ export interface RoundLogOptions {
   /** Columns of the terminal; at least 40 are used. */
   readonly width: number;
   readonly colour: boolean;
+  /** Whether the coordinator goes on after the run, so that its folder and `commonfit result` are of use. */
+  readonly served: boolean;
 }
 
 const WIDTH_LEAST = 40;
@@ -32,7 +35,16 @@ export function roundLog(options: RoundLogOptions): RoundLog {
   const width = Math.max(WIDTH_LEAST, Math.floor(options.width));
   const paint = (tone: Tone, text: string): string =>
     options.colour && text !== '' ? `${TONES[tone][0]}${text}${TONES[tone][1]}` : text;
-  const memory: Memory = { run: null, title: null, rows: null, siteCount: null, tolerance: null, recent: [] };
+  const memory: Memory = {
+    presence: new Presence(width),
+    served: options.served,
+    run: null,
+    title: null,
+    rows: null,
+    siteCount: null,
+    tolerance: null,
+    recent: [],
+  };
   return {
     linesFor: (event) => {
       remember(memory, event);
@@ -42,6 +54,8 @@ export function roundLog(options: RoundLogOptions): RoundLog {
 }
 
 interface Memory {
+  readonly presence: Presence;
+  readonly served: boolean;
   run: string | null;
   title: string | null;
   rows: number | null;
@@ -61,6 +75,8 @@ function remember(memory: Memory, event: LogEvent): void {
   } else if (event.event === 'round') {
     memory.tolerance = event.tolerance;
     memory.recent = [...memory.recent.slice(1 - REMEMBERED), event];
+  } else if (event.event === 'resumed') {
+    memory.presence.forget();
   }
 }
 
@@ -69,13 +85,10 @@ function linesOf(event: LogEvent, memory: Memory, width: number, paint: Paint): 
     case 'accepted':
       return acceptedLines(event, width);
     case 'waiting':
-      return wrapped(`Waiting for ${listed(namesWithin(event.sites, width), 8)} to connect.`, width, 2);
-    case 'site': {
-      const site = shortened(event.site, width - 24);
-      return [
-        event.change === 'connected' ? `${site} is here.` : paint('bad', `The link to ${site} is gone.`),
-      ];
-    }
+      return memory.presence.waiting(event);
+    case 'site':
+      if (event.change === 'connected') return [memory.presence.arrived(event.site)];
+      return [paint('bad', memory.presence.lost(event.site))];
     case 'survey':
       return surveyLines(event, width, paint);
     case 'round':
@@ -96,10 +109,6 @@ function linesOf(event: LogEvent, memory: Memory, width: number, paint: Paint): 
       return outcomeLines(event, memory, width, paint);
   }
 }
-
-/** Names short enough that two stand on a line of a paragraph. */
-const namesWithin = (sites: readonly string[], width: number): string[] =>
-  sites.map((site) => shortened(site, Math.floor(width / 2) - 4));
 
 function acceptedLines(event: Extract<LogEvent, { event: 'accepted' }>, width: number): string[] {
   const sites =
@@ -125,7 +134,7 @@ function surveyLines(event: Extract<LogEvent, { event: 'survey' }>, width: numbe
     ...wrapped(`The rung is ${event.rung}: ${sentence(event.rungReason)}`, width, 2),
     ...event.notes.flatMap((note) => wrapped(`Note: ${sentence(note)}`, width, 2)),
     ...wrapped(
-      `Each mark below walks to the post at the tolerance; ${MARKS.measured} measured, ${MARKS.guessed} guessed.`,
+      `Below, how far each round is off the optimum (relative): the mark walks to the post at the tolerance, ${MARKS.measured} measured, ${MARKS.guessed} guessed.`,
       width,
       2,
     ).map((line) => paint('faint', line)),
@@ -166,16 +175,13 @@ function outcomeLines(
   const shown = first.startsWith(head)
     ? `${paint(event.outcome === 'solved' ? 'good' : 'bad', head)}${first.slice(head.length)}`
     : paint('bad', first);
-  return [
-    '',
-    shown,
-    ...rest,
-    ...wrapped(`The result folder, on the coordinator's machine: ${event.folder}`, width),
-    ...(memory.run === null
-      ? []
-      : wrapped(`To read the coefficients: commonfit result ${memory.run}`, width)),
-  ];
+  return ['', shown, ...rest, ...(memory.served ? whereLines(event.folder, memory.run, width) : [])];
 }
+
+const whereLines = (folder: string, run: string | null, width: number): string[] => [
+  ...wrapped(`The result folder, on the coordinator's machine: ${folder}`, width),
+  ...(run === null ? [] : wrapped(`To read the coefficients: commonfit result ${run}`, width)),
+];
 
 const toleranceText = (gap: number | null, tolerance: number | null): string =>
   gap === null || tolerance === null ? '' : ` The tolerance is ${tolerance}.`;

@@ -1,5 +1,7 @@
 import type { RoundEvent } from '../run/log-event.js';
 
+/** Less than this is over before it is read. Milliseconds. */
+const WORTH_SAYING_MS = 1000;
 /** Rounds looked back on, fewest rounds a trend is read from, and how well a straight line must describe them. */
 const LOOK_BACK = 8;
 const FEWEST = 3;
@@ -8,7 +10,7 @@ const EXPLAINED_LEAST = 0.6;
 /**
  * Milliseconds until the tolerance is reached, from the trend of ln(gap) over the recent rounds times their mean
  * duration; null where the rounds do not show a trend: too few, of another kind than the last one (rung, fits still
- * open, gap measured or guessed), not falling, scattered, or falling too slowly for the rounds that are left.
+ * open, gap measured or guessed), not falling, scattered, or falling too slowly for the rounds that are left; and where less than a second is left.
  */
 export function timeLeftMs(rounds: readonly RoundEvent[]): number | null {
   const last = rounds[rounds.length - 1];
@@ -21,7 +23,8 @@ export function timeLeftMs(rounds: readonly RoundEvent[]): number | null {
   const roundsLeft = Math.ceil(Math.log(last.relativeGap / last.tolerance) / trend);
   if (roundsLeft > last.roundsMost - last.round) return null;
   const meanMs = recent.reduce((sum, round) => sum + round.tookMs, 0) / recent.length;
-  return roundsLeft * meanMs;
+  const leftMs = roundsLeft * meanMs;
+  return leftMs < WORTH_SAYING_MS ? null : leftMs;
 }
 
 /** The unbroken run of rounds up to the last one that can be compared with it. */

@@ -50,24 +50,32 @@ export function openTokens(stateFolder: string): Tokens {
     return parsed;
   };
 
+  const issueAlone = async (holder: Holder): Promise<Checked<string>> => {
+    const before = current();
+    if (!before.ok) return before;
+    const folder = await makeFolder(stateFolder);
+    if (!folder.ok) return folder;
+    const token = randomBytes(TOKEN_BYTES).toString('base64url');
+    const others = before.value.tokens.filter(
+      ({ kind, name }) => kind !== holder.kind || name !== holder.name,
+    );
+    const issued = {
+      ...holder,
+      sha256: digestOf(token).toString('hex'),
+      issuedAt: new Date().toISOString(),
+    };
+    const next: TokenDocument = { format: 1, tokens: [...others, issued] };
+    const kept = await writeWhole(path, `${JSON.stringify(next, null, 2)}\n`, 0o600);
+    return kept.ok ? succeed(token) : kept;
+  };
+  let issuing: Promise<unknown> = Promise.resolve();
+
   return {
-    async issue(holder) {
-      const before = current();
-      if (!before.ok) return before;
-      const folder = await makeFolder(stateFolder);
-      if (!folder.ok) return folder;
-      const token = randomBytes(TOKEN_BYTES).toString('base64url');
-      const others = before.value.tokens.filter(
-        ({ kind, name }) => kind !== holder.kind || name !== holder.name,
-      );
-      const issued = {
-        ...holder,
-        sha256: digestOf(token).toString('hex'),
-        issuedAt: new Date().toISOString(),
-      };
-      const next: TokenDocument = { format: 1, tokens: [...others, issued] };
-      const kept = await writeWhole(path, `${JSON.stringify(next, null, 2)}\n`, 0o600);
-      return kept.ok ? succeed(token) : kept;
+    issue(holder) {
+      // One after the other: each adds to what the one before has written.
+      const issued = issuing.then(() => issueAlone(holder));
+      issuing = issued;
+      return issued;
     },
     holderOf(token) {
       const known = current();

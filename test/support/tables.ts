@@ -22,7 +22,7 @@ export const request = (partial: Partial<TableRequest>): TableRequest => ({
   ...partial,
 });
 
-export function valueOf<T>(checked: Checked<T>): T {
+export function soundValue<T>(checked: Checked<T>): T {
   if (!checked.ok) expect.fail(`${checked.failure.code}: ${checked.failure.message}`);
   return checked.value;
 }

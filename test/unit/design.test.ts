@@ -5,7 +5,7 @@ import { scaleShard } from '../../worker/design/scale.js';
 import { surveyOf } from '../../worker/design/survey.js';
 import { lossNamed } from '../../worker/losses/index.js';
 import { levelsTerm, numericTerm, specification, table } from '../support/designs.js';
-import { failureOf, valueOf } from '../support/tables.js';
+import { failureOf, soundValue } from '../support/tables.js';
 
 const material = levelsTerm('material', ['pvc', 'steel'], 'pvc');
 const materials = (...codes: number[]) => ({
@@ -55,7 +55,7 @@ describe('the design', () => {
       ],
     });
     const data = table({ y: [1, 2], d: [4, 9], age: [-3, 5] }, materials(0, 1));
-    const raw = valueOf(buildRawShard(spec, data));
+    const raw = soundValue(buildRawShard(spec, data));
     expect(raw.columns).toHaveLength(5);
     expect(raw.x).toEqual(Float64Array.of(Math.log(4), 2, 16, 0, 0, Math.log(9), 3, 81, 1, 5));
     expect(raw.y).toEqual(Float64Array.of(1, 2));
@@ -66,15 +66,15 @@ describe('the design', () => {
   test('exposure enters as its logarithm, an offset as it is', () => {
     const data = table({ y: [1, 2], e: [1, Math.E] });
     const exposed = specification({ loss: 'poisson', offset: { kind: 'exposure', column: 'e' } });
-    expect(valueOf(buildRawShard(exposed, data)).offset).toEqual(Float64Array.of(0, 1));
+    expect(soundValue(buildRawShard(exposed, data)).offset).toEqual(Float64Array.of(0, 1));
     const offset = specification({ offset: { kind: 'offset', column: 'e' } });
-    expect(valueOf(buildRawShard(offset, data)).offset).toEqual(Float64Array.of(1, Math.E));
+    expect(soundValue(buildRawShard(offset, data)).offset).toEqual(Float64Array.of(1, Math.E));
   });
 
   test('the positive class is 1', () => {
     const spec = specification({ loss: 'logistic', response: { column: 'failed', positive: 'yes' } });
     const data = table({}, { failed: { levels: ['yes', 'no'], codes: Int32Array.of(1, 0, 0) } });
-    expect(valueOf(buildRawShard(spec, data)).y).toEqual(Float64Array.of(0, 1, 1));
+    expect(soundValue(buildRawShard(spec, data)).y).toEqual(Float64Array.of(0, 1, 1));
   });
 });
 
@@ -144,7 +144,7 @@ describe('the survey', () => {
       terms: [numericTerm('a'), material],
     });
     const data = table({ y: [0, 1, 4], e: [1, 2, 5], w: [1, 3, 2], a: [1, 2, 6] }, materials(1, 1, 1));
-    const survey = surveyOf(valueOf(buildRawShard(spec, data)), lossNamed('poisson'));
+    const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossNamed('poisson'));
     expect(survey.rowsUsed).toBe(3);
     expect(survey.columns).toEqual(['a', 'material=steel']);
     expect(survey.mean).toEqual(Float64Array.of(3, 1));
@@ -162,14 +162,14 @@ describe('the survey', () => {
     const base = 1e9;
     const spec = specification({ terms: [numericTerm('a'), numericTerm('b')] });
     const data = table({ y: [1, 2, 3, 4], a: [base, base + 1, base + 2, base + 3], b: [0.1, 0.1, 0.1, 0.1] });
-    const survey = surveyOf(valueOf(buildRawShard(spec, data)), lossNamed('squared'));
+    const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossNamed('squared'));
     expect(survey.mean).toEqual(Float64Array.of(base + 1.5, 0.1));
     expect(survey.centredSquares).toEqual(Float64Array.of(5, 0));
   });
 
   test('remarks on a response without spread and on weights that are all zero', () => {
     const spec = specification({ weights: { column: 'w' } });
-    const raw = valueOf(buildRawShard(spec, table({ y: [2, 2], w: [0, 0] })));
+    const raw = soundValue(buildRawShard(spec, table({ y: [2, 2], w: [0, 0] })));
     expect(surveyOf({ ...raw, rowsDropped: 3 }, lossNamed('squared')).notes).toEqual([
       'Every row has the same response.',
       'Every row has weight zero.',
@@ -180,7 +180,7 @@ describe('the survey', () => {
 
 describe('scaling', () => {
   const spec = specification({ terms: [numericTerm('a'), numericTerm('b'), numericTerm('c')] });
-  const raw = valueOf(
+  const raw = soundValue(
     buildRawShard(spec, table({ y: [1, 2], a: [3, 5], b: [7, 7], c: [10, 30] }, {}, [1, 3])),
   );
   const scaling = {

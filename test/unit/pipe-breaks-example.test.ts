@@ -9,7 +9,7 @@ import { buildRawShard } from '../../worker/design/build.js';
 import { tableRequest } from '../../worker/design/request.js';
 import { readTable } from '../../worker/source/read-table.js';
 import { parsedValue } from '../support/specifications.js';
-import { newFolder, valueOf } from '../support/tables.js';
+import { newFolder, soundValue } from '../support/tables.js';
 
 describe('the pipe-breaks example', () => {
   test('every site file and the specification are sound, and every table reads as it was made', async () => {
@@ -30,10 +30,10 @@ describe('the pipe-breaks example', () => {
       const site = parsedValue(parseSiteFile(text(file), join(out, file)));
       expect(site.coordinator.url).toBe(options.url);
       expect(site.policy.curvatureMost).toBe('any');
-      const table = valueOf(await readTable(site.table, tableRequest(spec, site.shard)));
+      const table = soundValue(await readTable(site.table, tableRequest(spec, site.shard)));
       const made = segmentsOf(utility, 3);
       expect(table.numeric.get('km_years')).toEqual(Float64Array.from(made, (row) => row.km_years));
-      const raw = valueOf(buildRawShard(spec, table));
+      const raw = soundValue(buildRawShard(spec, table));
       expect(raw.y).toEqual(Float64Array.from(made, (row) => row.breaks));
     }
   });

@@ -30,6 +30,12 @@ describe('tables that are not there', () => {
     expect((await refusal({ kind: 'parquet', path }, { numeric: ['x'] })).code).toBe('table-missing');
   });
 
+  test('a query whose folder is gone', async () => {
+    const folder = join(newFolder(), 'gone');
+    const failure = await refusal({ kind: 'query', query: 'select 1 as x', folder }, { numeric: ['x'] });
+    expect(failure).toMatchObject({ code: 'table-missing', where: { file: folder } });
+  });
+
   test.each([
     ['no bytes', csv('')],
     ['a header alone', csv('x,y\n')],

@@ -105,7 +105,7 @@ const EVENTS: LogEvent[] = [
 ];
 
 const linesAt = (width: number, events: readonly LogEvent[] = EVENTS, colour = false): string[] => {
-  const log = roundLog({ width, colour });
+  const log = roundLog({ width, colour, served: true });
   return events.flatMap((event) => log.linesFor(event));
 };
 const only = (event: LogEvent, width = 80): string => linesAt(width, [event]).join('\n');
@@ -160,7 +160,12 @@ describe('round log', () => {
   });
 
   test('the time left stands at the end of a round that shows a trend', () => {
-    expect(linesAt(80, [round(1), round(2), round(3), round(4)]).at(-1)).toMatch(/; 0\.80 s left\.$/);
+    expect(
+      linesAt(
+        80,
+        [1, 2, 3, 4].map((number) => round(number, { tookMs: 2000 })),
+      ).at(-1),
+    ).toMatch(/; 8\.0 s left\.$/);
   });
 
   test('the names of long sites keep their head and tail', () => {
@@ -177,6 +182,31 @@ describe('round log', () => {
     expect(coloured.map((line) => line.replace(sequence, ''))).toEqual(plain);
   });
 
+  test('an arrival says how many are to come; a list that only got shorter is not said again', () => {
+    const lines = linesAt(80, [
+      { event: 'waiting', sites: ['castlefen', 'oakhythe', 'harrowmere'], at },
+      { event: 'site', site: 'oakhythe', change: 'connected', at },
+      { event: 'waiting', sites: ['castlefen', 'harrowmere'], at },
+      { event: 'site', site: 'harrowmere', change: 'connected', at },
+      { event: 'waiting', sites: ['castlefen'], at },
+      { event: 'site', site: 'oakhythe', change: 'lost', at },
+      { event: 'waiting', sites: ['castlefen', 'oakhythe'], at },
+    ]);
+    expect(lines).toEqual([
+      'Waiting for castlefen, oakhythe and harrowmere to connect.',
+      'oakhythe is here; 2 still to come.',
+      'harrowmere is here; 1 still to come.',
+      'The link to oakhythe is gone.',
+      'Waiting for castlefen and oakhythe to connect.',
+    ]);
+  });
+
+  test('where the coordinator does not go on, nothing points at its folder', () => {
+    const log = roundLog({ width: 80, colour: false, served: false });
+    const text = EVENTS.flatMap((event) => log.linesFor(event)).join(' ');
+    expect(text).not.toMatch(/result folder|commonfit result/);
+  });
+
   test('the survey says rows, left-out rows, the rung and why', () => {
     const text = linesAt(200, [EVENTS[6] as LogEvent]).join('\n');
     expect(text).toContain('123,456 rows at 2 sites for 9 coefficients');
@@ -188,7 +218,7 @@ describe('round log', () => {
   test('the outcome says what was solved, the certificate in words and where the result is', () => {
     const text = linesAt(80).join('\n').replaceAll('\n', ' ');
     expect(text).toContain('Solved. “Pipe breaks” took 12 rounds over 123,456 rows at 2 sites.');
-    expect(text).toContain('bound its distance to the optimum by 3.1e-10');
+    expect(text).toContain('its objective is at most 3.1e-10 above the optimum (relative)');
     expect(text).toContain('/srv/commonfit-state/runs/4f6c2a91');
     expect(text).toContain('commonfit result 4f6c2a91');
     expect(text).toContain('Not solved: a site was missing');
@@ -224,13 +254,19 @@ describe('bar', () => {
 
 describe('time left', () => {
   const decades = (count: number): RoundEvent[] => Array.from({ length: count }, (_, at) => round(at + 1));
+  const slow = (events: readonly RoundEvent[], more: Partial<RoundEvent> = {}): RoundEvent[] =>
+    events.map((event) => ({ ...event, tookMs: 60_000, ...more }));
 
-  test('a steady fall is carried on: a decade a round, 4 decades to go, 0.2 s a round', () => {
-    expect(timeLeftMs(decades(4))).toBeCloseTo(800, 6);
+  test('a steady fall is carried on: a decade a round, 4 decades to go, 2 s a round', () => {
+    expect(timeLeftMs(decades(4).map((event) => ({ ...event, tookMs: 2000 })))).toBeCloseTo(8000, 6);
+  });
+
+  test('less than a second is not worth saying', () => {
+    expect(timeLeftMs(decades(4))).toBeNull();
   });
 
   test('nothing is said of fewer than three rounds', () => {
-    expect(timeLeftMs(decades(2))).toBeNull();
+    expect(timeLeftMs(slow(decades(2)))).toBeNull();
     expect(timeLeftMs([])).toBeNull();
   });
 
@@ -241,19 +277,19 @@ describe('time left', () => {
     const scattered = [1e-1, 1e-4, 1e-1, 1e-4, 1e-2, 1e-1].map((gap, at) =>
       round(at + 1, { relativeGap: gap }),
     );
-    expect(timeLeftMs(scattered)).toBeNull();
+    expect(timeLeftMs(slow(scattered))).toBeNull();
   });
 
   test('nothing is said where the rounds allowed would not suffice', () => {
-    expect(timeLeftMs(decades(4).map((event) => ({ ...event, roundsMost: 6 })))).toBeNull();
+    expect(timeLeftMs(slow(decades(4), { roundsMost: 6 }))).toBeNull();
   });
 
   test('rounds before the rung or the open fits changed do not count', () => {
     const events = [...decades(4), round(5, { rung: 'curvature' }), round(6, { rung: 'curvature' })];
-    expect(timeLeftMs(events)).toBeNull();
+    expect(timeLeftMs(slow(events))).toBeNull();
   });
 
   test('nothing is left to say within the tolerance', () => {
-    expect(timeLeftMs(decades(8))).toBeNull();
+    expect(timeLeftMs(slow(decades(8)))).toBeNull();
   });
 });

@@ -30,19 +30,20 @@ class Bench {
   kept: RunEnd | null = null;
   mayStart = true;
 
+  readonly time = new VirtualTime();
+
   constructor(
     readonly store: MemoryStore = memoryStore(),
     private readonly replies: Replies = honest,
-    readonly time = new VirtualTime(),
-    logged: readonly LogEvent[] = [],
-    sites: FitSpecification['sites'] = SITES,
+    more: { logged?: readonly LogEvent[]; sites?: FitSpecification['sites']; fit?: typeof toyRun } = {},
   ) {
+    const { logged = [], sites = SITES, fit = toyRun } = more;
     const specification = toySpecification(sites);
     this.host = new RunHost({
       accepted: { ...ACCEPTED, specification },
-      start: (roster) => toyRun(specification, ACCEPTED.digest, roster),
+      start: (roster) => fit(specification, ACCEPTED.digest, roster),
       journal: openJournal(store),
-      time,
+      time: this.time,
       connected: () => [...this.links.values()],
       mayStart: () => this.mayStart,
       log: (event) => this.events.push(event),
@@ -214,7 +215,7 @@ describe('run host', () => {
   });
 
   test('at least two of any site: starts at the deadline with all that are there', async () => {
-    const bench = new Bench(memoryStore(), honest, new VirtualTime(), [], { least: 2 });
+    const bench = new Bench(memoryStore(), honest, { sites: { least: 2 } });
     void bench.host.open();
     bench.connect('lindell-bay');
     bench.connect('castlefen');
@@ -237,12 +238,21 @@ describe('run host', () => {
     expect((await bench.finish()).outcome).toBe('solved');
   });
 
-  test('a defect of the run ends it as broken', async () => {
-    const bench = new Bench(memoryStore(), honest);
-    Object.assign(bench.host, {});
+  test('a defect of the run ends it as broken, and the host goes on', async () => {
+    const bench = new Bench(memoryStore(), honest, {
+      *fit(specification, digest, roster) {
+        const run = toyRun(specification, digest, roster);
+        const { value } = run.next();
+        if ('works' in value) yield value;
+        throw new Error('division by a site');
+      },
+    });
     void bench.host.open();
     for (const site of SITES) bench.connect(site);
-    expect((await bench.finish()).outcome).toBe('solved');
+    expect(await bench.finish()).toMatchObject({
+      outcome: 'broken',
+      reason: expect.stringMatching(/division by a site/),
+    });
   });
 });
 
@@ -270,7 +280,7 @@ describe('taking a run up from its journal', () => {
     const bytes = first.store.bytes();
     for (let length = 0; length <= bytes.length; length += 97) {
       const logged = first.events.filter(({ event }) => event === 'round').slice(0, 1);
-      const again = new Bench(memoryStore(bytes.slice(0, length)), honest, new VirtualTime(), logged);
+      const again = new Bench(memoryStore(bytes.slice(0, length)), honest, { logged });
       await again.host.open();
       for (const site of SITES) again.connect(site);
       const end = await again.finish();
@@ -325,28 +335,16 @@ describe('taking a run up from its journal', () => {
 
   test('a run that asks something else than it asked then is journal-broken', async () => {
     const first = await undisturbed();
-    const specification = toySpecification(SITES);
-    const other = new Bench(memoryStore(first.store.bytes()));
-    const host = new RunHost({
-      accepted: { ...ACCEPTED, specification },
-      *start(roster) {
-        const run = toyRun(specification, ACCEPTED.digest, roster);
-        const { value } = run.next();
+    const other = new Bench(memoryStore(first.store.bytes()), honest, {
+      *fit(specification, digest, roster) {
+        const { value } = toyRun(specification, digest, roster).next();
         if ('works' in value) yield { ...value, works: value.works.map(() => [{ work: 'factor' as const }]) };
         throw new Error('not reached');
       },
-      journal: openJournal(memoryStore(first.store.bytes())),
-      time: other.time,
-      connected: () => [],
-      mayStart: () => true,
-      log: () => {},
-      notice: () => {},
-      keepResult: async () => ({ ok: true, value: 'folder' }),
-      logged: { survey: false, round: 0 },
-      node: 'v20',
     });
-    await host.open();
-    expect(host.state).toMatchObject({ state: 'ended', end: { outcome: 'broken' } });
+    await other.host.open();
+    expect(other.kept?.outcome).toBe('broken');
+    expect(other.kept?.reason).toMatch(/Ask 1 was another one.*\[journal-broken\]/);
   });
 });
 

@@ -34,12 +34,17 @@ export async function join(siteFile: string, options: JoinOptions): Promise<Exit
   return failure === null ? EXIT.ok : exitCodeOf(failure);
 }
 
+/** Ends the process even where an answer that outlasted the grace time is still being computed. */
+export async function joinAndLeave(siteFile: string, options: JoinOptions): Promise<never> {
+  process.exit(await join(siteFile, options));
+}
+
 async function joinAs(
   site: SiteFile,
   options: JoinOptions,
   onEvent: (event: WorkerEvent) => void,
 ): Promise<Failure | null> {
-  const { url } = site.coordinator;
+  const url = linkUrl(site.coordinator.url);
   const plain = checkPlainText(site, options.plainText);
   if (plain !== null) return plain;
   const secrets = await readSecrets(site);
@@ -92,6 +97,15 @@ function answererOf(
     onEvent,
     pause: () => new Promise((resolve) => setImmediate(resolve)),
   });
+}
+
+/** Where a coordinator takes workers, unless the site file names another path (behind a proxy). */
+const LINK_PATH = '/v1/site';
+
+function linkUrl(written: string): string {
+  const url = new URL(written);
+  if (url.pathname === '/') url.pathname = LINK_PATH;
+  return url.href;
 }
 
 const LOOPBACK = /^(localhost|127(\.\d{1,3}){3}|\[::1\])$/;

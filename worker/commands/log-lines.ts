@@ -48,11 +48,11 @@ function disconnected(event: Extract<WorkerEvent, { event: 'disconnected' }>): s
 }
 
 function answered(event: Extract<WorkerEvent, { event: 'answered' }>): string {
-  const what = `Ask ${event.ask}: ${event.asked.join(', ')} in ${duration(event.tookMs)}`;
+  const what = `Ask ${event.ask} (${event.asked.join('; ')}) answered in ${duration(event.tookMs)}`;
   const left = `${leftWords(event)} left (${event.kinds.join(', ')})`;
   return event.repeated
-    ? `${what}; the same answer again, ${left}, counted before.`
-    : `${what}; ${left}; ${grouped(event.runNumbers)} in this run.`;
+    ? `${what} once more: ${left}, counted before.`
+    : `${what}: ${left}, ${grouped(event.runNumbers)} in this run.`;
 }
 
 const leftWords = (left: { readonly numbers: number; readonly curvature: number }): string => {

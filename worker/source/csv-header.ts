@@ -1,5 +1,6 @@
-import { open } from 'node:fs/promises';
+import { type FileHandle, open } from 'node:fs/promises';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
+import { unreadable } from './duckdb.js';
 
 export interface CsvHeader {
   readonly names: readonly string[];
@@ -12,11 +13,16 @@ const headerBytesMost = 1024 * 1024;
  * Reads the header record of a CSV file (RFC 4180). The delimiter is a comma, or a semicolon or tab where the header
  * holds no comma outside quotes: nothing is guessed from the rows.
  *
- * Fails with `table-empty` (no header), `table-unreadable` (not text, or no end of the header within 1 MiB).
+ * Fails with `table-empty` (no header), `table-unreadable` (not to be opened, not text, or no end of the header within 1 MiB).
  */
 export async function readCsvHeader(path: string): Promise<Checked<CsvHeader>> {
   const where = { file: path };
-  const handle = await open(path, 'r');
+  let handle: FileHandle;
+  try {
+    handle = await open(path, 'r');
+  } catch (error) {
+    return unreadable(error, where);
+  }
   let text: string;
   try {
     const buffer = Buffer.alloc(headerBytesMost);

@@ -41,7 +41,7 @@ export const sqlPath = (path: string): string => sqlText(path.replace(/[[*?]/g, 
 
 const wordsMost = 300;
 
-/** 'table-unreadable' with DuckDB's own words, cut before its advice on options that a custodian cannot set. */
+/** 'table-unreadable' with the words of DuckDB or of the system, cut before its advice on options that a custodian cannot set. */
 export function unreadable(error: unknown, where: Place): ReturnType<typeof fail> {
   const words = (error instanceof Error ? error.message : String(error)).split('\n').slice(0, 3).join(' ');
   const cut = words.length > wordsMost ? `${words.slice(0, wordsMost)}…` : words;

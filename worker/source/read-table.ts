@@ -1,3 +1,4 @@
+import { stat } from 'node:fs/promises';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import { createEnumSql, levelsSql, numericSql, textSql } from './column-sql.js';
 import { diagnose } from './diagnose.js';
@@ -30,8 +31,19 @@ export async function readTable(source: TableSource, request: TableRequest): Pro
     }
   };
   if (source.kind !== 'query') return read();
+  if (!(await isFolder(source.folder)))
+    return fail('table-missing', 'The folder that the query is run in is not there.', {
+      where: { file: source.folder },
+      remedy: 'A query runs in the folder of its site file.',
+    });
   return inFolder(source.folder, read);
 }
+
+const isFolder = (path: string): Promise<boolean> =>
+  stat(path).then(
+    (found) => found.isDirectory(),
+    () => false,
+  );
 
 async function readWith(engine: Engine, source: TableSource, request: TableRequest): Promise<Checked<Table>> {
   const used = [...new Set([...request.numeric, ...request.levels.map((levels) => levels.column)])];

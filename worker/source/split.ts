@@ -32,7 +32,15 @@ export async function splitTable(options: {
     return fail('not-supported', 'A table to split is a .csv, .parquet, .jsonl or .ndjson file.', {
       where: { file: table },
     });
-  await mkdir(folder, { recursive: true });
+  try {
+    await mkdir(folder, { recursive: true });
+  } catch (error) {
+    const words = error instanceof Error ? error.message : String(error);
+    return fail('state-unwritable', `The folder cannot be made: ${words}.`, {
+      where: { file: folder },
+      remedy: 'Name another folder.',
+    });
+  }
   if (kind === 'jsonl') return splitLines(options);
   const engine = await openEngine({ threads: 2 });
   try {
