@@ -26,6 +26,9 @@ async function cancel(run: string, options: AnalystOptions & { json?: true }): P
   const reply = await ask(analyst.value, 'POST', path, runSummarySchema);
   if (!reply.ok) return sayEnding(reply.ending, json);
   if (json) sayJson(reply.value);
-  else say(['It is told to end.', ...runLines(reply.value, terminalOf(process.stdout).width)]);
+  else {
+    const head = reply.value.state === 'ended' ? 'It has ended.' : 'It is told to end.';
+    say([head, ...runLines(reply.value, terminalOf(process.stdout).width)]);
+  }
   return EXIT.ok;
 }

@@ -20,6 +20,8 @@ export interface ModelStep {
   readonly decrement: number;
   /** ΔᵀMΔ. */
   readonly bend: number;
+  /** ∇f(z)ᵀΔ + ½ΔᵀMΔ: the change of f the model foretells. */
+  readonly lossChange: number;
 }
 
 /**
@@ -42,9 +44,10 @@ export function modelStep(
   if (next === null) return null;
   const direction = next.map((value, j) => value - z[j]);
   const bend = dot(direction, symmetricTimes(metric, direction));
-  const change = dot(gradient, direction) + 0.5 * bend + penaltyValue(g, next) - penaltyValue(g, z);
+  const lossChange = dot(gradient, direction) + 0.5 * bend;
+  const change = lossChange + penaltyValue(g, next) - penaltyValue(g, z);
   // the model is strongly convex, so its decrease is at least ½‖Δ‖²: guards the difference against rounding
-  return { z: next, direction, decrement: Math.max(-change, 0.5 * bend), bend };
+  return { z: next, direction, decrement: Math.max(-change, 0.5 * bend), bend, lossChange };
 }
 
 export const relativeTo = (objective: number): number => Math.max(Math.abs(objective), OBJECTIVE_LEAST);

@@ -49,7 +49,7 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
       const runaway = runawayColumns(step.direction, step.bend, startDiagonal);
       return runaway.length > 0
         ? ending(problem, here, certificate, rounds, 'unbounded', 'separable', runaway)
-        : ending(problem, here, certificate, rounds, 'solved', null);
+        : ending(problem, after(here, step), certificate, rounds, 'solved', null);
     }
     if (rounds >= problem.roundsMost) return ending(problem, here, certificate, rounds, 'round-limit', null);
     if (failures >= FAILURES_MOST)
@@ -96,6 +96,13 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
   }
 }
 
+/** One model step beyond `here`. */
+const after = (here: Iterate, step: ModelStep): Iterate => ({
+  ...here,
+  z: step.z,
+  loss: here.loss + step.lossChange,
+});
+
 function iterateFrom(
   problem: ConsensusProblem,
   z: Float64Array,
@@ -138,25 +145,18 @@ function quadraticEnd(
       return sum;
     });
   const gradient = gradientAt(step.z);
-  const after = modelStep(problem.penalty, metric, gradient, step.z);
-  let bend = 0;
-  for (let j = 0; j < problem.p; j++) bend += 0.5 * step.direction[j] * (here.gradient[j] + gradient[j]);
+  const next = modelStep(problem.penalty, metric, gradient, step.z);
+  const loss = here.loss + step.lossChange;
   const there: Iterate = {
     ...here,
     z: step.z,
-    loss: here.loss + bend,
-    objective: here.loss + bend + penaltyValue(problem.penalty, step.z),
+    loss,
+    objective: loss + penaltyValue(problem.penalty, step.z),
     gradient,
   };
-  if (after === null)
+  if (next === null)
     return ending(problem, there, null, rounds, 'stalled', 'the curvature could not be factored');
-  const certificate = measuredCertificate(
-    problem.penalty,
-    step.z,
-    gradient,
-    after.decrement,
-    there.objective,
-  );
+  const certificate = measuredCertificate(problem.penalty, step.z, gradient, next.decrement, there.objective);
   const solved = certificate.relativeGap <= problem.tolerance;
   return ending(
     problem,

@@ -76,8 +76,12 @@ export interface MethodEnd {
   readonly reason: string | null;
   /** Solver columns the reason is about. */
   readonly columnsAtFault: readonly number[];
+  /**
+   * The point the method stands by. Where curvature certified a point, this is one model step beyond it: the same
+   * answers give both, and the step is far nearer to the optimum than the certificate tells.
+   */
   readonly z: Float64Array;
-  /** f(z) (the mean loss) and g(z). */
+  /** f(z) (the mean loss; by the model, after a model step) and g(z). */
   readonly loss: number;
   readonly penalty: number;
   readonly certificate: Certificate | null;

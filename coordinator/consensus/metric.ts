@@ -6,6 +6,8 @@ import { maxOf } from '../../numerics/vector.js';
 const DIAGONAL_FLOOR = 1e-6;
 /** Ridge, relative to the diagonal, that makes a measured curvature safely positive definite. */
 export const RIDGE = 1e-9;
+/** Pivots above this share of their diagonal need no ridge. */
+const PIVOT_SOUND = 1e-6;
 /** Smallest eigenvalue credited to a curvature that is not positive definite, in the scale of its diagonal. */
 const EIGENVALUE_FLOOR = 0.01;
 
@@ -28,14 +30,18 @@ export function plusDiagonal(matrix: Float64Array, t: number, diagonal: Float64A
 }
 
 /**
- * A positive definite metric from a measured curvature H (row-major p × p): H + ridge · diag where that factors, else
- * the absolute eigenvalues of H in the scale of its diagonal, floored (a modified Newton matrix: Nocedal and Wright
+ * A positive definite metric from a measured curvature H (row-major p × p): H itself where it is well conditioned,
+ * H + ridge · diag where that factors, else the absolute eigenvalues of H in the scale of its diagonal, floored (a modified Newton matrix: Nocedal and Wright
  * 2006, §3.4).
  */
 export function definiteMetric(curvature: Float64Array, diagonal: Float64Array): Float64Array {
   const p = diagonal.length;
   const ridged = plusDiagonal(curvature, RIDGE, diagonal);
-  if (cholesky(ridged, p) !== null) return ridged;
+  const factor = cholesky(ridged, p);
+  if (factor !== null) {
+    const sound = diagonal.every((value, j) => factor[j * p + j] ** 2 > PIVOT_SOUND * value);
+    return sound ? curvature : ridged;
+  }
   const root = diagonal.map(Math.sqrt);
   const scaled = new Matrix(p, p);
   for (let i = 0; i < p; i++)

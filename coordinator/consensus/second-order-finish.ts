@@ -13,7 +13,10 @@ const SHORTER = [0.3, 0.1] as const;
 /** A step must bring the decrement down to this share, or the rest of the budget is kept for later. */
 const CONTRACTION_MOST = 0.3;
 
-/** Where a second-order finish ended: the best point it has measured, with every site's gradient there. */
+/**
+ * Where a second-order finish ended: the best point it has measured with every site's gradient there, or, once
+ * certified, one model step beyond it.
+ */
 export interface Finish {
   readonly z: Float64Array;
   readonly loss: number;
@@ -98,8 +101,9 @@ export function* secondOrderFinish(
     bestObjective = objective;
     gap = step === null ? null : step.decrement / relativeTo(objective);
     const contracting = step !== null && step.decrement <= CONTRACTION_MOST * decrement;
-    if (certified || flaw !== null || step === null || spent >= budget || !contracting)
-      return { finish: best, rounds };
+    if (flaw === null && certified && step !== null)
+      return { finish: { ...best, z: step.z, loss: at.value + step.lossChange }, rounds };
+    if (flaw !== null || step === null || spent >= budget || !contracting) return { finish: best, rounds };
     decrement = step.decrement;
     z = step.z;
     direction = step.direction;

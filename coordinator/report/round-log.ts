@@ -93,10 +93,8 @@ function linesOf(event: LogEvent, memory: Memory, width: number, paint: Paint): 
       return surveyLines(event, width, paint);
     case 'round':
       return [roundLine(event, memory, width, paint)];
-    case 'late': {
-      const text = `No answer yet from ${listed(namesWithin(event.sites, width), 6)} in round ${event.round} after ${duration(event.waitedMs)}; asked again, and waiting for up to ${duration(event.patienceLeftMs)} more.`;
-      return wrapped(text, width, 2).map((line) => paint('bad', line));
-    }
+    case 'late':
+      return memory.presence.stillOut(event).map((line) => paint('bad', line));
     case 'resumed':
       return wrapped(
         event.round === 0
@@ -180,7 +178,7 @@ function outcomeLines(
 
 const whereLines = (folder: string, run: string | null, width: number): string[] => [
   ...wrapped(`The result folder, on the coordinator's machine: ${folder}`, width),
-  ...(run === null ? [] : wrapped(`To read the coefficients: commonfit result ${run}`, width)),
+  ...(run === null ? [] : wrapped(`To read the result: commonfit result ${run}`, width)),
 ];
 
 const toleranceText = (gap: number | null, tolerance: number | null): string =>

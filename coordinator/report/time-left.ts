@@ -8,8 +8,8 @@ const FEWEST = 3;
 const EXPLAINED_LEAST = 0.6;
 
 /**
- * Milliseconds until the tolerance is reached, from the trend of ln(gap) over the recent rounds times their mean
- * duration; null where the rounds do not show a trend: too few, of another kind than the last one (rung, fits still
+ * Milliseconds until the tolerance is reached, from the trend of ln(gap) over the recent rounds times their median
+ * duration (one straggler says nothing of the next rounds); null where the rounds do not show a trend: too few, of another kind than the last one (rung, fits still
  * open, gap measured or guessed), not falling, scattered, or falling too slowly for the rounds that are left; and where less than a second is left.
  */
 export function timeLeftMs(rounds: readonly RoundEvent[]): number | null {
@@ -22,8 +22,7 @@ export function timeLeftMs(rounds: readonly RoundEvent[]): number | null {
   if (trend === null) return null;
   const roundsLeft = Math.ceil(Math.log(last.relativeGap / last.tolerance) / trend);
   if (roundsLeft > last.roundsMost - last.round) return null;
-  const meanMs = recent.reduce((sum, round) => sum + round.tookMs, 0) / recent.length;
-  const leftMs = roundsLeft * meanMs;
+  const leftMs = roundsLeft * medianOf(recent.map((round) => round.tookMs));
   return leftMs < WORTH_SAYING_MS ? null : leftMs;
 }
 
@@ -55,4 +54,11 @@ function fallOf(rounds: readonly RoundEvent[]): number | null {
   }
   if (!(xx > 0) || !(xy < 0)) return null;
   return (xy * xy) / (xx * yy) >= EXPLAINED_LEAST ? -xy / xx : null;
+}
+
+function medianOf(values: readonly number[]): number {
+  const sorted = [...values].sort((a, b) => a - b);
+  const middle = sorted.length >> 1;
+  const upper = sorted[middle] as number;
+  return sorted.length % 2 === 1 ? upper : ((sorted[middle - 1] as number) + upper) / 2;
 }

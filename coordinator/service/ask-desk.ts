@@ -34,6 +34,7 @@ export class AskDesk {
   private stopTimer: () => void = () => {};
   private readonly queue: PanelEvent[] = [];
   private draining = false;
+  private stopped = false;
 
   constructor(
     private readonly parts: Pick<HostParts, 'accepted' | 'time' | 'notice'>,
@@ -91,9 +92,10 @@ export class AskDesk {
 
   /** Asks nothing more; with an outcome, tells the members. */
   stop(outcome: string | null): void {
-    this.current = null;
+    const again = this.stopped;
+    this.stopped = true;
     this.stopTimer();
-    if (outcome === null) return;
+    if (again || outcome === null) return;
     for (const link of this.links.values()) link.end(outcome);
   }
 
@@ -121,7 +123,7 @@ export class AskDesk {
     this.queue.push(event);
     if (this.draining) return;
     this.draining = true;
-    for (let next = this.queue.shift(); next !== undefined; next = this.queue.shift()) {
+    for (let next = this.queue.shift(); next !== undefined && !this.stopped; next = this.queue.shift()) {
       const { state, effects } = step(this.panel, next);
       this.panel = state;
       this.setTimer();

@@ -1,5 +1,7 @@
-import { mkdir, open, rename, unlink } from 'node:fs/promises';
+import { randomBytes } from 'node:crypto';
+import { mkdir, open, rename, rm, stat, unlink } from 'node:fs/promises';
 import { dirname } from 'node:path';
+import { setTimeout as delay } from 'node:timers/promises';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 
 /** Makes a folder, its parents too, readable by its owner only. */
@@ -12,7 +14,7 @@ export const makeFolder = (path: string): Promise<Checked<null>> =>
 /** Replaces a file as a whole: after a crash there is the old one or the new one, never a part. */
 export const writeWhole = (path: string, text: string, mode = 0o644): Promise<Checked<null>> =>
   unwritableIfFails(path, async () => {
-    const draft = `${path}.${process.pid}.draft`;
+    const draft = `${path}.${randomBytes(4).toString('hex')}.draft`;
     const handle = await open(draft, 'w', mode);
     try {
       await handle.chmod(mode);
@@ -33,6 +35,45 @@ export const writeWhole = (path: string, text: string, mode = 0o644): Promise<Ch
     }
     return null;
   });
+
+const HOLD_TRIES_MOST = 200;
+const HOLD_AGAIN_MS = 25;
+/** A hold this old was left behind by a crash: what is done under one takes milliseconds. */
+const HOLD_STALE_MS = 4000;
+
+/** Runs `action` while no other process does the same for this file. */
+export async function holding<T>(path: string, action: () => Promise<Checked<T>>): Promise<Checked<T>> {
+  const hold = `${path}.hold`;
+  const held = await unwritableIfFails(hold, () => takeHold(hold));
+  if (!held.ok) return held;
+  try {
+    return await action();
+  } finally {
+    await rm(hold, { force: true });
+  }
+}
+
+async function takeHold(hold: string): Promise<null> {
+  for (let tries = 1; ; tries++) {
+    try {
+      await (await open(hold, 'wx', 0o600)).close();
+      return null;
+    } catch (error) {
+      if ((error as NodeJS.ErrnoException).code !== 'EEXIST' || tries === HOLD_TRIES_MOST) throw error;
+    }
+    if (await isStale(hold)) await rm(hold, { force: true });
+    else await delay(HOLD_AGAIN_MS);
+  }
+}
+
+async function isStale(hold: string): Promise<boolean> {
+  try {
+    return Date.now() - (await stat(hold)).mtimeMs > HOLD_STALE_MS;
+  } catch (error) {
+    if ((error as NodeJS.ErrnoException).code === 'ENOENT') return false;
+    throw error;
+  }
+}
 
 /** The value of `action`, or `state-unwritable` where the file system refuses. */
 export async function unwritableIfFails<T>(path: string, action: () => Promise<T> | T): Promise<Checked<T>> {

@@ -3,19 +3,14 @@ import type { Answer, Refusal } from '../../protocol/messages/round.js';
 import { SOFTWARE } from '../../protocol/version.js';
 import { type EndedRecord, encodeReply, type Measured, type OpenedRecord } from '../journal/records.js';
 import type { Reply } from '../panel/panel.js';
-import {
-  type Member,
-  memberName,
-  type RunAsk,
-  type RunEnd,
-  type RunOutcome,
-  type Shown,
-} from '../run/run.js';
+import type { Member, RunAsk, RunEnd, RunOutcome } from '../run/run.js';
 import { AskDesk } from './ask-desk.js';
 import { Drive, type Turn } from './drive.js';
 import type { HostParts, HostState, LinkedMember } from './host-parts.js';
 import { type Replayed, replay } from './replay.js';
-import { eventOfShown, forcedEnd, outcomeEvent } from './round-events.js';
+import { forcedEnd } from './round-events.js';
+import { RunTeller } from './run-teller.js';
+import { TaskLine } from './task-line.js';
 import { WaitingRoom } from './waiting-room.js';
 
 type Ending = { readonly outcome: RunOutcome; readonly reason: string };
@@ -26,13 +21,14 @@ type Ending = { readonly outcome: RunOutcome; readonly reason: string };
  * socket, clock or file comes in through `parts`.
  */
 export class RunHost {
-  private phase: 'idle' | 'waiting' | 'starting' | 'running' | 'ended' | 'halted' | 'stopped' = 'idle';
+  private phase: 'idle' | 'waiting' | 'starting' | 'running' | 'ending' | 'ended' | 'halted' | 'stopped' =
+    'idle';
   private room: WaitingRoom | null = null;
   private drive: Drive | null = null;
   private desk: AskDesk | null = null;
-  /** Tasks that write the journal, one at a time: nothing else may move the run meanwhile. */
-  private tasks = 0;
-  private work: Promise<void> = Promise.resolve();
+  /** What writes the journal goes through here: nothing else may move the run meanwhile. */
+  private readonly line = new TaskLine((error) => this.haltOnDefect(error));
+  private readonly tell: RunTeller;
   private cancelled = false;
   private end: RunEnd | null = null;
   private haltReason = '';
@@ -41,11 +37,13 @@ export class RunHost {
   constructor(
     private readonly parts: HostParts,
     private readonly onChange: () => void = () => {},
-  ) {}
+  ) {
+    this.tell = new RunTeller(parts);
+  }
 
   /** Reads the journal and takes the run up where it stands. To be called once. */
   open(): Promise<void> {
-    return this.alone(async () => {
+    return this.line.add(async () => {
       const { accepted, journal } = this.parts;
       const replayed = await replay(journal, accepted.run, (opened) => this.openDrive(opened));
       if (journal.tornBytes > 0) {
@@ -68,13 +66,13 @@ export class RunHost {
 
   connected(linked: LinkedMember): void {
     const ours = this.desk?.connected(linked) ?? (this.phase === 'waiting' && this.isExpected(linked.member));
-    if (ours) this.logSite(linked.member, 'connected');
+    if (ours) this.tell.site(linked.member, 'connected');
     this.poke();
   }
 
   lost(linked: LinkedMember): void {
     const ours = this.desk?.lost(linked) ?? (this.phase === 'waiting' && this.isExpected(linked.member));
-    if (ours) this.logSite(linked.member, 'lost');
+    if (ours) this.tell.site(linked.member, 'lost');
     this.poke();
   }
 
@@ -91,7 +89,7 @@ export class RunHost {
   cancel(): boolean {
     if (this.phase === 'ended' || this.phase === 'halted' || this.end !== null) return false;
     this.cancelled = true;
-    if (this.tasks === 0 && this.phase !== 'idle') void this.alone(() => this.endCancelled());
+    if (!this.line.busy && this.phase !== 'idle') void this.line.add(() => this.endCancelled());
     return true;
   }
 
@@ -100,26 +98,26 @@ export class RunHost {
     if (this.phase !== 'ended') this.phase = 'stopped';
     this.room?.close();
     this.desk?.stop(null);
-    await this.work;
+    await this.line.drained();
     await this.parts.journal.close();
   }
 
   private async resume(replayed: Replayed): Promise<void> {
     if (replayed.kind === 'ended') return this.endAgain(replayed);
     if (replayed.kind === 'open') {
-      this.parts.log({ event: 'resumed', round: replayed.drive.round, at: this.now() });
+      this.tell.resumed(replayed.drive.round);
       return this.run(replayed.drive, replayed.turn);
     }
     if (this.phase === 'stopped') return;
     this.phase = 'waiting';
     if (this.cancelled) return this.endCancelled();
     this.room = new WaitingRoom(this.parts, {
-      waiting: (sites) => this.parts.log({ event: 'waiting', sites, at: this.now() }),
+      waiting: (sites) => this.tell.waiting(sites),
       ready: (roster) => {
         this.phase = 'starting';
-        void this.alone(() => this.begin(roster));
+        void this.line.add(() => this.begin(roster));
       },
-      giveUp: (missing) => void this.alone(() => this.endForced(siteMissing(missing))),
+      giveUp: (missing) => void this.line.add(() => this.endForced(siteMissing(missing))),
     });
     this.room.check();
   }
@@ -153,7 +151,7 @@ export class RunHost {
       run,
       roster,
       (members) => this.parts.start(members),
-      (shown, measured) => this.logShown(shown, measured, roster),
+      (shown, measured) => this.tell.shown(shown, measured, roster),
     );
     return succeed(this.drive);
   }
@@ -163,17 +161,10 @@ export class RunHost {
     this.phase = 'running';
     this.desk = new AskDesk(this.parts, drive.roster, {
       pass: (asked, ask, replies, measured) =>
-        void this.alone(() => this.take(asked, ask, replies, measured)),
-      giveUp: (names) => void this.alone(() => this.endForced(siteMissing(names))),
+        void this.line.add(() => this.take(asked, ask, replies, measured)),
+      giveUp: (names) => void this.line.add(() => this.endForced(siteMissing(names))),
       late: (sites, waitedMs, patienceLeftMs) =>
-        this.parts.log({
-          event: 'late',
-          round: drive.survey === null ? 0 : drive.round + 1,
-          sites,
-          waitedMs,
-          patienceLeftMs,
-          at: this.now(),
-        }),
+        this.tell.late(drive.survey === null ? 0 : drive.round + 1, sites, waitedMs, patienceLeftMs),
     });
     for (const linked of this.parts.connected()) this.desk.connected(linked);
     this.onChange();
@@ -188,7 +179,8 @@ export class RunHost {
     measured: Measured,
   ): Promise<void> {
     const { drive } = this;
-    if (drive === null) throw new Error('replies before the run started');
+    // What was in the line before it may have ended the run.
+    if (drive === null || this.phase !== 'running') return;
     const { run } = this.parts.accepted;
     const kept = await this.parts.journal.append({
       record: 'answered',
@@ -198,7 +190,7 @@ export class RunHost {
       measured,
     });
     if (!kept.ok) return this.halt(kept.failure);
-    if (this.phase === 'stopped') return;
+    if (this.phase !== 'running') return;
     if (this.cancelled) return this.endCancelled();
     return this.go(drive.feed(asked, replies, measured));
   }
@@ -238,6 +230,8 @@ export class RunHost {
   }
 
   private async finish(end: RunEnd, forced: boolean): Promise<void> {
+    if (this.phase !== 'running' && this.phase !== 'waiting') return;
+    this.phase = 'ending';
     this.room?.close();
     this.desk?.stop(end.outcome);
     const { outcome, reason } = end;
@@ -259,7 +253,7 @@ export class RunHost {
     if (!folder.ok) return this.halt(folder.failure);
     this.end = end;
     this.phase = 'ended';
-    this.parts.log(outcomeEvent(end, folder.value, this.now()));
+    this.tell.outcome(end, folder.value);
     this.onChange();
   }
 
@@ -277,46 +271,15 @@ export class RunHost {
     this.onChange();
   }
 
-  private logShown(shown: Shown, measured: Measured, roster: readonly Member[]): void {
-    const { survey, round } = this.parts.logged;
-    const known = shown.kind === 'survey' ? survey : shown.round <= round;
-    if (known) return;
-    const { most } = this.parts.accepted.specification.rounds;
-    this.parts.log(eventOfShown(shown, measured, roster, most));
-  }
-
-  private logSite(member: Member, change: 'connected' | 'lost'): void {
-    this.parts.log({ event: 'site', site: memberName(member), change, at: this.now() });
-  }
-
   private isExpected({ site }: Member): boolean {
     const { sites } = this.parts.accepted.specification;
     return !('includes' in sites) || sites.includes(site);
   }
 
-  private now(): string {
-    return new Date(this.parts.time.wallMs()).toISOString();
-  }
-
-  private alone(task: () => Promise<void> | void): Promise<void> {
-    this.tasks += 1;
-    this.work = this.work.then(task).then(
-      () => {
-        this.tasks -= 1;
-      },
-      (error) => {
-        this.tasks -= 1;
-        const reason = error instanceof Error ? error.message : String(error);
-        this.parts.notice({
-          level: 'error',
-          code: 'internal',
-          message: 'The run host failed.',
-          detail: error,
-        });
-        this.halt(fail('internal', `A defect of commonfit: ${reason}.`).failure);
-      },
-    );
-    return this.work;
+  private haltOnDefect(error: unknown): void {
+    const reason = error instanceof Error ? error.message : String(error);
+    this.parts.notice({ level: 'error', code: 'internal', message: 'The run host failed.', detail: error });
+    this.halt(fail('internal', `A defect of commonfit: ${reason}.`).failure);
   }
 }
 

@@ -1,7 +1,12 @@
 import { readFile } from 'node:fs/promises';
 import { join } from 'node:path';
 import swagger from '@fastify/swagger';
-import Fastify, { type FastifyBaseLogger, type FastifyError, type FastifyInstance } from 'fastify';
+import Fastify, {
+  type FastifyBaseLogger,
+  type FastifyError,
+  type FastifyInstance,
+  LogController,
+} from 'fastify';
 import { type Logger, pino } from 'pino';
 import { z } from 'zod';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
@@ -159,7 +164,7 @@ async function issueFirstAnalyst(tokens: Tokens, state: string): Promise<Checked
 async function openApp(logger: Logger, tls: Tls | null): Promise<FastifyInstance> {
   const app: FastifyInstance = Fastify({
     loggerInstance: logger as FastifyBaseLogger,
-    disableRequestLogging: true,
+    logController: new LogController({ disableRequestLogging: true }),
     bodyLimit: BODY_BYTES_MOST,
     forceCloseConnections: 'idle',
     ...(tls === null ? {} : { https: tls }),

@@ -3,7 +3,7 @@ import { readFileSync, statSync } from 'node:fs';
 import { join } from 'node:path';
 import { z } from 'zod';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
-import { makeFolder, writeWhole } from './files.js';
+import { holding, makeFolder, writeWhole } from './files.js';
 
 const holderSchema = z.strictObject({ kind: z.enum(['site', 'analyst']), name: z.string().min(1).max(64) });
 
@@ -50,32 +50,24 @@ export function openTokens(stateFolder: string): Tokens {
     return parsed;
   };
 
-  const issueAlone = async (holder: Holder): Promise<Checked<string>> => {
+  const addTo = async (holder: Holder): Promise<Checked<string>> => {
     const before = current();
     if (!before.ok) return before;
-    const folder = await makeFolder(stateFolder);
-    if (!folder.ok) return folder;
     const token = randomBytes(TOKEN_BYTES).toString('base64url');
     const others = before.value.tokens.filter(
       ({ kind, name }) => kind !== holder.kind || name !== holder.name,
     );
-    const issued = {
-      ...holder,
-      sha256: digestOf(token).toString('hex'),
-      issuedAt: new Date().toISOString(),
-    };
+    const sha256 = digestOf(token).toString('hex');
+    const issued = { ...holder, sha256, issuedAt: new Date().toISOString() };
     const next: TokenDocument = { format: 1, tokens: [...others, issued] };
     const kept = await writeWhole(path, `${JSON.stringify(next, null, 2)}\n`, 0o600);
     return kept.ok ? succeed(token) : kept;
   };
-  let issuing: Promise<unknown> = Promise.resolve();
 
   return {
-    issue(holder) {
-      // One after the other: each adds to what the one before has written.
-      const issued = issuing.then(() => issueAlone(holder));
-      issuing = issued;
-      return issued;
+    async issue(holder) {
+      const folder = await makeFolder(stateFolder);
+      return folder.ok ? holding(path, () => addTo(holder)) : folder;
     },
     holderOf(token) {
       const known = current();

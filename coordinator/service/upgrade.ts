@@ -12,12 +12,13 @@ export const LINK_PATH = '/v1/site';
 export function upgradeHandler(hub: SiteHub, tokens: Tokens, linksMost: number) {
   const server = linkServer();
   const sockets = new Set<Duplex>();
+  const full = fail('coordinator-full', `${linksMost} workers are linked already.`);
   return {
     handle(request: IncomingMessage, socket: Duplex, head: Buffer): void {
-      const checked = siteOf(request, tokens);
-      if (!checked.ok) return refuse(socket, checked.failure);
-      if (sockets.size >= linksMost) {
-        return refuse(socket, fail('coordinator-full', `${linksMost} workers are linked already.`).failure);
+      const checked = sockets.size < linksMost ? siteOf(request, tokens) : full;
+      if (!checked.ok) {
+        refuse(socket, checked.failure);
+        return;
       }
       sockets.add(socket);
       socket.once('close', () => sockets.delete(socket));
@@ -26,9 +27,6 @@ export function upgradeHandler(hub: SiteHub, tokens: Tokens, linksMost: number) 
     /** Breaks the connections whose peers do not take part in the closing handshake. */
     breakAll(): void {
       for (const socket of sockets) socket.destroy();
-    },
-    get open(): number {
-      return sockets.size;
     },
   };
 }

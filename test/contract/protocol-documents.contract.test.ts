@@ -20,7 +20,7 @@ function tableUnder(heading: string): string[][] {
   const section = readme.split(/^## /m).find((part) => part.startsWith(`${heading}\n`)) ?? '';
   return section
     .split('\n')
-    .filter((line) => line.startsWith('| '))
+    .filter((line) => line.startsWith('| ') && !line.startsWith('| --'))
     .slice(1)
     .map((line) =>
       line

@@ -32,7 +32,11 @@ describe('panel under any order of events', () => {
   test('the first reply of each member to the current ask counts, and they pass once, in roster order', () => {
     fc.assert(
       fc.property(fc.array(disturbance, { maxLength: 60 }), (events) => {
-        let state = step(openPanel(MEMBERS, { deadlineMs: 10, patienceMs: 1e6 }), { kind: 'ask', ask: ASK, atMs: 0 }).state;
+        let state = step(openPanel(MEMBERS, { deadlineMs: 10, patienceMs: 1e6 }), {
+          kind: 'ask',
+          ask: ASK,
+          atMs: 0,
+        }).state;
         const firstOf = new Map<number, Reply>();
         const passes: (readonly Reply[])[] = [];
         const drops: number[] = [];
@@ -62,7 +66,11 @@ describe('panel under any order of events', () => {
   test('while an ask is open, a connected member without a reply has been sent it on its present connection', () => {
     fc.assert(
       fc.property(fc.array(disturbance, { maxLength: 60 }), (events) => {
-        let state = step(openPanel(MEMBERS, { deadlineMs: 10, patienceMs: 1e6 }), { kind: 'ask', ask: ASK, atMs: 0 }).state;
+        let state = step(openPanel(MEMBERS, { deadlineMs: 10, patienceMs: 1e6 }), {
+          kind: 'ask',
+          ask: ASK,
+          atMs: 0,
+        }).state;
         const sent = new Set<number>();
         for (const [index, event] of events.entries()) {
           const atMs = index + 1;

@@ -129,9 +129,12 @@ describe('journal on a file', () => {
 describe('replies in the journal', () => {
   test('a vector comes back with every bit', () => {
     const point = Float64Array.of(-0, 5e-324, Math.PI, -1.7976931348623157e308, 0.1 + 0.2);
-    const bytes = encodeReply('r', 4, [{ work: 'proximal', problems: [{ problem: 0, point, newtonSteps: 2 }] }]);
+    const bytes = encodeReply('r', 4, [
+      { work: 'proximal', problems: [{ problem: 0, point, newtonSteps: 2 }] },
+    ]);
     const back = decodeReply('r', 4, bytes);
-    if (!back.ok || 'code' in back.value || back.value[0].work !== 'proximal') throw new Error('not an answer');
+    if (!back.ok || 'code' in back.value || back.value[0].work !== 'proximal')
+      throw new Error('not an answer');
     expect(Buffer.from(back.value[0].problems[0].point.buffer)).toEqual(Buffer.from(point.buffer));
   });
 
@@ -142,9 +145,17 @@ describe('replies in the journal', () => {
   });
 
   test('the digest of an ask sees one bit of one vector', () => {
-    const works = (value: number) => [
-      [{ work: 'evaluate', problem: 0, points: [{ point: Float64Array.of(value), want: 'value' }], ownFit: null }],
-    ] as Parameters<typeof digestOfAsk>[2];
+    const works = (value: number) =>
+      [
+        [
+          {
+            work: 'evaluate',
+            problem: 0,
+            points: [{ point: Float64Array.of(value), want: 'value' }],
+            ownFit: null,
+          },
+        ],
+      ] as Parameters<typeof digestOfAsk>[2];
     expect(digestOfAsk('r', 1, works(1))).toBe(digestOfAsk('r', 1, works(1)));
     expect(digestOfAsk('r', 1, works(1))).not.toBe(digestOfAsk('r', 1, works(1 + Number.EPSILON)));
     expect(digestOfAsk('r', 1, works(0))).not.toBe(digestOfAsk('r', 1, works(-0)));

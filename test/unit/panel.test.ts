@@ -1,5 +1,12 @@
 import { describe, expect, test } from 'vitest';
-import { openPanel, type PanelEvent, type PanelState, type Reply, step, wakeAtMs } from '../../coordinator/panel/panel.js';
+import {
+  openPanel,
+  type PanelEvent,
+  type PanelState,
+  type Reply,
+  step,
+  wakeAtMs,
+} from '../../coordinator/panel/panel.js';
 import { checkRoster } from '../../coordinator/panel/roster.js';
 import { EMPTY_MEMORY, rememberAnswered, rememberSent, slimWorks } from '../../coordinator/panel/slim-ask.js';
 import type { Refusal, Work } from '../../protocol/messages/round.js';
@@ -196,7 +203,12 @@ describe('roster', () => {
   const least = (count: number) => ({ sites: { least: count }, barrier: { deadlineMs: 100 } }) as never;
 
   test('named sites: the specification says the order, shards by index', () => {
-    const connected = [member('castlefen', 2, 2), member('harrowmere'), member('castlefen', 1, 2), member('other')];
+    const connected = [
+      member('castlefen', 2, 2),
+      member('harrowmere'),
+      member('castlefen', 1, 2),
+      member('other'),
+    ];
     expect(checkRoster(named('castlefen', 'harrowmere'), connected, 0)).toEqual({
       ready: true,
       roster: [member('castlefen', 1, 2), member('castlefen', 2, 2), member('harrowmere')],

@@ -201,6 +201,26 @@ describe('round log', () => {
     ]);
   });
 
+  test('a long wait for the same answers is said when it has doubled; round 0 is the survey', () => {
+    const late = (round: number, waitedMs: number): LogEvent => ({
+      event: 'late',
+      round,
+      sites: ['oakhythe'],
+      waitedMs,
+      patienceLeftMs: 300_000,
+      at,
+    });
+    const waits = [30, 60, 90, 120, 150, 240].map((seconds) => late(0, seconds * 1000));
+    const lines = linesAt(200, [...waits, late(1, 30_000)]);
+    expect(lines.map((line) => /in (.*) after (.*);/.exec(line)?.slice(1))).toEqual([
+      ['the survey', '30 s'],
+      ['the survey', '60 s'],
+      ['the survey', '2 min'],
+      ['the survey', '4 min'],
+      ['round 1', '30 s'],
+    ]);
+  });
+
   test('where the coordinator does not go on, nothing points at its folder', () => {
     const log = roundLog({ width: 80, colour: false, served: false });
     const text = EVENTS.flatMap((event) => log.linesFor(event)).join(' ');
@@ -259,6 +279,11 @@ describe('time left', () => {
 
   test('a steady fall is carried on: a decade a round, 4 decades to go, 2 s a round', () => {
     expect(timeLeftMs(decades(4).map((event) => ({ ...event, tookMs: 2000 })))).toBeCloseTo(8000, 6);
+  });
+
+  test('one straggler among the rounds does not change it', () => {
+    const events = decades(5).map((event, index) => ({ ...event, tookMs: index === 3 ? 90_000 : 2000 }));
+    expect(timeLeftMs(events)).toBeCloseTo(6000, 6);
   });
 
   test('less than a second is not worth saying', () => {

@@ -191,7 +191,10 @@ describe('run host', () => {
     );
     void bench.host.open();
     for (const site of SITES) bench.connect(site);
-    expect(await bench.finish()).toMatchObject({ outcome: 'refused', reason: 'castlefen refused: policy-rows' });
+    expect(await bench.finish()).toMatchObject({
+      outcome: 'refused',
+      reason: 'castlefen refused: policy-rows',
+    });
   });
 
   test('a vector of the wrong length closes the link and counts for nothing', async () => {
@@ -274,6 +277,26 @@ describe('cancel', () => {
   });
 });
 
+test('a cancellation and the last reply at the same moment: one end, and a journal that replays to it', async () => {
+  const bench = new Bench(memoryStore(), () => []);
+  await bench.host.open();
+  for (const site of SITES) bench.connect(site);
+  await bench.time.pass(5);
+  bench.host.cancel();
+  for (const { site, message } of [...bench.sent]) {
+    const linked = bench.links.get(site);
+    if (message.kind === 'ask' && linked !== undefined) {
+      bench.host.receive(linked, toyAnswer(message, MEANS[site]));
+    }
+  }
+  const end = await bench.finish();
+  expect(end.outcome).toBe('cancelled');
+  expect(bench.named('outcome')).toHaveLength(1);
+  const again = new Bench(memoryStore(bench.store.bytes()));
+  await again.host.open();
+  expect(again.kept).toEqual(end);
+});
+
 describe('taking a run up from its journal', () => {
   test('cut off after any byte, the journal leads to the same result and a log without gap or repetition', async () => {
     const first = await undisturbed();
@@ -329,7 +352,10 @@ describe('taking a run up from its journal', () => {
     bytes[40] ^= 1;
     const damaged = new Bench(memoryStore(bytes));
     await damaged.host.open();
-    expect(damaged.kept).toMatchObject({ outcome: 'broken', reason: expect.stringMatching(/\[journal-broken\]/) });
+    expect(damaged.kept).toMatchObject({
+      outcome: 'broken',
+      reason: expect.stringMatching(/\[journal-broken\]/),
+    });
     expect(damaged.store.bytes()).toEqual(bytes);
   });
 

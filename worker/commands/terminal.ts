@@ -10,8 +10,10 @@ export const grouped = (count: number): string => count.toLocaleString('en-US');
 export const counted = (count: number, one: string, many = `${one}s`): string =>
   `${grouped(count)} ${count === 1 ? one : many}`;
 
-/** `0.01 s`, `4.2 s`, `38 s`, `12 min`. */
+/** `under 1 ms`, `14 ms`, `0.25 s`, `4.2 s`, `38 s`, `12 min`. */
 export function duration(ms: number): string {
+  if (ms < 1) return 'under 1 ms';
+  if (ms < 99.5) return `${Math.round(ms)} ms`;
   const seconds = ms / 1000;
   if (seconds < 0.995) return `${seconds.toFixed(2)} s`;
   if (seconds < 9.95) return `${seconds.toFixed(1)} s`;
