@@ -1,4 +1,5 @@
 import type { Command } from 'commander';
+import { wrapped } from '../report/phrases.js';
 import { EXIT, exitCodeTable } from './exit-codes.js';
 import { complain } from './terminal.js';
 
@@ -23,7 +24,7 @@ export function withTail(
   command: Command,
   tail: { examples: readonly string[]; exits: readonly number[]; outcomes?: boolean; more?: string },
 ): Command {
-  const more = tail.more === undefined ? '' : `\n${tail.more}\n`;
+  const more = tail.more === undefined ? '' : `\n${wrapped(tail.more, 80).join('\n')}\n`;
   const examples = tail.examples.map((example) => `  ${example}`).join('\n');
   const heading = tail.examples.length === 1 ? 'Example' : 'Examples';
   const exits = exitCodeTable([EXIT.ok, EXIT.defect, EXIT.usage, ...tail.exits], tail.outcomes ?? false);

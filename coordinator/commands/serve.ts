@@ -6,17 +6,17 @@ import { EXIT } from './exit-codes.js';
 import { complain, ending, sayEnding } from './terminal.js';
 
 export const STATE_DEFAULT = serviceSettings.shape.state.parse(undefined);
+const LISTEN_DEFAULT = '127.0.0.1:7443';
 /** How long open runs may take to bring their journals to rest when the service is told to stop. Milliseconds. */
 const STOP_GRACE_MS = 10_000;
 
 export function serveCommand(): Command {
   const command = new Command('serve')
     .description('run the coordinator: sites connect to it, analysts hand it fit specifications')
-    .option(
-      '--listen <address>',
-      'host and port; port 0 takes a free one',
-      listenAddress,
-      listenAddress('127.0.0.1:7443'),
+    .addOption(
+      new Option('--listen <address>', 'host and port; port 0 takes a free one')
+        .argParser(listenAddress)
+        .default(listenAddress(LISTEN_DEFAULT), LISTEN_DEFAULT),
     )
     .option('--state <folder>', 'tokens, runs and journals', STATE_DEFAULT)
     .option('--tls-cert <file>', 'certificate chain, PEM; goes with --tls-key')
@@ -34,7 +34,7 @@ export function serveCommand(): Command {
       'commonfit serve --listen 0.0.0.0:7443 --tls-cert chain.pem --tls-key key.pem --state /var/lib/commonfit',
     ],
     exits: [EXIT.machine],
-    more: 'At its first start it writes an analyst token to analyst.token in the state folder. SIGINT or SIGTERM stops it; runs that are\nunder way go on from their journals when it is started again.',
+    more: 'At its first start it writes an analyst token to analyst.token in the state folder. SIGINT or SIGTERM stops it; runs that are under way go on from their journals when it is started again.',
   });
 }
 

@@ -56,7 +56,5 @@ function standing(round: RoundEvent, length: 'long' | 'middle' | 'short'): strin
   if (gap === null) return `${head} gathered ${round.purpose}`;
   const size = `${round.gapMeasured ? '' : 'about '}${roughly(gap)}`;
   const off = length === 'short' ? 'off' : 'off the optimum';
-  return length === 'long'
-    ? `${head} gathered ${round.purpose}: ${size} ${off}`
-    : `${head} is ${size} ${off}`;
+  return length === 'long' ? `${head} (${round.purpose}) is ${size} ${off}` : `${head} is ${size} ${off}`;
 }

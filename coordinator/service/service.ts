@@ -114,7 +114,6 @@ async function run(
     await close();
     return listening;
   }
-  notice({ level: 'info', message: `Listening at ${listening.value}.` });
   return succeed({ address: listening.value, close });
 }
 

@@ -5,9 +5,11 @@ import { pooledRung } from '../../coordinator/consensus/pooled-rung.js';
 import type { ConsensusProblem } from '../../coordinator/consensus/problem.js';
 import { proximalRung } from '../../coordinator/consensus/proximal-rung.js';
 import { type LocalSolver, localSolver } from '../../worker/local/local-solver.js';
+import { huber } from '../../worker/losses/huber.js';
 import { lossNamed } from '../../worker/losses/index.js';
+import type { Loss } from '../../worker/losses/loss.js';
 import { driveMethods, must } from '../support/method-driver.js';
-import { type BenchProblem, makeProblem } from './problems.js';
+import { type BenchProblem, type LossKind, makeProblem } from './problems.js';
 import { textbookRounds } from './textbook.js';
 
 export const METHODS = ['pooled', 'curvature', 'proximal', 'proximal-only', 'textbook'] as const;
@@ -36,7 +38,7 @@ export interface Row {
 /** All methods that take this problem. The optimum comes from a pooled high-accuracy solve, checked by its subgradient. */
 export function measureProblem(name: string): Row[] {
   const problem = makeProblem(name);
-  const loss = lossNamed(problem.loss);
+  const loss = lossOf(problem.loss);
   const sites = problem.shards.map((shard) => localSolver(shard, loss));
   const pooled = localSolver(problem.pooled, loss);
   const optimum = pooledOptimum(problem, pooled);
@@ -50,6 +52,9 @@ export function measureProblem(name: string): Row[] {
     measureTextbook(problem, sites, optimum),
   ];
 }
+
+/** The loss of a problem; Huber's with threshold 1, in units of the noise. */
+export const lossOf = (kind: LossKind): Loss => (kind === 'huber' ? huber(1) : lossNamed(kind));
 
 export function consensusProblem(problem: BenchProblem, tolerance: number, budget: number): ConsensusProblem {
   return {

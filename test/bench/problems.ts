@@ -13,50 +13,72 @@ export interface BenchProblem {
   readonly start: Float64Array;
 }
 
-export type LossKind = 'squared' | 'logistic' | 'poisson';
-export type DesignKind = 'well' | 'correlated' | 'small' | 'levels' | 'few';
-export type PenaltyKind = 'none' | 'ridge' | 'weak-ridge' | 'lasso' | 'elastic-net';
+export type LossKind = 'squared' | 'logistic' | 'poisson' | 'huber';
+export type DesignKind = 'well' | 'correlated' | 'small' | 'scales' | 'levels' | 'few' | 'wide' | 'extreme';
+export type PenaltyKind = 'none' | 'ridge' | 'weak-ridge' | 'lasso' | 'elastic-net' | 'box';
 export type SplitKind = 'random' | 'by-response' | 'by-covariate' | 'sizes' | 'sizes-by-response';
 
-/** `loss design penalty split sites`, the whole suite. Each is made from its own seed, so that order does not matter. */
+/**
+ * `loss design penalty split sites`, the whole suite. Each is made from its own seed, so that order does not matter.
+ * Designs: `well` and `small` conditioned, `correlated` (first-order autoregressive, 0.95), `scales` from 1 to 1000 with
+ * means far from zero, `levels` (indicators, some rare, so that sites lack levels), `few` rows (fewer at a site than
+ * columns), `wide` (400 rows, 1000 columns), `extreme` effects (classes nearly separated). A logistic split by the
+ * response leaves sites with a single class.
+ */
 export const SUITE: readonly string[] = [
   'squared well lasso random 8',
   'squared well none random 4',
   'squared correlated lasso random 8',
   'squared correlated none random 8',
   'squared correlated elastic-net by-covariate 8',
+  'squared correlated box random 4',
+  'squared scales lasso random 8',
   'squared levels ridge sizes 32',
+  'squared wide lasso random 4',
   'logistic well ridge random 8',
   'logistic well lasso random 2',
   'logistic well lasso random 32',
   'logistic well ridge sizes-by-response 8',
   'logistic well weak-ridge random 4',
   'logistic well elastic-net by-response 8',
+  'logistic scales lasso by-covariate 8',
   'logistic correlated lasso random 8',
   'logistic correlated ridge random 8',
   'logistic correlated lasso by-response 8',
   'logistic correlated lasso by-covariate 8',
   'logistic correlated lasso sizes 8',
   'logistic correlated elastic-net sizes 32',
+  'logistic correlated box random 8',
+  'logistic extreme weak-ridge random 4',
+  'logistic extreme lasso by-response 8',
   'logistic levels lasso by-covariate 8',
   'logistic levels ridge by-response 4',
   'logistic few ridge random 8',
+  'logistic few lasso by-response 32',
   'logistic small none random 4',
   'poisson small ridge random 8',
   'poisson small lasso by-response 8',
   'poisson small ridge by-covariate 8',
   'poisson small lasso sizes 8',
   'poisson small none random 2',
+  'poisson scales ridge random 8',
   'poisson levels elastic-net random 4',
   'poisson levels lasso by-covariate 32',
   'poisson correlated elastic-net random 8',
   'poisson correlated ridge sizes-by-response 8',
+  'huber small lasso random 8',
+  'huber correlated lasso random 8',
+  'huber small lasso by-response 8',
+  'huber correlated box sizes 8',
 ];
 
 const SHAPES: Record<DesignKind, { rows: number; columns: number; correlation: number }> = {
   well: { rows: 3000, columns: 50, correlation: 0.2 },
   correlated: { rows: 3000, columns: 50, correlation: 0.95 },
   small: { rows: 3000, columns: 30, correlation: 0.2 },
+  scales: { rows: 3000, columns: 40, correlation: 0.5 },
+  wide: { rows: 400, columns: 1000, correlation: 0.5 },
+  extreme: { rows: 1000, columns: 20, correlation: 0.3 },
   levels: { rows: 2000, columns: 24, correlation: 0.3 },
   few: { rows: 240, columns: 40, correlation: 0.3 },
 };
@@ -75,7 +97,7 @@ export function makeProblem(name: string): BenchProblem {
   const x = standardised(raw, shape.rows, shape.columns);
   const p = shape.columns + 1;
   const sparse = penalty === 'lasso' || penalty === 'elastic-net';
-  const truth = drawTruth(random, shape.columns, sparse);
+  const truth = drawTruth(random, shape.columns, sparse, design);
   const eta = linearPredictor(x, shape.rows, p, truth);
   const { y, offset } = drawResponse(random, loss, eta);
   const pooled: Shard = { rowCount: shape.rows, p, x, y, weights: null, offset, rowCountTotal: shape.rows };
@@ -86,7 +108,7 @@ export function makeProblem(name: string): BenchProblem {
     p,
     pooled,
     shards: parts.map((rows) => takeRows(pooled, rows)),
-    penalty: makePenalty(penalty, x, y, p),
+    penalty: makePenalty(penalty, x, y, p, design),
     start: interceptOnly(loss, y, offset, p),
   };
 }
@@ -115,6 +137,12 @@ export function drawColumns(
       out[i * columns + j] = indicator ? Number(last > [0, 1, 1.8][j % 3]) : last;
     }
   }
+  if (design !== 'scales') return out;
+  const order = random.permutation(columns);
+  for (let j = 0; j < columns; j++) {
+    const size = 1000 ** (order[j] / (columns - 1));
+    for (let i = 0; i < rows; i++) out[i * columns + j] = size * (7 + out[i * columns + j]);
+  }
   return out;
 }
 
@@ -134,11 +162,12 @@ export function standardised(raw: Float64Array, rows: number, columns: number): 
   return x;
 }
 
-function drawTruth(random: Random, columns: number, sparse: boolean): Float64Array {
-  const kept = sparse ? Math.ceil(columns / 2) : columns;
+function drawTruth(random: Random, columns: number, sparse: boolean, design: DesignKind): Float64Array {
+  const kept = design === 'wide' ? 15 : sparse ? Math.ceil(columns / 2) : columns;
+  const size = design === 'extreme' ? 6 : 1;
   const order = random.permutation(columns);
   const truth = new Float64Array(columns);
-  for (let k = 0; k < kept; k++) truth[order[k]] = random.normal() / Math.sqrt(kept);
+  for (let k = 0; k < kept; k++) truth[order[k]] = (size * random.normal()) / Math.sqrt(kept);
   return truth;
 }
 
@@ -154,6 +183,12 @@ export function drawResponse(
   eta: Float64Array,
 ): { y: Float64Array; offset: Float64Array | null } {
   if (loss === 'squared') return { y: eta.map((value) => 1 + value + 0.7 * random.normal()), offset: null };
+  // Student's t with 1.5 degrees of freedom: residuals far beyond the threshold
+  if (loss === 'huber')
+    return {
+      y: eta.map((value) => 1 + value + 0.5 * random.normal() * Math.sqrt(0.75 / random.gamma(0.75))),
+      offset: null,
+    };
   if (loss === 'logistic')
     return {
       y: eta.map((value) => Number(random.uniform() < 1 / (1 + Math.exp(0.5 - 1.5 * value)))),
@@ -204,8 +239,14 @@ export function takeRows(pooled: Shard, rows: Int32Array): Shard {
   return { rowCount: rows.length, p, x, y, weights: null, offset, rowCountTotal: pooled.rowCountTotal };
 }
 
-/** λ as a share of the least λ that leaves no slope, as is usual; the intercept is free. */
-function makePenalty(kind: PenaltyKind, x: Float64Array, y: Float64Array, p: number): Penalty {
+/** λ as a share of the least λ that leaves no slope (of a squared loss), as is usual; the intercept is free. */
+function makePenalty(
+  kind: PenaltyKind,
+  x: Float64Array,
+  y: Float64Array,
+  p: number,
+  design: DesignKind,
+): Penalty {
   const penalty = noPenalty(p);
   const rows = y.length;
   const mean = y.reduce((sum, value) => sum + value, 0) / rows;
@@ -215,14 +256,19 @@ function makePenalty(kind: PenaltyKind, x: Float64Array, y: Float64Array, p: num
     for (let i = 0; i < rows; i++) sum += (x[i * p + j] * (y[i] - mean)) / rows;
     most = Math.max(most, Math.abs(sum));
   }
-  const lambda = 0.03 * most;
+  const lambda = (design === 'wide' ? 0.1 : 0.03) * most;
   const weights: Record<PenaltyKind, [number, number]> = {
     none: [0, 0],
     ridge: [0, 1e-2],
     'weak-ridge': [0, 1e-4],
     lasso: [lambda, 0],
     'elastic-net': [lambda / 2, lambda / 2],
+    box: [0, 0],
   };
+  if (kind === 'box') {
+    penalty.lower.fill(-0.1, 1);
+    penalty.upper.fill(0.1, 1);
+  }
   const [l1, l2] = weights[kind];
   penalty.l1.fill(l1, 1);
   penalty.l2.fill(l2, 1);
@@ -238,7 +284,7 @@ export function interceptOnly(
   const start = new Float64Array(p);
   const sum = y.reduce((total, value) => total + value, 0);
   const mean = sum / y.length;
-  if (loss === 'squared') start[0] = mean;
+  if (loss === 'squared' || loss === 'huber') start[0] = mean;
   if (loss === 'logistic') start[0] = Math.log(mean / (1 - mean));
   if (loss === 'poisson') {
     const exposure = (offset ?? new Float64Array(y.length)).reduce(

@@ -8,7 +8,7 @@ import type { ConsensusProblem } from '../../coordinator/consensus/problem.js';
 import { proximalRung } from '../../coordinator/consensus/proximal-rung.js';
 import { localSolver } from '../../worker/local/local-solver.js';
 import { lossNamed } from '../../worker/losses/index.js';
-import { consensusProblem, pooledOptimum } from '../bench/measure.js';
+import { consensusProblem, lossOf, pooledOptimum } from '../bench/measure.js';
 import { makeRandomProblem } from '../bench/random-problems.js';
 import { driveMethods, must } from '../support/method-driver.js';
 
@@ -24,7 +24,7 @@ function solveRandom(
   budget: number,
 ): { end: MethodEnd; gap: number; name: string } {
   const problem = makeRandomProblem(seed);
-  const loss = lossNamed(problem.loss);
+  const loss = lossOf(problem.loss);
   const pooled = localSolver(problem.pooled, loss);
   const optimum = pooledOptimum(problem, pooled);
   const [end] = driveMethods(

@@ -13,7 +13,12 @@ export function smallTable(site: string, rows: number): string {
   return lines.map((line) => `${line.join(',')}\n`).join('');
 }
 
-export const siteFileOf = (stage: Stage, site: string, table: string, policy: readonly string[] = []): string =>
+export const siteFileOf = (
+  stage: Stage,
+  site: string,
+  table: string,
+  policy: readonly string[] = [],
+): string =>
   [
     'commonfit-site: 1',
     `site: ${site}`,
@@ -40,19 +45,23 @@ terms:
 penalty:
   - {kind: elastic-net, lambda: 0.002, l1: 0.5}
 rounds: {tolerance: 1e-10, most: 1000, rung: proximal}
-barrier: {deadline: 2s, patience: 1m}
+barrier: {deadline: 1s, patience: 1m}
 `;
 
 /** A coordinator, and the small sites ready to be joined: tables, site files without curvature, tokens. */
-export async function setSmallScenario(stage: Stage, rows: number): Promise<void> {
+export async function setSmallScenario(
+  stage: Stage,
+  rows: number,
+  sites: readonly string[] = SMALL_SITES,
+): Promise<void> {
   await stage.serve();
-  for (const [index, site] of SMALL_SITES.entries()) {
+  for (const [index, site] of sites.entries()) {
     await stage.write(`${site}.csv`, smallTable(site, Math.round(rows / (index + 1))));
     await stage.write(
       `${site}.site.yaml`,
       siteFileOf(stage, site, `{csv: ./${site}.csv}`, ['curvature-most: 0']),
     );
   }
-  await Promise.all(SMALL_SITES.map((site) => stage.admit(site)));
-  await stage.write('long.fit.yaml', longFit(SMALL_SITES));
+  await Promise.all(sites.map((site) => stage.admit(site)));
+  await stage.write('long.fit.yaml', longFit(sites));
 }

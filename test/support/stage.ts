@@ -89,6 +89,13 @@ export class Stage {
     return worker;
   }
 
+  /** Holds a site back in the middle of a run, so that an ask to it is open for certain. */
+  async holdAt(following: Following, round: number, site: string): Promise<void> {
+    await following.round(round);
+    this.workerOf(site).signal('SIGSTOP');
+    if (following.has('outcome')) throw new Error(`the run ended before ${site} was held back`);
+  }
+
   async write(file: string, text: string): Promise<string> {
     await writeFile(join(this.folder, file), text);
     return file;
@@ -111,6 +118,14 @@ export class Stage {
 
 type EventOf<Kind extends LogEvent['event']> = Extract<LogEvent, { event: Kind }>;
 
+/** What the round log says of the fit itself: all but times and traffic. */
+export const roundsOf = (events: readonly LogEvent[]): unknown[] =>
+  events
+    .filter((event) => event.event === 'round')
+    .map(({ round, rung, purpose, relativeGap, primalResidual, dualResidual, objective }) => ({
+      ...{ round, rung, purpose, relativeGap, primalResidual, dualResidual, objective },
+    }));
+
 /** A run and its round log as `submit --watch --json` prints it. */
 export class Following {
   constructor(
@@ -126,7 +141,9 @@ export class Following {
     kind: Kind,
     which: (event: EventOf<Kind>) => boolean = () => true,
   ): EventOf<Kind> | undefined {
-    return this.events().find((event): event is EventOf<Kind> => event.event === kind && which(event as EventOf<Kind>));
+    return this.events().find(
+      (event): event is EventOf<Kind> => event.event === kind && which(event as EventOf<Kind>),
+    );
   }
 
   /** Waits for an event; fails where the run ends before it. */

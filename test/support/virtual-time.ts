@@ -1,10 +1,16 @@
 import type { HostTime } from '../../coordinator/service/host-parts.js';
 
+interface Timer {
+  readonly atMs: number;
+  readonly made: number;
+  readonly call: () => void;
+}
+
 /** Time that passes only when the test lets it, timers in order of their time, then of their making. */
 export class VirtualTime implements HostTime {
   private nowMs = 0;
   private made = 0;
-  private readonly timers = new Map<number, { readonly atMs: number; readonly call: () => void }>();
+  private readonly timers = new Set<Timer>();
 
   wallMs(): number {
     return Date.UTC(2026, 0, 1) + this.nowMs;
@@ -15,10 +21,10 @@ export class VirtualTime implements HostTime {
   }
 
   after(delayMs: number, call: () => void): () => void {
-    const id = this.made;
+    const timer = { atMs: this.nowMs + delayMs, made: this.made, call };
     this.made += 1;
-    this.timers.set(id, { atMs: this.nowMs + delayMs, call });
-    return () => this.timers.delete(id);
+    this.timers.add(timer);
+    return () => this.timers.delete(timer);
   }
 
   /** Lets promises settle, then runs timers one by one until `done`, or until `untilMs`. */
@@ -26,15 +32,24 @@ export class VirtualTime implements HostTime {
     for (;;) {
       await settled();
       if (done()) return;
-      const next = [...this.timers].sort(([a, first], [b, second]) => first.atMs - second.atMs || a - b)[0];
-      if (next === undefined || next[1].atMs > untilMs) {
+      const next = this.next();
+      if (next === null || next.atMs > untilMs) {
         this.nowMs = Math.max(this.nowMs, untilMs);
         return;
       }
-      this.timers.delete(next[0]);
-      this.nowMs = Math.max(this.nowMs, next[1].atMs);
-      next[1].call();
+      this.timers.delete(next);
+      this.nowMs = Math.max(this.nowMs, next.atMs);
+      next.call();
     }
+  }
+
+  private next(): Timer | null {
+    let first: Timer | null = null;
+    for (const timer of this.timers) {
+      const sooner = first === null || timer.atMs < first.atMs;
+      if (sooner || (timer.atMs === first?.atMs && timer.made < first.made)) first = timer;
+    }
+    return first;
   }
 }
 

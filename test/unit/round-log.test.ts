@@ -124,7 +124,7 @@ describe('round log', () => {
     for (const event of EVENTS.filter((event) => event.event === 'round')) {
       const lines = linesAt(width, [event]);
       expect(lines).toHaveLength(1);
-      expect(lines[0]).toMatch(/ Round \d+ (is|gathered) .+\.$/);
+      expect(lines[0]).toMatch(/ Round \d+ (\(.+\) )?(is|gathered) .+\.$/);
     }
   });
 
@@ -142,7 +142,7 @@ describe('round log', () => {
 
   test('with room it says in full what was gathered', () => {
     expect(only(round(4), 140)).toContain(
-      'Round 4 gathered proximal points: about 1e-4 off the optimum; lindell-bay answered last, after 0.18 s.',
+      'Round 4 (proximal points) is about 1e-4 off the optimum; lindell-bay answered last, after 0.18 s.',
     );
   });
 
