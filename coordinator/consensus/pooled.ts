@@ -15,8 +15,8 @@ export interface PooledEvaluation {
   readonly points: readonly PooledPoint[];
   /** Σ H_i(x_i) (row-major) and Σ H_i x_i − ∇φ_i(x_i) at the sites' own fits. */
   readonly ownFit: { readonly curvature: Float64Array; readonly linear: Float64Array } | null;
-  /** ∇φ_i at the first point, per site. */
-  readonly siteGradients: readonly Float64Array[];
+  /** The answers themselves, in roster order. */
+  readonly sites: readonly SiteEvaluation[];
 }
 
 /** Asks all sites for values and derivatives and pools their answers. */
@@ -43,13 +43,20 @@ function pool(sites: readonly SiteEvaluation[]): PooledEvaluation {
   const fits = sites.map((site) => site.ownFit);
   const curvature = unpackPresent(sumPresent(fits.map((fit) => fit?.curvature ?? null)));
   const linear = sumPresent(fits.map((fit) => fit?.linear ?? null));
-  const gradients = sites.map((site) => site.points[0].gradient);
   return {
     points,
     ownFit: curvature === null || linear === null ? null : { curvature, linear },
-    siteGradients: gradients.filter((gradient) => gradient !== null),
+    sites,
   };
 }
+
+/** Every site's gradient at the first point of the ask. */
+export const siteGradients = ({ sites }: PooledEvaluation): Float64Array[] =>
+  sites.map(({ points }) => required(points[0].gradient, 'gradient'));
+
+/** Every site's curvature at the first point of the ask, row-major p × p. */
+export const siteCurvatures = ({ sites }: PooledEvaluation): Float64Array[] =>
+  sites.map(({ points }) => unpackSymmetric(required(points[0].curvature, 'curvature')));
 
 const unpackPresent = (packed: Float64Array | null): Float64Array | null =>
   packed === null ? null : unpackSymmetric(packed);

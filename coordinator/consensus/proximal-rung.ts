@@ -1,61 +1,77 @@
 import { Acceleration } from './acceleration.js';
-import { estimatedCertificate } from './certificate.js';
+import { Anderson } from './anderson.js';
 import { curvatureRung } from './curvature-rung.js';
-import { runawayColumns } from './existence.js';
-import type { Certificate, Method, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
+import { aliasedColumns } from './existence.js';
+import type { Method, MethodAsk, MethodEnd, SiteAnswers } from './method.js';
 import { flooredDiagonal } from './metric.js';
-import { leastSubgradient, penaltyValue } from './penalty.js';
-import { evaluate, type PooledEvaluation, required } from './pooled.js';
+import { askProximal, ledByModels } from './model-led.js';
+import { penaltyValue } from './penalty.js';
+import { evaluate, required, siteCurvatures, siteGradients } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
-import { balancingFactor, normalisedResiduals, type Residuals } from './residuals.js';
-import { type Finish, secondOrderFinish } from './second-order-finish.js';
-import { zStepDiagonal } from './z-step.js';
+import {
+  certify,
+  ending,
+  lastCertificate,
+  progressOf,
+  type Standing,
+  TRIGGERS,
+} from './proximal-certificate.js';
+import { balancingFactor, normalisedResiduals } from './residuals.js';
+import { SiteMetric } from './site-metric.js';
+import { SiteModels } from './site-models.js';
 
-/** Over-relaxation α (Eckstein and Bertsekas 1992). */
-const RELAXATION = 1.6;
-/** Residual at which a certificate round is asked, and its shrinkage after each that fails. */
-const TRIGGER_ESTIMATE = 1e-3;
-const TRIGGER_ESTIMATE_SHRINK = 4;
-/** The same where curvature may leave: the second-order finish needs only its region of contraction. */
-const TRIGGER_FINISH = 1e-2;
-const TRIGGER_FINISH_SHRINK = 10;
+/** Most numbers in the coordinator's models of all sites, K p²: above it, Anderson acceleration. */
+const MODEL_NUMBERS_MOST = 2e7;
+/** One matrix for the models and one for the certificate at least. */
+const MODEL_MATRICES_LEAST = 2;
 
 /**
  * The `proximal` rung: consensus ADMM (Boyd, Parikh, Chu, Peleato, Eckstein 2011, §7) in its Douglas-Rachford form,
- * with the metric M_i = c · w_i · D, D the pooled diagonal curvature at z₀; residual balancing at the start, Anderson
- * acceleration after; and, within the budget of curvature matrices, a second-order finish.
+ * with the metric M_i = c · w_i · D, D the pooled diagonal curvature at z₀:
  *
  *     z   = argmin g(z) + ½ zᵀ(Σ M_i)z − (Σ M_i s_i)ᵀz          consensus step
  *     u_i = s_i − z                                             scaled duals
  *     x_i = argmin φ_i(x) + ½ (x − v_i)ᵀM_i(x − v_i)            at the sites, v_i = z − u_i
- *     s_i ← s_i + α (x_i − z)
+ *     s_i ← s_i + α (x_i − z)                                   relaxed, accelerated
+ *
+ * Where curvature matrices may leave, the first is spent at z₀ on models of the sites, which lead the iteration, the
+ * others on a second-order finish. Where none may, or where the models lead nowhere, residual balancing sets c, Anderson
+ * acceleration extrapolates s, and the certificate may be an estimate.
  */
 export function* proximalRung(problem: ConsensusProblem): Method {
   // the model of a squared loss is the function: one matrix, anywhere, solves it
   if (problem.quadratic && problem.curvatureMost > 0)
     return { ...(yield* curvatureRung(problem)), rung: 'proximal' as const };
-  const state = yield* setUp(problem);
-  const acceleration = new Acceleration();
-  let scale = 1;
-  let s: Float64Array[] = problem.siteWeights.map(() => problem.start);
-  let x: Float64Array[] = problem.siteWeights.map(() => problem.start);
+  const { standing, models, end } = yield* setUp(problem);
+  if (end !== null) return end;
+  const metric = new SiteMetric(problem.siteWeights, standing.startDiagonal);
+  const led = models === null ? null : yield* ledByModels(problem, standing, metric, models);
+  return led ?? (yield* balancedIteration(problem, standing, metric));
+}
+
+/** The iteration with residual balancing and Anderson acceleration, from the best point measured so far. */
+function* balancedIteration(
+  problem: ConsensusProblem,
+  standing: Standing,
+  firstMetric: SiteMetric,
+): Generator<MethodAsk, MethodEnd, SiteAnswers> {
+  const g = problem.penalty;
+  const acceleration = new Acceleration(new Anderson());
+  standing.trigger = standing.matricesLeft > 0 ? TRIGGERS.finish : TRIGGERS.estimate;
+  let metric = firstMetric;
+  let { s, x } = pointsFrom(problem, standing, metric);
   let zOld: Float64Array | null = null;
   for (let k = 0; ; k++) {
-    const z = consensusStep(problem, state.diagonal, scale, s);
+    const z = metric.consensus(g, s);
     if (zOld !== null) {
-      const scales = problem.siteWeights.map((weight) => scale * weight);
-      const duals = s.map((own) => own.map((value, j) => value - z[j]));
-      const residuals = normalisedResiduals(x, z, zOld, duals, scales, state.diagonal);
-      state.residuals = residuals;
-      if (Math.max(residuals.primal, residuals.dual) <= state.trigger) {
-        const ended = yield* certify(problem, state, z);
-        if (ended !== null) return ended;
-        if (state.restart !== null) {
-          // every site's gradient is known at the finish's best point: take z and the exact duals from there
-          const { restart } = state;
-          s = warmStart(problem, state.diagonal, scale, restart);
-          x = x.map(() => restart.z);
-          state.restart = null;
+      const u = s.map((own) => own.map((value, j) => value - z[j]));
+      const residuals = normalisedResiduals(x, z, zOld, u, metric);
+      standing.residuals = residuals;
+      if (Math.max(residuals.primal, residuals.dual) <= standing.trigger) {
+        const { end, restart } = yield* certify(problem, standing, z);
+        if (end !== null) return end;
+        if (restart !== null && standing.best?.z === restart.z) {
+          ({ s, x } = pointsFrom(problem, standing, metric));
           acceleration.clear();
           zOld = null;
           continue;
@@ -63,262 +79,66 @@ export function* proximalRung(problem: ConsensusProblem): Method {
       }
       const factor = balancingFactor(residuals, k);
       if (factor !== 1) {
-        scale *= factor;
-        s = duals.map((own) => own.map((value, j) => z[j] + value / factor));
+        metric = metric.times(factor);
+        s = u.map((own) => own.map((value, j) => z[j] + value / factor));
         acceleration.clear();
       }
     }
-    if (state.rounds >= problem.roundsMost - 1) return yield* roundLimit(problem, state, z);
-    const centers = s.map((own) => own.map((value, j) => 2 * z[j] - value));
-    x = yield* askProximal(problem, state, scale, centers, x);
-    s = relax(problem, state.diagonal, scale, s, x, z, acceleration);
+    if (standing.rounds >= problem.roundsMost - 1) return yield* lastCertificate(problem, standing, z);
+    const centers = metric.centers(s, z);
+    x = yield* askProximal(standing, metric, centers, x);
+    s = acceleration.next({ metric, s, z, centers, x });
     zOld = z;
   }
 }
 
-interface State {
-  /** D, positive, length p. */
-  readonly diagonal: Float64Array;
-  rounds: number;
-  trigger: number;
-  matricesLeft: number;
-  residuals: Residuals | null;
-  restart: Finish | null;
-  objective: number | null;
-  certificate: Certificate | null;
+/** s and the sites' starting points at the best point measured; at z₀, without duals, where that is the start. */
+function pointsFrom(
+  { siteWeights, start }: ConsensusProblem,
+  { best }: Standing,
+  metric: SiteMetric,
+): { s: readonly Float64Array[]; x: readonly Float64Array[] } {
+  const x = siteWeights.map(() => best?.z ?? start);
+  return { s: best === null ? x : metric.withDuals(best.z, best.gradients), x };
 }
 
-function* setUp(problem: ConsensusProblem): Generator<MethodAsk, State, SiteAnswers> {
-  const at = yield* evaluate([{ point: problem.start, want: 'diagonal' }], null, {
-    rung: 'proximal',
-    purpose: 'gradient and diagonal curvature at the start',
-    primalResidual: null,
-    dualResidual: null,
-    relativeGap: null,
-    gapMeasured: false,
-    objective: null,
-  });
-  return {
-    diagonal: flooredDiagonal(required(at.points[0].diagonal, 'diagonal')),
+/** Gradient and diagonal curvature at z₀; where matrices may leave, the curvature itself, and models that begin with it. */
+function* setUp(
+  problem: ConsensusProblem,
+): Generator<
+  MethodAsk,
+  { standing: Standing; models: SiteModels | null; end: MethodEnd | null },
+  SiteAnswers
+> {
+  const { p, penalty: g, siteWeights, start } = problem;
+  const modelled =
+    problem.curvatureMost >= MODEL_MATRICES_LEAST && siteWeights.length * p * p <= MODEL_NUMBERS_MOST;
+  const purpose = modelled ? 'curvature at the start' : 'gradients at the start';
+  const want = modelled ? 'curvature' : 'diagonal';
+  const at = yield* evaluate([{ point: start, want }], null, progressOf(null, purpose, null));
+  const [pooled] = at.points;
+  const objective = pooled.value + penaltyValue(g, start);
+  const startDiagonal = flooredDiagonal(required(pooled.diagonal, 'diagonal'));
+  const standing: Standing = {
+    startDiagonal,
     rounds: 1,
-    trigger: problem.curvatureMost > 0 ? TRIGGER_FINISH : TRIGGER_ESTIMATE,
-    matricesLeft: problem.curvatureMost,
+    trigger: TRIGGERS.led,
+    matricesLeft: problem.curvatureMost - (modelled ? 1 : 0),
+    curvatureSeen: modelled,
     residuals: null,
-    restart: null,
-    objective: at.points[0].value + penaltyValue(problem.penalty, problem.start),
+    objective,
+    bestObjective: objective,
+    best: null,
     certificate: null,
   };
-}
-
-function consensusStep(
-  problem: ConsensusProblem,
-  diagonal: Float64Array,
-  scale: number,
-  s: readonly Float64Array[],
-): Float64Array {
-  const metric = new Float64Array(problem.p);
-  const b = new Float64Array(problem.p);
-  s.forEach((own, i) => {
-    for (let j = 0; j < problem.p; j++) {
-      const m = scale * problem.siteWeights[i] * diagonal[j];
-      metric[j] += m;
-      b[j] += m * own[j];
-    }
-  });
-  return zStepDiagonal(problem.penalty, metric, b);
-}
-
-function* askProximal(
-  problem: ConsensusProblem,
-  state: State,
-  scale: number,
-  centers: readonly Float64Array[],
-  starts: readonly Float64Array[],
-): Generator<MethodAsk, Float64Array[], SiteAnswers> {
-  state.rounds++;
-  const answers = yield {
-    kind: 'proximal',
-    centers,
-    scales: problem.siteWeights.map((weight) => scale * weight),
-    diagonal: state.diagonal,
-    starts,
-    progress: progressOf(state, 'proximal points', null),
-  };
-  if (answers.kind !== 'proximal') throw new TypeError(`a proximal ask was answered with ${answers.kind}`);
-  return [...answers.points];
-}
-
-/** s_i ← s_i + α(x_i − z), accelerated in the norm of the metric over the stacked sites. */
-function relax(
-  problem: ConsensusProblem,
-  diagonal: Float64Array,
-  scale: number,
-  s: readonly Float64Array[],
-  x: readonly Float64Array[],
-  z: Float64Array,
-  acceleration: Acceleration,
-): Float64Array[] {
-  const p = problem.p;
-  const root = diagonal.map((value) => Math.sqrt(scale * value));
-  const rootWeights = problem.siteWeights.map(Math.sqrt);
-  const image = new Float64Array(p * s.length);
-  const residual = new Float64Array(p * s.length);
-  s.forEach((own, i) => {
-    for (let j = 0; j < p; j++) {
-      const step = RELAXATION * (x[i][j] - z[j]);
-      const m = rootWeights[i] * root[j];
-      residual[i * p + j] = m * step;
-      image[i * p + j] = m * (own[j] + step);
-    }
-  });
-  const next = acceleration.next(image, residual);
-  return s.map((_, i) =>
-    Float64Array.from({ length: p }, (_, j) => next[i * p + j] / (rootWeights[i] * root[j])),
-  );
-}
-
-/** A certificate round at z, or the second-order finish from z where curvature is left to spend. */
-function* certify(
-  problem: ConsensusProblem,
-  state: State,
-  z: Float64Array,
-): Generator<MethodAsk, MethodEnd | null, SiteAnswers> {
-  if (state.matricesLeft > 0) {
-    state.trigger /= TRIGGER_FINISH_SHRINK;
-    const ended = yield* tryFinish(problem, state, z);
-    if (state.matricesLeft === 0) state.trigger = Math.min(state.trigger, TRIGGER_ESTIMATE);
-    return ended;
+  if (!modelled) return { standing, models: null, end: null };
+  const aliased = aliasedColumns(required(pooled.curvature, 'curvature'), g);
+  if (aliased.length > 0) {
+    const refused = ending(problem, standing, 'refused', start, pooled.value, null);
+    const end = { ...refused, reason: 'rank-deficient', columnsAtFault: aliased };
+    return { standing, models: null, end };
   }
-  state.trigger /= TRIGGER_ESTIMATE_SHRINK;
-  return estimate(problem, state, z, yield* askCertificate(state, z));
-}
-
-function* askCertificate(state: State, z: Float64Array): Generator<MethodAsk, PooledEvaluation, SiteAnswers> {
-  state.rounds++;
-  return yield* evaluate([{ point: z, want: 'diagonal' }], null, progressOf(state, 'certificate', null));
-}
-
-function estimate(
-  problem: ConsensusProblem,
-  state: State,
-  z: Float64Array,
-  answers: PooledEvaluation,
-): MethodEnd | null {
-  const g = problem.penalty;
-  const [at] = answers.points;
-  const objective = at.value + penaltyValue(g, z);
-  const gradient = required(at.gradient, 'gradient');
-  const diagonal = required(at.diagonal, 'diagonal');
-  const certificate = estimatedCertificate(g, z, gradient, diagonal, objective);
-  state.objective = objective;
-  state.certificate = certificate;
-  if (certificate.relativeGap > problem.tolerance) return null;
-  const step = leastSubgradient(g, z, gradient).map(
-    (slope, j) => -slope / Math.max(diagonal[j] + g.l2[j], 1e-300),
-  );
-  const bend = step.reduce((sum, value, j) => sum + (diagonal[j] + g.l2[j]) * value * value, 0);
-  const runaway = runawayColumns(step, bend, state.diagonal);
-  const ended = ending(problem, state, 'solved', z, at.value, certificate, null);
-  return runaway.length === 0
-    ? ended
-    : { ...ended, outcome: 'unbounded', reason: 'separable', columnsAtFault: runaway };
-}
-
-function* tryFinish(
-  problem: ConsensusProblem,
-  state: State,
-  z: Float64Array,
-): Generator<MethodAsk, MethodEnd | null, SiteAnswers> {
-  const { finish, rounds } = yield* secondOrderFinish(
-    problem,
-    z,
-    state.diagonal,
-    state.matricesLeft,
-    (purpose, gap, objective) => ({
-      ...progressOf(state, purpose, gap),
-      objective: objective ?? state.objective,
-    }),
-  );
-  state.rounds += rounds;
-  state.matricesLeft -= finish.matricesSpent;
-  state.objective = finish.loss + penaltyValue(problem.penalty, finish.z);
-  state.certificate = finish.certificate;
-  if (finish.flaw !== null) {
-    const outcome = finish.flaw.reason === 'separable' ? 'unbounded' : 'refused';
-    const ended = ending(
-      problem,
-      state,
-      outcome,
-      finish.z,
-      finish.loss,
-      finish.certificate,
-      finish.curvature,
-    );
-    return { ...ended, reason: finish.flaw.reason, columnsAtFault: finish.flaw.columns };
-  }
-  if (finish.certificate !== null && finish.certificate.relativeGap <= problem.tolerance)
-    return ending(problem, state, 'solved', finish.z, finish.loss, finish.certificate, finish.curvature);
-  state.restart = finish;
-  return null;
-}
-
-/** s_i = z − M_i⁻¹∇φ_i(z): with the exact duals at z, the consensus step returns to z's neighbourhood at once. */
-function warmStart(
-  problem: ConsensusProblem,
-  diagonal: Float64Array,
-  scale: number,
-  finish: Finish,
-): Float64Array[] {
-  return problem.siteWeights.map((weight, i) =>
-    finish.z.map((value, j) => value - finish.siteGradients[i][j] / (scale * weight * diagonal[j])),
-  );
-}
-
-/** The last round is a certificate round at z, so that even an unsolved run says where it stands. */
-function* roundLimit(
-  problem: ConsensusProblem,
-  state: State,
-  z: Float64Array,
-): Generator<MethodAsk, MethodEnd, SiteAnswers> {
-  const answers = yield* askCertificate(state, z);
-  const solved = estimate(problem, state, z, answers);
-  return solved ?? ending(problem, state, 'round-limit', z, answers.points[0].value, state.certificate, null);
-}
-
-function ending(
-  problem: ConsensusProblem,
-  state: State,
-  outcome: MethodEnd['outcome'],
-  z: Float64Array,
-  loss: number,
-  certificate: Certificate | null,
-  curvature: Float64Array | null,
-): MethodEnd {
-  return {
-    outcome,
-    reason: null,
-    columnsAtFault: [],
-    z,
-    loss,
-    penalty: penaltyValue(problem.penalty, z),
-    certificate,
-    curvature,
-    rounds: state.rounds,
-    rung: 'proximal',
-  };
-}
-
-function progressOf(state: State, purpose: string, gap: number | null): Progress {
-  const { residuals, objective } = state;
-  const worst = residuals === null ? null : Math.max(residuals.primal, residuals.dual);
-  return {
-    rung: 'proximal',
-    purpose,
-    primalResidual: residuals?.primal ?? null,
-    dualResidual: residuals?.dual ?? null,
-    // near an optimum the gap is quadratic in the residual; a guess for the round log only
-    relativeGap: gap ?? (worst === null ? null : worst * worst),
-    gapMeasured: gap !== null,
-    objective,
-  };
+  const points = siteWeights.map(() => start);
+  const models = new SiteModels(g, points, siteGradients(at), siteCurvatures(at), startDiagonal);
+  return { standing, models, end: null };
 }

@@ -1,5 +1,7 @@
 import { dot, norm } from '../../numerics/vector.js';
 
+import type { SiteMetric } from './site-metric.js';
+
 /** The normalised residuals of consensus ADMM (Wohlberg 2017): both free of units, both zero at an optimum. */
 export interface Residuals {
   readonly primal: number;
@@ -8,15 +10,14 @@ export interface Residuals {
 
 /**
  * r_p = ‖x − z‖ / max(‖x‖, √K‖z‖) and r_d = ‖M(z − z_old)‖ / ‖M u‖, norms over all sites stacked;
- * M_i = scales[i] · diag(diagonal), u_i scaled duals.
+ * u_i scaled duals.
  */
 export function normalisedResiduals(
   x: readonly Float64Array[],
   z: Float64Array,
   zOld: Float64Array,
   duals: readonly Float64Array[],
-  scales: readonly number[],
-  diagonal: Float64Array,
+  { scales, diagonal }: SiteMetric,
 ): Residuals {
   let apart = 0;
   let size = 0;

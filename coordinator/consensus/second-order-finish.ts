@@ -27,8 +27,20 @@ export interface Finish {
     readonly reason: 'rank-deficient' | 'separable';
     readonly columns: readonly number[];
   } | null;
-  readonly siteGradients: readonly Float64Array[];
+  /** One model step beyond the point measured: where an estimate may hold though the certificate did not. */
+  readonly beyond: Float64Array | null;
+  /** The sites' answers at the point measured: its gradients and curvatures restart the iteration there. */
+  readonly measured: PooledEvaluation;
   readonly matricesSpent: number;
+}
+
+interface Settings {
+  /** D, the pooled diagonal curvature at z₀. */
+  readonly startDiagonal: Float64Array;
+  /** Matrices that may be spent. */
+  readonly budget: number;
+  /** No curvature has been seen before: aliased columns would show in the first. */
+  readonly first: boolean;
 }
 
 /**
@@ -38,8 +50,7 @@ export interface Finish {
 export function* secondOrderFinish(
   problem: ConsensusProblem,
   start: Float64Array,
-  startDiagonal: Float64Array,
-  budget: number,
+  { startDiagonal, budget, first }: Settings,
   progress: (purpose: string, gap: number | null, objective: number | null) => Progress,
 ): Generator<MethodAsk, { readonly finish: Finish; readonly rounds: number }, SiteAnswers> {
   const g = problem.penalty;
@@ -80,7 +91,7 @@ export function* secondOrderFinish(
     );
     const certificate = step === null ? null : measuredCertificate(g, z, gradient, step.decrement, objective);
     const certified = certificate !== null && certificate.relativeGap <= problem.tolerance;
-    const aliased = spent === 1 ? aliasedColumns(curvature, g) : [];
+    const aliased = first && spent === 1 ? aliasedColumns(curvature, g) : [];
     const runaway =
       certified && step !== null ? runawayColumns(step.direction, step.bend, startDiagonal) : [];
     const flaw =
@@ -95,7 +106,8 @@ export function* secondOrderFinish(
       certificate,
       curvature: packSymmetric(curvature, problem.p),
       flaw,
-      siteGradients: answers.siteGradients,
+      beyond: step?.z ?? null,
+      measured: answers,
       matricesSpent: spent,
     };
     bestObjective = objective;

@@ -25,11 +25,7 @@ export interface MemberState {
   readonly reply: Reply | null;
   /** When the reply came. */
   readonly repliedAtMs: number | null;
-  /** Times the current ask went out with parts left to the member's memory, on its present connection. */
-  readonly sentSlim: number;
-  /** Times the member has since said that it does not have them. */
-  readonly memoryMissing: number;
-  /** The member is to be asked in full. */
+  /** The member has said that it lacks what an ask left out: on its present connection it is asked in full. */
   readonly full: boolean;
 }
 
@@ -87,7 +83,7 @@ export interface PanelStep {
   readonly effects: readonly PanelEffect[];
 }
 
-const UNASKED = { reply: null, repliedAtMs: null, sentSlim: 0, memoryMissing: 0, full: false } as const;
+const UNASKED = { reply: null, repliedAtMs: null, full: false } as const;
 
 /** A panel of `memberCount` members, none connected, nothing asked. */
 export function openPanel(memberCount: number, settings: PanelSettings): PanelState {
@@ -129,7 +125,7 @@ function openAsk(state: PanelState, ask: number, atMs: number): PanelStep {
 
 /** A new connection remembers nothing, so what was sent on the one before counts no more. */
 function connect(state: PanelState, member: number): PanelStep {
-  const fresh = withMember(state, member, { connected: true, sentSlim: 0, memoryMissing: 0, full: false });
+  const fresh = withMember(state, member, { connected: true, full: false });
   const waits = fresh.current !== null && fresh.members[member]?.reply === null;
   return waits ? sendTo(fresh, [member]) : still(fresh);
 }
@@ -145,19 +141,16 @@ function takeReply(state: PanelState, event: Extract<PanelEvent, { kind: 'reply'
   if (before === undefined || ask > state.latestAsk) return drop('unasked');
   if (ask !== current?.ask) return drop('older');
   if (before.reply !== null) return drop('duplicate');
-  if (isRefusal(reply) && reply.code === 'memory-missing' && before.memoryMissing < before.sentSlim) {
-    return askInFull(state, member, before);
-  }
+  if (isRefusal(reply) && reply.code === 'memory-missing') return askInFull(state, member, before);
   return passIfComplete(withMember(state, member, { reply, repliedAtMs: atMs }), current, atMs);
 }
 
 /**
- * The full ask goes out once; a later refusal of an earlier slim copy is only counted. A member that says
- * `memory-missing` more often than it was asked slim has been asked in full, and its refusal stands.
+ * Lacking a vector is no answer: the full ask goes out, once. A further such refusal is of a slim copy that went before
+ * (or came twice); a member that refuses the full ask too is asked again at the deadline, and is missing in the end.
  */
 function askInFull(state: PanelState, member: number, before: MemberState): PanelStep {
-  const counted = withMember(state, member, { memoryMissing: before.memoryMissing + 1, full: true });
-  return before.full ? still(counted) : sendTo(counted, [member]);
+  return before.full ? still(state) : sendTo(withMember(state, member, { full: true }), [member]);
 }
 
 function passIfComplete(state: PanelState, current: CurrentAsk, atMs: number): PanelStep {
@@ -192,15 +185,11 @@ function passTime(state: PanelState, atMs: number): PanelStep {
 }
 
 function sendTo(state: PanelState, members: readonly number[]): PanelStep {
-  const next = state.members.slice();
-  const effects: PanelEffect[] = [];
-  for (const member of members) {
-    const before = next[member];
-    if (before?.connected !== true) continue;
-    if (!before.full) next[member] = { ...before, sentSlim: before.sentSlim + 1 };
-    effects.push({ kind: 'send', member, full: before.full });
-  }
-  return { state: { ...state, members: next }, effects };
+  const effects = members.flatMap((member): PanelEffect[] => {
+    const { connected, full } = state.members[member];
+    return connected ? [{ kind: 'send', member, full }] : [];
+  });
+  return { state, effects };
 }
 
 const unanswered = (state: PanelState): number[] =>

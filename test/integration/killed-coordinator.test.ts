@@ -1,11 +1,14 @@
+import { stat, truncate } from 'node:fs/promises';
+import { join } from 'node:path';
 import { afterAll, beforeAll, describe, expect, test } from 'vitest';
 import { setSmallScenario } from '../support/small-scenario.js';
-import { type Following, roundsOf, Stage } from '../support/stage.js';
+import { type Following, PATIENT, roundsOf, Stage } from '../support/stage.js';
 
 const SITES = ['harrowmere', 'castlefen'];
 
 let stage: Stage;
 let undisturbed = '';
+let runUndisturbed = '';
 let roundsUndisturbed: unknown[] = [];
 
 beforeAll(async () => {
@@ -16,8 +19,9 @@ beforeAll(async () => {
   const { code, result } = await following.outcome();
   expect(code).toBe(0);
   undisturbed = result;
+  runUndisturbed = await following.run();
   roundsUndisturbed = roundsOf(following.events());
-}, 60_000);
+}, PATIENT.timeout);
 afterAll(() => stage?.close());
 
 async function killAndServe(): Promise<void> {
@@ -34,7 +38,7 @@ async function expectUndisturbed(following: Following): Promise<void> {
   expect(roundsOf(following.events())).toEqual(roundsUndisturbed);
 }
 
-describe('a run under way goes on to the same bytes where the coordinator is killed', () => {
+describe('a run under way goes on to the same bytes where the coordinator is killed', PATIENT, () => {
   test('while it waits for a site', async () => {
     await stage.workerOf('castlefen').kill();
     const following = stage.submit('long.fit.yaml');
@@ -66,32 +70,49 @@ describe('a run under way goes on to the same bytes where the coordinator is kil
 
   test('again and again, wherever it stands', async () => {
     const following = stage.submit('long.fit.yaml');
-    for (const round of [1, 9]) {
-      await following.round(round);
-      await killAndServe();
-    }
+    await following.round(1);
+    await killAndServe();
+    stage.workerOf('castlefen').signal('SIGSTOP');
+    await killAndServe();
+    stage.workerOf('castlefen').signal('SIGCONT');
     await expectUndisturbed(following);
-    expect(following.events().filter(({ event }) => event === 'resumed')).toHaveLength(2);
+    expect(following.has('resumed')).toBeDefined();
   });
 
-  test('together with every worker', async () => {
+  test('together with every worker, and the end of the journal is lost', async () => {
     const following = stage.submit('long.fit.yaml');
     await stage.holdAt(following, 10, 'harrowmere');
     await Promise.all([stage.killCoordinator(), ...SITES.map((site) => stage.workerOf(site).kill())]);
+    const journal = join(stage.folder, 'state', 'runs', await following.run(), 'journal');
+    await truncate(journal, (await stat(journal)).size - 100);
     await stage.serve();
     for (const site of SITES) stage.join(site);
     await expectUndisturbed(following);
+    expect(stage.coordinator?.stderr).toContain('The last record of the journal was cut off');
   });
 });
 
-test('a run that has ended is the same after the coordinator was killed; a second coordinator is kept off', async () => {
-  const following = stage.submit('long.fit.yaml');
-  await expectUndisturbed(following);
+test('runs that have ended stay as they ended; a second coordinator is kept off', PATIENT, async () => {
+  const cancelled = stage.submit('long.fit.yaml');
+  await stage.holdAt(cancelled, 5, 'castlefen');
+  const run = await cancelled.run();
+  expect((await stage.analyst('cancel', run)).code).toBe(0);
+  const { code, event } = await cancelled.outcome();
+  expect(code).toBe(17);
+  expect(event).toMatchObject({ outcome: 'cancelled' });
   await killAndServe();
-  const run = await following.run();
-  const again = await stage.analyst('result', run, '--out', 'again');
+  stage.workerOf('castlefen').signal('SIGCONT');
+
+  const listed = await stage.analyst('runs', '--json');
+  const runs = listed.stdout
+    .trim()
+    .split('\n')
+    .map((line) => JSON.parse(line) as { run: string });
+  expect(runs.find((summary) => summary.run === run)).toMatchObject({ state: 'ended', outcome: 'cancelled' });
+  const again = await stage.analyst('result', runUndisturbed, '--out', 'again');
   expect(again.code).toBe(0);
   expect(await stage.read('again/result.json')).toBe(undisturbed);
+
   const second = await stage.commonfit('serve', '--listen', '127.0.0.1:0', '--state', 'state');
   expect(second.code).toBe(7);
   expect(second.stderr.replace(/\s+/g, ' ')).toContain(

@@ -2,7 +2,7 @@ import { afterAll, beforeAll, describe, expect, test } from 'vitest';
 import type { ResultDocument } from '../../coordinator/run/result.js';
 import { until } from '../support/processes.js';
 import { SMALL_SITES, setSmallScenario } from '../support/small-scenario.js';
-import { type Following, roundsOf, Stage } from '../support/stage.js';
+import { type Following, PATIENT, roundsOf, Stage } from '../support/stage.js';
 
 let stage: Stage;
 let undisturbed = '';
@@ -17,7 +17,7 @@ beforeAll(async () => {
   expect(code).toBe(0);
   undisturbed = result;
   roundsUndisturbed = roundsOf(following.events());
-}, 60_000);
+}, PATIENT.timeout);
 afterAll(() => stage?.close());
 
 /** Numbers that the custodian's ledger of a site has for a run. */
@@ -58,15 +58,8 @@ async function killAndStart(following: Following, sites: readonly string[]): Pro
   await connected();
 }
 
-describe('a run is the same to the bit', () => {
-  test('where a worker is killed with an ask open and started again', async () => {
-    const following = stage.submit('long.fit.yaml');
-    await stage.holdAt(following, 4, 'castlefen');
-    await killAndStart(following, ['castlefen']);
-    await expectUndisturbed(following);
-  });
-
-  test('where one worker after the other is killed', async () => {
+describe('a run is the same to the bit', PATIENT, () => {
+  test('where one worker after the other is killed with an ask open and started again', async () => {
     const following = stage.submit('long.fit.yaml');
     for (const [index, site] of SMALL_SITES.entries()) {
       await stage.holdAt(following, 3 + 8 * index, site);
@@ -97,5 +90,16 @@ describe('a run is the same to the bit', () => {
     expect(late).toMatchObject({ sites: ['castlefen'] });
     stage.workerOf('castlefen').signal('SIGCONT');
     await expectUndisturbed(following);
+  });
+
+  test('where a second worker takes the place of one that answers, and the first one leaves', async () => {
+    const following = stage.submit('long.fit.yaml');
+    await following.round(2);
+    const first = stage.workerOf('castlefen');
+    stage.join('castlefen');
+    await expectUndisturbed(following);
+    const { code, stderr } = await first.end();
+    expect(code).toBe(6);
+    expect(stderr).toContain('Another worker joined as this site');
   });
 });

@@ -66,6 +66,16 @@ test('two workers on one ledger: the second line of the chain is refused, not fo
   expect((await opened()).ledger.departed('r1').asks).toBe(1);
 });
 
+test('a worker that takes over catches up with what the one before wrote, and goes on in one chain', async () => {
+  const [before, after] = [(await opened()).ledger, (await opened()).ledger];
+  await before.append(departure(1));
+  expect(await after.append(departure(2))).toMatchObject({ failure: { code: 'ledger-broken' } });
+  expect((await after.catchUp()).ok).toBe(true);
+  expect(after.look('r1', 'd'.repeat(64), 1, 'c'.repeat(64))).toEqual({ ok: true, value: 'repeat' });
+  expect((await after.append(departure(2))).ok).toBe(true);
+  expect((await opened()).ledger.departed('r1')).toMatchObject({ asks: 2, numbers: 6 });
+});
+
 test('a ledger that cannot be written says so', async () => {
   file = join(folder, 'nowhere', 'oakhythe.ledger');
   const { ledger } = await opened();

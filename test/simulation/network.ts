@@ -1,3 +1,4 @@
+import type { Random } from '../../numerics/random.js';
 import { CLOSE_CODES } from '../../protocol/close-codes.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import { LIMITS } from '../../protocol/limits.js';
@@ -5,7 +6,6 @@ import type { Link } from '../../protocol/link/link.js';
 import { memoryLinks } from '../../protocol/link/memory.js';
 import type { ToCoordinator } from '../../protocol/messages/to-coordinator.js';
 import type { ToWorker } from '../../protocol/messages/to-worker.js';
-import type { Random } from '../../numerics/random.js';
 import type { CoordinatorLink } from '../../worker/service/connection.js';
 import type { VirtualTime } from '../support/virtual-time.js';
 import type { SimProcess } from './sim-process.js';
@@ -38,7 +38,12 @@ export class Network {
   ) {}
 
   road(member: string): Road {
-    const road = this.roads.get(member) ?? { slowUntilMs: 0, cutUntilMs: 0, repeatUntilMs: 0, chokedUntilMs: 0 };
+    const road = this.roads.get(member) ?? {
+      slowUntilMs: 0,
+      cutUntilMs: 0,
+      repeatUntilMs: 0,
+      chokedUntilMs: 0,
+    };
     this.roads.set(member, road);
     return road;
   }
@@ -51,6 +56,11 @@ export class Network {
   /** The longest that one message takes on a road that is not slowed. */
   get travelMostMs(): number {
     return { even: 10, near: 5, far: 200, wild: 4000 }[this.distance];
+  }
+
+  /** About how long one ask of everyone takes, there and back. */
+  get askMs(): number {
+    return { even: 25, near: 35, far: 350, wild: 3000 }[this.distance];
   }
 
   /** A worker's try to reach the coordinator, which is null while it is down. */

@@ -2,7 +2,7 @@ import { type ChildProcess, spawn } from 'node:child_process';
 import { setTimeout as delay } from 'node:timers/promises';
 
 /** How long anything a test waits for may take on a machine that is busy with other tests. Milliseconds. */
-const PATIENCE_MS = 20_000;
+const PATIENCE_MS = 30_000;
 const LOOK_EVERY_MS = 10;
 
 /** Waits until `look` finds something; after the patience it fails with what `seen` tells. */

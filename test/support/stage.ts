@@ -7,6 +7,9 @@ import { programs } from './programs.js';
 
 const STATE = 'state';
 
+/** For tests that start several processes, on a machine that is busy with other tests. */
+export const PATIENT = { timeout: 90_000 } as const;
+
 /**
  * A temporary folder and the processes that work in it: one coordinator, the workers, the analyst's commands. What
  * users do in several terminals. `close` ends every process that was started here.
@@ -18,13 +21,21 @@ export class Stage {
   /** `http://127.0.0.1:PORT`; the port stays over restarts. */
   address = '';
 
-  private constructor(readonly folder: string) {}
+  private constructor(readonly folder: string) {
+    // a test runner that is stopped leaves no process behind
+    process.once('exit', this.#killAll);
+  }
 
   static async open(name: string): Promise<Stage> {
     return new Stage(await mkdtemp(join(tmpdir(), `commonfit-${name}-`)));
   }
 
+  readonly #killAll = (): void => {
+    for (const program of this.#started) program.signal('SIGKILL');
+  };
+
   async close(): Promise<void> {
+    process.removeListener('exit', this.#killAll);
     await Promise.all(this.#started.map((program) => program.kill()));
     await rm(this.folder, { recursive: true, force: true });
   }

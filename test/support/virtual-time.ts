@@ -6,7 +6,7 @@ interface Timer {
   readonly call: () => void;
 }
 
-/** Time that passes only when the test lets it, timers in order of their time, then of their making. */
+/** Time that passes only when the test lets it, in whole milliseconds; timers in order of their time, then of their making. */
 export class VirtualTime implements HostTime {
   private nowMs = 0;
   private made = 0;
@@ -21,7 +21,7 @@ export class VirtualTime implements HostTime {
   }
 
   after(delayMs: number, call: () => void): () => void {
-    const timer = { atMs: this.nowMs + delayMs, made: this.made, call };
+    const timer = { atMs: this.nowMs + Math.ceil(delayMs), made: this.made, call };
     this.made += 1;
     this.timers.add(timer);
     return () => this.timers.delete(timer);

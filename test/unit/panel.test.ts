@@ -127,25 +127,23 @@ describe('panel', () => {
     expect(state.members[0].reply).toEqual(answer(0));
   });
 
-  test('memory-missing brings the ask again in full, once; after that the refusal stands', () => {
-    const missing = refusal('memory-missing');
-    const first = play(openPanel(1, settings), [...connectAll(1), ask(1), reply(0, 1, missing)]);
-    expect(first.effects.at(-1)).toEqual({ kind: 'send', member: 0, full: true });
-    const again = play(first.state, [reply(0, 1, missing)]);
-    expect(again.effects).toMatchObject([{ kind: 'pass', replies: [missing] }]);
-  });
-
-  test('of two slim copies refused for lack of memory, the second refusal is no refusal of the full ask', () => {
+  test('memory-missing brings the ask again in full, once, and is never an answer, however often it comes', () => {
     const missing = refusal('memory-missing');
     const { effects } = play(openPanel(1, settings), [
       ...connectAll(1),
       ask(1),
+      reply(0, 1, missing, 50),
+      reply(0, 1, missing, 51),
       time(100),
       reply(0, 1, missing, 110),
-      reply(0, 1, missing, 111),
       reply(0, 1, answer(4), 112),
     ]);
-    expect(effects.map(({ kind }) => kind)).toEqual(['send', 'late', 'send', 'send', 'pass']);
+    expect(effects.map(({ kind }) => kind)).toEqual(['send', 'send', 'late', 'send', 'pass']);
+    expect(effects.flatMap((effect) => (effect.kind === 'send' ? [effect.full] : []))).toEqual([
+      false,
+      true,
+      true,
+    ]);
     expect(effects.at(-1)).toMatchObject({ replies: [answer(4)] });
   });
 

@@ -144,7 +144,7 @@ export interface LedgerFile {
   /** Empty where there is no file yet. */
   read(): Promise<Checked<string>>;
   cutTo(bytes: number): Promise<Checked<null>>;
-  /** Appends one line and its line break, or leaves the file as it was. */
+  /** Appends one line and its line break, or leaves the file as it was; `ledger-broken` where it has other content. */
   append(line: string): Promise<Checked<null>>;
 }
 
@@ -207,7 +207,20 @@ export class Ledger {
     return changed(`Ask ${ask} of run ${run} was answered before with other content.`);
   }
 
-  /** Writes one line. Call before the answer is sent, one at a time. */
+  /** Reads the file again: after `append` found that another process of this site has written to it. */
+  async catchUp(): Promise<Checked<null>> {
+    const text = await this.#file.read();
+    if (!text.ok) return text;
+    const read = readLedger(text.value, this.#file.name);
+    if (!read.ok) return read;
+    if (read.value.torn) return broken('The ledger is being written by another process.');
+    this.#runs.clear();
+    this.#last = LEDGER_START;
+    for (const entry of read.value.records) this.#count(entry);
+    return succeed(null);
+  }
+
+  /** Writes one line, or fails with `ledger-broken` where the file is not as this process left it. One at a time. */
   async append(departure: Departure): Promise<Checked<null>> {
     const { line, record: entry } = recordLine(departure, this.#now(), this.#last);
     const written = await this.#file.append(line);

@@ -4,7 +4,7 @@ import type { Answer, Ask } from '../../protocol/messages/round.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import { contentDigest, type FilledWork } from '../custody/content.js';
-import type { Ledger } from '../custody/ledger.js';
+import type { Departure, Ledger } from '../custody/ledger.js';
 import {
   allowanceOf,
   checkNumbers,
@@ -34,7 +34,7 @@ export interface AnswerMeans {
   /** Approved digests, read at every ask: an approval taken back holds from then on. */
   readonly approved: () => Promise<Checked<ReadonlySet<string>>>;
   readonly readTable: (request: TableRequest) => Promise<Checked<Table>>;
-  readonly ledger: Pick<Ledger, 'departed' | 'look' | 'append'>;
+  readonly ledger: Pick<Ledger, 'departed' | 'look' | 'append' | 'catchUp'>;
   readonly nowMs: () => number;
   readonly onEvent: (event: WorkerEvent) => void;
   /** Lets sockets and signals in between two problems of one ask. */
@@ -101,7 +101,10 @@ export class AnswerMaker {
     if (!made.ok) return made;
     const numbers = made.value.work.reduce((sum, item) => sum + numbersOfAnswer(item), 0);
     if (!repeated) {
-      const recorded = await this.#record(ask, digest, content, numbers);
+      const kinds = [...new Set(ask.work.flatMap(kindsOfWork))];
+      const curvature = curvatureOfWorks(ask.work);
+      const departure = { run: ask.run, digest, ask: ask.ask, kinds, numbers, curvature, content };
+      const recorded = await this.#record(ask, fitCount(spec), departure);
       if (!recorded.ok) return recorded;
     }
     this.#keep(live, made.value, content);
@@ -148,14 +151,25 @@ export class AnswerMaker {
     return refused === null ? succeed(raw) : { ok: false, failure: refused };
   }
 
-  async #record(ask: Ask, digest: string, content: string, numbers: number): Promise<Checked<null>> {
+  /**
+   * Writes the departure down. Where a worker that this one takes the place of has written meanwhile, its lines count
+   * as ours do: the departure is looked at once more, and may be recorded already.
+   */
+  async #record(ask: Ask, fits: number, departure: Departure): Promise<Checked<null>> {
     const { ledger, policy } = this.#means;
-    const { run } = ask;
+    const { run, digest, content, numbers } = departure;
     const refused = checkNumbers(policy, ledger.departed(run), numbers);
     if (refused !== null) return { ok: false, failure: refused };
-    const kinds = [...new Set(ask.work.flatMap(kindsOfWork))];
-    const curvature = curvatureOfWorks(ask.work);
-    return ledger.append({ run, digest, ask: ask.ask, kinds, numbers, curvature, content });
+    const appended = await ledger.append(departure);
+    if (appended.ok || appended.failure.code !== 'ledger-broken') return appended;
+    const caughtUp = await ledger.catchUp();
+    if (!caughtUp.ok) return caughtUp;
+    const look = ledger.look(run, digest, ask.ask, content);
+    if (!look.ok) return look;
+    if (look.value === 'repeat') return succeed(null);
+    const departed = ledger.departed(run);
+    const over = checkWorks(policy, departed, ask.work, fits) ?? checkNumbers(policy, departed, numbers);
+    return over === null ? ledger.append(departure) : { ok: false, failure: over };
   }
 
   #keep(live: LiveRun, answer: Answer, content: string): void {

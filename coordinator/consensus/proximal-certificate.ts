@@ -1,0 +1,190 @@
+import { estimatedCertificate } from './certificate.js';
+import { runawayColumns } from './existence.js';
+import type { Certificate, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
+import { leastSubgradient, penaltyValue } from './penalty.js';
+import { evaluate, type PooledEvaluation, required, siteGradients } from './pooled.js';
+import type { ConsensusProblem } from './problem.js';
+import type { Residuals } from './residuals.js';
+import { type Finish, secondOrderFinish } from './second-order-finish.js';
+
+/**
+ * Residuals at which a certificate is asked: for an estimate; for a second-order finish, which needs only its region of
+ * contraction; for the same where models lead (primal residual alone). And their shrinkage after one that fails.
+ */
+export const TRIGGERS = { estimate: 1e-3, finish: 1e-2, led: 0.1 } as const;
+const SHRINKAGE = { estimate: 4, finish: 10 } as const;
+
+/** Relative gap at which a model step is worth an estimate of its own. */
+const NEAR = 1e-3;
+
+/** Where the proximal iteration stands beside its vectors. */
+export interface Standing {
+  /** D, positive: the pooled diagonal curvature at z₀. */
+  readonly startDiagonal: Float64Array;
+  rounds: number;
+  trigger: number;
+  matricesLeft: number;
+  /** Some curvature has been measured already, and found to have no aliased columns. */
+  curvatureSeen: boolean;
+  residuals: Residuals | null;
+  objective: number;
+  /** The least objective measured, and the point with every site's gradient there; null while that is z₀. */
+  bestObjective: number;
+  best: { readonly z: Float64Array; readonly gradients: readonly Float64Array[] } | null;
+  certificate: Certificate | null;
+}
+
+/**
+ * A certificate round at z, or the second-order finish from z while curvature is left to spend. Returns the end, or,
+ * after a finish that did not certify, the best point it measured.
+ */
+export function* certify(
+  problem: ConsensusProblem,
+  standing: Standing,
+  z: Float64Array,
+): Generator<MethodAsk, { readonly end: MethodEnd | null; readonly restart: Finish | null }, SiteAnswers> {
+  if (standing.matricesLeft === 0) {
+    standing.trigger /= SHRINKAGE.estimate;
+    return { end: estimate(problem, standing, z, yield* askEstimate(standing, z)), restart: null };
+  }
+  standing.trigger /= SHRINKAGE.finish;
+  const finish = yield* finishFrom(problem, standing, z);
+  if (standing.matricesLeft === 0) standing.trigger = TRIGGERS.estimate;
+  const end = endOfFinish(problem, standing, finish) ?? (yield* beyondFinish(problem, standing, finish));
+  return { end, restart: end === null ? finish : null };
+}
+
+/** The last round is a certificate round at z, so that even an unsolved run says where it stands. */
+export function* lastCertificate(
+  problem: ConsensusProblem,
+  standing: Standing,
+  z: Float64Array,
+): Generator<MethodAsk, MethodEnd, SiteAnswers> {
+  const answers = yield* askEstimate(standing, z);
+  const solved = estimate(problem, standing, z, answers);
+  return solved ?? ending(problem, standing, 'round-limit', z, answers.points[0].value, null);
+}
+
+function* askEstimate(
+  standing: Standing,
+  z: Float64Array,
+): Generator<MethodAsk, PooledEvaluation, SiteAnswers> {
+  standing.rounds++;
+  return yield* evaluate(
+    [{ point: z, want: 'diagonal' }],
+    null,
+    progressOf(standing, 'gradients at z', null),
+  );
+}
+
+function estimate(
+  problem: ConsensusProblem,
+  standing: Standing,
+  z: Float64Array,
+  answers: PooledEvaluation,
+): MethodEnd | null {
+  const g = problem.penalty;
+  const [at] = answers.points;
+  const gradient = required(at.gradient, 'gradient');
+  const diagonal = required(at.diagonal, 'diagonal');
+  standing.objective = at.value + penaltyValue(g, z);
+  standing.certificate = estimatedCertificate(g, z, gradient, diagonal, standing.objective);
+  if (standing.certificate.relativeGap > problem.tolerance) return null;
+  const bends = diagonal.map((value, j) => Math.max(value + g.l2[j], 1e-300));
+  const step = leastSubgradient(g, z, gradient).map((slope, j) => -slope / bends[j]);
+  const bend = step.reduce((sum, value, j) => sum + bends[j] * value * value, 0);
+  const runaway = runawayColumns(step, bend, standing.startDiagonal);
+  const solved = ending(problem, standing, 'solved', z, at.value, null);
+  return runaway.length === 0
+    ? solved
+    : { ...solved, outcome: 'unbounded', reason: 'separable', columnsAtFault: runaway };
+}
+
+function* finishFrom(
+  problem: ConsensusProblem,
+  standing: Standing,
+  z: Float64Array,
+): Generator<MethodAsk, Finish, SiteAnswers> {
+  const { finish, rounds } = yield* secondOrderFinish(
+    problem,
+    z,
+    { startDiagonal: standing.startDiagonal, budget: standing.matricesLeft, first: !standing.curvatureSeen },
+    (purpose, gap, objective) => ({
+      ...progressOf(standing, purpose, gap),
+      objective: objective ?? standing.objective,
+    }),
+  );
+  standing.rounds += rounds;
+  standing.curvatureSeen = true;
+  standing.matricesLeft -= finish.matricesSpent;
+  standing.objective = finish.loss + penaltyValue(problem.penalty, finish.z);
+  standing.certificate = finish.certificate;
+  if (standing.objective <= standing.bestObjective) {
+    standing.bestObjective = standing.objective;
+    standing.best = { z: finish.z, gradients: siteGradients(finish.measured) };
+  }
+  return finish;
+}
+
+/**
+ * The last matrix did not certify its own point, but the step it gives is far nearer to the optimum: gradients there
+ * may make an estimate that holds.
+ */
+function* beyondFinish(
+  problem: ConsensusProblem,
+  standing: Standing,
+  finish: Finish,
+): Generator<MethodAsk, MethodEnd | null, SiteAnswers> {
+  const { beyond, certificate } = finish;
+  const near = certificate !== null && certificate.relativeGap <= NEAR;
+  if (standing.matricesLeft > 0 || beyond === null || !near) return null;
+  return estimate(problem, standing, beyond, yield* askEstimate(standing, beyond));
+}
+
+function endOfFinish(problem: ConsensusProblem, standing: Standing, finish: Finish): MethodEnd | null {
+  const { flaw, certificate, z, loss, curvature } = finish;
+  if (flaw !== null) {
+    const outcome = flaw.reason === 'separable' ? 'unbounded' : 'refused';
+    const ended = ending(problem, standing, outcome, z, loss, curvature);
+    return { ...ended, reason: flaw.reason, columnsAtFault: flaw.columns };
+  }
+  const certified = certificate !== null && certificate.relativeGap <= problem.tolerance;
+  return certified ? ending(problem, standing, 'solved', z, loss, curvature) : null;
+}
+
+export function ending(
+  problem: ConsensusProblem,
+  standing: Standing,
+  outcome: MethodEnd['outcome'],
+  z: Float64Array,
+  loss: number,
+  curvature: Float64Array | null,
+): MethodEnd {
+  return {
+    outcome,
+    reason: null,
+    columnsAtFault: [],
+    z,
+    loss,
+    penalty: penaltyValue(problem.penalty, z),
+    certificate: standing.certificate,
+    curvature,
+    rounds: standing.rounds,
+    rung: 'proximal',
+  };
+}
+
+/** For the round log. Near an optimum the gap is quadratic in the residual: a guess where nothing better is known. */
+export function progressOf(standing: Standing | null, purpose: string, gap: number | null): Progress {
+  const residuals = standing?.residuals ?? null;
+  const worst = residuals === null ? null : Math.max(residuals.primal, residuals.dual);
+  return {
+    rung: 'proximal',
+    purpose,
+    primalResidual: residuals?.primal ?? null,
+    dualResidual: residuals?.dual ?? null,
+    relativeGap: gap ?? (worst === null ? null : worst * worst),
+    gapMeasured: gap !== null,
+    objective: standing?.objective ?? null,
+  };
+}
