@@ -16,7 +16,7 @@ export const OUTCOME_HEAD: Readonly<Record<RunOutcome, string>> = {
   broken: 'Not solved: something broke.',
 };
 
-/** What the certificate says of the point the run stands by. */
+/** What the certificate says of the fit the run stands by. */
 export function certificateText(
   kind: Certificate['kind'] | string | null,
   relativeGap: number | null,
@@ -26,12 +26,12 @@ export function certificateText(
   const gap = roughly(relativeGap);
   switch (kind) {
     case 'measured':
-      return `Certificate, from gradients and curvature measured at this very point: its objective is at most ${gap} above the optimum (relative).`;
+      return `Certificate, from the gradients and curvature of every site: the objective is at most ${gap} above the optimum (relative).`;
     case 'sketched':
-      return `Certificate, from gradients measured and curvature sketched at this very point: its objective is at most about ${gap} above the optimum (relative).`;
+      return `Certificate, from the gradients of every site and sketches of their curvature: the objective is at most about ${gap} above the optimum (relative).`;
     case 'duality-gap':
-      return `Certificate, from the duality gap at this very point: its objective is at most ${gap} above the optimum (relative).`;
+      return `Certificate, from the duality gap: the objective is at most ${gap} above the optimum (relative).`;
     default:
-      return `Certificate, an estimate only, from gradients and diagonal curvature at this very point: its objective is about ${gap} above the optimum (relative).`;
+      return `Certificate, an estimate only, from the gradients and diagonal curvature of every site: the objective is about ${gap} above the optimum (relative).`;
   }
 }

@@ -195,7 +195,7 @@ async function listen(app: FastifyInstance, { host, port }: ServiceSettings): Pr
     const { code, message } = error as NodeJS.ErrnoException;
     if (code === 'EADDRINUSE') {
       return fail('port-in-use', `Port ${port} of ${host} is in use.`, {
-        remedy: 'Give another with --port.',
+        remedy: 'Give another with --listen.',
       });
     }
     return fail('field-value', `The coordinator cannot listen at ${host}, port ${port}: ${message}.`);

@@ -100,7 +100,9 @@ describe('the consensus step', () => {
         });
         const expected = zStepFull(g, full, b, new Float64Array(p));
         const z = zStepDiagonal(g, diagonal, b);
-        z.forEach((value, j) => expect(value).toBeCloseTo(expected?.[j] ?? Number.NaN, 12));
+        z.forEach((value, j) => {
+          expect(value).toBeCloseTo(expected?.[j] ?? Number.NaN, 12);
+        });
       }),
     );
   });
@@ -141,7 +143,9 @@ describe('metrics', () => {
   test('a positive definite curvature is kept to nine digits', () => {
     const { m, p } = randomProblem(3, false);
     const metric = definiteMetric(m, flooredDiagonal(diagonalOf(m, p)));
-    metric.forEach((value, k) => expect(value).toBeCloseTo(m[k], 7));
+    metric.forEach((value, k) => {
+      expect(value).toBeCloseTo(m[k], 7);
+    });
   });
 
   test('a column without curvature still has a positive diagonal', () => {

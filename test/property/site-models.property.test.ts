@@ -56,7 +56,9 @@ describe('models of the sites', () => {
         const there = s.map((_, i) => gradient(i, z));
         expect(maxAbs(leastSubgradient(g, z, sumOf(there)))).toBeLessThan(1e-9);
         metric.withDuals(z, there).forEach((own, i) => {
-          own.forEach((value, j) => expect(value).toBeCloseTo(s[i][j], 8));
+          own.forEach((value, j) => {
+            expect(value).toBeCloseTo(s[i][j], 8);
+          });
         });
       }),
       { numRuns: 50 },
