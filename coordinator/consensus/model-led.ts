@@ -1,4 +1,5 @@
 import { Acceleration } from './acceleration.js';
+import { relativeTo } from './certificate.js';
 import type { MethodAsk, MethodEnd, SiteAnswers } from './method.js';
 import { siteCurvatures } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
@@ -12,6 +13,9 @@ const HOLD = 3;
 /** Proposals thrown away, and rounds since the start or the last finish, after which the models are given up. */
 const REJECTIONS_MOST = 3;
 const ROUNDS_MOST = 12;
+
+/** Relative decrease of the step before the last matrix, in tolerances: its end is some thousand times nearer. */
+const LAST_STEP = 1e3;
 
 /**
  * Consensus ADMM whose s comes from models of the sites: z is the minimiser of the summed models plus g, u_i the dual
@@ -35,8 +39,8 @@ export function* ledByModels(
     if (zOld !== null) {
       const u = s.map((own) => own.map((value, j) => value - z[j]));
       standing.residuals = normalisedResiduals(x, z, zOld, u, metric);
-      // under foretold duals the move of z says nothing: what counts is whether the sites agree with it
-      if (standing.residuals.primal <= standing.trigger) {
+      standing.gapGuess = models.promised / relativeTo(standing.bestObjective);
+      if (isTime(problem, standing)) {
         const { end, restart } = yield* certify(problem, standing, z);
         if (end !== null) return end;
         if (restart !== null) {
@@ -59,6 +63,18 @@ export function* ledByModels(
     zOld = z;
   }
   return null;
+}
+
+/**
+ * Whether z deserves a certificate. Under foretold duals the move of z says nothing: what counts is whether the sites
+ * agree with it. The last matrix waits for a step so small that its end may be expected to certify.
+ */
+function isTime(
+  problem: ConsensusProblem,
+  { residuals, trigger, matricesLeft, gapGuess }: Standing,
+): boolean {
+  if (residuals === null || residuals.primal > trigger) return false;
+  return matricesLeft !== 1 || (gapGuess ?? 0) <= LAST_STEP * problem.tolerance;
 }
 
 export function* askProximal(

@@ -27,6 +27,8 @@ export interface Standing {
   /** Some curvature has been measured already, and found to have no aliased columns. */
   curvatureSeen: boolean;
   residuals: Residuals | null;
+  /** What the models promise for the step to z, relative; null where none lead. */
+  gapGuess: number | null;
   objective: number;
   /** The least objective measured, and the point with every site's gradient there; null while that is z₀. */
   bestObjective: number;
@@ -174,7 +176,7 @@ export function ending(
   };
 }
 
-/** For the round log. Near an optimum the gap is quadratic in the residual: a guess where nothing better is known. */
+/** For the round log. Near an optimum the gap is quadratic in the residual: a guess where no model gives a better one. */
 export function progressOf(standing: Standing | null, purpose: string, gap: number | null): Progress {
   const residuals = standing?.residuals ?? null;
   const worst = residuals === null ? null : Math.max(residuals.primal, residuals.dual);
@@ -183,7 +185,7 @@ export function progressOf(standing: Standing | null, purpose: string, gap: numb
     purpose,
     primalResidual: residuals?.primal ?? null,
     dualResidual: residuals?.dual ?? null,
-    relativeGap: gap ?? (worst === null ? null : worst * worst),
+    relativeGap: gap ?? standing?.gapGuess ?? (worst === null ? null : worst * worst),
     gapMeasured: gap !== null,
     objective: standing?.objective ?? null,
   };

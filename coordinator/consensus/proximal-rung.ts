@@ -57,6 +57,7 @@ function* balancedIteration(
 ): Generator<MethodAsk, MethodEnd, SiteAnswers> {
   const g = problem.penalty;
   const acceleration = new Acceleration(new Anderson());
+  standing.gapGuess = null;
   standing.trigger = standing.matricesLeft > 0 ? TRIGGERS.finish : TRIGGERS.estimate;
   let metric = firstMetric;
   let { s, x } = pointsFrom(problem, standing, metric);
@@ -126,6 +127,7 @@ function* setUp(
     matricesLeft: problem.curvatureMost - (modelled ? 1 : 0),
     curvatureSeen: modelled,
     residuals: null,
+    gapGuess: null,
     objective,
     bestObjective: objective,
     best: null,

@@ -13,6 +13,9 @@ const SHORTER = [0.3, 0.1] as const;
 /** A step must bring the decrement down to this share, or the rest of the budget is kept for later. */
 const CONTRACTION_MOST = 0.3;
 
+/** Share of √tolerance that a relative gap must be under for the next Newton point to be expected to certify. */
+const NEWTON_SHARE = 0.3;
+
 /**
  * Where a second-order finish ended: the best point it has measured with every site's gradient there, or, once
  * certified, one model step beyond it.
@@ -113,9 +116,12 @@ export function* secondOrderFinish(
     bestObjective = objective;
     gap = step === null ? null : step.decrement / relativeTo(objective);
     const contracting = step !== null && step.decrement <= CONTRACTION_MOST * decrement;
+    // Newton steps square the relative gap: the last matrix waits until its point may be expected to certify
+    const early = spent === budget - 1 && gap !== null && gap > NEWTON_SHARE * Math.sqrt(problem.tolerance);
     if (flaw === null && certified && step !== null)
       return { finish: { ...best, z: step.z, loss: at.value + step.lossChange }, rounds };
-    if (flaw !== null || step === null || spent >= budget || !contracting) return { finish: best, rounds };
+    if (flaw !== null || step === null || spent >= budget || early || !contracting)
+      return { finish: best, rounds };
     decrement = step.decrement;
     z = step.z;
     direction = step.direction;

@@ -31,6 +31,8 @@ const RADIUS_SHRINKAGE = 4;
 export class SiteModels implements Extrapolation {
   readonly growthMost = GROWTH_MOST;
   private radius = RADIUS_FIRST;
+  /** The decrease of the objective that the models promised for their last step; none was promised before the first. */
+  promised = Number.POSITIVE_INFINITY;
 
   constructor(
     private readonly g: Penalty,
@@ -92,6 +94,7 @@ export class SiteModels implements Extrapolation {
     const floor = diagonalOf(pooled, p).map((value, j) => Math.max(value, DIAGONAL_SHARE * this.diagonal[j]));
     const full = modelStep(this.g, definiteMetric(pooled, floor), sumOf(this.gradientsAt(z)), z);
     if (full === null) return null;
+    this.promised = full.decrement;
     const moved = Math.sqrt(full.bend / (sum(this.diagonal) / p));
     const share = Math.min(1, this.radius / moved);
     const next = share < 1 ? plusScaled(z, share, full.direction) : full.z;

@@ -238,7 +238,7 @@ describe('round log', () => {
   test('the outcome says what was solved, the certificate in words and where the result is', () => {
     const text = linesAt(80).join('\n').replaceAll('\n', ' ');
     expect(text).toContain('Solved. “Pipe breaks” took 12 rounds over 123,456 rows at 2 sites.');
-    expect(text).toContain('its objective is at most 3.1e-10 above the optimum (relative)');
+    expect(text).toContain('the objective is at most 3.1e-10 above the optimum (relative)');
     expect(text).toContain('/srv/commonfit-state/runs/4f6c2a91');
     expect(text).toContain('commonfit result 4f6c2a91');
     expect(text).toContain('Not solved: a site was missing');

@@ -158,7 +158,7 @@ describe('the result as text', () => {
   });
 
   test('it says the certificate in words, dropped columns, rows and numbers of each site', () => {
-    expect(text(result())).toContain('its objective is at most 2.4e-10 above the optimum (relative)');
+    expect(text(result())).toContain('the objective is at most 2.4e-10 above the optimum (relative)');
     expect(text(result())).toContain('no spread at any site: material=lead');
     expect(text(result())).toContain(
       'harrowmere: 3,000 rows (12 left out); sent 12,345 numbers, received 678',
