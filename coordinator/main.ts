@@ -7,6 +7,7 @@ import { checkCommand } from './commands/check.js';
 import { demoCommand } from './commands/demo.js';
 import { EXIT } from './commands/exit-codes.js';
 import { rehearseCommand } from './commands/rehearse.js';
+import { replayCommand } from './commands/replay.js';
 import { resultCommand } from './commands/result.js';
 import { runsCommand } from './commands/runs.js';
 import { serveCommand } from './commands/serve.js';
@@ -33,6 +34,7 @@ const commands = [
   runsCommand(),
   resultCommand(),
   cancelCommand(),
+  replayCommand(),
   demoCommand(),
 ];
 for (const command of [program, ...commands]) command.exitOverride();

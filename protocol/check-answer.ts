@@ -79,14 +79,20 @@ function lengthOrMemory(
 }
 
 function checkEvaluateWork(work: EvaluateWork, p: number, field: string): Failure | null {
-  if (work.ownFit !== null && work.ownFit.at >= work.points.length) {
-    return wrong(
-      'dimension-wrong',
-      `${field}.ownFit.at`,
-      `Point ${work.ownFit.at} of ${work.points.length} (counted from 0).`,
-    );
-  }
-  return firstOf(work.points, ({ point }, index) => lengthIs(point, p, `${field}.points[${index}].point`));
+  const { points, ownFit, sketch } = work;
+  return (
+    pointIs(ownFit?.at ?? 0, points.length, `${field}.ownFit.at`) ??
+    pointIs(sketch?.at ?? 0, points.length, `${field}.sketch.at`) ??
+    (sketch === null
+      ? null
+      : lengthIs(sketch.directions, sketch.columns * p, `${field}.sketch.directions`)) ??
+    firstOf(points, ({ point }, index) => lengthIs(point, p, `${field}.points[${index}].point`))
+  );
+}
+
+function pointIs(at: number, points: number, field: string): Failure | null {
+  if (at < points) return null;
+  return wrong('dimension-wrong', field, `Point ${at} of ${points} (counted from 0).`);
 }
 
 /**
@@ -157,7 +163,9 @@ function checkEvaluate(work: EvaluateWork, answer: EvaluateAnswer, p: number, fi
   return (
     firstOf(work.points, ({ want }, index) =>
       checkPoint(want, answer.points[index], p, `${field}.points[${index}]`),
-    ) ?? checkOwnFit(work, answer, p, `${field}.ownFit`)
+    ) ??
+    checkOwnFit(work, answer, p, `${field}.ownFit`) ??
+    wantedOrNull(answer.sketch, work.sketch !== null, (work.sketch?.columns ?? 0) * p, `${field}.sketch`)
   );
 }
 

@@ -96,6 +96,7 @@ export const FAILURE_CODES = [
   'message-unknown',
   'version-unsupported',
   'token-refused',
+  'certificate-untrusted',
   'site-unknown',
   'site-taken',
   'dimension-wrong',

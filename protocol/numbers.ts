@@ -18,7 +18,11 @@ export function numbersOfWork(work: Work): number {
         (problem) => 1 + problem.center.length + lengthOf(problem.diagonal) + lengthOf(problem.start),
       );
     case 'evaluate':
-      return sum(work.points, ({ point }) => point.length) + (work.ownFit === null ? 0 : 1);
+      return (
+        sum(work.points, ({ point }) => point.length) +
+        (work.ownFit === null ? 0 : 1) +
+        (work.sketch?.directions.length ?? 0)
+      );
   }
 }
 
@@ -35,8 +39,9 @@ export function numbersOfAnswer(answer: WorkAnswer): number {
         ({ gradient, diagonal, curvature }) =>
           1 + lengthOf(gradient) + lengthOf(diagonal) + lengthOf(curvature),
       );
-      const { ownFit } = answer;
-      return atPoints + (ownFit === null ? 0 : ownFit.curvature.length + ownFit.linear.length);
+      const { ownFit, sketch } = answer;
+      const fit = ownFit === null ? 0 : ownFit.curvature.length + ownFit.linear.length;
+      return atPoints + fit + lengthOf(sketch);
     }
     case 'factor':
       return answer.factor.length;
@@ -55,3 +60,7 @@ export function curvatureMatricesOf(work: Work): number {
       return 1;
   }
 }
+
+/** Columns of curvature that the answer to this work holds as products: p of them tell as much as one matrix. */
+export const sketchColumnsOf = (work: Work): number =>
+  work.work === 'evaluate' ? (work.sketch?.columns ?? 0) : 0;

@@ -2,7 +2,9 @@ import { readFile } from 'node:fs/promises';
 import { type Command, Option } from 'commander';
 import { z } from 'zod';
 import { FAILURE_CODES, type Failure } from '../../protocol/failure.js';
+import { untrustedReason } from '../../protocol/link/certificate.js';
 import { EXIT } from './exit-codes.js';
+import { requestTo } from './request.js';
 import { type Attempt, done, ending } from './terminal.js';
 
 /** Whom an analyst's command talks to, and as whom. */
@@ -10,11 +12,15 @@ export interface Analyst {
   /** `http://127.0.0.1:7443`, no slash at the end. */
   readonly url: string;
   readonly token: string;
+  /** PEM text of the authority to trust instead of the system's; null: the system's. */
+  readonly ca: string | null;
 }
 
 export interface AnalystOptions {
   readonly url: string;
   readonly tokenFile?: string;
+  readonly caFile?: string;
+  readonly plainText?: true;
 }
 
 export const URL_DEFAULT = 'http://127.0.0.1:7443';
@@ -22,7 +28,7 @@ const TOKEN_FILE_DEFAULT = './commonfit-state/analyst.token';
 /** A reply that is not a stream must come within this time. Milliseconds. */
 const REPLY_DEADLINE_MS = 30_000;
 
-/** Adds `--url` and `--token-file` to a command. */
+/** Adds the options that say where the coordinator is and who asks. */
 export function withAnalyst(command: Command): Command {
   return command
     .addOption(
@@ -33,8 +39,17 @@ export function withAnalyst(command: Command): Command {
         '--token-file <file>',
         `file with the analyst's token (else COMMONFIT_TOKEN_FILE, else ${TOKEN_FILE_DEFAULT})`,
       ),
-    );
+    )
+    .addOption(
+      new Option(
+        '--ca-file <file>',
+        "certificate, PEM, of the authority to trust with https instead of the system's",
+      ).env('COMMONFIT_CA_FILE'),
+    )
+    .option('--plain-text', 'allow an http address that is not this machine');
 }
+
+const LOOPBACK = /^(localhost|127(\.\d{1,3}){3}|\[::1\])$/;
 
 /** Reads the token that the options, the environment or the default name. */
 export async function analystOf(options: AnalystOptions): Promise<Attempt<Analyst>> {
@@ -48,11 +63,22 @@ export async function analystOf(options: AnalystOptions): Promise<Attempt<Analys
       },
     ]);
   }
+  if (url.protocol === 'http:' && !LOOPBACK.test(url.hostname) && options.plainText !== true) {
+    return ending(EXIT.usage, [
+      {
+        code: 'field-value',
+        message: `--url is \`${options.url}\`, which would send the token unencrypted.`,
+        remedy: 'Give an https address, or say --plain-text if the network between is trusted.',
+      },
+    ]);
+  }
+  const ca = options.caFile === undefined ? done(null) : await authorityIn(options.caFile);
+  if (!ca.ok) return ca;
   const file = options.tokenFile ?? process.env.COMMONFIT_TOKEN_FILE ?? TOKEN_FILE_DEFAULT;
   try {
     const token = (await readFile(file, 'utf8')).trim();
     if (token !== '' && !/\s/.test(token)) {
-      return done({ url: options.url.replace(/\/+$/, ''), token });
+      return done({ url: options.url.replace(/\/+$/, ''), token, ca: ca.value });
     }
     return ending(EXIT.unauthorised, [
       { code: 'unauthorised', message: 'The file holds no token.', where: { file } },
@@ -65,6 +91,21 @@ export async function analystOf(options: AnalystOptions): Promise<Attempt<Analys
         remedy: 'Name the file with --token-file; `commonfit serve` writes one into its state folder.',
         where: { file },
       },
+    ]);
+  }
+}
+
+async function authorityIn(file: string): Promise<Attempt<string>> {
+  try {
+    const text = await readFile(file, 'utf8');
+    if (text.includes('-----BEGIN CERTIFICATE-----')) return done(text);
+    return ending(EXIT.usage, [
+      { code: 'field-value', message: 'The file holds no certificate in PEM.', where: { file } },
+    ]);
+  } catch (error) {
+    const code = (error as NodeJS.ErrnoException).code ?? 'unknown';
+    return ending(EXIT.usage, [
+      { code: 'file-unreadable', message: `The certificate cannot be read (${code}).`, where: { file } },
     ]);
   }
 }
@@ -101,7 +142,7 @@ export async function send(
   more: { body?: unknown; headers?: Record<string, string>; signal?: AbortSignal } = {},
 ): Promise<Attempt<Response>> {
   try {
-    const response = await fetch(`${analyst.url}${path}`, {
+    const response = await requestTo(analyst.ca)(`${analyst.url}${path}`, {
       method,
       headers: {
         authorization: `Bearer ${analyst.token}`,
@@ -156,6 +197,16 @@ export function unreachable(analyst: Analyst, error: unknown): Attempt<never> {
   const cause = error instanceof Error && error.cause instanceof Error ? error.cause : error;
   const text =
     cause instanceof Error ? ((cause as NodeJS.ErrnoException).code ?? cause.message) : String(cause);
+  const untrusted = untrustedReason(cause);
+  if (untrusted !== null) {
+    return ending(EXIT.untrusted, [
+      {
+        code: 'certificate-untrusted',
+        message: `The certificate of ${analyst.url} is not trusted: ${untrusted}.`,
+        remedy: 'Name the certificate of its authority with --ca-file, or renew the certificate.',
+      },
+    ]);
+  }
   return ending(EXIT.unreachable, [
     {
       code: 'link-lost',

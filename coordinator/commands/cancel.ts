@@ -14,7 +14,7 @@ export function cancelCommand(): Command {
   ).action(acting(cancel));
   return withTail(command, {
     examples: ['commonfit cancel 20310504-101500-4f6c2a91'],
-    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.notFound],
+    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.untrusted, EXIT.notFound],
   });
 }
 

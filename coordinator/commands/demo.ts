@@ -81,6 +81,11 @@ async function play(scene: Scene, folder: string, signal: AbortSignal): Promise<
     signal,
   });
   if (!run.ok) return run;
-  const written = await writeResultFolder(join(folder, 'result'), run.value.result, run.value.events);
+  const written = await writeResultFolder(
+    join(folder, 'result'),
+    run.value.result,
+    run.value.events,
+    run.value.outcome.folder,
+  );
   return written.ok ? done(run.value.result.document) : written;
 }

@@ -11,6 +11,10 @@ export const EXIT = {
   notFound: 6,
   /** Something on this machine is in the way: a port that is taken, a folder that cannot be written. */
   machine: 7,
+  /** A replay does not come out as recorded. */
+  differs: 8,
+  /** Nobody vouches for the coordinator's certificate, or not any more. */
+  untrusted: 9,
   /** 128 + SIGINT, as shells expect. */
   interrupted: 130,
 } as const;
@@ -38,11 +42,13 @@ const MEANINGS: readonly [number, string][] = [
   [EXIT.ok, 'done; of a run: solved'],
   [EXIT.defect, 'a defect of this program'],
   [EXIT.usage, 'the command line is wrong'],
-  [EXIT.document, 'the document is wrong'],
+  [EXIT.document, 'the document, folder or journal is wrong or cannot be read'],
   [EXIT.unreachable, 'the coordinator cannot be reached'],
   [EXIT.unauthorised, 'the token is missing or not accepted'],
-  [EXIT.notFound, 'no such run, or it has no result yet'],
+  [EXIT.notFound, 'no such run or token, or the run has no result yet'],
   [EXIT.machine, 'a port, file or folder of this machine is in the way'],
+  [EXIT.differs, 'the replay does not come out as stored'],
+  [EXIT.untrusted, 'the certificate of the coordinator is not trusted'],
   [EXIT.interrupted, 'interrupted'],
 ];
 

@@ -22,7 +22,7 @@ export async function startLocalCoordinator(state: string): Promise<Attempt<Loca
   const { address, close } = started.value;
   const tokens = openTokens(state);
   return done({
-    analyst: { url: address, token: (await readFile(join(state, 'analyst.token'), 'utf8')).trim() },
+    analyst: { url: address, token: (await readFile(join(state, 'analyst.token'), 'utf8')).trim(), ca: null },
     siteUrl: `${address.replace(/^http/, 'ws')}/v1/site`,
     admitSite: async (site) => {
       const issued = await tokens.issue({ kind: 'site', name: site });

@@ -76,9 +76,9 @@ async function rehearseIn(
     signal,
   });
   if (!run.ok) return sayEnding(run.ending, json);
-  const written = await writeResultFolder(out, run.value.result, run.value.events);
+  const written = await writeResultFolder(out, run.value.result, run.value.events, run.value.outcome.folder);
   if (!written.ok) return sayEnding(written.ending, json);
-  if (!json) say([`The result is in ${options.out}: result.json, coefficients.csv and rounds.csv.`]);
+  if (!json) say([`The result is in ${options.out}: result.json, coefficients.csv, rounds.csv, journal.`]);
   return exitCodeOf(run.value.outcome.outcome);
 }
 
@@ -154,6 +154,7 @@ async function writeSite(url: string, folder: string, site: string, table: strin
     policy: {
       columns: 'any',
       'rows-least': 1,
+      leave: ['counts', 'moments', 'proximal', 'gradients', 'curvature', 'sketches'],
       'curvature-most': 'any',
       'numbers-most': 'any',
       'rounds-most': 'any',

@@ -1,9 +1,10 @@
-import { mkdir, writeFile } from 'node:fs/promises';
+import { copyFile, mkdir, writeFile } from 'node:fs/promises';
 import { join } from 'node:path';
 import { z } from 'zod';
 import { coefficientsCsv, roundsCsv } from '../report/tables.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { ResultDocument } from '../run/result.js';
+import { RUN_FILES } from '../service/run-entry.js';
 import { type Analyst, readReply, send, unreachable } from './analyst.js';
 import { EXIT } from './exit-codes.js';
 import { type Attempt, done, ending } from './terminal.js';
@@ -50,17 +51,25 @@ export async function fetchResult(analyst: Analyst, run: string): Promise<Attemp
   return read.ok ? done({ document: read.value as unknown as ResultDocument, text }) : read;
 }
 
-/** Writes `result.json`, `coefficients.csv` and `rounds.csv` into a folder, made if it is not there. */
+/**
+ * Writes `result.json`, `coefficients.csv` and `rounds.csv` into a folder, made if it is not there; and, with the run's
+ * own folder at hand, its journal and specification, so that `commonfit replay` can compute the run again.
+ */
 export async function writeResultFolder(
   folder: string,
   result: Fetched,
   events: readonly LogEvent[],
+  runFolder: string | null = null,
 ): Promise<Attempt<null>> {
   try {
     await mkdir(folder, { recursive: true });
     await writeFile(join(folder, 'result.json'), result.text);
     await writeFile(join(folder, 'coefficients.csv'), coefficientsCsv(result.document));
     await writeFile(join(folder, 'rounds.csv'), roundsCsv(events));
+    if (runFolder !== null) {
+      for (const name of [RUN_FILES.journal, RUN_FILES.specification])
+        await copyFile(join(runFolder, name), join(folder, name));
+    }
     return done(null);
   } catch (error) {
     return ending(EXIT.machine, [

@@ -21,7 +21,7 @@ export function resultCommand(): Command {
       'commonfit result 20310504-101500-4f6c2a91',
       'commonfit result 20310504-101500-4f6c2a91 --out ./breaks-result',
     ],
-    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.notFound, EXIT.machine],
+    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.untrusted, EXIT.notFound, EXIT.machine],
     outcomes: true,
   });
 }

@@ -21,7 +21,7 @@ export function runsCommand(): Command {
   ).action(acting(runs));
   return withTail(command, {
     examples: ['commonfit runs'],
-    exits: [EXIT.unreachable, EXIT.unauthorised],
+    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.untrusted],
   });
 }
 

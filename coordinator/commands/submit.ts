@@ -19,7 +19,14 @@ export function submitCommand(): Command {
   ).action(acting(submit));
   return withTail(command, {
     examples: ['commonfit submit breaks.fit.yaml --watch'],
-    exits: [EXIT.document, EXIT.unreachable, EXIT.unauthorised, EXIT.notFound, EXIT.interrupted],
+    exits: [
+      EXIT.document,
+      EXIT.unreachable,
+      EXIT.unauthorised,
+      EXIT.untrusted,
+      EXIT.notFound,
+      EXIT.interrupted,
+    ],
     outcomes: true,
     more: 'Codes from 10 on, and 130, come only with --watch.',
   });

@@ -14,7 +14,7 @@ export function watchCommand(): Command {
   ).action(acting(watch));
   return withTail(command, {
     examples: ['commonfit watch 20310504-101500-4f6c2a91'],
-    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.notFound, EXIT.interrupted],
+    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.untrusted, EXIT.notFound, EXIT.interrupted],
     outcomes: true,
     more: 'Ctrl-C ends the watching; the run goes on.',
   });

@@ -1,14 +1,18 @@
 import { cholesky, choleskySolve } from '../../numerics/cholesky.js';
+import { minimiseByActiveSet } from './active-set.js';
 import { type Penalty, proximalOperator } from './penalty.js';
 
-const SWEEPS_MOST = 100_000;
+const SWEEPS_MOST = 2000;
+/** Full sweeps without a settled active set after which one is searched for directly. */
+const SEARCH_AFTER = 32;
 /** Relative size of a step, in the metric's norm, under which the descent has converged. */
 const STEP_LEAST = 1e-14;
 
 /**
  * argmin g(z) + ½ zᵀMz − bᵀz by cyclic coordinate descent (Friedman, Hastie, Tibshirani 2010), sweeping the active
  * set between full sweeps, and finished by an exact solve on the active set once its signs have settled.
- * M row-major p × p with a positive diagonal. Null where the sweeps do not settle.
+ * Where it creeps, the active set is searched for directly. M row-major p × p with a positive diagonal. Null where
+ * neither settles.
  */
 export function minimiseQuadratic(
   g: Penalty,
@@ -20,15 +24,20 @@ export function minimiseQuadratic(
   const z = start.map((value, j) => Math.min(Math.max(value, g.lower[j]), g.upper[j]));
   const product = times(metric, z, p);
   const everything = Int32Array.from({ length: p }, (_, j) => j);
+  const size = Math.sqrt(b.reduce((sum, value, j) => sum + (value * value) / metric[j * p + j], 0));
   let polishAt = 2;
   for (let sweep = 1; sweep <= SWEEPS_MOST; sweep++) {
-    const tolerance = STEP_LEAST * (1 + Math.sqrt(Math.abs(energy(z, product))));
+    const tolerance = STEP_LEAST * (size + Math.sqrt(Math.abs(energy(z, product))));
     const moved = sweepOver(g, metric, b, z, product, everything);
     if (moved < tolerance) return polish(g, metric, b, z) ?? z;
     if (sweep >= polishAt) {
       const polished = polish(g, metric, b, z);
       if (polished !== null) return polished;
       polishAt *= 2;
+    }
+    if (sweep === SEARCH_AFTER) {
+      const found = minimiseByActiveSet(g, metric, b, z);
+      if (found !== null) return found;
     }
     const active = everything.filter((j) => z[j] !== 0 || g.l1[j] === 0);
     for (let inner = 0; inner < 10; inner++) {

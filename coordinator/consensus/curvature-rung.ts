@@ -1,6 +1,7 @@
 import { packSymmetric } from '../../numerics/packed.js';
+import { dot, maxOf } from '../../numerics/vector.js';
 import { type ModelStep, measuredCertificate, modelStep, relativeTo } from './certificate.js';
-import { aliasedColumns, runawayColumns } from './existence.js';
+import { type Flaw, flawFromTheStart, separatedColumns, verdict } from './existence.js';
 import type { Certificate, Method, MethodEnd, Progress } from './method.js';
 import { definiteMetric, diagonalOf, flooredDiagonal, plusDiagonal, RIDGE } from './metric.js';
 import { penaltyValue } from './penalty.js';
@@ -17,6 +18,7 @@ const DAMPING_FACTOR = 10;
 const DAMPING_LEAST = 1e-3;
 /** Rounds in a row without progress after which the run is called stalled. */
 const FAILURES_MOST = 30;
+const UNFACTORED = 'the curvature could not be factored';
 
 /**
  * The `curvature` rung: consensus steps (Z) on quadratic answers (quadratically approximated ADMM: Mokhtari, Shi, Ling,
@@ -33,41 +35,43 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
   let rounds = 1;
   let here = iterateFrom(problem, problem.start, first, 0);
   const { diagonal: startDiagonal } = here;
-  const aliased = aliasedColumns(here.curvature, g);
-  if (aliased.length > 0) return ending(problem, here, null, rounds, 'refused', 'rank-deficient', aliased);
+  const aliased = flawFromTheStart(problem, here.curvature);
+  if (aliased !== null) return flawed(problem, here, null, rounds, aliased);
   let extra = ownFitPoint(problem, first, here);
   let damping = 0;
   let failures = 0;
   for (;;) {
     const metric = definiteMetric(here.curvature, here.diagonal);
-    const step = modelStep(g, metric, here.gradient, here.z);
-    if (step === null)
-      return ending(problem, here, null, rounds, 'stalled', 'the curvature could not be factored');
-    if (problem.quadratic) return quadraticEnd(problem, here, step, metric, rounds);
-    const certificate = measuredCertificate(g, here.z, here.gradient, step.decrement, here.objective);
-    if (certificate.relativeGap <= problem.tolerance) {
-      const runaway = runawayColumns(step.direction, step.bend, startDiagonal);
-      return runaway.length > 0
-        ? ending(problem, here, certificate, rounds, 'unbounded', 'separable', runaway)
-        : ending(problem, after(here, step), certificate, rounds, 'solved', null);
+    const whole = modelStep(g, metric, here.gradient, here.z);
+    if (problem.quadratic) return quadraticEnd(problem, here, whole, metric, rounds);
+    const certificate =
+      whole === null
+        ? null
+        : measuredCertificate(problem, here.z, here.gradient, whole.decrement, here.objective);
+    if (whole !== null && certificate !== null) {
+      const found = verdict(problem, certificate, here.curvature, whole, startDiagonal);
+      if (found === 'stands') return ending(problem, after(here, whole), certificate, rounds, 'solved', null);
+      if (found !== 'goes on') return flawed(problem, here, certificate, rounds, found);
     }
+    const separated = separatedColumns(problem, here.z, here.loss);
+    if (separated.length > 0)
+      return flawed(problem, here, certificate, rounds, { reason: 'separable', columns: separated });
     if (rounds >= problem.roundsMost) return ending(problem, here, certificate, rounds, 'round-limit', null);
     if (failures >= FAILURES_MOST)
       return ending(problem, here, certificate, rounds, 'stalled', `no progress in ${FAILURES_MOST} rounds`);
 
-    const damped =
-      damping > 0
-        ? (modelStep(g, plusDiagonal(metric, damping, here.diagonal), here.gradient, here.z) ?? step)
-        : step;
-    const trials = [...trialPoints(g, here.z, damped.direction), ...extra];
-    const line = linePoints(g, here.z, damped.direction);
+    const step =
+      whole !== null && damping === 0 ? whole : (dampedStep(problem, here, metric, damping) ?? whole);
+    if (step === null) return ending(problem, here, null, rounds, 'stalled', UNFACTORED);
+    const trials = [...trialPoints(g, here.z, step.direction), ...extra];
+    const line = linePoints(g, here.z, step.direction);
     const answers = yield* evaluate(
       [
         ...trials.map((point) => ({ point, want: 'curvature' as const })),
         ...line.map((point) => ({ point, want: 'value' as const })),
       ],
       null,
-      progressOf(here, step, 'trial points with curvature'),
+      progressOf(here, whole, 'trial points with curvature'),
     );
     rounds++;
     extra = [];
@@ -88,12 +92,28 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
     const again = yield* evaluate(
       [{ point: line[onLine], want: 'curvature' }],
       null,
-      progressOf(here, step, 'a shorter step'),
+      progressOf(here, whole, 'a shorter step'),
     );
     rounds++;
     failures = 0;
     here = iterateFrom(problem, line[onLine], again, 0);
   }
+}
+
+/**
+ * The step under a damped metric, damped at least a little. Where curvature may vanish, a column has lost it rather
+ * than never had it: columns of unit spread are damped alike.
+ */
+function dampedStep(
+  problem: ConsensusProblem,
+  here: Iterate,
+  metric: Float64Array,
+  damping: number,
+): ModelStep | null {
+  const most = maxOf(here.diagonal);
+  const diagonal = problem.curvatureMayVanish ? here.diagonal.map(() => most) : here.diagonal;
+  const damped = plusDiagonal(metric, Math.max(damping, DAMPING_LEAST), diagonal);
+  return modelStep(problem.penalty, damped, here.gradient, here.z);
 }
 
 /** One model step beyond `here`. */
@@ -134,10 +154,11 @@ function ownFitPoint(problem: ConsensusProblem, first: PooledEvaluation, here: I
 function quadraticEnd(
   problem: ConsensusProblem,
   here: Iterate,
-  step: ModelStep,
+  step: ModelStep | null,
   metric: Float64Array,
   rounds: number,
 ): MethodEnd {
+  if (step === null) return ending(problem, here, null, rounds, 'stalled', UNFACTORED);
   const gradientAt = (z: Float64Array): Float64Array =>
     here.gradient.map((value, i) => {
       let sum = value;
@@ -146,7 +167,8 @@ function quadraticEnd(
     });
   const gradient = gradientAt(step.z);
   const next = modelStep(problem.penalty, metric, gradient, step.z);
-  const loss = here.loss + step.lossChange;
+  // the mean of the two slopes, exact for a quadratic: the metric may hold a ridge that the loss does not
+  const loss = here.loss + 0.5 * (dot(here.gradient, step.direction) + dot(gradient, step.direction));
   const there: Iterate = {
     ...here,
     z: step.z,
@@ -154,9 +176,8 @@ function quadraticEnd(
     objective: loss + penaltyValue(problem.penalty, step.z),
     gradient,
   };
-  if (next === null)
-    return ending(problem, there, null, rounds, 'stalled', 'the curvature could not be factored');
-  const certificate = measuredCertificate(problem.penalty, step.z, gradient, next.decrement, there.objective);
+  if (next === null) return ending(problem, there, null, rounds, 'stalled', UNFACTORED);
+  const certificate = measuredCertificate(problem, step.z, gradient, next.decrement, there.objective);
   const solved = certificate.relativeGap <= problem.tolerance;
   return ending(
     problem,
@@ -167,6 +188,23 @@ function quadraticEnd(
     solved ? null : 'rounding keeps the gap above the tolerance',
   );
 }
+
+const flawed = (
+  problem: ConsensusProblem,
+  here: Iterate,
+  certificate: Certificate | null,
+  rounds: number,
+  { reason, columns }: Flaw,
+): MethodEnd =>
+  ending(
+    problem,
+    here,
+    certificate,
+    rounds,
+    reason === 'separable' ? 'unbounded' : 'refused',
+    reason,
+    columns,
+  );
 
 function ending(
   problem: ConsensusProblem,

@@ -21,12 +21,20 @@ export type MethodAsk = (
       readonly kind: 'evaluate';
       readonly points: readonly { readonly point: Float64Array; readonly want: Want }[];
       readonly ownFit: { readonly at: number; readonly hold: number } | null;
+      readonly sketch: SketchAsk | null;
     }
   | { readonly kind: 'factor' }
 ) & {
   /** What the answers so far have shown; becomes the round log's line for the round before. */
   readonly progress: Progress;
 };
+
+/** Asks for H_i(point) S at the point numbered `at`: directions of p numbers, one after the other. */
+export interface SketchAsk {
+  readonly at: number;
+  readonly directions: Float64Array;
+  readonly columns: number;
+}
 
 export type SiteAnswers =
   | { readonly kind: 'proximal'; readonly points: readonly Float64Array[] }
@@ -42,6 +50,7 @@ export interface SiteEvaluation {
     readonly curvature: Float64Array | null;
   }[];
   readonly ownFit: { readonly curvature: Float64Array; readonly linear: Float64Array } | null;
+  readonly sketch: Float64Array | null;
 }
 
 export interface Progress {
@@ -61,7 +70,10 @@ export type Rung = 'pooled' | 'curvature' | 'sketched' | 'proximal';
 
 /** The numbers that show, independently of the iteration, how far z can be from the optimum. */
 export interface Certificate {
-  /** `measured`: decrement under the curvature measured at z; `estimate`: from gradients and diagonal curvature only. */
+  /**
+   * `measured`: decrement under the curvature measured at z; `sketched`: under a model of it learned from products with
+   * directions; `estimate`: from gradients and diagonal curvature, or from one or two directions a round.
+   */
   readonly kind: 'measured' | 'sketched' | 'estimate' | 'duality-gap';
   /** Bound on F(z) − F*, safety factor included, and the same over |F(z)|. */
   readonly gap: number;

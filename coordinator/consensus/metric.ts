@@ -34,7 +34,11 @@ export function plusDiagonal(matrix: Float64Array, t: number, diagonal: Float64A
  * H + ridge · diag where that factors, else the absolute eigenvalues of H in the scale of its diagonal, floored (a modified Newton matrix: Nocedal and Wright
  * 2006, §3.4).
  */
-export function definiteMetric(curvature: Float64Array, diagonal: Float64Array): Float64Array {
+export function definiteMetric(
+  curvature: Float64Array,
+  diagonal: Float64Array,
+  eigenvalueFloor = EIGENVALUE_FLOOR,
+): Float64Array {
   const p = diagonal.length;
   const ridged = plusDiagonal(curvature, RIDGE, diagonal);
   const factor = cholesky(ridged, p);
@@ -51,7 +55,7 @@ export function definiteMetric(curvature: Float64Array, diagonal: Float64Array):
   });
   const out = new Float64Array(p * p);
   for (let k = 0; k < p; k++) {
-    const size = Math.max(Math.abs(realEigenvalues[k]), EIGENVALUE_FLOOR);
+    const size = Math.max(Math.abs(realEigenvalues[k]), eigenvalueFloor);
     for (let i = 0; i < p; i++) {
       const left = size * eigenvectorMatrix.get(i, k) * root[i];
       for (let j = 0; j < p; j++) out[i * p + j] += left * eigenvectorMatrix.get(j, k) * root[j];

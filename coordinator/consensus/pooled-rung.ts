@@ -1,7 +1,9 @@
 import { packSymmetric } from '../../numerics/packed.js';
 import { mergeFactors, triangularFactor } from '../../numerics/triangular-factor.js';
+import { maxOf } from '../../numerics/vector.js';
 import { measuredCertificate, modelStep } from './certificate.js';
 import type { Certificate, Method, MethodEnd } from './method.js';
+import { diagonalOf } from './metric.js';
 import { isSmooth, type Penalty, penaltyValue } from './penalty.js';
 import type { ConsensusProblem } from './problem.js';
 import { zStepFull } from './z-step.js';
@@ -10,6 +12,8 @@ import { zStepFull } from './z-step.js';
 const REFINEMENTS = 3;
 /** A diagonal entry of R this small, relative to its column, is rounding. */
 const PIVOT_LEAST = 1e-13;
+/** Share of the largest squared column length under which a column is rounding. */
+const SPREAD_LEAST = 1e-20;
 
 /**
  * The `pooled` rung, for squared loss: one round brings every site's triangular factor of √w·[X, y]; merged in roster
@@ -66,7 +70,7 @@ export function solvePooled(problem: ConsensusProblem, factor: Float64Array): Me
   if (step === null)
     return { ...end(z, 'stalled', null), reason: 'the pooled curvature could not be factored' };
   const objective = model.value(z) + penaltyValue(g, z);
-  const certificate = measuredCertificate(g, z, gradient, step.decrement, objective);
+  const certificate = measuredCertificate(problem, z, gradient, step.decrement, objective);
   const solved = certificate.relativeGap <= problem.tolerance;
   return {
     ...end(z, solved ? 'solved' : 'stalled', certificate),
@@ -93,10 +97,17 @@ function refine(
   return zStepFull(g, metric, b, z);
 }
 
-/** A ridge in the last digits: the refinement takes it out again, and rank-deficient penalised fits need it. */
+/**
+ * A ridge in the last digits: the refinement takes it out again, and rank-deficient penalised fits need it. A column
+ * without spread has no slope either: any curvature leaves its coefficient where the penalty alone puts it.
+ */
 function positive(gram: Float64Array, p: number): Float64Array {
   const out = Float64Array.from(gram);
-  for (let j = 0; j < p; j++) out[j * p + j] *= 1 + 1e-14 * p;
+  const most = maxOf(diagonalOf(gram, p));
+  for (let j = 0; j < p; j++) {
+    const own = out[j * p + j];
+    out[j * p + j] = own > SPREAD_LEAST * most ? own * (1 + 1e-14 * p) : most;
+  }
   return out;
 }
 

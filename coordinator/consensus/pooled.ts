@@ -1,6 +1,7 @@
 import { unpackSymmetric } from '../../numerics/packed.js';
 import { sumOf } from '../../numerics/vector.js';
-import type { MethodAsk, Progress, SiteAnswers, SiteEvaluation } from './method.js';
+import type { MethodAsk, Progress, SiteAnswers, SiteEvaluation, SketchAsk } from './method.js';
+import { flooredDiagonal, plusDiagonal } from './metric.js';
 
 /** The sites' answers at one point, summed in roster order: f, ∇f and what curvature was asked. */
 export interface PooledPoint {
@@ -15,6 +16,8 @@ export interface PooledEvaluation {
   readonly points: readonly PooledPoint[];
   /** Σ H_i(x_i) (row-major) and Σ H_i x_i − ∇φ_i(x_i) at the sites' own fits. */
   readonly ownFit: { readonly curvature: Float64Array; readonly linear: Float64Array } | null;
+  /** Σ H_i(point) S, in the order of the directions asked. */
+  readonly sketch: Float64Array | null;
   /** The answers themselves, in roster order. */
   readonly sites: readonly SiteEvaluation[];
 }
@@ -24,8 +27,9 @@ export function* evaluate(
   points: Extract<MethodAsk, { kind: 'evaluate' }>['points'],
   ownFit: { readonly at: number; readonly hold: number } | null,
   progress: Progress,
+  sketch: SketchAsk | null = null,
 ): Generator<MethodAsk, PooledEvaluation, SiteAnswers> {
-  const answers = yield { kind: 'evaluate', points, ownFit, progress };
+  const answers = yield { kind: 'evaluate', points, ownFit, sketch, progress };
   if (answers.kind !== 'evaluate') throw new TypeError(`an evaluate ask was answered with ${answers.kind}`);
   return pool(answers.sites);
 }
@@ -46,6 +50,7 @@ function pool(sites: readonly SiteEvaluation[]): PooledEvaluation {
   return {
     points,
     ownFit: curvature === null || linear === null ? null : { curvature, linear },
+    sketch: sumPresent(sites.map((site) => site.sketch)),
     sites,
   };
 }
@@ -57,6 +62,13 @@ export const siteGradients = ({ sites }: PooledEvaluation): Float64Array[] =>
 /** Every site's curvature at the first point of the ask, row-major p × p. */
 export const siteCurvatures = ({ sites }: PooledEvaluation): Float64Array[] =>
   sites.map(({ points }) => unpackSymmetric(required(points[0].curvature, 'curvature')));
+
+/** Every site's diagonal curvature at the first point of the ask, floored, as a row-major p × p matrix. */
+export const diagonalCurvatures = ({ sites }: PooledEvaluation): Float64Array[] =>
+  sites.map(({ points }) => {
+    const diagonal = flooredDiagonal(required(points[0].diagonal, 'diagonal'));
+    return plusDiagonal(new Float64Array(diagonal.length ** 2), 1, diagonal);
+  });
 
 const unpackPresent = (packed: Float64Array | null): Float64Array | null =>
   packed === null ? null : unpackSymmetric(packed);

@@ -1,11 +1,12 @@
 import { estimatedCertificate } from './certificate.js';
-import { runawayColumns } from './existence.js';
+import { runawayColumns, separatedColumns } from './existence.js';
 import type { Certificate, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
-import { leastSubgradient, penaltyValue } from './penalty.js';
+import { leastSubgradient, type Penalty, penaltyValue } from './penalty.js';
 import { evaluate, type PooledEvaluation, required, siteGradients } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 import type { Residuals } from './residuals.js';
 import { type Finish, secondOrderFinish } from './second-order-finish.js';
+import type { SiteModels } from './site-models.js';
 
 /**
  * Residuals at which a certificate is asked: for an estimate; for a second-order finish, which needs only its region of
@@ -21,6 +22,8 @@ const NEAR = 1e-3;
 export interface Standing {
   /** D, positive: the pooled diagonal curvature at z₀. */
   readonly startDiagonal: Float64Array;
+  /** F(z₀). */
+  readonly startObjective: number;
   rounds: number;
   trigger: number;
   matricesLeft: number;
@@ -34,6 +37,8 @@ export interface Standing {
   bestObjective: number;
   best: { readonly z: Float64Array; readonly gradients: readonly Float64Array[] } | null;
   certificate: Certificate | null;
+  /** Models of the sites, learned from their proximal points; null where they would be too large to keep. */
+  models: SiteModels | null;
 }
 
 /**
@@ -54,6 +59,15 @@ export function* certify(
   if (standing.matricesLeft === 0) standing.trigger = TRIGGERS.estimate;
   const end = endOfFinish(problem, standing, finish) ?? (yield* beyondFinish(problem, standing, finish));
   return { end, restart: end === null ? finish : null };
+}
+
+/** A certificate round at z that spends nothing, for an iteration whose residuals tell too little. */
+export function* look(
+  problem: ConsensusProblem,
+  standing: Standing,
+  z: Float64Array,
+): Generator<MethodAsk, MethodEnd | null, SiteAnswers> {
+  return estimate(problem, standing, z, yield* askEstimate(standing, z));
 }
 
 /** The last round is a certificate round at z, so that even an unsolved run says where it stands. */
@@ -90,16 +104,44 @@ function estimate(
   const gradient = required(at.gradient, 'gradient');
   const diagonal = required(at.diagonal, 'diagonal');
   standing.objective = at.value + penaltyValue(g, z);
-  standing.certificate = estimatedCertificate(g, z, gradient, diagonal, standing.objective);
+  standing.models?.learn(
+    problem.siteWeights.map(() => z),
+    siteGradients(answers),
+  );
+  const learned = standing.models?.stepFrom(z, gradient) ?? null;
+  const { objective } = standing;
+  standing.certificate = estimatedCertificate(
+    g,
+    z,
+    gradient,
+    diagonal,
+    learned?.decrement ?? null,
+    objective,
+    standing.startObjective,
+  );
+  const ended = (outcome: 'solved' | 'unbounded', columns: readonly number[]): MethodEnd => ({
+    ...ending(problem, standing, outcome, z, at.value, null),
+    reason: outcome === 'solved' ? null : 'separable',
+    columnsAtFault: columns,
+  });
+  const separated = separatedColumns(problem, z, at.value);
+  if (separated.length > 0) return ended('unbounded', separated);
   if (standing.certificate.relativeGap > problem.tolerance) return null;
+  // learned models know slopes along which the diagonal sees curvature, but lag where it has just gone
+  const steps = [diagonalStep(g, z, gradient, diagonal), ...(learned === null ? [] : [learned])];
+  const runaway = problem.curvatureMayVanish
+    ? []
+    : (steps
+        .map(({ direction, bend }) => runawayColumns(direction, bend, standing.startDiagonal))
+        .find((columns) => columns.length > 0) ?? []);
+  return ended(runaway.length === 0 ? 'solved' : 'unbounded', runaway);
+}
+
+/** The step under the diagonal curvature alone. */
+function diagonalStep(g: Penalty, z: Float64Array, gradient: Float64Array, diagonal: Float64Array) {
   const bends = diagonal.map((value, j) => Math.max(value + g.l2[j], 1e-300));
-  const step = leastSubgradient(g, z, gradient).map((slope, j) => -slope / bends[j]);
-  const bend = step.reduce((sum, value, j) => sum + bends[j] * value * value, 0);
-  const runaway = runawayColumns(step, bend, standing.startDiagonal);
-  const solved = ending(problem, standing, 'solved', z, at.value, null);
-  return runaway.length === 0
-    ? solved
-    : { ...solved, outcome: 'unbounded', reason: 'separable', columnsAtFault: runaway };
+  const direction = leastSubgradient(g, z, gradient).map((slope, j) => -slope / bends[j]);
+  return { direction, bend: direction.reduce((sum, value, j) => sum + bends[j] * value * value, 0) };
 }
 
 function* finishFrom(
@@ -144,14 +186,15 @@ function* beyondFinish(
 }
 
 function endOfFinish(problem: ConsensusProblem, standing: Standing, finish: Finish): MethodEnd | null {
-  const { flaw, certificate, z, loss, curvature } = finish;
+  const { stands, z, loss, curvature } = finish;
+  const separated = separatedColumns(problem, z, loss);
+  const flaw = separated.length > 0 ? { reason: 'separable' as const, columns: separated } : finish.flaw;
   if (flaw !== null) {
     const outcome = flaw.reason === 'separable' ? 'unbounded' : 'refused';
     const ended = ending(problem, standing, outcome, z, loss, curvature);
     return { ...ended, reason: flaw.reason, columnsAtFault: flaw.columns };
   }
-  const certified = certificate !== null && certificate.relativeGap <= problem.tolerance;
-  return certified ? ending(problem, standing, 'solved', z, loss, curvature) : null;
+  return stands ? ending(problem, standing, 'solved', z, loss, curvature) : null;
 }
 
 export function ending(

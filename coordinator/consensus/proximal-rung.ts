@@ -1,17 +1,18 @@
 import { Acceleration } from './acceleration.js';
 import { Anderson } from './anderson.js';
 import { curvatureRung } from './curvature-rung.js';
-import { aliasedColumns } from './existence.js';
+import { flawFromTheStart } from './existence.js';
 import type { Method, MethodAsk, MethodEnd, SiteAnswers } from './method.js';
 import { flooredDiagonal } from './metric.js';
 import { askProximal, ledByModels } from './model-led.js';
 import { penaltyValue } from './penalty.js';
-import { evaluate, required, siteCurvatures, siteGradients } from './pooled.js';
+import { diagonalCurvatures, evaluate, required, siteCurvatures, siteGradients } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 import {
   certify,
   ending,
   lastCertificate,
+  look,
   progressOf,
   type Standing,
   TRIGGERS,
@@ -22,6 +23,8 @@ import { SiteModels } from './site-models.js';
 
 /** Most numbers in the coordinator's models of all sites, K p²: above it, Anderson acceleration. */
 const MODEL_NUMBERS_MOST = 2e7;
+/** Rounds without a certificate at which one is asked all the same: residuals of an iteration that creeps tell little. */
+const LOOKS = [64, 128, 256];
 /** One matrix for the models and one for the certificate at least. */
 const MODEL_MATRICES_LEAST = 2;
 
@@ -77,6 +80,9 @@ function* balancedIteration(
           zOld = null;
           continue;
         }
+      } else if (LOOKS.includes(k)) {
+        const end = yield* look(problem, standing, z);
+        if (end !== null) return end;
       }
       const factor = balancingFactor(residuals, k);
       if (factor !== 1) {
@@ -88,6 +94,7 @@ function* balancedIteration(
     if (standing.rounds >= problem.roundsMost - 1) return yield* lastCertificate(problem, standing, z);
     const centers = metric.centers(s, z);
     x = yield* askProximal(standing, metric, centers, x);
+    standing.models?.learn(x, metric.gradients(centers, x));
     s = acceleration.next({ metric, s, z, centers, x });
     zOld = z;
   }
@@ -112,8 +119,8 @@ function* setUp(
   SiteAnswers
 > {
   const { p, penalty: g, siteWeights, start } = problem;
-  const modelled =
-    problem.curvatureMost >= MODEL_MATRICES_LEAST && siteWeights.length * p * p <= MODEL_NUMBERS_MOST;
+  const small = siteWeights.length * p * p <= MODEL_NUMBERS_MOST;
+  const modelled = small && problem.curvatureMost >= MODEL_MATRICES_LEAST;
   const purpose = modelled ? 'curvature at the start' : 'gradients at the start';
   const want = modelled ? 'curvature' : 'diagonal';
   const at = yield* evaluate([{ point: start, want }], null, progressOf(null, purpose, null));
@@ -122,6 +129,7 @@ function* setUp(
   const startDiagonal = flooredDiagonal(required(pooled.diagonal, 'diagonal'));
   const standing: Standing = {
     startDiagonal,
+    startObjective: objective,
     rounds: 1,
     trigger: TRIGGERS.led,
     matricesLeft: problem.curvatureMost - (modelled ? 1 : 0),
@@ -132,15 +140,22 @@ function* setUp(
     bestObjective: objective,
     best: null,
     certificate: null,
+    models: null,
   };
-  if (!modelled) return { standing, models: null, end: null };
-  const aliased = aliasedColumns(required(pooled.curvature, 'curvature'), g);
-  if (aliased.length > 0) {
+  const points = siteWeights.map(() => start);
+  if (!modelled) {
+    // without a matrix the models begin with what a certificate round brings anyway
+    if (small)
+      standing.models = new SiteModels(g, points, siteGradients(at), diagonalCurvatures(at), startDiagonal);
+    return { standing, models: null, end: null };
+  }
+  const aliased = flawFromTheStart(problem, required(pooled.curvature, 'curvature'));
+  if (aliased !== null) {
     const refused = ending(problem, standing, 'refused', start, pooled.value, null);
-    const end = { ...refused, reason: 'rank-deficient', columnsAtFault: aliased };
+    const end = { ...refused, reason: aliased.reason, columnsAtFault: aliased.columns };
     return { standing, models: null, end };
   }
-  const points = siteWeights.map(() => start);
   const models = new SiteModels(g, points, siteGradients(at), siteCurvatures(at), startDiagonal);
+  standing.models = models;
   return { standing, models, end: null };
 }

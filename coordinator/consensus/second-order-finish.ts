@@ -1,7 +1,7 @@
 import { packSymmetric } from '../../numerics/packed.js';
 import { plusScaled } from '../../numerics/vector.js';
 import { measuredCertificate, modelStep, relativeTo } from './certificate.js';
-import { aliasedColumns, runawayColumns } from './existence.js';
+import { type Flaw, flawFromTheStart, verdict } from './existence.js';
 import type { Certificate, MethodAsk, Progress, SiteAnswers } from './method.js';
 import { definiteMetric, diagonalOf, flooredDiagonal } from './metric.js';
 import { penaltyValue } from './penalty.js';
@@ -24,12 +24,11 @@ export interface Finish {
   readonly z: Float64Array;
   readonly loss: number;
   readonly certificate: Certificate | null;
+  /** The certificate reaches the tolerance, and nothing is wrong with its point. */
+  readonly stands: boolean;
   readonly curvature: Float64Array;
   /** Why there is no optimum to certify, if that was found: `rank-deficient` or `separable`, and the columns. */
-  readonly flaw: {
-    readonly reason: 'rank-deficient' | 'separable';
-    readonly columns: readonly number[];
-  } | null;
+  readonly flaw: Flaw | null;
   /** One model step beyond the point measured: where an estimate may hold though the certificate did not. */
   readonly beyond: Float64Array | null;
   /** The sites' answers at the point measured: its gradients and curvatures restart the iteration there. */
@@ -92,21 +91,19 @@ export function* secondOrderFinish(
       gradient,
       z,
     );
-    const certificate = step === null ? null : measuredCertificate(g, z, gradient, step.decrement, objective);
-    const certified = certificate !== null && certificate.relativeGap <= problem.tolerance;
-    const aliased = first && spent === 1 ? aliasedColumns(curvature, g) : [];
-    const runaway =
-      certified && step !== null ? runawayColumns(step.direction, step.bend, startDiagonal) : [];
-    const flaw =
-      aliased.length > 0
-        ? { reason: 'rank-deficient' as const, columns: aliased }
-        : runaway.length > 0
-          ? { reason: 'separable' as const, columns: runaway }
-          : null;
+    const certificate =
+      step === null ? null : measuredCertificate(problem, z, gradient, step.decrement, objective);
+    const found =
+      step === null || certificate === null
+        ? 'goes on'
+        : verdict(problem, certificate, curvature, step, startDiagonal);
+    const aliased = first && spent === 1 ? flawFromTheStart(problem, curvature) : null;
+    const flaw = aliased ?? (typeof found === 'string' ? null : found);
     best = {
       z,
       loss: at.value,
       certificate,
+      stands: flaw === null && found === 'stands',
       curvature: packSymmetric(curvature, problem.p),
       flaw,
       beyond: step?.z ?? null,
@@ -118,7 +115,7 @@ export function* secondOrderFinish(
     const contracting = step !== null && step.decrement <= CONTRACTION_MOST * decrement;
     // Newton steps square the relative gap: the last matrix waits until its point may be expected to certify
     const early = spent === budget - 1 && gap !== null && gap > NEWTON_SHARE * Math.sqrt(problem.tolerance);
-    if (flaw === null && certified && step !== null)
+    if (best.stands && step !== null)
       return { finish: { ...best, z: step.z, loss: at.value + step.lossChange }, rounds };
     if (flaw !== null || step === null || spent >= budget || early || !contracting)
       return { finish: best, rounds };

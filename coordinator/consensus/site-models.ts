@@ -1,6 +1,6 @@
 import { dot, norm, plusScaled, subtract, sumOf } from '../../numerics/vector.js';
 import type { Extrapolation, Iteration } from './acceleration.js';
-import { modelStep } from './certificate.js';
+import { type ModelStep, modelStep } from './certificate.js';
 import { symmetricTimes } from './matrix.js';
 import { definiteMetric, diagonalOf } from './metric.js';
 import { leastSubgradient, type Penalty } from './penalty.js';
@@ -12,6 +12,8 @@ const DENOMINATOR_LEAST = 1e-8;
 const SURPRISE_MOST = 100;
 /** Floor of the pooled model's diagonal, as a share of the pooled diagonal curvature at the start. */
 const DIAGONAL_SHARE = 1e-3;
+/** Smallest eigenvalue credited to indefinite summed models where a certificate rests on them, in that diagonal's scale. */
+const LEARNED_FLOOR = 1e-4;
 /** A proposal's residual may grow this much: a step of the models is not monotone in it. */
 const GROWTH_MOST = 2;
 /**
@@ -91,7 +93,7 @@ export class SiteModels implements Extrapolation {
   step(siteMetric: SiteMetric, z: Float64Array): Float64Array[] | null {
     const p = z.length;
     const pooled = sumOf(this.curvatures);
-    const floor = diagonalOf(pooled, p).map((value, j) => Math.max(value, DIAGONAL_SHARE * this.diagonal[j]));
+    const floor = this.flooredDiagonal(pooled);
     const full = modelStep(this.g, definiteMetric(pooled, floor), sumOf(this.gradientsAt(z)), z);
     if (full === null) return null;
     this.promised = full.decrement;
@@ -104,6 +106,24 @@ export class SiteModels implements Extrapolation {
     const total = sum(siteMetric.scales);
     const fitting = gradients.map((own, i) => plusScaled(own, -siteMetric.scales[i] / total, left));
     return siteMetric.withDuals(next, fitting);
+  }
+
+  /** The minimiser of the summed models plus g, from z, where ∇f is known. Null where it cannot be computed. */
+  stepFrom(z: Float64Array, gradient: Float64Array): ModelStep | null {
+    const pooled = sumOf(this.curvatures);
+    return modelStep(
+      this.g,
+      definiteMetric(pooled, this.flooredDiagonal(pooled), LEARNED_FLOOR),
+      gradient,
+      z,
+    );
+  }
+
+  /** Diagonal of the summed models, kept positive. */
+  private flooredDiagonal(pooled: Float64Array): Float64Array {
+    return diagonalOf(pooled, this.diagonal.length).map((value, j) =>
+      Math.max(value, DIAGONAL_SHARE * this.diagonal[j]),
+    );
   }
 
   private gradientsAt(z: Float64Array): Float64Array[] {

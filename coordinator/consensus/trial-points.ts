@@ -7,12 +7,16 @@ const LINE = [0.1, 0.03, 0.01, 0.003] as const;
 /** Relative rise of F that counts as rounding. */
 const RISE_SLACK = 1e-14;
 
-/** Where a second-order method stands: z with f, F = f + g, ∇f and the curvature measured at z (row-major p × p). */
-export interface Iterate {
+/** Where a second-order method stands: z with f, F = f + g and ∇f. */
+export interface Standing {
   readonly z: Float64Array;
   readonly loss: number;
   readonly objective: number;
   readonly gradient: Float64Array;
+}
+
+/** With the curvature measured at z (row-major p × p). */
+export interface Iterate extends Standing {
   readonly curvature: Float64Array;
   /** Its floored diagonal. */
   readonly diagonal: Float64Array;
@@ -28,19 +32,22 @@ export const linePoints = (g: Penalty, z: Float64Array, direction: Float64Array)
 /** Index of the trial with the least F, if that is not above F at z. */
 export function bestTrial(
   g: Penalty,
-  here: Iterate,
+  here: Standing,
   trials: readonly Float64Array[],
   losses: readonly number[],
 ): number | null {
   const best = leastObjective(g, trials, losses);
-  const limit = here.objective + RISE_SLACK * Math.max(Math.abs(here.objective), 1e-12);
-  return best.objective <= limit ? best.index : null;
+  return isNoRise(here, best.objective) ? best.index : null;
 }
+
+/** Whether F has not risen above F at z, rounding aside. */
+export const isNoRise = (here: Standing, objective: number): boolean =>
+  objective <= here.objective + RISE_SLACK * Math.max(Math.abs(here.objective), 1e-12);
 
 /** Index of the line point with the least F, if that is below F at z. */
 export function bestLinePoint(
   g: Penalty,
-  here: Iterate,
+  here: Standing,
   points: readonly Float64Array[],
   losses: readonly number[],
 ): number | null {

@@ -13,6 +13,24 @@ export async function fileStore(path: string): Promise<Checked<JournalStore>> {
   return opened.ok ? succeed(storeOn(path, opened.value)) : opened;
 }
 
+/** Opens a journal to be looked at: nothing can be added or cut. Fails with `file-unreadable`. */
+export async function readOnlyStore(path: string): Promise<Checked<JournalStore>> {
+  try {
+    const handle = await open(path, 'r');
+    const refused = fail('state-unwritable', 'The journal was opened to be read only.', {
+      where: { file: path },
+    });
+    return succeed({
+      ...storeOn(path, handle),
+      append: async () => refused,
+      truncate: async () => refused,
+    });
+  } catch (error) {
+    const reason = error instanceof Error ? error.message : String(error);
+    return fail('file-unreadable', `The journal cannot be read: ${reason}.`, { where: { file: path } });
+  }
+}
+
 function storeOn(path: string, handle: FileHandle): JournalStore {
   return {
     size: () => attempt(path, async () => (await handle.stat()).size),

@@ -6,18 +6,19 @@ import type { JournalStore } from './store.js';
 /** The record of a run: first read to its end, then added to. */
 export interface Journal {
   /**
-   * The next record; null at the end. A last record that was cut off is removed from the store (see `tornBytes`);
-   * a damaged record with a whole one after it is `journal-broken`.
+   * The next record; null at the end. A last record that was cut off is passed over, and removed from a store that is
+   * mended (see `tornBytes`); a damaged record with a whole one after it is `journal-broken`.
    */
   next(): Promise<Checked<JournalRecord | null>>;
   /** Adds a record; resolved once it is on stable storage. Only after `next` gave null. */
   append(record: JournalRecord): Promise<Checked<null>>;
-  /** Bytes removed from the end because their record was cut off. */
+  /** Bytes at the end whose record was cut off. */
   readonly tornBytes: number;
   close(): Promise<void>;
 }
 
-export function openJournal(store: JournalStore): Journal {
+/** `mend` cuts a torn tail off, as is needed before anything is added; without it the store stays as it is. */
+export function openJournal(store: JournalStore, { mend } = { mend: true }): Journal {
   let offset = 0;
   let tornBytes = 0;
   let readToEnd = false;
@@ -34,7 +35,7 @@ export function openJournal(store: JournalStore): Journal {
         return succeed(found.value.record);
       }
       tornBytes = found.value.tornBytes;
-      if (tornBytes > 0) {
+      if (tornBytes > 0 && mend) {
         const cut = await store.truncate(offset);
         if (!cut.ok) return cut;
       }

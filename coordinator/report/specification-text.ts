@@ -1,6 +1,7 @@
 import type {
   DesignColumn,
   FitSpecification,
+  LossForm,
   Penalty,
   Term,
   Transform,
@@ -10,11 +11,18 @@ import { counted, duration, listed, wrapped } from './phrases.js';
 /** Design columns named one by one before the rest is only counted. */
 const COLUMNS_MOST = 60;
 
-const LOSS_WORDS: Readonly<Record<FitSpecification['loss'], (response: string) => string>> = {
-  squared: (response) => `the mean of ${response} by least squares`,
-  logistic: (response) => `the log odds of ${response} by logistic regression`,
-  poisson: (response) => `the log of the expected ${response} by Poisson regression`,
-};
+function lossText(loss: LossForm, response: string): string {
+  switch (loss.kind) {
+    case 'squared':
+      return `the mean of ${response} by least squares`;
+    case 'logistic':
+      return `the log odds of ${response} by logistic regression`;
+    case 'poisson':
+      return `the log of the expected ${response} by Poisson regression`;
+    case 'huber':
+      return `the centre of ${response} by Huber's loss (residuals up to ${loss.threshold} count by their square, larger ones only in proportion to their size)`;
+  }
+}
 
 /** What a specification fits, in words: model, rows, design columns, penalty, rounds, barrier, digest. */
 export function specificationText(
@@ -57,7 +65,7 @@ function modelText(spec: FitSpecification): string {
         ? ` per unit of exposure ${spec.offset.column} (offset ln ${spec.offset.column})`
         : `, with the offset ${spec.offset.column}`;
   const weights = spec.weights === null ? '' : `, rows weighted by ${spec.weights.column}`;
-  return `Models ${LOSS_WORDS[spec.loss](response)}${offset}${weights}.`;
+  return `Models ${lossText(spec.loss, response)}${offset}${weights}.`;
 }
 
 function sitesText(spec: FitSpecification): string {

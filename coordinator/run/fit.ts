@@ -1,6 +1,6 @@
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import { designColumns } from '../../protocol/specification/design-columns.js';
-import type { FitSpecification } from '../../protocol/specification/types.js';
+import type { FitSpecification, LossForm } from '../../protocol/specification/types.js';
 import { SOFTWARE } from '../../protocol/version.js';
 import type { MethodEnd } from '../consensus/method.js';
 import type { FitDocument, ResultDocument } from './result.js';
@@ -153,7 +153,7 @@ function fitDocument(
   return {
     lambda: lambdaOf(specification, number),
     outcome: end.outcome,
-    reason: reasonInWords(end, frame),
+    reason: reasonInWords(end, frame, specification.loss),
     ...originalScale(frame, end.z),
     dropped: frame.dropped,
     objective: end.loss + end.penalty,
@@ -167,14 +167,16 @@ function fitDocument(
 }
 
 /** The method's reason with the names of the coefficients it is about. */
-function reasonInWords(end: MethodEnd, frame: Frame): string | null {
+function reasonInWords(end: MethodEnd, frame: Frame, loss: LossForm): string | null {
   const first = frame.intercept ? 1 : 0;
   const names = end.columnsAtFault
     .map((j) => (j < first ? 'the intercept' : frame.kept[j - first].name))
     .join(', ');
   switch (end.reason) {
     case 'rank-deficient':
-      return `no unique optimum: without a penalty, ${names} can be written as a combination of the columns before it. Leave it out, or add a ridge penalty. [rank-deficient]`;
+      return loss.kind === 'huber'
+        ? `no unique optimum: without a penalty, over the rows within the threshold, ${names} can be written as a combination of the columns before it. Raise the threshold, leave it out, or add a ridge penalty. [rank-deficient]`
+        : `no unique optimum: without a penalty, ${names} can be written as a combination of the columns before it. Leave it out, or add a ridge penalty. [rank-deficient]`;
     case 'separable':
       return `no optimum: the loss goes on falling as ${names} runs off to infinity (classes separated, or a level without events). Add a ridge penalty, or leave the term out. [separable]`;
     case null:

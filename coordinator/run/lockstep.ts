@@ -55,7 +55,13 @@ export class Lockstep {
       if (problems.length > 0) works.push({ work: 'proximal', problems });
       for (const [problem, { ask }] of entries)
         if (ask.kind === 'evaluate')
-          works.push({ work: 'evaluate', problem, points: [...ask.points], ownFit: ask.ownFit });
+          works.push({
+            work: 'evaluate',
+            problem,
+            points: [...ask.points],
+            ownFit: ask.ownFit,
+            sketch: ask.sketch,
+          });
       if (entries.some(([, { ask }]) => ask.kind === 'factor')) works.push({ work: 'factor' });
       return works;
     });

@@ -1,16 +1,22 @@
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { Rung } from '../consensus/method.js';
+import type { ConsensusProblem } from '../consensus/problem.js';
 import { type Member, memberName } from './run.js';
+import { NO_SKETCH, sketchBudget } from './sketch-budget.js';
 import type { PooledSurvey, Stop } from './survey.js';
 
 /** Most columns for which p × p curvature is asked: above it the matrices outgrow links and coordinator. */
 const CURVATURE_COLUMNS_MOST = 4000;
+/** With so many matrices the proximal rung is led by models of the sites, in fewer rounds and numbers than sketches. */
+const LEADING_MATRICES = 2;
 
 export interface RungChoice {
   readonly rung: Rung;
   readonly reason: string;
   /** Curvature matrices a fit may ask of every site. */
   readonly curvatureMost: number;
+  /** Directions of curvature a fit may ask of every site, in a round and in all. */
+  readonly sketch: ConsensusProblem['sketch'];
 }
 
 /** The highest rung of the ladder that every site's policy, the specification and p allow, and why not a higher one. */
@@ -31,14 +37,36 @@ export function chooseRung(
     ? `${strictest} lets ${least === 0 ? 'no curvature matrix' : `at most ${least} curvature ${least === 1 ? 'matrix' : 'matrices'} a fit`} leave`
     : 'every site lets curvature leave';
   const why = p > CURVATURE_COLUMNS_MOST ? `${p} columns are too many for curvature matrices` : policy;
-  const squared = specification.loss === 'squared';
+  const squared = specification.loss.kind === 'squared';
   if (squared && budget >= 1 && (limit === 'highest' || limit === 'pooled'))
-    return { rung: 'pooled', reason: `squared loss, and ${policy}`, curvatureMost: budget };
+    return { ...unsketched(budget), rung: 'pooled', reason: `squared loss, and ${policy}` };
   if (budget === Number.POSITIVE_INFINITY && limit !== 'proximal' && limit !== 'sketched')
-    return { rung: 'curvature', reason: why, curvatureMost: budget };
+    return { ...unsketched(budget), rung: 'curvature', reason: why };
+  return lowerRung(specification, survey, roster, p, budget, why);
+}
+
+const unsketched = (curvatureMost: number) => ({ curvatureMost, sketch: NO_SKETCH });
+
+/** `sketched` or `proximal`: `why` says what keeps the run from the rungs above. */
+function lowerRung(
+  specification: FitSpecification,
+  survey: PooledSurvey,
+  roster: readonly Member[],
+  p: number,
+  curvatureMost: number,
+  why: string,
+): RungChoice | Stop {
+  const { rung: limit } = specification.rounds;
   const closed = survey.answers.findIndex(
     ({ allowance }) => !allowance.leave.includes('proximal') || !allowance.leave.includes('gradients'),
   );
+  const sketch = sketchBudget(specification, survey, roster, p);
+  const asked = limit === 'proximal' || limit === 'sketched';
+  const above = asked ? 'the specification asks for no rung above it' : why;
+  const pays =
+    limit !== 'proximal' && (limit === 'sketched' || curvatureMost < LEADING_MATRICES || closed >= 0);
+  if (sketch.kind === 'open' && pays)
+    return { rung: 'sketched', reason: above, curvatureMost, sketch: sketch.budget };
   if (closed >= 0)
     return {
       outcome: 'refused',
@@ -46,7 +74,11 @@ export function chooseRung(
         `site ${memberName(roster[closed])} lets neither enough curvature nor proximal points and gradients leave. ` +
         'Its custodian can add `proximal` and `gradients` to `policy.leave`. [policy-kind]',
     };
-  const asked =
-    limit === 'proximal' || limit === 'sketched' ? 'the specification asks for no rung above it' : why;
-  return { rung: 'proximal', reason: asked, curvatureMost: budget };
+  const reason =
+    sketch.kind === 'closed' && limit === 'sketched'
+      ? sketch.reason
+      : sketch.kind === 'meagre' && pays
+        ? `${above}, and ${sketch.reason}`
+        : above;
+  return { ...unsketched(curvatureMost), rung: 'proximal', reason };
 }

@@ -88,9 +88,10 @@ export function interceptOnly(
   const mean = weightedSum / weightSum;
   start[0] = {
     squared: mean,
+    huber: mean,
     logistic: Math.log(mean / (1 - mean)),
     poisson: Math.log(weightedSum / exposureSum),
-  }[specification.loss];
+  }[specification.loss.kind];
   return start;
 }
 

@@ -6,6 +6,7 @@ import type { Method, MethodEnd, Progress } from '../consensus/method.js';
 import { pooledRung } from '../consensus/pooled-rung.js';
 import type { ConsensusProblem } from '../consensus/problem.js';
 import { proximalRung } from '../consensus/proximal-rung.js';
+import { sketchedRung } from '../consensus/sketched-rung.js';
 import { Lockstep } from './lockstep.js';
 import type { Member, RosterAnswers, RunAsk, Shown } from './run.js';
 import type { RungChoice } from './rung.js';
@@ -53,14 +54,18 @@ export function* solve(
       up[i] += own.reduce((sum, answer) => sum + numbersOfAnswer(answer), 0);
       down[i] += works[i].reduce((sum, work) => sum + numbersDown(work, askNumber), 0);
     });
-    const open = lockstep.asks.length;
+    const asked = lockstep.asks.map(({ progress }) => progress);
     lockstep.receive(given, askNumber);
     shown = {
       kind: 'round',
       round,
-      progress: shownProgress(lockstep, specification.rounds.tolerance),
+      // what this round was for, and what its answers have shown
+      progress: {
+        ...shownProgress(lockstep, specification.rounds.tolerance),
+        purpose: asked.reduce(farthest).purpose,
+      },
       tolerance: specification.rounds.tolerance,
-      fitsOpen: open,
+      fitsOpen: asked.length,
       fitsTotal: fits,
     };
   }
@@ -81,9 +86,18 @@ function consensusProblem(
     start: interceptOnly(specification, frame, survey),
     tolerance: specification.rounds.tolerance,
     roundsMost: specification.rounds.most,
-    quadratic: specification.loss === 'squared',
+    quadratic: specification.loss.kind === 'squared',
+    separatedBelow: separatedBelow(specification, survey),
+    curvatureMayVanish: specification.loss.kind === 'huber',
     curvatureMost: choice.curvatureMost,
+    sketch: choice.sketch,
+    seed: fit,
   };
+}
+
+/** See `ConsensusProblem`: rows of a 0/1 response, each counted once. */
+function separatedBelow({ loss, weights, offset }: FitSpecification, survey: PooledSurvey): number | null {
+  return loss.kind === 'logistic' && weights === null && offset === null ? Math.LN2 / survey.rowsTotal : null;
 }
 
 function methodOn(rung: RungChoice['rung'], problem: ConsensusProblem): Method {
@@ -93,16 +107,19 @@ function methodOn(rung: RungChoice['rung'], problem: ConsensusProblem): Method {
     case 'curvature':
       return curvatureRung(problem);
     case 'sketched':
+      return sketchedRung(problem);
     case 'proximal':
       return proximalRung(problem);
   }
 }
 
+/** Of two fits, the one farther from its optimum. */
+const farthest = (a: Progress, b: Progress): Progress =>
+  (b.relativeGap ?? Number.POSITIVE_INFINITY) > (a.relativeGap ?? Number.POSITIVE_INFINITY) ? b : a;
+
 /** Of the fits still open, the one farthest from the tolerance; once all have ended, the worst certificate. */
 function shownProgress(lockstep: Lockstep, tolerance: number): Progress {
   const open = lockstep.asks.map(({ progress }) => progress);
-  const farthest = (a: Progress, b: Progress): Progress =>
-    (b.relativeGap ?? Number.POSITIVE_INFINITY) > (a.relativeGap ?? Number.POSITIVE_INFINITY) ? b : a;
   if (open.length > 0) return open.reduce(farthest);
   return lockstep.ends
     .map(

@@ -121,12 +121,12 @@ function responseProblem({ loss, intercept }: FitSpecification, pooled: PooledSu
       outcome: 'refused',
       reason: 'every weight is zero: there is nothing to fit. Check the weights column.',
     };
-  if (loss === 'logistic' && least === most && intercept === 'shared')
+  if (loss.kind === 'logistic' && least === most && intercept === 'shared')
     return {
       outcome: 'unbounded',
       reason: `every response at every site is ${least}: a logistic fit has no optimum.`,
     };
-  if (loss === 'poisson' && weightedSum === 0 && intercept === 'shared')
+  if (loss.kind === 'poisson' && weightedSum === 0 && intercept === 'shared')
     return {
       outcome: 'unbounded',
       reason: 'every count at every site is zero: a Poisson fit has no optimum.',

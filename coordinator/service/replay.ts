@@ -55,19 +55,37 @@ export async function replay(
 }
 
 function feedRecorded(drive: Drive, turn: Turn, run: string, record: AnsweredRecord): Checked<Turn> {
+  const differs = askDiffers(drive, turn, record);
+  if (differs !== null) return broken(differs);
+  const replies = recordedReplies(run, record);
+  if (!replies.ok) return replies;
+  return turn.kind === 'ask'
+    ? succeed(drive.feed(turn.asked, replies.value, record.measured))
+    : succeed(turn);
+}
+
+/** How the ask the run stands at differs from the recorded one, as a sentence; null where they agree. */
+export function askDiffers(drive: Drive, turn: Turn, record: AnsweredRecord): string | null {
   if (turn.kind !== 'ask' || turn.ask !== record.ask) {
-    return broken(`Ask ${record.ask} is recorded where the run does not ask it.`);
+    return `Ask ${record.ask} is recorded where the run does not ask it.`;
   }
-  if (drive.digestOf(turn.asked) !== record.asked || record.replies.length !== drive.roster.length) {
-    return broken(`Ask ${record.ask} was another one when it was recorded.`);
+  if (record.replies.length !== drive.roster.length) {
+    return `Ask ${record.ask} is recorded with ${record.replies.length} replies; the roster has ${drive.roster.length} members.`;
   }
+  return drive.digestOf(turn.asked) === record.asked
+    ? null
+    : `Ask ${record.ask} was another one when it was recorded.`;
+}
+
+/** The replies to one ask, in roster order. Fails with `journal-broken`. */
+export function recordedReplies(run: string, record: AnsweredRecord): Checked<Reply[]> {
   const replies: Reply[] = [];
   for (const bytes of record.replies) {
     const reply = decodeReply(run, record.ask, bytes);
     if (!reply.ok) return reply;
     replies.push(reply.value);
   }
-  return succeed(drive.feed(turn.asked, replies, record.measured));
+  return succeed(replies);
 }
 
 const broken = (what: string) =>

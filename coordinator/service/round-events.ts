@@ -1,7 +1,10 @@
+import { SOFTWARE } from '../../protocol/version.js';
 import type { Measured } from '../journal/records.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { ResultDocument } from '../run/result.js';
 import { type Member, memberName, type RunEnd, type Shown } from '../run/run.js';
+import type { Drive } from './drive.js';
+import type { AcceptedRun } from './host-parts.js';
 
 /** The round log's line for what the answers to one ask have shown, with the times that were measured. */
 export function eventOfShown(
@@ -58,34 +61,22 @@ export function outcomeEvent(end: RunEnd, folder: string, at: string): LogEvent 
   };
 }
 
-/** What of an interrupted run is known, for its result document. */
-export interface KnownSoFar {
-  readonly roster: readonly Member[];
-  readonly survey: Extract<Shown, { kind: 'survey' }> | null;
-  readonly round: number;
-  /** Per member, in roster order. */
-  readonly numbers: readonly { readonly up: number; readonly down: number }[];
-}
-
-/** The end of a run that did not return by itself: no fit, and whatever is known about the sites. */
+/** The end of a run that did not return by itself: no fit, and whatever `drive` had learned about the sites. */
 export function forcedEnd(
   ending: { readonly outcome: RunEnd['outcome']; readonly reason: string },
-  about: {
-    readonly title: string;
-    readonly digest: string;
-    readonly tolerance: number;
-    readonly software: string;
-  },
-  known: KnownSoFar,
+  { specification, digest }: Pick<AcceptedRun, 'specification' | 'digest'>,
+  drive: Pick<Drive, 'roster' | 'survey' | 'round' | 'tally'> | null,
 ): RunEnd {
-  const { roster, survey, round, numbers } = known;
+  const roster = drive?.roster ?? [];
+  const survey = drive?.survey ?? null;
+  const numbers = drive?.tally.numbers() ?? [];
   const result: ResultDocument = {
     format: 1,
     outcome: ending.outcome,
     reason: ending.reason,
-    title: about.title,
-    specification: about.digest,
-    software: about.software,
+    title: specification.title,
+    specification: digest,
+    software: SOFTWARE,
     sites: roster.map((member, index) => ({
       site: memberName(member),
       rowsUsed: survey?.sites[index]?.rowsUsed ?? null,
@@ -95,10 +86,10 @@ export function forcedEnd(
     rowsTotal: survey?.rowsTotal ?? null,
     rung: survey?.rung ?? null,
     rungReason: survey?.rungReason ?? null,
-    tolerance: about.tolerance,
+    tolerance: specification.rounds.tolerance,
     fits: [],
     notes: survey?.notes ?? [],
-    rounds: round,
+    rounds: drive?.round ?? 0,
     numbersSent: roster.map((member, index) => ({ site: memberName(member), ...numbers[index] })),
   };
   return { outcome: ending.outcome, reason: ending.reason, shown: null, result };

@@ -68,8 +68,8 @@ export function addRoutes(app: FastifyInstance, parts: RouteParts): void {
   });
   app.register(async (guarded) => {
     guarded.addHook('onRequest', async (request, reply) => {
-      const failure = refuseStranger(request, parts.tokens);
-      if (failure !== null) return sendProblem(reply, problemOf(failure));
+      const problem = refuseStranger(request, parts.tokens);
+      if (problem !== null) return sendProblem(reply, problem);
     });
     guarded.get('/v1/openapi.json', { schema: { hide: true } }, async () => app.swagger());
     guarded.get('/v1/sites', { schema: describe('Sites seen so far', { 200: siteList }) }, async () => ({
@@ -80,14 +80,27 @@ export function addRoutes(app: FastifyInstance, parts: RouteParts): void {
   });
 }
 
-function refuseStranger(request: FastifyRequest, tokens: Tokens): Failure | null {
+/** Methods that change nothing: all that an analyst who may only watch has need of. */
+const WATCHING_METHODS = ['GET', 'HEAD'];
+
+function refuseStranger(request: FastifyRequest, tokens: Tokens): Problem | null {
   const token = bearerOf(request.headers.authorization);
   const holder = token === null ? null : tokens.holderOf(token);
-  if (holder !== null && !holder.ok) return holder.failure;
-  if (holder?.value?.kind === 'analyst') return null;
-  return fail('unauthorised', "This needs an analyst's token in the Authorization header.", {
+  if (holder !== null && !holder.ok) return problemOf(holder.failure);
+  if (holder?.value?.kind === 'analyst') {
+    const { name, may } = holder.value;
+    if (may === 'submit' || WATCHING_METHODS.includes(request.method)) return null;
+    return {
+      status: 403,
+      title: 'Not allowed',
+      detail: `Analyst ${name} may watch, not submit or cancel.`,
+      code: 'unauthorised',
+    };
+  }
+  const { failure } = fail('unauthorised', "This needs an analyst's token in the Authorization header.", {
     remedy: 'The coordinator writes one to analyst.token in its state folder at its first start.',
-  }).failure;
+  });
+  return problemOf(failure);
 }
 
 function addRunRoutes(app: FastifyInstance, { book }: RouteParts): void {

@@ -2,6 +2,7 @@ import { join } from 'node:path';
 import { type Checked, succeed } from '../../protocol/failure.js';
 import { coefficientsCsv, roundsCsv } from '../report/tables.js';
 import type { LogEvent } from '../run/log-event.js';
+import type { ResultDocument } from '../run/result.js';
 import type { RunEnd } from '../run/run.js';
 import { writeWhole } from './files.js';
 import type { RunHost } from './run-host.js';
@@ -60,6 +61,9 @@ export function summaryOf(entry: RunEntry): RunSummary {
   }
 }
 
+/** The text of `result.json`. */
+export const resultJson = (result: ResultDocument): string => `${JSON.stringify(result, null, 2)}\n`;
+
 /** Writes the result files, each as a whole. Gives the folder back. */
 export async function keepResult(folder: string, end: RunEnd): Promise<Checked<string>> {
   const events = await readLog(join(folder, RUN_FILES.log));
@@ -67,7 +71,7 @@ export async function keepResult(folder: string, end: RunEnd): Promise<Checked<s
   const files = [
     [RUN_FILES.coefficients, coefficientsCsv(end.result)],
     [RUN_FILES.rounds, roundsCsv(events.value)],
-    [RUN_FILES.result, `${JSON.stringify(end.result, null, 2)}\n`],
+    [RUN_FILES.result, resultJson(end.result)],
   ] as const;
   for (const [name, text] of files) {
     const kept = await writeWhole(join(folder, name), text);

@@ -191,8 +191,9 @@ export class RunHost {
     });
     if (!kept.ok) return this.halt(kept.failure);
     if (this.phase !== 'running') return;
-    if (this.cancelled) return this.endCancelled();
-    return this.go(drive.feed(asked, replies, measured));
+    // What the journal holds counts, so that it leads to the same result document when it is replayed.
+    const turn = drive.feed(asked, replies, measured);
+    return this.cancelled ? this.endCancelled() : this.go(turn);
   }
 
   private go(turn: Turn): Promise<void> | void {
@@ -214,19 +215,7 @@ export class RunHost {
   }
 
   private forced(ending: Ending): RunEnd {
-    const { specification, digest } = this.parts.accepted;
-    const { title, rounds } = specification;
-    const { drive } = this;
-    return forcedEnd(
-      ending,
-      { title, digest, tolerance: rounds.tolerance, software: SOFTWARE },
-      {
-        roster: drive?.roster ?? [],
-        survey: drive?.survey ?? null,
-        round: drive?.round ?? 0,
-        numbers: drive?.tally.numbers() ?? [],
-      },
-    );
+    return forcedEnd(ending, this.parts.accepted, this.drive);
   }
 
   private async finish(end: RunEnd, forced: boolean): Promise<void> {

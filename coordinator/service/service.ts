@@ -20,6 +20,7 @@ import { type BookParts, RunBook } from './run-book.js';
 import { type ServiceOptions, type ServiceSettings, serviceSettings } from './settings.js';
 import { SiteHub } from './site-hub.js';
 import { lockState } from './state-lock.js';
+import { openTokenUses } from './token-uses.js';
 import { openTokens, type Tokens } from './tokens.js';
 import { upgradeHandler } from './upgrade.js';
 
@@ -33,6 +34,8 @@ export interface Service {
 const BODY_BYTES_MOST = 6 * LIMITS.textMost + 16_384;
 /** How long workers have for the closing handshake. Milliseconds. */
 const CLOSE_GRACE_MS = 1000;
+/** How often open links are closed whose tokens were revoked or have expired. Milliseconds. */
+const TOKENS_RECHECKED_MS = 2000;
 
 const steadyTime: HostTime = {
   wallMs: () => Date.now(),
@@ -75,7 +78,8 @@ async function run(
   unlock: () => Promise<void>,
 ): Promise<Checked<Service>> {
   const notice = noticeTo(logger);
-  const tokens = openTokens(settings.state);
+  const uses = openTokenUses(settings.state, steadyTime.wallMs, notice);
+  const tokens = openTokens(settings.state, { onUse: uses.note });
   const analyst = await issueFirstAnalyst(tokens, settings.state);
   if (!analyst.ok) return analyst;
   const hub: SiteHub = new SiteHub(steadyTime, {
@@ -101,12 +105,15 @@ async function run(
   const upgrade = upgradeHandler(hub, tokens, linksMost);
   app.server.on('upgrade', upgrade.handle);
   addRoutes(app, { book, hub, tokens, streamsMost });
+  const recheck = setInterval(upgrade.recheck, TOKENS_RECHECKED_MS);
   const close = async (): Promise<void> => {
+    clearInterval(recheck);
     await book.close();
     hub.close();
     const grace = setTimeout(upgrade.breakAll, CLOSE_GRACE_MS);
     await app.close();
     clearTimeout(grace);
+    await uses.settled();
     await unlock();
   };
   const listening = await listen(app, settings);

@@ -1,5 +1,6 @@
 import { type IncomingMessage, STATUS_CODES } from 'node:http';
 import type { Duplex } from 'node:stream';
+import { CLOSE_CODES } from '../../protocol/close-codes.js';
 import { type Failure, fail } from '../../protocol/failure.js';
 import { linkServer } from '../../protocol/link/websocket.js';
 import { PROBLEM_TYPE, problemOf, problemText } from './problem.js';
@@ -11,7 +12,8 @@ export const LINK_PATH = '/v1/site';
 /** Upgrades requests of workers: the path, the token and the room are checked before a byte of WebSocket is spoken. */
 export function upgradeHandler(hub: SiteHub, tokens: Tokens, linksMost: number) {
   const server = linkServer();
-  const sockets = new Set<Duplex>();
+  /** Per open connection: closes its link where its token has been voided or has expired since. */
+  const sockets = new Map<Duplex, () => void>();
   const full = fail('coordinator-full', `${linksMost} workers are linked already.`);
   return {
     handle(request: IncomingMessage, socket: Duplex, head: Buffer): void {
@@ -20,13 +22,25 @@ export function upgradeHandler(hub: SiteHub, tokens: Tokens, linksMost: number) 
         refuse(socket, checked.failure);
         return;
       }
-      sockets.add(socket);
+      sockets.set(socket, () => {});
       socket.once('close', () => sockets.delete(socket));
-      server.upgrade(request, socket, head, (link) => hub.add(link, checked.value));
+      server.upgrade(request, socket, head, (link) => {
+        sockets.set(socket, () => {
+          const still = siteOf(request, tokens);
+          if (!still.ok && still.failure.code === 'token-refused') {
+            link.close(CLOSE_CODES.tokenRefused, still.failure.message);
+          }
+        });
+        hub.add(link, checked.value);
+      });
+    },
+    /** Closes the links whose tokens are good no longer. */
+    recheck(): void {
+      for (const closeIfRefused of sockets.values()) closeIfRefused();
     },
     /** Breaks the connections whose peers do not take part in the closing handshake. */
     breakAll(): void {
-      for (const socket of sockets) socket.destroy();
+      for (const socket of sockets.keys()) socket.destroy();
     },
   };
 }

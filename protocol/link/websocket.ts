@@ -10,6 +10,7 @@ import { LIMITS } from '../limits.js';
 import type { ToCoordinator } from '../messages/to-coordinator.js';
 import type { ToWorker } from '../messages/to-worker.js';
 import { SUBPROTOCOL } from '../version.js';
+import { untrustedReason } from './certificate.js';
 import { closeCodeOf, closeReason } from './ending.js';
 import type { Link } from './link.js';
 
@@ -179,7 +180,8 @@ export function linkServer(): LinkServer {
 /**
  * A worker's link to its coordinator. `url` is ws: or wss:, `token` goes into the Authorization header of the upgrade
  * (RFC 6750, section 2.1), `ca` is the PEM text of the authority to trust instead of the system's. Codes:
- * `token-refused` (HTTP 401, 403), `version-unsupported` (no common subprotocol), `link-lost` (anything else).
+ * `token-refused` (HTTP 401, 403), `version-unsupported` (no common subprotocol), `certificate-untrusted`, `link-lost`
+ * (anything else).
  */
 export function connectLink(options: {
   url: string;
@@ -198,13 +200,13 @@ export function connectLink(options: {
       agreed = response.headers['sec-websocket-protocol'] === SUBPROTOCOL;
     });
     socket.once('unexpected-response', (request, response) => {
-      resolve(refusedUpgrade(response.statusCode ?? 0));
-      request.destroy();
+      void refusedUpgrade(response).then((refused) => {
+        resolve(refused);
+        request.destroy();
+      });
     });
     socket.on('error', (error: NodeJS.ErrnoException) => {
-      resolve(
-        agreed ? fail('link-lost', `No link to ${options.url}: ${reasonOf(error)}.`) : noCommonVersion(),
-      );
+      resolve(agreed ? notLinked(options.url, error) : noCommonVersion());
     });
     socket.once('open', () => {
       resolve(succeed(websocketLink<ToCoordinator, ToWorker>(socket, decodeToWorker)));
@@ -229,14 +231,44 @@ function startSocket(options: { url: string; token: string; ca?: string }): Chec
   }
 }
 
-function refusedUpgrade(status: number): Checked<never> {
+function notLinked(url: string, error: NodeJS.ErrnoException): Checked<never> {
+  const untrusted = untrustedReason(error);
+  if (untrusted === null) return fail('link-lost', `No link to ${url}: ${reasonOf(error)}.`);
+  return fail('certificate-untrusted', `The certificate of ${url} is not trusted: ${untrusted}.`, {
+    remedy: 'Name the certificate of its authority as `ca-file`, or have the analyst renew the certificate.',
+  });
+}
+
+async function refusedUpgrade(response: IncomingMessage): Promise<Checked<never>> {
+  const status = response.statusCode ?? 0;
   if (status === 401 || status === 403) {
+    const said = await problemDetail(response);
+    if (said !== null) return fail('token-refused', `The coordinator refused the token: ${said}`);
     return fail('token-refused', `The coordinator refused the token (HTTP ${status}).`, {
       remedy: 'Ask the analyst for a token of this site.',
     });
   }
   if (status === 426) return noCommonVersion();
   return fail('link-lost', `The address answered with HTTP ${status} instead of a link.`);
+}
+
+/** More than a coordinator's problem details take. */
+const PROBLEM_BYTES_MOST = 4096;
+
+/** The `detail` of a problem (RFC 9457), fit to be shown on a terminal; null where the reply is none. */
+async function problemDetail(response: IncomingMessage): Promise<string | null> {
+  let body = '';
+  try {
+    for await (const piece of response) {
+      body += String(piece);
+      if (body.length > PROBLEM_BYTES_MOST) return null;
+    }
+    const { detail } = JSON.parse(body) as { detail?: unknown };
+    return typeof detail === 'string' && /^[\P{C}]{1,500}$/u.test(detail) ? detail : null;
+  } catch {
+    // A reply that breaks off or is no JSON says nothing; the status has said that the token is refused.
+    return null;
+  }
 }
 
 function noCommonVersion(): Checked<never> {

@@ -1,7 +1,7 @@
 import { createHash } from 'node:crypto';
 import { type Checked, fail, succeed } from '../failure.js';
 import { specificationOf } from './parse.js';
-import type { FitSpecification, Penalty, Term } from './types.js';
+import type { FitSpecification, LossForm, Penalty, Term } from './types.js';
 
 /**
  * The canonical form: the fit specification as one line of JSON after RFC 8785, keys sorted by code unit at every depth
@@ -45,7 +45,7 @@ function documentOf(specification: FitSpecification): Record<string, unknown> {
     sites: specification.sites,
     missing: specification.missing,
     response: { column: response.column, positive: response.positive ?? undefined },
-    loss: specification.loss,
+    loss: writtenLossOf(specification.loss),
     ...(offset === null ? {} : { [offset.kind]: { column: offset.column } }),
     weights: weights === null ? undefined : { column: weights.column },
     intercept: specification.intercept,
@@ -61,6 +61,9 @@ function documentOf(specification: FitSpecification): Record<string, unknown> {
     },
   };
 }
+
+const writtenLossOf = (loss: LossForm): unknown =>
+  loss.kind === 'huber' ? { kind: loss.kind, threshold: loss.threshold } : loss.kind;
 
 function writtenTermOf(term: Term): Record<string, unknown> {
   if (term.kind === 'product') return { product: term.factors.map((factor) => factor.name) };

@@ -41,9 +41,9 @@ function checkOffsets(document: Partial<FitDocument>, complain: Complain): void 
   if (
     document.response?.positive !== undefined &&
     document.loss !== undefined &&
-    document.loss !== 'logistic'
+    document.loss.kind !== 'logistic'
   ) {
-    const message = `Found a positive value with the loss ${document.loss}; allowed: only with logistic.`;
+    const message = `Found a positive value with the loss ${document.loss.kind}; allowed: only with logistic.`;
     complain(['response', 'positive'], 'field-conflict', message, 'Remove it, or use the logistic loss.');
   }
 }

@@ -10,12 +10,14 @@ import {
   notBuilt,
   notBuiltField,
   numberFrom,
+  refused,
   siteName,
   wholeFrom,
   words,
   wordsBuilt,
 } from './fields.js';
 import { writtenTerm } from './schema-terms.js';
+import type { LossForm } from './types.js';
 
 /**
  * The fit specification as it is written, field by field. Parts of the format that this version cannot do are known
@@ -40,21 +42,37 @@ const response = chosen((input) =>
       }),
 );
 
-const LOSSES_NOT_BUILT = {
+const LOSSES_NOT_BUILT: Readonly<Record<string, string>> = {
   gamma: 'Gamma losses are',
-  huber: 'Huber losses are',
   quantile: 'Quantile losses are',
   multinomial: 'Multinomial losses are',
   hinge: 'Hinge losses are',
   cox: 'Cox losses are',
 };
 
-const loss = chosen((input): z.ZodType<'squared' | 'logistic' | 'poisson'> => {
+const lossAllowed = 'squared, logistic, poisson or {kind: huber, threshold: …}';
+const thresholdAllowed = 'a number above 0, in units of the response';
+
+const huberLoss = mapping({
+  kind: z.literal('huber'),
+  /** Residual, in units of the response, beyond which the loss grows in proportion. No default. */
+  threshold: z.number({ error: thresholdAllowed }).gt(0, { error: thresholdAllowed }),
+}).transform(({ kind, threshold }) => ({ kind, threshold }));
+
+const loss = chosen((input): z.ZodType<LossForm> => {
   const kind = isMapping(input) ? input.kind : input;
-  if (isMapping(input) && (kind === 'huber' || kind === 'quantile')) {
-    return notBuilt(LOSSES_NOT_BUILT[kind], 'Use one of squared, logistic, poisson.');
+  if (kind === 'huber') {
+    const message = `The field "threshold" is missing; allowed: ${thresholdAllowed}.`;
+    return isMapping(input)
+      ? huberLoss
+      : refused('field-missing', message, 'Write {kind: huber, threshold: …}.');
   }
-  return wordsBuilt(['squared', 'logistic', 'poisson'], LOSSES_NOT_BUILT);
+  if (typeof kind === 'string' && Object.hasOwn(LOSSES_NOT_BUILT, kind)) {
+    return notBuilt(LOSSES_NOT_BUILT[kind], `Use one of ${lossAllowed}.`);
+  }
+  return z
+    .enum(['squared', 'logistic', 'poisson'], { error: lossAllowed })
+    .transform((plain) => ({ kind: plain }));
 });
 
 /** A number, or a list: one fit each. */

@@ -8,7 +8,7 @@ export interface FitSpecification {
   readonly sites: readonly string[] | { readonly least: number };
   readonly missing: 'refuse' | 'drop';
   readonly response: { readonly column: string; readonly positive: string | null };
-  readonly loss: LossName;
+  readonly loss: LossForm;
   /** Offset of the linear predictor: ln(exposure) or a column as it is. At most one. */
   readonly offset: { readonly kind: 'exposure' | 'offset'; readonly column: string } | null;
   readonly weights: { readonly column: string } | null;
@@ -26,7 +26,11 @@ export interface FitSpecification {
   };
 }
 
-export type LossName = 'squared' | 'logistic' | 'poisson';
+/** A loss with what it needs; Huber's threshold is positive, in units of the response. */
+export type LossForm =
+  | { readonly kind: 'squared' | 'logistic' | 'poisson' }
+  | { readonly kind: 'huber'; readonly threshold: number };
+export type LossKind = LossForm['kind'];
 export type RungLimit = 'highest' | 'pooled' | 'curvature' | 'sketched' | 'proximal';
 export type Transform = 'none' | 'log' | 'sqrt' | { readonly power: number };
 

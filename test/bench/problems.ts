@@ -1,5 +1,6 @@
 import { noPenalty, type Penalty } from '../../coordinator/consensus/penalty.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
+import type { LossKind } from '../../protocol/specification/types.js';
 import type { Shard } from '../../worker/design/shard.js';
 
 /** One problem of the suite: rows already in solver columns (column 0 the intercept), split over sites. */
@@ -13,7 +14,6 @@ export interface BenchProblem {
   readonly start: Float64Array;
 }
 
-export type LossKind = 'squared' | 'logistic' | 'poisson' | 'huber';
 export type DesignKind = 'well' | 'correlated' | 'small' | 'scales' | 'levels' | 'few' | 'wide' | 'extreme';
 export type PenaltyKind = 'none' | 'ridge' | 'weak-ridge' | 'lasso' | 'elastic-net' | 'box';
 export type SplitKind = 'random' | 'by-response' | 'by-covariate' | 'sizes' | 'sizes-by-response';
@@ -114,7 +114,7 @@ export function makeProblem(name: string): BenchProblem {
 }
 
 /** FNV-1a: a seed from a name, so that adding a problem does not change another. */
-function seedOf(name: string): number {
+export function seedOf(name: string): number {
   let hash = 2166136261;
   for (const byte of new TextEncoder().encode(name)) hash = Math.imul(hash ^ byte, 16777619);
   return hash >>> 0;

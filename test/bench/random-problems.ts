@@ -1,23 +1,56 @@
 import { noPenalty } from '../../coordinator/consensus/penalty.js';
 import { seededRandom } from '../../numerics/random.js';
+import type { LossKind } from '../../protocol/specification/types.js';
 import type { Shard } from '../../worker/design/shard.js';
 import {
   type BenchProblem,
   drawColumns,
   drawResponse,
   interceptOnly,
-  type LossKind,
   linearPredictor,
   splitRows,
   standardised,
   takeRows,
 } from './problems.js';
 
+/** [l1, l2, half width of the box] of every column but the intercept. */
+const SHRINKAGE = {
+  lasso: [0.01, 0, Number.POSITIVE_INFINITY],
+  ridge: [0, 0.01, Number.POSITIVE_INFINITY],
+  'weak-ridge': [0, 1e-3, Number.POSITIVE_INFINITY],
+  'elastic-net': [0.005, 0.01, Number.POSITIVE_INFINITY],
+  box: [0, 0, 0.2],
+  none: [0, 0, Number.POSITIVE_INFINITY],
+} as const;
+
+interface Choice {
+  readonly losses: readonly LossKind[];
+  readonly shrinkages: readonly (keyof typeof SHRINKAGE)[];
+}
+
+/** Penalised, so that an optimum exists. */
+const PENALISED: Choice = {
+  losses: ['squared', 'logistic', 'poisson'],
+  shrinkages: ['lasso', 'ridge', 'weak-ridge', 'elastic-net'],
+};
+
+/** Everything: some of these problems have no optimum, or more than one. */
+const ANY: Choice = {
+  losses: ['squared', 'logistic', 'poisson', 'huber'],
+  shrinkages: [...PENALISED.shrinkages, 'box', 'none'],
+};
+
 /** A random problem from its seed: every loss, penalty, split, correlation, site count, indicator columns among them. */
-export function makeRandomProblem(seed: number, loss?: LossKind): BenchProblem {
+export const makeRandomProblem = (seed: number, loss?: LossKind): BenchProblem =>
+  drawProblem(seed, loss === undefined ? PENALISED : { ...PENALISED, losses: [loss] }, loss === undefined);
+
+/** The same with Huber's loss, boxes and no penalty at all among them. */
+export const makeFuzzProblem = (seed: number): BenchProblem => drawProblem(seed, ANY, true);
+
+function drawProblem(seed: number, { losses, shrinkages }: Choice, drawsLoss: boolean): BenchProblem {
   const random = seededRandom(seed);
   const pick = <T>(values: readonly T[]): T => values[random.integer(values.length)];
-  const kind = loss ?? pick<LossKind>(['squared', 'logistic', 'poisson']);
+  const kind = drawsLoss ? pick(losses) : losses[0];
   const columns = 2 + random.integer(11);
   const sites = pick([2, 3, 4, 8]);
   const rows = pick([80, 150, 300]);
@@ -33,15 +66,12 @@ export function makeRandomProblem(seed: number, loss?: LossKind): BenchProblem {
   y[1] = 0;
   const pooled: Shard = { rowCount: rows, p, x, y, weights: null, offset, rowCountTotal: rows };
   const penalty = noPenalty(p);
-  const shrink = pick(['lasso', 'ridge', 'weak-ridge', 'elastic-net'] as const);
-  const [l1, l2] = {
-    lasso: [0.01, 0],
-    ridge: [0, 0.01],
-    'weak-ridge': [0, 1e-3],
-    'elastic-net': [0.005, 0.01],
-  }[shrink];
+  const shrink = pick(shrinkages);
+  const [l1, l2, width] = SHRINKAGE[shrink];
   penalty.l1.fill(l1, 1);
   penalty.l2.fill(l2, 1);
+  penalty.lower.fill(-width, 1);
+  penalty.upper.fill(width, 1);
   const split = pick(['random', 'by-response', 'by-covariate', 'sizes', 'sizes-by-response'] as const);
   const parts = splitRows(random, split, sites, y, x, p).filter((part) => part.length > 0);
   return {

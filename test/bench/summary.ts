@@ -1,4 +1,4 @@
-import type { MethodName, Row } from './measure.js';
+import { isBaseline, type MethodName, type Row } from './measure.js';
 
 /** Median, 90 % and worst of the rounds to 1e-8 and 1e-6, numbers sent, failures: one block per method. */
 export function summarise(rows: readonly Row[], methods: readonly MethodName[]): string {
@@ -12,13 +12,15 @@ export function summarise(rows: readonly Row[], methods: readonly MethodName[]):
       `  to 1e-6: ${spread(own.map((row) => row.rounds['1e-6']))}; to 1e-8: ${spread(own.map((row) => row.rounds['1e-8']))}`,
       `  numbers a site sends: ${quantile(traffic, 0.5)} median, ${Math.max(...traffic)} most` +
         (gaps.length > 0 ? `; worst true gap ${Math.max(...gaps).toExponential(1)}` : ''),
-      `  failures ${own.filter((row) => row.failure !== null).length}, certificates contradicted ${own.filter((row) => row.contradicted).length}`,
+      isBaseline(method)
+        ? `  uncertified, stopped by the true gap; not there in 500 rounds: ${own.filter((row) => row.failure !== null).length}`
+        : `  failures ${own.filter((row) => row.failure !== null).length}, certificates contradicted ${own.filter((row) => row.contradicted).length}`,
     ];
   });
   return lines.join('\n');
 }
 
-function spread(rounds: readonly (number | null)[]): string {
+export function spread(rounds: readonly (number | null)[]): string {
   const sorted = rounds.map((count) => count ?? Number.POSITIVE_INFINITY);
   const word = (value: number): string => (Number.isFinite(value) ? String(value) : 'never');
   return `${word(quantile(sorted, 0.5))} median, ${word(quantile(sorted, 0.9))} in nine of ten, ${word(Math.max(...sorted))} worst`;

@@ -118,7 +118,7 @@ describe.each([
     const atWorker = listen(worker);
     const point = Float64Array.from([1, 2]);
     const work = { work: 'evaluate' as const, problem: 0, points: [{ point, want: 'value' as const }] };
-    coordinator.send({ ...ask, work: [{ ...work, ownFit: null }] });
+    coordinator.send({ ...ask, work: [{ ...work, ownFit: null, sketch: null }] });
     point.fill(9);
     await atWorker.until(1);
     expect(atWorker.messages[0]).toMatchObject({
@@ -201,7 +201,7 @@ describe.each([
     listen(coordinator);
     const point = new Float64Array(2 ** 17);
     const work = { work: 'evaluate' as const, problem: 0, points: [{ point, want: 'value' as const }] };
-    expect(coordinator.send({ ...ask, work: [{ ...work, ownFit: null }] })).toBe(false);
+    expect(coordinator.send({ ...ask, work: [{ ...work, ownFit: null, sketch: null }] })).toBe(false);
     await atWorker.closed;
     expect(atWorker.closings).toMatchObject([{ code: CLOSE_CODES.frameTooLarge }]);
     expect(coordinator.bytesSent).toBe(0);
@@ -211,7 +211,7 @@ describe.each([
     const { coordinator, worker } = await opened();
     const point = new Float64Array(2 ** 16);
     const work = { work: 'evaluate' as const, problem: 0, points: [{ point, want: 'value' as const }] };
-    const large: ToWorker = { ...ask, work: [{ ...work, ownFit: null }] };
+    const large: ToWorker = { ...ask, work: [{ ...work, ownFit: null, sketch: null }] };
     let sent = 0;
     while (sent < 200 && coordinator.send(large)) sent++;
     expect(sent).toBeGreaterThanOrEqual(7);

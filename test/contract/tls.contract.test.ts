@@ -47,14 +47,14 @@ describe('TLS', () => {
   test('no link where nobody vouches for the certificate', async () => {
     expect(await connectLink({ url: await serveTls(), token: 't' })).toMatchObject({
       ok: false,
-      failure: { code: 'link-lost', message: expect.stringContaining('self-signed certificate') },
+      failure: { code: 'certificate-untrusted', message: expect.stringContaining('self-signed certificate') },
     });
   });
 
   test('no link where the authority is no certificate', async () => {
     expect(await connectLink({ url: await serveTls(), token: 't', ca: 'not a certificate' })).toMatchObject({
       ok: false,
-      failure: { code: 'link-lost' },
+      failure: { code: 'certificate-untrusted' },
     });
   });
 });

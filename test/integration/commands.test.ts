@@ -55,7 +55,7 @@ penalty:
   - {kind: ridge, lambda: 0.01, per-term: {age_years: 0}}
 `;
 
-const COMMANDS = 'check rehearse serve admit submit watch runs result cancel demo'.split(' ');
+const COMMANDS = 'check rehearse serve admit submit watch runs result cancel replay demo'.split(' ');
 
 describe.concurrent('help', () => {
   test.each(COMMANDS)('%s --help has an example of itself and the exit codes', async (command) => {
@@ -87,6 +87,14 @@ describe.concurrent('the command line', () => {
     [['admit']],
     [['admit', 'harrowmere', '--analyst', 'ines']],
     [['admit', '../harrowmere']],
+    [['admit', 'harrowmere', '--may', 'watch']],
+    [['admit', 'harrowmere', '--expires', '30']],
+    [['admit', 'harrowmere', '--expires', '0d']],
+    [['admit', 'harrowmere', '--revoke', '--expires', '30d']],
+    [['admit', 'harrowmere', '--list']],
+    [['runs', '--url', 'http://coordinator.example']],
+    [['runs', '--ca-file', 'nowhere.pem']],
+    [['replay']],
     [['runs', '--url', 'ftp://127.0.0.1']],
   ])('%j ends with 2 and says why on standard error', async (args) => {
     const { code, stdout, stderr } = await commonfit(args);

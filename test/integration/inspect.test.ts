@@ -88,6 +88,7 @@ describe('inspect', () => {
       [12, true],
       [4, true],
       [7, true],
+      [43, false],
       [13, false],
       [10, false],
     ]);

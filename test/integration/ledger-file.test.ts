@@ -20,7 +20,7 @@ const departure = (ask: number): Departure => ({
   ask,
   kinds: ['gradients'],
   numbers: 3,
-  curvature: { all: 0, problems: new Map() },
+  curvature: { all: 0, problems: new Map(), sketched: new Map() },
   content: 'c'.repeat(64),
 });
 

@@ -1,5 +1,6 @@
 import fc from 'fast-check';
 import { describe, expect, test } from 'vitest';
+import { minimiseByActiveSet } from '../../coordinator/consensus/active-set.js';
 import {
   estimatedCertificate,
   measuredCertificate,
@@ -89,6 +90,28 @@ describe('the consensus step', () => {
     );
   });
 
+  test('a search of the active set finds the same minimiser as coordinate descent, from anywhere', () => {
+    fc.assert(
+      fc.property(seeds, fc.boolean(), (seed, bounded) => {
+        const { g, m, b, p } = randomProblem(seed, bounded);
+        const random = seededRandom(seed + 1);
+        const start = clipToBounds(
+          g,
+          Float64Array.from({ length: p }, () => random.normal()),
+        );
+        const z = minimiseByActiveSet(g, m, b, start);
+        const twin = minimiseQuadratic(g, m, b, new Float64Array(p));
+        if (z === null || twin === null) throw new Error('the metric is positive definite');
+        const slope = symmetricTimes(m, z).map((value, j) => value - b[j]);
+        expect(maxAbs(leastSubgradient(g, z, slope))).toBeLessThan(1e-9);
+        expect(clipToBounds(g, z)).toEqual(z);
+        expect(Math.abs(objective(g, m, b, z) - objective(g, m, b, twin))).toBeLessThanOrEqual(
+          1e-12 * (1 + Math.abs(objective(g, m, b, twin))),
+        );
+      }),
+    );
+  });
+
   test('with a diagonal metric is the full step on that diagonal', () => {
     fc.assert(
       fc.property(seeds, (seed) => {
@@ -165,7 +188,13 @@ describe('certificates on a quadratic, whose gap is known exactly', () => {
         const step = modelStep(g, m, gradient, z);
         if (best === null || step === null) throw new Error('the metric is positive definite');
         const gap = objective(g, m, b, z) - objective(g, m, b, best);
-        const certificate = measuredCertificate(g, z, gradient, step.decrement, objective(g, m, b, z));
+        const certificate = measuredCertificate(
+          { penalty: g, curvatureMayVanish: false },
+          z,
+          gradient,
+          step.decrement,
+          objective(g, m, b, z),
+        );
         expect(certificate.gap).toBeGreaterThanOrEqual(gap * (1 - 1e-9));
         expect(certificate.gap).toBeLessThanOrEqual(1.5 * gap * (1 + 1e-6) + 1e-12);
       }),
@@ -176,10 +205,25 @@ describe('certificates on a quadratic, whose gap is known exactly', () => {
     const g = noPenalty(2);
     const z = Float64Array.of(1, -1);
     // ½(2 z₁² + 3 z₂²): gap 2.5 at z, gradient (2, −3)
-    const certificate = estimatedCertificate(g, z, Float64Array.of(2, -3), Float64Array.of(2, 3), 2.5);
+    const certificate = estimatedCertificate(
+      g,
+      z,
+      Float64Array.of(2, -3),
+      Float64Array.of(2, 3),
+      null,
+      2.5,
+      2.5,
+    );
     expect(certificate.kind).toBe('estimate');
     expect(certificate.gap).toBeCloseTo(75, 12);
     expect(certificate.kkt).toBe(3);
+  });
+
+  test('the estimate is raised to ten times the decrement under learned models', () => {
+    const z = Float64Array.of(1, -1);
+    const [gradient, diagonal] = [Float64Array.of(2, -3), Float64Array.of(2, 3)];
+    expect(estimatedCertificate(noPenalty(2), z, gradient, diagonal, 40, 2.5, 2.5).gap).toBe(400);
+    expect(estimatedCertificate(noPenalty(2), z, gradient, diagonal, 4, 2.5, 2.5).gap).toBeCloseTo(75, 12);
   });
 });
 

@@ -4,7 +4,7 @@ import { designColumns } from '../../protocol/specification/design-columns.js';
 import type { LevelsTerm, NumericTerm, Term, Transform } from '../../protocol/specification/types.js';
 import { buildRawShard } from '../../worker/design/build.js';
 import { surveyOf } from '../../worker/design/survey.js';
-import { lossNamed } from '../../worker/losses/index.js';
+import { lossOf } from '../../worker/losses/index.js';
 import { levelsTerm, numericTerm, specification, table } from '../support/designs.js';
 import { soundValue } from '../support/tables.js';
 
@@ -104,7 +104,7 @@ describe('the design', () => {
         (values, shift) => {
           const spec = specification({ terms: [numericTerm('a')] });
           const data = table({ y: values, a: values.map((value) => value + shift) });
-          const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossNamed('squared'));
+          const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossOf({ kind: 'squared' }));
           // integers: n Σv² − (Σv)² is exact, and no shift changes it
           const n = values.length;
           const sum = values.reduce((total, value) => total + value, 0);

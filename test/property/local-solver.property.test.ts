@@ -4,19 +4,24 @@ import { unpackSymmetric } from '../../numerics/packed.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
 import { mergeFactors, triangularFactor } from '../../numerics/triangular-factor.js';
 import type { Checked } from '../../protocol/failure.js';
-import type { LossName } from '../../protocol/specification/types.js';
+import type { LossForm } from '../../protocol/specification/types.js';
 import type { Shard } from '../../worker/design/shard.js';
 import { localSolver } from '../../worker/local/local-solver.js';
-import { lossNamed } from '../../worker/losses/index.js';
+import { lossOf } from '../../worker/losses/index.js';
 import type { Loss } from '../../worker/losses/loss.js';
 
-const LOSS_NAMES: readonly LossName[] = ['squared', 'logistic', 'poisson'];
+const LOSSES: readonly LossForm[] = [
+  { kind: 'squared' },
+  { kind: 'logistic' },
+  { kind: 'poisson' },
+  { kind: 'huber', threshold: 0.7 },
+];
 
 interface Case {
   readonly seed: number;
   readonly rowCount: number;
   readonly p: number;
-  readonly loss: LossName;
+  readonly loss: LossForm;
   readonly weighted: boolean;
   readonly shifted: boolean;
 }
@@ -26,7 +31,7 @@ const caseOf = (rows: [number, number], columns: [number, number]) =>
     seed: fc.integer({ min: 1, max: 1e9 }),
     rowCount: fc.integer({ min: rows[0], max: rows[1] }),
     p: fc.integer({ min: columns[0], max: columns[1] }),
-    loss: fc.constantFrom(...LOSS_NAMES),
+    loss: fc.constantFrom(...LOSSES),
     weighted: fc.boolean(),
     shifted: fc.boolean(),
   });
@@ -48,9 +53,9 @@ function shardOf(given: Case, random: Random): Shard {
   const y = Float64Array.from({ length: rowCount }, (_, r) => {
     let eta = 0;
     for (let j = 0; j < p; j++) eta += x[r * p + j] * truth[j];
-    if (loss === 'squared') return eta + random.normal();
-    return loss === 'logistic'
-      ? Number(random.uniform() < lossNamed('logistic').mean(eta))
+    if (loss.kind === 'squared' || loss.kind === 'huber') return eta + random.normal();
+    return loss.kind === 'logistic'
+      ? Number(random.uniform() < lossOf({ kind: 'logistic' }).mean(eta))
       : random.poisson(Math.exp(Math.min(eta, 4)));
   });
   return {
@@ -120,7 +125,7 @@ describe('proximal', () => {
       fc.property(anyCase, (given) => {
         const random = seededRandom(given.seed);
         const shard = shardOf(given, random);
-        const loss = lossNamed(given.loss);
+        const loss = lossOf(given.loss);
         const { center, scale, diagonal, start } = problemOf(shard, random);
         const { point, newtonSteps } = expectOk(
           localSolver(shard, loss).proximal(center, scale, diagonal, start),
@@ -143,7 +148,7 @@ describe('proximal', () => {
       fc.property(caseOf([1, 10], [21, 40]), (given) => {
         const random = seededRandom(given.seed);
         const few = shardOf(given, random);
-        const loss = lossNamed(given.loss);
+        const loss = lossOf(given.loss);
         // every row written many times over at a share of its weight: the same φ, but more rows than columns
         const copies = Math.ceil(given.p / given.rowCount);
         const repeat = (values: Float64Array): Float64Array =>
@@ -170,7 +175,7 @@ describe('proximal', () => {
       fc.property(fc.oneof(caseOf([20, 60], [1, 6]), caseOf([1, 10], [21, 40])), (given) => {
         const random = seededRandom(given.seed);
         const shard = shardOf(given, random);
-        const solver = localSolver(shard, lossNamed(given.loss));
+        const solver = localSolver(shard, lossOf(given.loss));
         const { center, diagonal } = problemOf(shard, random);
         const near = expectOk(solver.proximal(center, 0.1, diagonal, center));
         const far = expectOk(solver.proximal(center, 0.1, diagonal, normals(random, shard.p, 3)));
@@ -182,12 +187,12 @@ describe('proximal', () => {
 
   test('a metric that is not positive is refused', () => {
     const shard = shardOf(
-      { seed: 5, rowCount: 20, p: 3, loss: 'logistic', weighted: false, shifted: false },
+      { seed: 5, rowCount: 20, p: 3, loss: { kind: 'logistic' }, weighted: false, shifted: false },
       seededRandom(5),
     );
     const zero = new Float64Array(3);
-    for (const name of LOSS_NAMES) {
-      const answer = localSolver(shard, lossNamed(name)).proximal(zero, 1, Float64Array.of(1, 0, 1), zero);
+    for (const loss of LOSSES) {
+      const answer = localSolver(shard, lossOf(loss)).proximal(zero, 1, Float64Array.of(1, 0, 1), zero);
       expect(answer).toMatchObject({ ok: false, failure: { code: 'not-positive-definite' } });
     }
   });
@@ -199,7 +204,7 @@ describe('evaluate', () => {
       fc.property(anyCase, (given) => {
         const random = seededRandom(given.seed);
         const shard = shardOf(given, random);
-        const loss = lossNamed(given.loss);
+        const loss = lossOf(given.loss);
         const point = normals(random, shard.p, 0.5);
         const wanted = naive(shard, loss, point);
         const got = expectOk(localSolver(shard, loss).evaluate(point, 'curvature'));
@@ -216,10 +221,10 @@ describe('evaluate', () => {
   test('gives what is wanted and what comes before it, with the same bits', () => {
     const random = seededRandom(11);
     const shard = shardOf(
-      { seed: 11, rowCount: 70, p: 5, loss: 'poisson', weighted: true, shifted: true },
+      { seed: 11, rowCount: 70, p: 5, loss: { kind: 'poisson' }, weighted: true, shifted: true },
       random,
     );
-    const solver = localSolver(shard, lossNamed('poisson'));
+    const solver = localSolver(shard, lossOf({ kind: 'poisson' }));
     const point = normals(random, 5, 0.5);
     const all = expectOk(solver.evaluate(point, 'curvature'));
     expect(solver.evaluate(point, 'value')).toEqual({
@@ -241,15 +246,17 @@ describe('evaluate', () => {
       rowCountTotal: 2,
     };
     const far = Float64Array.of(1e160);
-    expect(expectOk(localSolver(shard, lossNamed('squared')).evaluate(far, 'gradient')).value).toBe(1e300);
+    expect(expectOk(localSolver(shard, lossOf({ kind: 'squared' })).evaluate(far, 'gradient')).value).toBe(
+      1e300,
+    );
     const poisson = expectOk(
-      localSolver(shard, lossNamed('poisson')).evaluate(Float64Array.of(900), 'curvature'),
+      localSolver(shard, lossOf({ kind: 'poisson' })).evaluate(Float64Array.of(900), 'curvature'),
     );
     expect(poisson.value).toBeGreaterThan(1e129);
     expect(poisson.curvature!.every(Number.isFinite)).toBe(true);
     const doubled: Shard = { ...shard, x: Float64Array.of(10, -10) };
     expect(
-      localSolver(doubled, lossNamed('poisson')).evaluate(Float64Array.of(1e308), 'value'),
+      localSolver(doubled, lossOf({ kind: 'poisson' })).evaluate(Float64Array.of(1e308), 'value'),
     ).toMatchObject({
       ok: false,
       failure: { code: 'number-not-finite' },
@@ -263,7 +270,7 @@ describe('ownFit', () => {
       fc.property(caseOf([1, 60], [1, 8]), fc.constantFrom(0.1, 0.3, 2), (given, hold) => {
         const random = seededRandom(given.seed);
         const shard = shardOf(given, random);
-        const loss = lossNamed(given.loss);
+        const loss = lossOf(given.loss);
         const { p } = shard;
         const solver = localSolver(shard, loss);
         const point = normals(random, p, 0.3);
@@ -287,13 +294,38 @@ describe('ownFit', () => {
   });
 });
 
+describe('sketch', () => {
+  test('is the curvature at the point times the directions, column by column', () => {
+    fc.assert(
+      fc.property(caseOf([1, 200], [1, 8]), fc.integer({ min: 1, max: 5 }), (given, columns) => {
+        const random = seededRandom(given.seed);
+        const shard = shardOf(given, random);
+        const loss = lossOf(given.loss);
+        const { p } = shard;
+        const point = normals(random, p, 0.3);
+        const directions = normals(random, columns * p, 1);
+        const { curvature } = naive(shard, loss, point);
+        const wanted = directions.map((_, at) => {
+          const column = at - (at % p);
+          let sum = 0;
+          for (let j = 0; j < p; j++) sum += curvature[(at % p) * p + j] * directions[column + j];
+          return sum;
+        });
+        const got = expectOk(localSolver(shard, loss).sketch(point, directions, columns));
+        expectNear(got, wanted, 1e-11, p * largest(curvature) * largest(directions));
+      }),
+      { numRuns: 150 },
+    );
+  });
+});
+
 describe('repetition', () => {
   test('an answer has the same bits whatever was asked before', () => {
     fc.assert(
       fc.property(anyCase, (given) => {
         const random = seededRandom(given.seed);
         const shard = shardOf(given, random);
-        const loss = lossNamed(given.loss);
+        const loss = lossOf(given.loss);
         const first = problemOf(shard, random);
         const others = Array.from({ length: 10 }, () => problemOf(shard, random));
         const busy = localSolver(shard, loss);
@@ -301,6 +333,7 @@ describe('repetition', () => {
           solver.proximal(first.center, first.scale, first.diagonal, first.start),
           solver.evaluate(first.center, 'curvature'),
           solver.ownFit(first.center, 0.3),
+          solver.sketch(first.center, first.start, 1),
           solver.factor(),
         ];
         const before = ask(busy);
@@ -342,7 +375,7 @@ describe('triangular factor', () => {
             for (let j = 0; j < columns; j++) gram[i * columns + j] += weight * row[i] * row[j];
           }
         }
-        const factor = expectOk(localSolver(shard, lossNamed('squared')).factor());
+        const factor = expectOk(localSolver(shard, lossOf({ kind: 'squared' })).factor());
         expectNear(gramOfFactor(factor, columns), gram, 1e-12, largest(gram));
         for (let i = 0; i < columns; i++) expect(factor[(i * (i + 1)) / 2 + i]).toBeGreaterThanOrEqual(0);
       }),

@@ -12,6 +12,7 @@ const reply = (value: number): Reply => [
     problem: 0,
     points: [{ value, gradient: null, diagonal: null, curvature: null }],
     ownFit: null,
+    sketch: null,
   },
 ];
 

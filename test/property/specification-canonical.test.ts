@@ -25,7 +25,13 @@ const documents: fc.Arbitrary<Document> = fc.record(
     sites: fc.uniqueArray(name, { minLength: 1, maxLength: 5 }),
     missing: fc.constantFrom('refuse', 'drop'),
     response: fc.constant({ column: 'y' }),
-    loss: fc.constantFrom('squared', 'poisson', 'logistic'),
+    loss: fc.oneof(
+      fc.constantFrom('squared', 'poisson', 'logistic'),
+      fc.record({
+        kind: fc.constant('huber'),
+        threshold: fc.double({ min: 0, minExcluded: true, max: 1e9, noNaN: true }),
+      }),
+    ),
     weights: fc.constant({ column: 'w' }),
     terms: fc.constant([
       { column: 'x', transform: 'log' },

@@ -5,6 +5,7 @@ import { join } from 'node:path';
 import { promisify } from 'node:util';
 import { afterAll, describe, expect, test } from 'vitest';
 import type { ResultDocument } from '../../coordinator/run/result.js';
+import { fitInProcess } from '../support/in-process-fit.js';
 import { programs } from '../support/programs.js';
 import {
   type ReferenceCase,
@@ -28,28 +29,41 @@ const CASES = [
   'o08_logistic_lasso_birthwt',
   'o09_poisson_offset_insurance',
   'o10_poisson_lasso_quine',
+  'o13_huber_phones',
 ] as const;
+/** What the specifications ask: the coefficients are to have eight digits. */
+const TOLERANCE = 1e-10;
 
 const run = promisify(execFile);
 const scratch = mkdtempSync(join(tmpdir(), 'commonfit-reference-'));
 afterAll(() => rmSync(scratch, { recursive: true, force: true }));
 
-describe.each(CASES)('%s', (name) => {
-  const reference = referenceCase(name);
-  test.skipIf(reference === null)(
-    'comes out of real processes to 1e-6 relative in every coefficient',
-    async () => {
-      if (reference === null) throw new Error('skipped');
-      const result = await rehearse(reference);
-      expect(result.outcome).toBe('solved');
-      const { fits } = reference.description.expected;
-      expect(result.fits).toHaveLength(fits.length);
-      fits.forEach((expected, k) => {
-        compare(result.fits[k], expected, 1e-6);
-      });
-    },
-    60_000,
-  );
+/** One run of each case serves every check of it; two at a time, each with a process for every site. */
+const rehearsals = new Map<string, Promise<ResultDocument>>();
+const lanes: Promise<unknown>[] = [Promise.resolve(), Promise.resolve()];
+function rehearsed(reference: ReferenceCase): Promise<ResultDocument> {
+  const known = rehearsals.get(reference.name);
+  if (known !== undefined) return known;
+  const lane = rehearsals.size % lanes.length;
+  const made = lanes[lane].then(() => rehearse(reference));
+  lanes[lane] = made.catch(() => undefined);
+  rehearsals.set(reference.name, made);
+  return made;
+}
+
+describe('through real processes', () => {
+  for (const name of CASES) {
+    const reference = referenceCase(name);
+    const check = reference === null ? test.skip : test.concurrent;
+    check(
+      `${name} comes out to 1e-8 relative in every coefficient`,
+      async () => {
+        if (reference === null) throw new Error('skipped');
+        compare(await rehearsed(reference), reference, 1e-8);
+      },
+      120_000,
+    );
+  }
 });
 
 describe('NIST certified digits', () => {
@@ -62,7 +76,7 @@ describe('NIST certified digits', () => {
       const reference = referenceCase(name);
       const certified = reference?.description.tool.certified;
       if (reference === null || certified === undefined) throw new Error(`${name} is shipped with the tests`);
-      const { fits } = await rehearse(reference);
+      const { fits } = await rehearsed(reference);
       const [fit] = fits;
       for (const [term, value] of Object.entries(certified.coefficients)) {
         const ours = term === 'intercept' ? fit.intercept : fit.coefficients[term];
@@ -75,10 +89,33 @@ describe('NIST certified digits', () => {
   );
 });
 
+/** Losses that are not quadratic; the others are solved by the first curvature matrix on any rung. */
+const LOWER_RUNGS = CASES.slice(CASES.indexOf('o07_logistic_birthwt')).flatMap((name) => [
+  { name, rung: 'curvature', matrices: 'any number of', curvatureMost: null },
+  { name, rung: 'proximal', matrices: 'any number of', curvatureMost: null },
+  { name, rung: 'proximal', matrices: 'three', curvatureMost: 3 },
+]);
+
+describe('rungs in this process', () => {
+  for (const { name, rung, matrices, curvatureMost } of LOWER_RUNGS) {
+    const reference = referenceCase(name);
+    test.skipIf(reference === null)(
+      `${name} comes out of the rung ${rung} to 1e-6 where ${matrices} matrices may leave`,
+      async () => {
+        if (reference === null) throw new Error('skipped');
+        const text = specificationOf(reference, TOLERANCE, rung);
+        const result = await fitInProcess(text, join(reference.folder, 'data.csv'), curvatureMost);
+        expect(result.rung).toBe(rung);
+        compare(result, reference, 1e-6);
+      },
+    );
+  }
+});
+
 async function rehearse(reference: ReferenceCase): Promise<ResultDocument> {
   const folder = mkdtempSync(join(scratch, `${reference.name}-`));
   const file = join(folder, 'case.fit.yaml');
-  writeFileSync(file, specificationOf(reference, 1e-13));
+  writeFileSync(file, specificationOf(reference, TOLERANCE));
   const out = join(folder, 'out');
   const rows = join(reference.folder, 'data.csv');
   await run(process.execPath, [
@@ -95,8 +132,17 @@ async function rehearse(reference: ReferenceCase): Promise<ResultDocument> {
   return JSON.parse(readFileSync(join(out, 'result.json'), 'utf8')) as ResultDocument;
 }
 
+function compare(result: ResultDocument, { description }: ReferenceCase, tolerance: number): void {
+  const { fits } = description.expected;
+  expect(result.outcome).toBe('solved');
+  expect(result.fits).toHaveLength(fits.length);
+  fits.forEach((expected, k) => {
+    compareFit(result.fits[k], expected, tolerance);
+  });
+}
+
 /** Relative to the value; coefficients that the reference has at exactly zero must be exactly zero. */
-function compare(fit: ResultDocument['fits'][number], expected: ReferenceFit, tolerance: number): void {
+function compareFit(fit: ResultDocument['fits'][number], expected: ReferenceFit, tolerance: number): void {
   const near = (ours: number | null | undefined, value: number, what: string): void => {
     if (ours === null || ours === undefined) throw new Error(`${what} is missing`);
     if (value === 0) expect(ours, what).toBe(0);
@@ -107,5 +153,5 @@ function compare(fit: ResultDocument['fits'][number], expected: ReferenceFit, to
   for (const [term, value] of Object.entries(expected.coefficients))
     near(fit.coefficients[term], value, term);
   near(fit.objective, expected.objective, 'objective');
-  near(fit.deviance, expected.deviance, 'deviance');
+  if (expected.deviance !== undefined) near(fit.deviance, expected.deviance, 'deviance');
 }

@@ -47,6 +47,7 @@ const work: fc.Arbitrary<Work> = fc.oneof(
     problem: count,
     points: some(fc.record({ point: vector, want })),
     ownFit: orNull(fc.record({ at: count, hold: positive })),
+    sketch: orNull(fc.record({ at: count, directions: vector, columns: askNumber })),
   }),
 );
 
@@ -93,6 +94,7 @@ const workAnswer: fc.Arbitrary<WorkAnswer> = fc.oneof(
       }),
     ),
     ownFit: orNull(fc.record({ curvature: vector, linear: vector })),
+    sketch: orNull(vector),
   }),
 );
 

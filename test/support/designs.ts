@@ -12,7 +12,7 @@ export const specification = (partial: Partial<FitSpecification>): FitSpecificat
   sites: ['harrowmere'],
   missing: 'refuse',
   response: { column: 'y', positive: null },
-  loss: 'squared',
+  loss: { kind: 'squared' },
   offset: null,
   weights: null,
   intercept: 'shared',

@@ -1,7 +1,7 @@
 import type { Method, MethodEnd } from '../../coordinator/consensus/method.js';
 import { Lockstep } from '../../coordinator/run/lockstep.js';
 import { numbersDown } from '../../coordinator/run/traffic.js';
-import type { Checked } from '../../protocol/failure.js';
+import type { Checked, Failure } from '../../protocol/failure.js';
 import type { Work, WorkAnswer } from '../../protocol/messages/round.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import type { LocalSolver } from '../../worker/local/local-solver.js';
@@ -28,6 +28,12 @@ export function answerLocally(work: Work, site: LocalSolver): WorkAnswer {
           work.ownFit === null
             ? null
             : must(site.ownFit(work.points[work.ownFit.at].point, work.ownFit.hold)),
+        sketch:
+          work.sketch === null
+            ? null
+            : must(
+                site.sketch(work.points[work.sketch.at].point, work.sketch.directions, work.sketch.columns),
+              ),
       };
     case 'proximal':
       return {
@@ -60,7 +66,14 @@ export function driveMethods(
   return { ends: lockstep.ends, rounds, traffic: { up, down } };
 }
 
+/** A site that could not answer: in a run it would refuse. */
+export class SiteFailure extends Error {
+  constructor(readonly failure: Failure) {
+    super(`${failure.code}: ${failure.message}`);
+  }
+}
+
 export function must<T>(checked: Checked<T>): T {
-  if (!checked.ok) throw new Error(`${checked.failure.code}: ${checked.failure.message}`);
+  if (!checked.ok) throw new SiteFailure(checked.failure);
   return checked.value;
 }

@@ -25,7 +25,7 @@ export interface ReferenceFit {
   readonly intercept: number;
   readonly coefficients: Readonly<Record<string, number>>;
   readonly objective: number;
-  readonly deviance: number;
+  readonly deviance?: number;
 }
 
 export interface ReferenceDescription {
@@ -33,7 +33,7 @@ export interface ReferenceDescription {
   readonly dataset: { readonly published_source: string };
   readonly site: { readonly column: string; readonly counts: Readonly<Record<string, number>> };
   readonly model: {
-    readonly family: 'gaussian' | 'binomial' | 'poisson';
+    readonly family: 'gaussian' | 'binomial' | 'poisson' | 'huber';
     readonly response: string;
     readonly terms: readonly ReferenceTerm[];
     readonly offset?: string;
@@ -44,6 +44,8 @@ export interface ReferenceDescription {
       readonly alpha?: number;
     };
     readonly standardize: boolean;
+    /** Threshold of Huber's loss. */
+    readonly delta?: number;
   };
   readonly tool: {
     readonly certified?: { readonly source: string; readonly coefficients: Readonly<Record<string, number>> };
@@ -71,7 +73,7 @@ export function specificationOf(reference: ReferenceCase, tolerance: number, run
     `title: ${JSON.stringify(description.name)}`,
     `sites: ${JSON.stringify(Object.keys(description.site.counts))}`,
     `response: {column: ${model.response}}`,
-    `loss: ${{ gaussian: 'squared', binomial: 'logistic', poisson: 'poisson' }[model.family]}`,
+    `loss: ${lossOf(model)}`,
     ...(model.offset === undefined ? [] : [`offset: {column: ${model.offset}}`]),
     ...(model.weights === undefined ? [] : [`weights: {column: ${model.weights}}`]),
     'terms:',
@@ -81,6 +83,14 @@ export function specificationOf(reference: ReferenceCase, tolerance: number, run
   ];
   return `${lines.join('\n')}\n`;
 }
+
+const lossOf = ({ family, delta }: ReferenceDescription['model']): string =>
+  ({
+    gaussian: 'squared',
+    binomial: 'logistic',
+    poisson: 'poisson',
+    huber: `{kind: huber, threshold: ${delta}}`,
+  })[family];
 
 function termLines({ folder, description }: ReferenceCase): string[] {
   const seen = new Set<string>();

@@ -11,7 +11,7 @@ export const toySpecification = (sites: FitSpecification['sites']): FitSpecifica
   sites,
   missing: 'refuse',
   response: { column: 'pressure_bar', positive: null },
-  loss: 'squared',
+  loss: { kind: 'squared' },
   offset: null,
   weights: null,
   intercept: 'shared',
@@ -40,6 +40,7 @@ export function* toyRun(specification: FitSpecification, digest: string, roster:
           problem: 0,
           points: [{ point: Float64Array.of(z), want: 'gradient' }],
           ownFit: null,
+          sketch: null,
         },
       ]),
       scaling,
@@ -117,7 +118,7 @@ export function toyAnswer(ask: Ask, mean: number): Answer {
         diagonal: null,
         curvature: null,
       }));
-      return { work: 'evaluate', problem: work.problem, points, ownFit: null };
+      return { work: 'evaluate', problem: work.problem, points, ownFit: null, sketch: null };
     }),
   };
 }

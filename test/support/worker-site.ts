@@ -52,7 +52,7 @@ export const TABLE: Table = {
 export const OPEN_POLICY: Policy = {
   columns: 'any',
   rowsLeast: 1,
-  leave: ['counts', 'moments', 'proximal', 'gradients', 'curvature'],
+  leave: ['counts', 'moments', 'proximal', 'gradients', 'curvature', 'sketches'],
   curvatureMost: 'any',
   numbersMost: 'any',
   roundsMost: 'any',

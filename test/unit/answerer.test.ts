@@ -7,7 +7,7 @@ import { readLedger } from '../../worker/custody/ledger.js';
 import { buildRawShard } from '../../worker/design/build.js';
 import { scaleShard } from '../../worker/design/scale.js';
 import { localSolver } from '../../worker/local/local-solver.js';
-import { lossNamed } from '../../worker/losses/index.js';
+import { lossOf } from '../../worker/losses/index.js';
 import {
   askOf,
   OPEN_POLICY,
@@ -37,6 +37,7 @@ const gradient: Work = {
   problem: 0,
   points: [{ point: vector(-1, 0, 0), want: 'gradient' }],
   ownFit: null,
+  sketch: null,
 };
 const curvature: Work = { ...gradient, points: [{ point: vector(-1, 0, 0), want: 'curvature' }] };
 
@@ -62,15 +63,20 @@ describe('answers', () => {
   test('are what the local solver says on these rows, one for each work item in order', async () => {
     const { answerer } = await siteInMemory();
     answerer.prepare(prepareOf('r1'));
-    const reply = answered(await answerer.answer(askOf('r1', 1, gradient, proximal(fullProblem()))));
+    const sketch = { at: 0, directions: vector(1, 0, 0, 0, 1, -1), columns: 2 };
+    const works = [gradient, proximal(fullProblem()), { ...gradient, sketch }];
+    const reply = answered(await answerer.answer(askOf('r1', 1, ...works)));
     const raw = buildRawShard(specification(), TABLE);
     if (!raw.ok) expect.unreachable(raw.failure.message);
-    const solver = localSolver(scaleShard(raw.value, SCALING, true), lossNamed('poisson'));
+    const solver = localSolver(scaleShard(raw.value, SCALING, true), lossOf({ kind: 'poisson' }));
     const point = solver.proximal(vector(-1, 0.1, 0), 0.3, vector(1, 2, 0.5), vector(0, 0, 0));
     const value = solver.evaluate(vector(-1, 0, 0), 'gradient');
+    const products = solver.sketch(vector(-1, 0, 0), sketch.directions, 2);
+    const evaluated = { work: 'evaluate', problem: 0, points: [value.ok && value.value], ownFit: null };
     expect(reply.work).toEqual([
-      { work: 'evaluate', problem: 0, points: [value.ok && value.value], ownFit: null },
+      { ...evaluated, sketch: null },
       { work: 'proximal', problems: [{ problem: 0, ...(point.ok ? point.value : {}) }] },
+      { ...evaluated, sketch: products.ok && products.value },
     ]);
   });
 

@@ -32,6 +32,9 @@ describe('checkAsk', () => {
     [['work', 1, 'problems', 0, 'start'], vector(0)],
     [['work', 2, 'points', 3, 'point'], vector(3)],
     [['work', 2, 'ownFit', 'at'], 4],
+    [['work', 2, 'sketch', 'at'], 4],
+    [['work', 2, 'sketch', 'directions'], vector(2)],
+    [['work', 2, 'sketch', 'columns'], 3],
     [['work', 1, 'problems', 1, 'problem'], 0],
   ])('dimension-wrong where %j does not fit', (path, member) => {
     expect(checkAsk(changed(ask, path, member), 2)?.code).toBe('dimension-wrong');
@@ -76,6 +79,8 @@ describe('checkAnswer', () => {
     [['work', 2, 'points', 3, 'curvature'], null],
     [['work', 2, 'ownFit'], null],
     [['work', 3, 'ownFit'], { curvature: vector(3), linear: vector(2) }],
+    [['work', 2, 'sketch'], null],
+    [['work', 3, 'sketch'], vector(2)],
   ])('answer-unasked where %j is not what was asked', (path, member) => {
     const wrong: Answer = changed(answer, path, member);
     expect(checkAnswer(ask, wrong, 2)?.code).toBe('answer-unasked');
@@ -90,6 +95,7 @@ describe('checkAnswer', () => {
     [['work', 2, 'points', 3, 'curvature'], vector(4)],
     [['work', 2, 'ownFit', 'curvature'], vector(2)],
     [['work', 2, 'ownFit', 'linear'], vector(3)],
+    [['work', 2, 'sketch'], vector(2)],
     [['work', 4, 'factor'], vector(3)],
   ])('dimension-wrong where %j has another length', (path, member) => {
     expect(checkAnswer(ask, changed(answer, path, member), 2)?.code).toBe('dimension-wrong');

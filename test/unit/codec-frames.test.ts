@@ -106,7 +106,9 @@ describe('limits', () => {
     const point = { point: new Float64Array(1), want: 'value' as const };
     const asking = (points: number): ToWorker => ({
       ...ask,
-      work: [{ work: 'evaluate', problem: 0, points: new Array(points).fill(point), ownFit: null }],
+      work: [
+        { work: 'evaluate', problem: 0, points: new Array(points).fill(point), ownFit: null, sketch: null },
+      ],
     });
     expect(decodeToWorker(encodeMessage(asking(LIMITS.batchMost))).ok).toBe(true);
     expect(decodeToWorker(encodeMessage(asking(LIMITS.batchMost + 1))).ok).toBe(false);

@@ -35,7 +35,7 @@ describe('reference frames', () => {
 describe('vectors', () => {
   const evaluateAt = (point: Float64Array): ToWorker => ({
     ...ask,
-    work: [{ work: 'evaluate', problem: 0, points: [{ point, want: 'value' }], ownFit: null }],
+    work: [{ work: 'evaluate', problem: 0, points: [{ point, want: 'value' }], ownFit: null, sketch: null }],
   });
 
   test('a view into a larger array is sent as the view alone', () => {
@@ -92,6 +92,7 @@ describe('vectors', () => {
             problem: 0,
             points: [{ point: new Float64Array(1), want: 'value' }],
             ownFit: { at: 0, hold: value },
+            sketch: null,
           },
         ],
       };
@@ -102,7 +103,10 @@ describe('vectors', () => {
   test('minus zero as a single number keeps its sign', () => {
     const point = { value: -0, gradient: null, diagonal: null, curvature: null };
     const decoded = decodeToCoordinator(
-      encodeMessage({ ...answer, work: [{ work: 'evaluate', problem: 0, points: [point], ownFit: null }] }),
+      encodeMessage({
+        ...answer,
+        work: [{ work: 'evaluate', problem: 0, points: [point], ownFit: null, sketch: null }],
+      }),
     );
     if (!decoded.ok || decoded.value.kind !== 'answer' || decoded.value.work[0].work !== 'evaluate') {
       throw new Error('an evaluate answer was expected');

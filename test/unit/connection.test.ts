@@ -22,6 +22,7 @@ const gradientAsk = (ask: number) =>
     problem: 0,
     points: [{ point: Float64Array.of(-1, 0, 0), want: 'gradient' }],
     ownFit: null,
+    sketch: null,
   });
 
 /** Time that stands still until it is told to pass. */
@@ -205,6 +206,26 @@ describe('the end', () => {
   test('a token refused at the upgrade is for good', async () => {
     const { ended } = await worker({ connect: async () => fail('token-refused', 'Refused.') });
     expect((await ended)?.code).toBe('token-refused');
+  });
+
+  test('a certificate that is not trusted is for good at first; once welcomed, a worker waits for a good one', async () => {
+    const untrusted = fail('certificate-untrusted', 'It has expired.');
+    const first = await worker({ connect: async () => untrusted });
+    expect((await first.ended)?.code).toBe('certificate-untrusted');
+
+    let tries = 0;
+    const pair = memoryLinks((run) => queueMicrotask(run));
+    pair.coordinator.onMessage(() => {});
+    const later = await worker({ connect: async () => (tries++ === 0 ? succeed(pair.worker) : untrusted) });
+    pair.coordinator.send(welcome);
+    await settle();
+    pair.coordinator.close(CLOSE_CODES.goingAway, '');
+    await settle();
+    later.timers.waits[0].pass();
+    await settle();
+    expect(later.events.at(-1)).toMatchObject({ event: 'disconnected', reason: 'It has expired.' });
+    later.stop.abort();
+    expect(await later.ended).toBeNull();
   });
 
   test('told to stop while nothing is worked on, it closes at once', async () => {

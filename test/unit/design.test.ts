@@ -3,7 +3,7 @@ import { buildRawShard } from '../../worker/design/build.js';
 import { tableRequest } from '../../worker/design/request.js';
 import { scaleShard } from '../../worker/design/scale.js';
 import { surveyOf } from '../../worker/design/survey.js';
-import { lossNamed } from '../../worker/losses/index.js';
+import { lossOf } from '../../worker/losses/index.js';
 import { levelsTerm, numericTerm, specification, table } from '../support/designs.js';
 import { failureOf, soundValue } from '../support/tables.js';
 
@@ -34,7 +34,10 @@ describe('what is read', () => {
   });
 
   test('a logistic response with a positive class is read as two classes', () => {
-    const spec = specification({ loss: 'logistic', response: { column: 'failed', positive: 'yes' } });
+    const spec = specification({
+      loss: { kind: 'logistic' },
+      response: { column: 'failed', positive: 'yes' },
+    });
     expect(tableRequest(spec, { index: 1, of: 1 })).toMatchObject({
       numeric: [],
       levels: [{ column: 'failed', levels: ['yes'], others: 'one' }],
@@ -65,14 +68,17 @@ describe('the design', () => {
 
   test('exposure enters as its logarithm, an offset as it is', () => {
     const data = table({ y: [1, 2], e: [1, Math.E] });
-    const exposed = specification({ loss: 'poisson', offset: { kind: 'exposure', column: 'e' } });
+    const exposed = specification({ loss: { kind: 'poisson' }, offset: { kind: 'exposure', column: 'e' } });
     expect(soundValue(buildRawShard(exposed, data)).offset).toEqual(Float64Array.of(0, 1));
     const offset = specification({ offset: { kind: 'offset', column: 'e' } });
     expect(soundValue(buildRawShard(offset, data)).offset).toEqual(Float64Array.of(1, Math.E));
   });
 
   test('the positive class is 1', () => {
-    const spec = specification({ loss: 'logistic', response: { column: 'failed', positive: 'yes' } });
+    const spec = specification({
+      loss: { kind: 'logistic' },
+      response: { column: 'failed', positive: 'yes' },
+    });
     const data = table({}, { failed: { levels: ['yes', 'no'], codes: Int32Array.of(1, 0, 0) } });
     expect(soundValue(buildRawShard(spec, data)).y).toEqual(Float64Array.of(0, 1, 1));
   });
@@ -100,13 +106,15 @@ describe('refusals name the row of the source', () => {
     ['logistic', 0.5],
     ['poisson', -1],
     ['squared', 1e200],
-  ] as const)('a %s response of %d', (loss, value) => {
-    const failure = failureOf(buildRawShard(specification({ loss }), table({ y: [1, value] }, {}, rows)));
+  ] as const)('a %s response of %d', (kind, value) => {
+    const failure = failureOf(
+      buildRawShard(specification({ loss: { kind } }), table({ y: [1, value] }, {}, rows)),
+    );
     expect(failure).toMatchObject({ code: 'response-range', where: { row: 9, column: 'y' } });
   });
 
   test.each([0, -2])('exposure %d', (value) => {
-    const spec = specification({ loss: 'poisson', offset: { kind: 'exposure', column: 'e' } });
+    const spec = specification({ loss: { kind: 'poisson' }, offset: { kind: 'exposure', column: 'e' } });
     const failure = failureOf(buildRawShard(spec, table({ y: [1, 1], e: [3, value] })));
     expect(failure).toMatchObject({ code: 'exposure-not-positive', where: { row: 2, column: 'e' } });
   });
@@ -138,13 +146,13 @@ describe('refusals name the row of the source', () => {
 describe('the survey', () => {
   test('moments and sums of a small table by hand', () => {
     const spec = specification({
-      loss: 'poisson',
+      loss: { kind: 'poisson' },
       offset: { kind: 'exposure', column: 'e' },
       weights: { column: 'w' },
       terms: [numericTerm('a'), material],
     });
     const data = table({ y: [0, 1, 4], e: [1, 2, 5], w: [1, 3, 2], a: [1, 2, 6] }, materials(1, 1, 1));
-    const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossNamed('poisson'));
+    const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossOf({ kind: 'poisson' }));
     expect(survey.rowsUsed).toBe(3);
     expect(survey.columns).toEqual(['a', 'material=steel']);
     expect(survey.mean).toEqual(Float64Array.of(3, 1));
@@ -162,7 +170,7 @@ describe('the survey', () => {
     const base = 1e9;
     const spec = specification({ terms: [numericTerm('a'), numericTerm('b')] });
     const data = table({ y: [1, 2, 3, 4], a: [base, base + 1, base + 2, base + 3], b: [0.1, 0.1, 0.1, 0.1] });
-    const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossNamed('squared'));
+    const survey = surveyOf(soundValue(buildRawShard(spec, data)), lossOf({ kind: 'squared' }));
     expect(survey.mean).toEqual(Float64Array.of(base + 1.5, 0.1));
     expect(survey.centredSquares).toEqual(Float64Array.of(5, 0));
   });
@@ -170,7 +178,7 @@ describe('the survey', () => {
   test('remarks on a response without spread and on weights that are all zero', () => {
     const spec = specification({ weights: { column: 'w' } });
     const raw = soundValue(buildRawShard(spec, table({ y: [2, 2], w: [0, 0] })));
-    expect(surveyOf({ ...raw, rowsDropped: 3 }, lossNamed('squared')).notes).toEqual([
+    expect(surveyOf({ ...raw, rowsDropped: 3 }, lossOf({ kind: 'squared' })).notes).toEqual([
       'Every row has the same response.',
       'Every row has weight zero.',
       'Rows left out for a missing value: 3.',

@@ -153,6 +153,7 @@ describe('replies in the journal', () => {
             problem: 0,
             points: [{ point: Float64Array.of(value), want: 'value' }],
             ownFit: null,
+            sketch: null,
           },
         ],
       ] as Parameters<typeof digestOfAsk>[2];

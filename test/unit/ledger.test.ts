@@ -13,7 +13,7 @@ const departure = (more: Partial<Departure> = {}): Departure => ({
   ask: 1,
   kinds: ['proximal'],
   numbers: 4,
-  curvature: { all: 0, problems: new Map() },
+  curvature: { all: 0, problems: new Map(), sketched: new Map() },
   content: content('1'),
   ...more,
 });
@@ -28,7 +28,7 @@ async function opened(file: MemoryLedgerFile): Promise<{ ledger: Ledger; warning
 async function written(): Promise<MemoryLedgerFile> {
   const file = new MemoryLedgerFile();
   const { ledger } = await opened(file);
-  const matrices = { all: 0, problems: new Map([[0, 2]]) };
+  const matrices = { all: 0, problems: new Map([[0, 2]]), sketched: new Map([[0, 8]]) };
   await ledger.append(departure());
   await ledger.append(departure({ ask: 2, numbers: 30, content: content('2'), curvature: matrices }));
   await ledger.append(departure({ run: 'r2', content: content('3') }));
@@ -41,6 +41,7 @@ describe('after a restart', () => {
     expect(warning).toBeNull();
     expect(ledger.departed('r1')).toMatchObject({ asks: 2, numbers: 34 });
     expect(curvatureTotal(ledger.departed('r1').curvature)).toBe(2);
+    expect(ledger.departed('r1').curvature.sketched).toEqual(new Map([[0, 8]]));
     expect(ledger.departed('r2').numbers).toBe(4);
     expect(ledger.departed('r3').asks).toBe(0);
   });

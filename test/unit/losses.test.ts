@@ -1,10 +1,10 @@
 import { describe, expect, test } from 'vitest';
-import { lossNamed } from '../../worker/losses/index.js';
+import { lossOf } from '../../worker/losses/index.js';
 import type { Loss } from '../../worker/losses/loss.js';
 
-const squared = lossNamed('squared');
-const logistic = lossNamed('logistic');
-const poisson = lossNamed('poisson');
+const squared = lossOf({ kind: 'squared' });
+const logistic = lossOf({ kind: 'logistic' });
+const poisson = lossOf({ kind: 'poisson' });
 
 const CASES: readonly (readonly [Loss, readonly number[]])[] = [
   [squared, [-3, 0, 2.5]],
@@ -122,5 +122,67 @@ describe('Poisson loss', () => {
     }
     expect(poisson.value(3, 301) - poisson.value(3, 300)).toBeCloseTo(poisson.slope(3, 300.5), -120);
     expect(poisson.value(4, -1e5)).toBe(4e5);
+  });
+});
+
+describe("Huber's loss", () => {
+  const t = 1.345;
+  const huber = lossOf({ kind: 'huber', threshold: t });
+  // residuals within, at and beyond the threshold, on both sides of it
+  const residuals = [-9, -1.4, -t, -1.3, -0.2, 0, 0.7, 1.3, t, 1.4, 40];
+
+  test('slope and curvature are the derivatives of the value away from the threshold', () => {
+    const h = 1e-6;
+    for (const r of residuals) {
+      if (Math.abs(r) === t) continue;
+      const eta = 5 - r;
+      const slope = (huber.value(5, eta + h) - huber.value(5, eta - h)) / (2 * h);
+      const curvature = (huber.slope(5, eta + h) - huber.slope(5, eta - h)) / (2 * h);
+      expect(huber.slope(5, eta)).toBeCloseTo(slope, 7);
+      expect(huber.curvature(5, eta)).toBeCloseTo(curvature, 7);
+    }
+  });
+
+  test('is ½ r² within the threshold and t |r| − ½ t² beyond (Huber 1964)', () => {
+    expect(huber.value(5, 4)).toBe(0.5);
+    expect(huber.value(5, 15)).toBeCloseTo(t * 10 - 0.5 * t * t, 14);
+    expect(huber.value(5, 5 + t)).toBeCloseTo(0.5 * t * t, 14);
+    expect(huber.saturated(5)).toBe(0);
+    expect(huber.quadratic).toBe(false);
+  });
+
+  test('its slope is the residual clipped to the threshold, sign turned', () => {
+    for (const r of residuals)
+      expect(huber.slope(5, 5 - r)).toBeCloseTo(-Math.sign(r) * Math.min(Math.abs(r), t), 14);
+  });
+
+  test('is the infimal convolution of ½ s² and t |r − s|: what is left after the best s is cut off', () => {
+    for (const r of residuals) {
+      // the best s is r clipped to the threshold; none on a fine grid does better
+      const grid = Array.from({ length: 4001 }, (_, i) => -10 + i / 80);
+      const least = Math.min(...grid.map((s) => 0.5 * s * s + t * Math.abs(r - s)));
+      const best = Math.max(-t, Math.min(t, r));
+      const value = huber.value(0, -r);
+      expect(0.5 * best * best + t * Math.abs(r - best)).toBeCloseTo(value, 13);
+      expect(least).toBeGreaterThanOrEqual(value - 1e-13);
+    }
+  });
+
+  test('scales as its residual: with threshold c·t, loss(c·r) = c² · loss(r)', () => {
+    const scaled = lossOf({ kind: 'huber', threshold: 3 * t });
+    for (const r of residuals) expect(scaled.value(0, 3 * r)).toBeCloseTo(9 * huber.value(0, r), 11);
+  });
+
+  test('is least squares under a threshold that no residual reaches', () => {
+    const wide = lossOf({ kind: 'huber', threshold: 100 });
+    for (const r of residuals)
+      for (const part of ['value', 'slope', 'curvature'] as const)
+        expect(wide[part](2, 2 - r)).toBe(squared[part](2, 2 - r));
+  });
+
+  test('far out it is huge, finite and its slope stays the threshold', () => {
+    expect(huber.value(1e70, -1e160)).toBeCloseTo(t * 1e160, -150);
+    expect(huber.slope(1e70, -1e160)).toBe(-t);
+    expect(huber.curvature(1e70, -1e160)).toBe(0);
   });
 });

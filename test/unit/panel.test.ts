@@ -18,6 +18,7 @@ const answer = (value: number): Reply => [
     problem: 0,
     points: [{ value, gradient: null, diagonal: null, curvature: null }],
     ownFit: null,
+    sketch: null,
   },
 ];
 const refusal = (code: Refusal['code'], ask = 1): Refusal => ({

@@ -17,6 +17,8 @@ import type { Policy } from '../../worker/custody/site-file.js';
 import { OPEN_POLICY, specification } from '../support/worker-site.js';
 
 const DIGEST = 'a'.repeat(64);
+/** Solver columns of the fit. */
+const P = 10;
 const policyWith = (more: Partial<Policy>): Policy => ({ ...OPEN_POLICY, ...more });
 
 const survey: Work = { work: 'survey' };
@@ -40,8 +42,12 @@ const evaluate = (want: Want, more: Partial<EvaluateWork> = {}): Work => ({
   problem: 0,
   points: [{ point: Float64Array.of(0), want }],
   ownFit: null,
+  sketch: null,
   ...more,
 });
+
+const sketch = (columns: number, problem = 0): Work =>
+  evaluate('gradient', { problem, sketch: { at: 0, directions: new Float64Array(columns), columns } });
 
 /** What has left after these asks were answered. */
 const departedAfter = (...asks: Work[][]): Departed => ({
@@ -51,7 +57,7 @@ const departedAfter = (...asks: Work[][]): Departed => ({
 });
 
 const codeFor = (policy: Policy, departed: Departed, works: Work[], fits = 1): string | null =>
-  checkWorks(policy, departed, works, fits)?.code ?? null;
+  checkWorks(policy, departed, works, { fits, columns: P })?.code ?? null;
 
 describe('columns and approval', () => {
   test('a column that the policy does not list is named, with the part it plays', () => {
@@ -102,11 +108,12 @@ describe('kinds of answer', () => {
     ['a diagonal', evaluate('diagonal'), ['gradients']],
     ['a curvature matrix', evaluate('curvature'), ['gradients', 'curvature']],
     ['a fit of its own', evaluate('value', { ownFit: { at: 0, hold: 0.3 } }), ['gradients', 'curvature']],
+    ['a sketch', sketch(3), ['gradients', 'sketches']],
     ['a factor', factor, ['curvature']],
   ])('%s leaves with its kinds and with none of them missing', (_name, work, kinds) => {
     expect(codeFor(policyWith({ leave: kinds }), NOTHING_DEPARTED, [work])).toBeNull();
     for (const kind of kinds) {
-      const leave = OPEN_POLICY.leave.filter((other) => other !== kind);
+      const leave = kinds.filter((other) => other !== kind);
       expect(codeFor(policyWith({ leave }), NOTHING_DEPARTED, [work])).toBe('policy-kind');
     }
   });
@@ -155,6 +162,39 @@ describe('curvature matrices', () => {
 
   test('the factor serves every fit and counts for each', () => {
     expect(codeFor(three, departedAfter([factor], one, one), one, 5)).toBe('policy-curvature');
+  });
+});
+
+describe('sketched columns', () => {
+  const three = policyWith({ curvatureMost: 3, leave: ['gradients', 'sketches'] });
+
+  test('p of them count as one curvature matrix, begun or full', () => {
+    expect(codeFor(three, departedAfter([sketch(8)], [sketch(8)], [sketch(8)]), [sketch(6)])).toBeNull();
+    expect(codeFor(three, departedAfter([sketch(8)], [sketch(8)], [sketch(8)]), [sketch(7)])).toBe(
+      'policy-curvature',
+    );
+  });
+
+  test('count beside whole matrices', () => {
+    const open = policyWith({ curvatureMost: 3, leave: ['gradients', 'sketches', 'curvature'] });
+    const two = [evaluate('curvature'), evaluate('curvature')];
+    expect(codeFor(open, departedAfter(two), [sketch(10)])).toBeNull();
+    expect(codeFor(open, departedAfter(two), [sketch(11)])).toBe('policy-curvature');
+    expect(codeFor(open, departedAfter(two, [sketch(1)]), [evaluate('curvature')])).toBe('policy-curvature');
+  });
+
+  test('each fit has its own allowance, problem numbers beyond the fits gain nothing', () => {
+    const full = departedAfter([sketch(30)]);
+    expect(codeFor(three, full, [sketch(30, 1)], 2)).toBeNull();
+    expect(codeFor(three, full, [sketch(1, 999)], 1)).toBe('policy-curvature');
+  });
+
+  test('are without a count where curvature has no limit, and do not leave where it may not', () => {
+    const leave: Policy['leave'] = ['gradients', 'sketches'];
+    expect(codeFor(policyWith({ leave }), departedAfter([sketch(500)]), [sketch(500)])).toBeNull();
+    expect(codeFor(policyWith({ leave, curvatureMost: 0 }), NOTHING_DEPARTED, [sketch(1)])).toBe(
+      'policy-curvature',
+    );
   });
 });
 

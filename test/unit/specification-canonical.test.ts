@@ -80,6 +80,7 @@ describe('reading the canonical form', () => {
         ['weights: {column: w}', 'missing: drop'],
       ).replace('terms:', 'terms:\n  - {column: "10"}\n  - {column: "9"}'),
     ],
+    ['a loss with a threshold', breaksWith({ 5: 'loss: {threshold: 1.50, kind: huber}' })],
   ])('gives back %s', (_, text) => {
     const specification = parse(text);
     expect(readCanonical(canonicalText(specification))).toEqual({ ok: true, value: specification });

@@ -12,7 +12,7 @@ describe('a fit specification', () => {
       sites: ['harrowmere', 'lindell-bay', 'castlefen', 'oakhythe'],
       missing: 'refuse',
       response: { column: 'breaks', positive: null },
-      loss: 'poisson',
+      loss: { kind: 'poisson' },
       offset: { kind: 'exposure', column: 'km_years' },
       weights: null,
       intercept: 'shared',
@@ -59,6 +59,14 @@ describe('a fit specification', () => {
     expect(logistic('yes')).toBe('yes');
     expect(logistic('1.0')).toBe('1');
     expect(logistic('"01"')).toBe('01');
+  });
+
+  test("takes a plain loss by its name, and Huber's with its threshold", () => {
+    expect(parse(breaksWith({ 5: 'loss: squared' })).loss).toEqual({ kind: 'squared' });
+    expect(parse(breaksWith({ 5: 'loss: {kind: huber, threshold: 1.345}' })).loss).toEqual({
+      kind: 'huber',
+      threshold: 1.345,
+    });
   });
 
   test('takes numbers in a list of levels as text, the first as the baseline', () => {

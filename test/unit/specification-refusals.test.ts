@@ -30,6 +30,33 @@ const cases: [string, string, string][] = [
     'field-conflict 4 response.positive',
   ],
   ['a loss nobody knows', breaksWith({ 5: 'loss: poison' }), 'field-value 5 loss'],
+  ['huber without a threshold', breaksWith({ 5: 'loss: huber' }), 'field-missing 5 loss'],
+  ['a huber mapping without one', breaksWith({ 5: 'loss: {kind: huber}' }), 'field-missing 5 loss.threshold'],
+  [
+    'a threshold of 0',
+    breaksWith({ 5: 'loss: {kind: huber, threshold: 0}' }),
+    'field-value 5 loss.threshold',
+  ],
+  [
+    'a threshold without end',
+    breaksWith({ 5: 'loss: {kind: huber, threshold: .inf}' }),
+    'field-value 5 loss.threshold',
+  ],
+  [
+    'a threshold in words',
+    breaksWith({ 5: 'loss: {kind: huber, threshold: two}' }),
+    'field-type 5 loss.threshold',
+  ],
+  [
+    'a field that huber has not',
+    breaksWith({ 5: 'loss: {kind: huber, threshold: 2, tau: 1}' }),
+    'field-unknown 5 loss.tau',
+  ],
+  [
+    'a threshold for least squares',
+    breaksWith({ 5: 'loss: {kind: squared, threshold: 2}' }),
+    'field-type 5 loss',
+  ],
   ['exposure and offset', breaksWith({}, ['offset: {column: x}']), 'field-conflict 16 offset'],
   [
     'the response as a weight',
@@ -208,7 +235,6 @@ describe('a fit specification is refused', () => {
     ['gamma losses', breaksWith({ 5: 'loss: gamma' }), '5 loss'],
     ['hinge losses', breaksWith({ 5: 'loss: hinge' }), '5 loss'],
     ['quantile losses', breaksWith({ 5: 'loss: {kind: quantile, tau: 0.9}' }), '5 loss'],
-    ['huber losses', breaksWith({ 5: 'loss: {kind: huber, threshold: 1.345}' }), '5 loss'],
     ['event times', breaksWith({ 4: 'response: {time: t, event: e}' }), '4 response'],
     ['classes', breaksWith({ 4: 'response: {column: kind, classes: [a, b]}' }), '4 response.classes'],
     ['a quorum', breaksWith({ 15: 'barrier: {quorum: 3}' }), '15 barrier.quorum'],

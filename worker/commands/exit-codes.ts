@@ -21,7 +21,7 @@ const MEANINGS: readonly [ExitCode, string][] = [
   [EXIT.document, 'the site file, fit specification or approvals file is wrong'],
   [EXIT.table, 'the table cannot be read, or not as the specification needs it'],
   [EXIT.policy, "the site's policy does not let the specification in"],
-  [EXIT.coordinator, 'the coordinator refuses this worker'],
+  [EXIT.coordinator, 'the coordinator refuses this worker, or its certificate is not trusted'],
   [EXIT.machine, 'a file or folder of this machine is in the way, or the ledger is broken'],
 ];
 
@@ -75,7 +75,17 @@ const CODES: readonly [ExitCode, readonly FailureCode[]][] = [
       'policy-approval',
     ],
   ],
-  [EXIT.coordinator, ['token-refused', 'version-unsupported', 'site-unknown', 'site-taken', 'link-lost']],
+  [
+    EXIT.coordinator,
+    [
+      'token-refused',
+      'certificate-untrusted',
+      'version-unsupported',
+      'site-unknown',
+      'site-taken',
+      'link-lost',
+    ],
+  ],
   [EXIT.machine, ['ledger-broken', 'state-unwritable']],
 ];
 

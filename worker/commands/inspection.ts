@@ -2,7 +2,7 @@ import type { Failure } from '../../protocol/failure.js';
 import type { SurveyAnswer } from '../../protocol/messages/survey.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import { usedColumns } from '../../protocol/specification/design-columns.js';
-import type { FitSpecification, Term } from '../../protocol/specification/types.js';
+import type { FitSpecification, LossForm, Term } from '../../protocol/specification/types.js';
 import {
   allowanceOf,
   checkApproval,
@@ -14,7 +14,7 @@ import {
 import type { Policy, SiteFile } from '../custody/site-file.js';
 import type { RawShard } from '../design/shard.js';
 import { surveyOf } from '../design/survey.js';
-import { lossNamed } from '../losses/index.js';
+import { lossOf } from '../losses/index.js';
 import type { SpecificationFile } from './documents.js';
 
 /** What one specification would read at one site and what would leave, without a coordinator. */
@@ -56,7 +56,7 @@ export interface DesignSummary {
 
 /** One kind of answer: what leaves with it, how often, and whether the policy lets it. */
 export interface PossibleDeparture {
-  readonly rung: 'every run' | 'proximal' | 'curvature' | 'pooled';
+  readonly rung: 'every run' | 'proximal' | 'sketched' | 'curvature' | 'pooled';
   readonly what: string;
   readonly numbers: number;
   readonly times: string;
@@ -75,7 +75,7 @@ export function inspectionOf(
   const { specification: spec, digest } = file;
   const { policy } = site;
   const read = raw !== null && !('code' in raw) ? raw : null;
-  const survey = read === null ? null : surveyOf(read, lossNamed(spec.loss));
+  const survey = read === null ? null : surveyOf(read, lossOf(spec.loss));
   const refusals = [
     namesSite(spec, site.site),
     checkColumns(policy, spec),
@@ -88,7 +88,7 @@ export function inspectionOf(
     digest,
     site: site.site,
     shard: site.shard,
-    loss: spec.loss,
+    loss: lossWords(spec.loss),
     reads: readsOf(spec, policy),
     rows: read === null ? null : { used: read.rowCount, dropped: read.rowsDropped },
     response: survey === null ? null : responseOf(survey.response),
@@ -100,6 +100,9 @@ export function inspectionOf(
     refusals,
   };
 }
+
+const lossWords = (loss: LossForm): string =>
+  loss.kind === 'huber' ? `${loss.kind} with threshold ${loss.threshold}` : loss.kind;
 
 function namesSite(spec: FitSpecification, site: string): Failure | null {
   if ('least' in spec.sites || spec.sites.includes(site)) return null;
@@ -173,7 +176,7 @@ function departuresOf(
   const surveyNumbers = numbersOfAnswer({ work: 'survey', ...survey, allowance });
   const fits = fitCount(spec);
   const perFit = fits === 1 ? '' : ' and fit';
-  const squaredOnly = spec.loss === 'squared' ? null : 'only for squared loss';
+  const squaredOnly = spec.loss.kind === 'squared' ? null : 'only for squared loss';
   const noMatrix = policy.curvatureMost === 0 ? 'policy.curvature-most is 0' : null;
   const most = policy.curvatureMost === 'any' ? 'a point' : `${policy.curvatureMost} a fit at most`;
   const kept = (kinds: readonly LeaveKind[]): string | null => {
@@ -192,6 +195,14 @@ function departuresOf(
     row('every run', 'survey: counts, pooled moments', surveyNumbers, 'once', ['counts', 'moments']),
     row('proximal', 'a proximal point', p + 1, `a round${perFit}`, ['proximal']),
     row('proximal', 'loss, gradient, curvature diagonal', 2 * p + 1, 'a check', ['gradients']),
+    row(
+      'sketched',
+      'losses, gradients, curvature in 8 directions',
+      (8 + 4) * p + 7,
+      `a round${perFit}`,
+      ['gradients', 'sketches'],
+      noMatrix,
+    ),
     row(
       'curvature',
       'loss, gradient, curvature matrix',

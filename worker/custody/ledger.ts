@@ -41,6 +41,8 @@ const record = z.strictObject({
   numbers: whole,
   /** Curvature matrices by problem number; `all`: those that serve every fit of the run. */
   curvature: z.record(z.string().regex(/^(all|\d+)$/), whole),
+  /** Columns of curvature sketched, by problem number; left out where there are none. */
+  sketched: z.record(z.string().regex(/^\d+$/), whole).optional(),
   content: sha256,
   previous: sha256,
   hash: sha256,
@@ -59,6 +61,7 @@ export function recordLine(
 ): { readonly line: string; readonly record: LedgerRecord } {
   const { run, digest, ask, kinds, numbers, content } = departure;
   const curvature = curvatureFields(departure.curvature);
+  const sketched = Object.fromEntries(departure.curvature.sketched);
   const body = {
     at: at.toISOString(),
     run,
@@ -67,6 +70,7 @@ export function recordLine(
     kinds: [...kinds],
     numbers,
     curvature,
+    ...(departure.curvature.sketched.size > 0 ? { sketched } : {}),
     content,
     previous,
   };
@@ -103,11 +107,16 @@ function curvatureFields(count: CurvatureCount): Record<string, number> {
   return fields;
 }
 
-function curvatureCount(fields: Readonly<Record<string, number>>): CurvatureCount {
+function curvatureCount({ curvature: fields, sketched }: LedgerRecord): CurvatureCount {
   const problems = new Map<number, number>();
   for (const [problem, matrices] of Object.entries(fields))
     if (problem !== 'all') problems.set(Number(problem), matrices);
-  return { all: fields.all ?? 0, problems };
+  const columns = Object.entries(sketched ?? {});
+  return {
+    all: fields.all ?? 0,
+    problems,
+    sketched: new Map(columns.map(([problem, count]) => [Number(problem), count])),
+  };
 }
 
 /** The whole file checked: its records, and how much of it is sound. */
@@ -238,7 +247,7 @@ export class Ledger {
     run.departed = {
       asks: run.departed.asks + 1,
       numbers: run.departed.numbers + entry.numbers,
-      curvature: addCurvature(run.departed.curvature, curvatureCount(entry.curvature)),
+      curvature: addCurvature(run.departed.curvature, curvatureCount(entry)),
     };
     this.#runs.set(entry.run, run);
     this.#last = entry.hash;

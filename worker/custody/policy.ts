@@ -1,7 +1,7 @@
 import { type Failure, type FailureCode, fail } from '../../protocol/failure.js';
 import type { Work } from '../../protocol/messages/round.js';
 import type { Allowance } from '../../protocol/messages/survey.js';
-import { curvatureMatricesOf } from '../../protocol/numbers.js';
+import { curvatureMatricesOf, sketchColumnsOf } from '../../protocol/numbers.js';
 import { usedColumns } from '../../protocol/specification/design-columns.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { Policy } from './site-file.js';
@@ -20,16 +20,27 @@ export interface Departed {
   readonly curvature: CurvatureCount;
 }
 
-/** Curvature matrices by problem; `all` are those that serve every fit of the run (the factor). */
+/**
+ * Curvature matrices by problem; `all` are those that serve every fit of the run (the factor). Columns of curvature
+ * sent as products with directions are counted apart.
+ */
 export interface CurvatureCount {
   readonly all: number;
   readonly problems: ReadonlyMap<number, number>;
+  readonly sketched: ReadonlyMap<number, number>;
+}
+
+/** What the curvature limit of a run is measured by. */
+export interface RunSize {
+  readonly fits: number;
+  /** Solver columns p; null before the scaling is known, when no curvature can leave. */
+  readonly columns: number | null;
 }
 
 export const NOTHING_DEPARTED: Departed = {
   asks: 0,
   numbers: 0,
-  curvature: { all: 0, problems: new Map() },
+  curvature: { all: 0, problems: new Map(), sketched: new Map() },
 };
 
 const refused = (code: FailureCode, message: string, remedy: string): Failure =>
@@ -46,34 +57,58 @@ export function kindsOfWork(work: Work): LeaveKind[] {
       return ['proximal'];
     case 'factor':
       return ['curvature'];
-    case 'evaluate':
-      return curvatureMatricesOf(work) > 0 ? ['gradients', 'curvature'] : ['gradients'];
+    case 'evaluate': {
+      const kinds: LeaveKind[] = ['gradients'];
+      if (curvatureMatricesOf(work) > 0) kinds.push('curvature');
+      if (sketchColumnsOf(work) > 0) kinds.push('sketches');
+      return kinds;
+    }
   }
 }
 
-/** Curvature matrices that this ask makes leave, by problem. */
+/** Curvature matrices and columns that this ask makes leave, by problem. */
 export function curvatureOfWorks(works: readonly Work[]): CurvatureCount {
   let all = 0;
   const problems = new Map<number, number>();
+  const sketched = new Map<number, number>();
   for (const work of works) {
     const matrices = curvatureMatricesOf(work);
-    if (work.work !== 'evaluate') all += matrices;
-    else if (matrices > 0) problems.set(work.problem, (problems.get(work.problem) ?? 0) + matrices);
+    if (work.work !== 'evaluate') {
+      all += matrices;
+      continue;
+    }
+    count(problems, work.problem, matrices);
+    count(sketched, work.problem, sketchColumnsOf(work));
   }
-  return { all, problems };
+  return { all, problems, sketched };
+}
+
+function count(into: Map<number, number>, problem: number, more: number): void {
+  if (more > 0) into.set(problem, (into.get(problem) ?? 0) + more);
 }
 
 export function addCurvature(a: CurvatureCount, b: CurvatureCount): CurvatureCount {
   const problems = new Map(a.problems);
-  for (const [problem, matrices] of b.problems)
-    problems.set(problem, (problems.get(problem) ?? 0) + matrices);
-  return { all: a.all + b.all, problems };
+  const sketched = new Map(a.sketched);
+  for (const [problem, matrices] of b.problems) count(problems, problem, matrices);
+  for (const [problem, columns] of b.sketched) count(sketched, problem, columns);
+  return { all: a.all + b.all, problems, sketched };
 }
 
-export function curvatureTotal(count: CurvatureCount): number {
-  let total = count.all;
-  for (const matrices of count.problems.values()) total += matrices;
+/** Matrices that left whole. */
+export function curvatureTotal(counted: CurvatureCount): number {
+  let total = counted.all;
+  for (const matrices of counted.problems.values()) total += matrices;
   return total;
+}
+
+/** Matrices of each problem, where p sketched columns, begun or full, count as one: they tell as much. */
+function matricesByProblem(counted: CurvatureCount, columns: number): number[] {
+  const numbers = new Set([...counted.problems.keys(), ...counted.sketched.keys()]);
+  return [...numbers].map(
+    (problem) =>
+      (counted.problems.get(problem) ?? 0) + Math.ceil((counted.sketched.get(problem) ?? 0) / columns),
+  );
 }
 
 /** Fits in one run of this specification: the λ lists of its penalties run in parallel. */
@@ -130,12 +165,12 @@ export function checkWorks(
   policy: Policy,
   departed: Departed,
   works: readonly Work[],
-  fits: number,
+  size: RunSize,
 ): Failure | null {
   return (
     checkKinds(policy, works) ??
     checkRounds(policy, departed) ??
-    checkCurvature(policy, departed.curvature, curvatureOfWorks(works), fits)
+    checkCurvature(policy, departed.curvature, curvatureOfWorks(works), size)
   );
 }
 
@@ -166,16 +201,19 @@ function checkCurvature(
   policy: Policy,
   before: CurvatureCount,
   added: CurvatureCount,
-  fits: number,
+  { fits, columns }: RunSize,
 ): Failure | null {
   const most = policy.curvatureMost;
-  if (most === 'any' || curvatureTotal(added) === 0) return null;
+  if (most === 'any' || (curvatureTotal(added) === 0 && added.sketched.size === 0)) return null;
   const after = addCurvature(before, added);
-  const largest = after.all + Math.max(0, ...after.problems.values());
-  if (largest <= most && curvatureTotal(after) <= most * fits) return null;
+  const matrices = matricesByProblem(after, columns ?? 1);
+  const largest = after.all + Math.max(0, ...matrices);
+  const total = matrices.reduce((sum, one) => sum + one, after.all);
+  if (largest <= most && total <= most * fits) return null;
+  const counted = after.sketched.size > 0 ? `, ${columns} sketched columns counted as one,` : '';
   return refused(
     'policy-curvature',
-    `With this ask ${largest} curvature matrices of one fit (${curvatureTotal(after)} in the run) would have left, the policy allows ${most} a fit.`,
+    `With this ask ${largest} curvature matrices of one fit (${total} in the run)${counted} would have left, the policy allows ${most} a fit.`,
     'Go on with proximal points, or ask the custodian to raise policy.curvature-most.',
   );
 }

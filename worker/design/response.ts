@@ -1,5 +1,5 @@
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
-import type { FitSpecification } from '../../protocol/specification/types.js';
+import type { FitSpecification, LossKind } from '../../protocol/specification/types.js';
 import type { Table } from '../source/table.js';
 import type { RawShard } from './shard.js';
 import { OFFSET_MOST, VALUE_MOST } from './value-limit.js';
@@ -20,6 +20,7 @@ export function responseOf(
 
 function responseValues(spec: FitSpecification, table: Table): Checked<Float64Array> {
   const { column, positive } = spec.response;
+  const { kind } = spec.loss;
   if (positive !== null) {
     const read = table.levels.get(column);
     if (read === undefined) throw new Error(`the table was read without the levels column ${column}`);
@@ -27,29 +28,29 @@ function responseValues(spec: FitSpecification, table: Table): Checked<Float64Ar
     return succeed(Float64Array.from(read.codes, (other) => (other === code ? 1 : 0)));
   }
   const y = numericColumn(table, column);
-  const allowed: Readonly<
-    Record<FitSpecification['loss'], { fits: (value: number) => boolean; text: string }>
-  > = {
-    squared: {
-      fits: (value) => Math.abs(value) <= VALUE_MOST,
-      text: `a number of size ${VALUE_MOST} at most`,
-    },
+  const anyNumber = {
+    fits: (value: number) => Math.abs(value) <= VALUE_MOST,
+    text: `a number of size ${VALUE_MOST} at most`,
+  };
+  const allowed: Readonly<Record<LossKind, { fits: (value: number) => boolean; text: string }>> = {
+    squared: anyNumber,
+    huber: anyNumber,
     logistic: { fits: (value) => value === 0 || value === 1, text: '0 or 1' },
     poisson: {
       fits: (value) => value >= 0 && value <= VALUE_MOST,
       text: `zero or more, ${VALUE_MOST} at most`,
     },
   };
-  const { fits, text } = allowed[spec.loss];
+  const { fits, text } = allowed[kind];
   const row = y.findIndex((value) => !fits(value));
   if (row < 0) return succeed(y);
   return fail(
     'response-range',
-    `The response ${y[row]} does not suit the loss ${spec.loss}, which takes ${text}.`,
+    `The response ${y[row]} does not suit the loss ${kind}, which takes ${text}.`,
     {
       where: { row: sourceRow(table, row), column },
       remedy:
-        spec.loss === 'logistic'
+        kind === 'logistic'
           ? 'Correct the value, or name the class that counts with `response: {column: …, positive: …}`.'
           : 'Correct the value, or choose another loss.',
     },

@@ -1,6 +1,6 @@
 import { weightedGram } from '../../numerics/gram.js';
 import { packSymmetric } from '../../numerics/packed.js';
-import { addWeightedSquares } from '../../numerics/rows.js';
+import { addWeightedRows, addWeightedSquares, rowProducts } from '../../numerics/rows.js';
 import { FACTOR_BLOCK_ROWS, factorAccumulator } from '../../numerics/triangular-factor.js';
 import { allFinite, maxOf } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
@@ -35,6 +35,8 @@ export interface LocalSolver {
    * quadratic is exact at x wherever that is.
    */
   ownFit(point: Float64Array, hold: number): Checked<{ curvature: Float64Array; linear: Float64Array }>;
+  /** ∇²φ(point) S for `columns` directions S, p numbers each, one after the other: Xᵀ(w ∘ XS) / N. */
+  sketch(point: Float64Array, directions: Float64Array, columns: number): Checked<Float64Array>;
   /** Packed triangular factor of √(w/N) · [X, y − offset], p + 1 columns (mathematics.md §2, rung `pooled`). */
   factor(): Checked<Float64Array>;
 }
@@ -50,6 +52,8 @@ const PROXIMAL_LIMITS: NewtonLimits = { stepsMost: 200, accuracy: 1e-13 };
 const OWN_FIT_LIMITS: NewtonLimits = { stepsMost: 20, accuracy: 1e-8 };
 /** A value beyond this is reported as this: the wire carries finite numbers only, and any comparison refuses it. */
 const VALUE_MOST = 1e300;
+/** Rows that all directions of a sketch pass over before the next: they stay in the cache. */
+const SKETCH_BLOCK_ROWS = 64;
 /** Floor of the own-fit metric: share of the largest diagonal curvature, and share of the shard's weight in the rows. */
 const OWN_FIT_FLOOR = 1e-3;
 
@@ -70,6 +74,7 @@ export function localSolver(shard: Shard, loss: Loss): LocalSolver {
     evaluate: (point, want) => evaluate(shard, loss, squares, point, want),
     ownFit: (point, hold) =>
       squares === null ? ownFit(shard, loss, point, hold) : quadraticOwnFit(shard, squares),
+    sketch: (point, directions, columns) => sketch(shard, loss, point, directions, columns),
     factor: () => factor(shard),
   };
 }
@@ -141,6 +146,30 @@ function ownFit(
   return allFinite(curvature) && allFinite(linear)
     ? succeed({ curvature, linear })
     : notFinite('The quadratic at the own fit');
+}
+
+function sketch(
+  shard: Shard,
+  loss: Loss,
+  point: Float64Array,
+  directions: Float64Array,
+  columns: number,
+): Checked<Float64Array> {
+  const { p, x, rowCount } = shard;
+  const products = new Float64Array(columns * p);
+  const rows = rowState(rowCount);
+  rowPass(shard, loss, point, rows, null);
+  const weights = rowCurvatures(shard, loss, rows.eta);
+  for (let from = 0; from < rowCount; from += SKETCH_BLOCK_ROWS) {
+    const to = Math.min(from + SKETCH_BLOCK_ROWS, rowCount);
+    const along = new Float64Array(to - from);
+    for (let k = 0; k < columns; k++) {
+      rowProducts(x, p, from, to, directions.subarray(k * p, (k + 1) * p), along);
+      for (let r = from; r < to; r++) along[r - from] *= weights[r];
+      addWeightedRows(x, p, from, to, along, products.subarray(k * p, (k + 1) * p));
+    }
+  }
+  return allFinite(products) ? succeed(products) : notFinite('The sketch of the curvature');
 }
 
 /** The squared loss is its own quadratic at every point: no fit is needed. */

@@ -1,4 +1,4 @@
-import { dot, plusScaled } from '../../numerics/vector.js';
+import { dot, maxAbs, plusScaled } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
@@ -33,6 +33,8 @@ const ARMIJO = 1e-4;
 const ROUNDING = 1e-14;
 /** Decrements, relative to the objective, below which differences of the objective are noise and steps are taken whole. */
 const NOISE = 1e-13;
+/** Share of the point's size under which a step is rounding. */
+const STEP_NOISE = 1e-13;
 const HALVINGS_MOST = 40;
 
 /** A point, its objective and what the next step needs. */
@@ -69,7 +71,9 @@ export function newtonProximal(problem: ProximalProblem, limits: NewtonLimits): 
     const { step, decrement } = direction;
     if (!Number.isFinite(decrement)) return notFinite('The Newton step');
     const target = direction.kept ? accuracyKept(limits) : limits.accuracy;
-    if (Math.abs(decrement) <= target * iterate.magnitude) {
+    const last =
+      Math.abs(decrement) <= target * iterate.magnitude || (!direction.kept && isRounding(step, iterate.x));
+    if (last) {
       return succeed({ point: plusScaled(iterate.x, 1, step), newtonSteps: steps + 1, converged: true });
     }
     const found = decrement > 0 ? search(problem, iterate, direction, rows) : null;
@@ -80,6 +84,12 @@ export function newtonProximal(problem: ProximalProblem, limits: NewtonLimits): 
   }
   return succeed({ point: iterate.x, newtonSteps: limits.stepsMost, converged: false });
 }
+
+/**
+ * A step in the last digits: rows fitted exactly leave an objective near zero, whose own size does not tell how far
+ * rounding of the predictors reaches.
+ */
+const isRounding = (step: Float64Array, x: Float64Array): boolean => maxAbs(step) <= STEP_NOISE * maxAbs(x);
 
 /** A kept factor gains little in its last step, so it must come closer first. */
 const accuracyKept = (limits: NewtonLimits): number => 100 * limits.accuracy * limits.accuracy;

@@ -1,9 +1,12 @@
-import type { LossName } from '../../protocol/specification/types.js';
+import type { LossForm } from '../../protocol/specification/types.js';
+import { huber } from './huber.js';
 import { logistic } from './logistic.js';
 import type { Loss } from './loss.js';
 import { poisson } from './poisson.js';
 import { squared } from './squared.js';
 
-const LOSSES: Readonly<Record<LossName, Loss>> = { squared, logistic, poisson };
+const LOSSES_WITHOUT_THRESHOLD = { squared, logistic, poisson } as const;
 
-export const lossNamed = (name: LossName): Loss => LOSSES[name];
+/** The loss that a specification asks for. */
+export const lossOf = (form: LossForm): Loss =>
+  form.kind === 'huber' ? huber(form.threshold) : LOSSES_WITHOUT_THRESHOLD[form.kind];

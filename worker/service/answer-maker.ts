@@ -15,10 +15,11 @@ import {
   curvatureTotal,
   fitCount,
   kindsOfWork,
+  type RunSize,
 } from '../custody/policy.js';
 import type { Policy } from '../custody/site-file.js';
 import type { RawShard } from '../design/shard.js';
-import { lossNamed } from '../losses/index.js';
+import { lossOf } from '../losses/index.js';
 import type { Table, TableRequest } from '../source/table.js';
 import { workInWords } from './ask-words.js';
 import { computeWorks } from './compute.js';
@@ -92,7 +93,8 @@ export class AnswerMaker {
     const look = ledger.look(ask.run, digest, ask.ask, content);
     if (!look.ok) return look;
     const repeated = look.value === 'repeat';
-    const refused = repeated ? null : checkWorks(policy, ledger.departed(ask.run), ask.work, fitCount(spec));
+    const size = { fits: fitCount(spec), columns: solverColumns(spec, scaling) };
+    const refused = repeated ? null : checkWorks(policy, ledger.departed(ask.run), ask.work, size);
     if (refused !== null) return { ok: false, failure: refused };
     rememberAsked(ask, live.memory);
     const same = live.last !== null && live.last.answer.ask === ask.ask && live.last.content === content;
@@ -104,7 +106,7 @@ export class AnswerMaker {
       const kinds = [...new Set(ask.work.flatMap(kindsOfWork))];
       const curvature = curvatureOfWorks(ask.work);
       const departure = { run: ask.run, digest, ask: ask.ask, kinds, numbers, curvature, content };
-      const recorded = await this.#record(ask, fitCount(spec), departure);
+      const recorded = await this.#record(ask, size, departure);
       if (!recorded.ok) return recorded;
     }
     this.#keep(live, made.value, content);
@@ -124,7 +126,7 @@ export class AnswerMaker {
     if (!solver.ok) return solver;
     const computed = await computeWorks(works, {
       raw: raw.value,
-      loss: lossNamed(spec.loss),
+      loss: lossOf(spec.loss),
       solver: solver.value,
       allowance: allowanceOf(this.#means.policy),
       breathe: async () => {
@@ -155,7 +157,7 @@ export class AnswerMaker {
    * Writes the departure down. Where a worker that this one takes the place of has written meanwhile, its lines count
    * as ours do: the departure is looked at once more, and may be recorded already.
    */
-  async #record(ask: Ask, fits: number, departure: Departure): Promise<Checked<null>> {
+  async #record(ask: Ask, size: RunSize, departure: Departure): Promise<Checked<null>> {
     const { ledger, policy } = this.#means;
     const { run, digest, content, numbers } = departure;
     const refused = checkNumbers(policy, ledger.departed(run), numbers);
@@ -168,7 +170,7 @@ export class AnswerMaker {
     if (!look.ok) return look;
     if (look.value === 'repeat') return succeed(null);
     const departed = ledger.departed(run);
-    const over = checkWorks(policy, departed, ask.work, fits) ?? checkNumbers(policy, departed, numbers);
+    const over = checkWorks(policy, departed, ask.work, size) ?? checkNumbers(policy, departed, numbers);
     return over === null ? ledger.append(departure) : { ok: false, failure: over };
   }
 

@@ -15,7 +15,11 @@ export function workInWords(work: Work): string {
     case 'evaluate': {
       const wants = [...new Set(work.points.map(({ want }) => want))].join(' and ');
       const points = `${wants} at ${several(work.points.length, 'a point', 'points')}`;
-      return work.ownFit === null ? points : `${points}, and its own fit`;
+      const sketch =
+        work.sketch === null
+          ? ''
+          : `, curvature along ${several(work.sketch.columns, 'a direction', 'directions')}`;
+      return `${points}${sketch}${work.ownFit === null ? '' : ', and its own fit'}`;
     }
   }
 }

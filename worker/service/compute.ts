@@ -67,10 +67,15 @@ async function evaluate(work: EvaluateWork, solver: LocalSolver, means: Means): 
     if (!evaluated.ok) return evaluated;
     points.push(evaluated.value);
   }
-  const { problem, ownFit } = work;
-  if (ownFit === null) return succeed({ work: 'evaluate', problem, points, ownFit: null });
-  const own = solver.ownFit(work.points[ownFit.at].point, ownFit.hold);
-  return own.ok ? succeed({ work: 'evaluate', problem, points, ownFit: own.value }) : own;
+  const { problem, ownFit, sketch } = work;
+  const own = ownFit === null ? succeed(null) : solver.ownFit(work.points[ownFit.at].point, ownFit.hold);
+  if (!own.ok) return own;
+  const products =
+    sketch === null
+      ? succeed(null)
+      : solver.sketch(work.points[sketch.at].point, sketch.directions, sketch.columns);
+  if (!products.ok) return products;
+  return succeed({ work: 'evaluate', problem, points, ownFit: own.value, sketch: products.value });
 }
 
 const cancelled = () => fail('run-cancelled', 'The run ended while its ask was being answered.');

@@ -35,6 +35,8 @@ export interface ConnectionDeps {
 
 /** Failures that trying again does not mend. */
 const FINAL: ReadonlySet<FailureCode> = new Set(['token-refused', 'version-unsupported', 'site-unknown']);
+/** Final before the first welcome: later the certificate is one that was trusted, and may be renewed. */
+const FINAL_AT_FIRST: ReadonlySet<FailureCode> = new Set(['certificate-untrusted']);
 
 /**
  * Keeps a link to the coordinator and answers what it asks, until told to stop (null) or until the coordinator says
@@ -42,10 +44,12 @@ const FINAL: ReadonlySet<FailureCode> = new Set(['token-refused', 'version-unsup
  */
 export async function keepConnected(deps: ConnectionDeps): Promise<Failure | null> {
   let attempt = 0;
+  let everWelcomed = false;
   while (!deps.stop.aborted) {
-    const end = await connectOnce(deps);
+    const end = await connectOnce(deps, everWelcomed);
     if (end.kind === 'stopped') return null;
     if (end.kind === 'final') return end.failure;
+    everWelcomed ||= end.welcomed;
     // a try that reached the coordinator starts the count again
     attempt = end.welcomed ? 1 : attempt + 1;
     const retryMs = backoffMs(attempt, deps.random());
@@ -56,11 +60,12 @@ export async function keepConnected(deps: ConnectionDeps): Promise<Failure | nul
   return null;
 }
 
-async function connectOnce(deps: ConnectionDeps): Promise<SessionEnd> {
+async function connectOnce(deps: ConnectionDeps, everWelcomed: boolean): Promise<SessionEnd> {
   const link = await deps.connect();
   if (!link.ok) {
     const { failure } = link;
-    if (FINAL.has(failure.code)) return { kind: 'final', failure };
+    const final = FINAL.has(failure.code) || (!everWelcomed && FINAL_AT_FIRST.has(failure.code));
+    if (final) return { kind: 'final', failure };
     return { kind: 'lost', closeCode: null, reason: failure.message, welcomed: false };
   }
   const end = await serveLink(link.value, deps);

@@ -8,7 +8,7 @@ import { tableRequest } from '../design/request.js';
 import { scaleShard } from '../design/scale.js';
 import type { RawShard } from '../design/shard.js';
 import { type LocalSolver, localSolver } from '../local/local-solver.js';
-import { lossNamed } from '../losses/index.js';
+import { lossOf } from '../losses/index.js';
 import type { Table, TableRequest } from '../source/table.js';
 import type { VectorMemory } from './memory.js';
 
@@ -67,7 +67,7 @@ export function solverOf(run: LiveRun, spec: FitSpecification, raw: RawShard): C
   if (run.solver !== null || scaling === null) return succeed(run.solver);
   const fits = checkScaling(scaling, raw.columns.length);
   if (!fits.ok) return fits;
-  run.solver = localSolver(scaleShard(raw, scaling, spec.intercept === 'shared'), lossNamed(spec.loss));
+  run.solver = localSolver(scaleShard(raw, scaling, spec.intercept === 'shared'), lossOf(spec.loss));
   return succeed(run.solver);
 }
 
