@@ -65,38 +65,37 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
     if (step === null) return ending(problem, here, null, rounds, 'stalled', UNFACTORED);
     const trials = [...trialPoints(g, here.z, step.direction), ...extra];
     const line = linePoints(g, here.z, step.direction);
+    const withCurvature = problem.trialMatrices === 'all' ? trials.length : 1;
     const answers = yield* evaluate(
-      [
-        ...trials.map((point) => ({ point, want: 'curvature' as const })),
-        ...line.map((point) => ({ point, want: 'value' as const })),
-      ],
+      [...trials, ...line].map((point, k) => ({ point, want: k < withCurvature ? 'curvature' : 'value' })),
       null,
-      progressOf(here, whole, 'trial points with curvature'),
+      progressOf(here, whole, 'trial points'),
     );
     rounds++;
     extra = [];
     const values = answers.points.map((point) => point.value);
     const best = bestTrial(g, here, trials, values.slice(0, trials.length));
-    if (best !== null) {
+    if (best !== null) damping = damping > DAMPING_LEAST ? damping / DAMPING_FACTOR : 0;
+    if (best !== null && best < withCurvature) {
       here = iterateFrom(problem, trials[best], answers, best);
-      damping = damping > DAMPING_LEAST ? damping / DAMPING_FACTOR : 0;
       failures = 0;
       continue;
     }
-    const onLine = bestLinePoint(g, here, line, values.slice(trials.length));
-    if (onLine === null) {
+    const onLine = best === null ? bestLinePoint(g, here, line, values.slice(trials.length)) : null;
+    const better = best !== null ? trials[best] : onLine !== null ? line[onLine] : null;
+    if (better === null) {
       damping = Math.max(damping * DAMPING_FACTOR, DAMPING_FIRST);
       failures++;
       continue;
     }
     const again = yield* evaluate(
-      [{ point: line[onLine], want: 'curvature' }],
+      [{ point: better, want: 'curvature' }],
       null,
-      progressOf(here, whole, 'a shorter step'),
+      progressOf(here, whole, 'curvature at the best trial point'),
     );
     rounds++;
     failures = 0;
-    here = iterateFrom(problem, line[onLine], again, 0);
+    here = iterateFrom(problem, better, again, 0);
   }
 }
 

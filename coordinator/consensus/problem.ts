@@ -22,6 +22,11 @@ export interface ConsensusProblem {
   readonly separatedBelow: number | null;
   /** Curvature matrices the strictest site lets leave; infinite for no limit. */
   readonly curvatureMost: number;
+  /**
+   * On the `curvature` rung, the trial points of a round at which curvature is asked: at all of them saves rounds, at
+   * the first alone sends a third of the numbers.
+   */
+  readonly trialMatrices: 'all' | 'first';
   /** Directions along which curvature may be asked: in one ask, and in all. */
   readonly sketch: { readonly columns: number; readonly columnsMost: number };
   /** Of the random directions among them. */

@@ -1,4 +1,5 @@
 import type { WorkAnswer } from '../../protocol/messages/round.js';
+import { packedLength } from '../../protocol/messages/vector.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import { curvatureRung } from '../consensus/curvature-rung.js';
@@ -13,6 +14,13 @@ import type { RungChoice } from './rung.js';
 import { type Frame, fitCount, interceptOnly, penaltyOn } from './scale.js';
 import { firstRefusal, type PooledSurvey, type Stop } from './survey.js';
 import { numbersDown } from './traffic.js';
+
+/**
+ * Numbers in one curvature matrix up to which it is asked at every trial point: above it (400 kB, some 315 columns) the
+ * bytes cost more than the round they may save. By size, not by the measured speed of the links: the weather of a
+ * network must not change a bit of the result.
+ */
+const TRIAL_NUMBERS_MOST = 50_000;
 
 /** What the solve stage leaves: one end per fit, the rounds it took and the numbers that moved. */
 export interface Solved {
@@ -90,6 +98,7 @@ function consensusProblem(
     separatedBelow: separatedBelow(specification, survey),
     curvatureMayVanish: specification.loss.kind === 'huber',
     curvatureMost: choice.curvatureMost,
+    trialMatrices: packedLength(frame.p) <= TRIAL_NUMBERS_MOST ? 'all' : 'first',
     sketch: choice.sketch,
     seed: fit,
   };

@@ -16,7 +16,15 @@ import { gradient } from './gradient.js';
 import { type BenchProblem, makeProblem } from './problems.js';
 import { textbook } from './textbook.js';
 
-const RUNGS = ['pooled', 'curvature', 'proximal', 'sketched-8', 'sketched-1', 'proximal-only'] as const;
+const RUNGS = [
+  'pooled',
+  'curvature',
+  'curvature-first',
+  'proximal',
+  'sketched-8',
+  'sketched-1',
+  'proximal-only',
+] as const;
 /** What the rungs are measured against; uncertified. */
 const BASELINES = { balancing, gradient, textbook } as const satisfies Record<
   string,
@@ -64,6 +72,7 @@ export function measureProblem(name: string): Row[] {
   return [
     ...(problem.loss === 'squared' ? [rung('pooled', pooledRung, DEFAULT_BUDGET)] : []),
     rung('curvature', curvatureRung, Number.POSITIVE_INFINITY),
+    rung('curvature-first', firstTrialOnly, Number.POSITIVE_INFINITY),
     rung('proximal', proximalRung, DEFAULT_BUDGET),
     ...(problem.p <= SKETCHED_COLUMNS_MOST
       ? [rung('sketched-8', sketchedWith(8), 0), rung('sketched-1', sketchedWith(1), 0)]
@@ -72,6 +81,10 @@ export function measureProblem(name: string): Row[] {
     ...BASELINE_NAMES.map((name) => measureBaseline(name, problem, sites, optimum)),
   ];
 }
+
+/** The curvature rung with curvature at the first trial point of a round alone. */
+const firstTrialOnly = (problem: ConsensusProblem): Method =>
+  curvatureRung({ ...problem, trialMatrices: 'first' });
 
 /** The sketched rung with so many directions a round, and no limit on them in all. */
 export const sketchedWith =
@@ -95,6 +108,7 @@ export function consensusProblem(problem: BenchProblem, tolerance: number, budge
     separatedBelow: problem.loss === 'logistic' ? Math.LN2 / problem.pooled.rowCount : null,
     curvatureMayVanish: problem.loss === 'huber',
     curvatureMost: budget,
+    trialMatrices: 'all',
     sketch: { columns: 0, columnsMost: 0 },
     seed: 1,
   };

@@ -40,6 +40,11 @@ function solveRandom(
 
 describe.each<[string, Make, number]>([
   ['curvature', curvatureRung, Number.POSITIVE_INFINITY],
+  [
+    'curvature at the first trial point alone',
+    (problem) => curvatureRung({ ...problem, trialMatrices: 'first' }),
+    Number.POSITIVE_INFINITY,
+  ],
   ['proximal, three matrices', proximalRung, 3],
   ['sketched, eight directions a round', sketchedWith(8), 1],
   ['sketched, one direction a round', sketchedWith(1), 0],
