@@ -1,6 +1,7 @@
 import { packSymmetric } from '../../numerics/packed.js';
 import { dot, maxOf } from '../../numerics/vector.js';
 import { type ModelStep, measuredCertificate, modelStep, relativeTo } from './certificate.js';
+import { DAMPING_LEAST, Damping, FAILURES_MOST } from './damping.js';
 import { type Flaw, flawFromTheStart, separatedColumns, verdict } from './existence.js';
 import type { Certificate, Method, MethodEnd, Progress } from './method.js';
 import { definiteMetric, diagonalOf, flooredDiagonal, plusDiagonal, RIDGE } from './metric.js';
@@ -12,12 +13,6 @@ import { zStepFull } from './z-step.js';
 
 /** Weight of the proximal term that holds each site's own fit near z₀, in the site's own diagonal curvature. */
 const OWN_FIT_HOLD = 0.3;
-/** Levenberg-Marquardt damping: first value, growth after a failed round, shrinkage after a good one. */
-const DAMPING_FIRST = 0.1;
-const DAMPING_FACTOR = 10;
-const DAMPING_LEAST = 1e-3;
-/** Rounds in a row without progress after which the run is called stalled. */
-const FAILURES_MOST = 30;
 const UNFACTORED = 'the curvature could not be factored';
 
 /**
@@ -38,8 +33,7 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
   const aliased = flawFromTheStart(problem, here.curvature);
   if (aliased !== null) return flawed(problem, here, null, rounds, aliased);
   let extra = ownFitPoint(problem, first, here);
-  let damping = 0;
-  let failures = 0;
+  const damping = new Damping();
   for (;;) {
     const metric = definiteMetric(here.curvature, here.diagonal);
     const whole = modelStep(g, metric, here.gradient, here.z);
@@ -57,11 +51,13 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
     if (separated.length > 0)
       return flawed(problem, here, certificate, rounds, { reason: 'separable', columns: separated });
     if (rounds >= problem.roundsMost) return ending(problem, here, certificate, rounds, 'round-limit', null);
-    if (failures >= FAILURES_MOST)
+    if (damping.failures >= FAILURES_MOST)
       return ending(problem, here, certificate, rounds, 'stalled', `no progress in ${FAILURES_MOST} rounds`);
 
     const step =
-      whole !== null && damping === 0 ? whole : (dampedStep(problem, here, metric, damping) ?? whole);
+      whole !== null && damping.amount === 0
+        ? whole
+        : (dampedStep(problem, here, metric, damping.amount) ?? whole);
     if (step === null) return ending(problem, here, null, rounds, 'stalled', UNFACTORED);
     const trials = [...trialPoints(g, here.z, step.direction), ...extra];
     const line = linePoints(g, here.z, step.direction);
@@ -75,17 +71,15 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
     extra = [];
     const values = answers.points.map((point) => point.value);
     const best = bestTrial(g, here, trials, values.slice(0, trials.length));
-    if (best !== null) damping = damping > DAMPING_LEAST ? damping / DAMPING_FACTOR : 0;
+    if (best !== null) damping.succeeded();
     if (best !== null && best < withCurvature) {
       here = iterateFrom(problem, trials[best], answers, best);
-      failures = 0;
       continue;
     }
     const onLine = best === null ? bestLinePoint(g, here, line, values.slice(trials.length)) : null;
     const better = best !== null ? trials[best] : onLine !== null ? line[onLine] : null;
     if (better === null) {
-      damping = Math.max(damping * DAMPING_FACTOR, DAMPING_FIRST);
-      failures++;
+      damping.failed();
       continue;
     }
     const again = yield* evaluate(
@@ -94,7 +88,7 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
       progressOf(here, whole, 'curvature at the best trial point'),
     );
     rounds++;
-    failures = 0;
+    damping.foundShorter();
     here = iterateFrom(problem, better, again, 0);
   }
 }

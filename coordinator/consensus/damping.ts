@@ -1,6 +1,7 @@
 const FIRST = 0.1;
 const FACTOR = 10;
-const LEAST = 1e-3;
+/** The least damping worth the name: less counts as none. */
+export const DAMPING_LEAST = 1e-3;
 /** Rounds in a row without progress after which a run is called stalled. */
 export const FAILURES_MOST = 30;
 
@@ -14,7 +15,7 @@ export class Damping {
   failures = 0;
 
   succeeded(): void {
-    this.amount = this.amount > LEAST ? this.amount / FACTOR : 0;
+    this.amount = this.amount > DAMPING_LEAST ? this.amount / FACTOR : 0;
     this.failures = 0;
   }
 
