@@ -1,10 +1,10 @@
+import { leastSubgradient, type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import { dot, maxAbs, maxOf } from '../../numerics/vector.js';
+import { zStepFull } from '../../numerics/z-step.js';
 import { symmetricTimes } from './matrix.js';
 import type { Certificate } from './method.js';
-import { leastSubgradient, type Penalty, penaltyValue } from './penalty.js';
 import type { ConsensusProblem } from './problem.js';
 import type { Standing } from './trial-points.js';
-import { zStepFull } from './z-step.js';
 
 /** Safety factor on a decrement measured with the curvature at z. */
 const MEASURED_FACTOR = 1.5;

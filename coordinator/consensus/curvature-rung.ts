@@ -1,15 +1,15 @@
 import { packSymmetric } from '../../numerics/packed.js';
+import { penaltyValue } from '../../numerics/penalty.js';
 import { dot, maxOf } from '../../numerics/vector.js';
+import { zStepFull } from '../../numerics/z-step.js';
 import { type ModelStep, measuredCertificate, modelStep, relativeTo } from './certificate.js';
 import { DAMPING_LEAST, Damping, FAILURES_MOST } from './damping.js';
 import { type Flaw, flawFromTheStart, separatedColumns, verdict } from './existence.js';
 import type { Certificate, Method, MethodEnd, Progress } from './method.js';
 import { definiteMetric, diagonalOf, flooredDiagonal, plusDiagonal, RIDGE } from './metric.js';
-import { penaltyValue } from './penalty.js';
 import { evaluate, type PooledEvaluation, required } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 import { bestLinePoint, bestTrial, type Iterate, linePoints, trialPoints } from './trial-points.js';
-import { zStepFull } from './z-step.js';
 
 /** Weight of the proximal term that holds each site's own fit near z₀, in the site's own diagonal curvature. */
 const OWN_FIT_HOLD = 0.3;

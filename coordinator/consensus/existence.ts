@@ -1,6 +1,6 @@
+import type { Penalty } from '../../numerics/penalty.js';
 import { maxAbs } from '../../numerics/vector.js';
 import type { Certificate } from './method.js';
-import type { Penalty } from './penalty.js';
 import type { ConsensusProblem } from './problem.js';
 
 /** A pivot this small, relative to its column, is rounding: the column is a combination of those before it. */

@@ -1,12 +1,12 @@
 import { packSymmetric } from '../../numerics/packed.js';
+import { isSmooth, type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import { mergeFactors, triangularFactor } from '../../numerics/triangular-factor.js';
 import { maxOf } from '../../numerics/vector.js';
+import { zStepFull } from '../../numerics/z-step.js';
 import { measuredCertificate, modelStep } from './certificate.js';
 import type { Certificate, Method, MethodEnd } from './method.js';
 import { diagonalOf } from './metric.js';
-import { isSmooth, type Penalty, penaltyValue } from './penalty.js';
 import type { ConsensusProblem } from './problem.js';
-import { zStepFull } from './z-step.js';
 
 /** Refinement steps: each takes the residual through the factor itself, which restores the digits the Gram lost. */
 const REFINEMENTS = 3;

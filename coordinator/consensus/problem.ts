@@ -1,4 +1,4 @@
-import type { Penalty } from './penalty.js';
+import type { Penalty } from '../../numerics/penalty.js';
 
 /** What a consensus method is told about one problem: K sites, p solver columns. No names, no rows. */
 export interface ConsensusProblem {

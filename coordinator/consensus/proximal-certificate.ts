@@ -1,7 +1,7 @@
+import { leastSubgradient, type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import { estimatedCertificate } from './certificate.js';
 import { runawayColumns, separatedColumns } from './existence.js';
 import type { Certificate, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
-import { leastSubgradient, type Penalty, penaltyValue } from './penalty.js';
 import { evaluate, type PooledEvaluation, required, siteGradients } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 import type { Residuals } from './residuals.js';

@@ -1,3 +1,4 @@
+import { penaltyValue } from '../../numerics/penalty.js';
 import { Acceleration } from './acceleration.js';
 import { Anderson } from './anderson.js';
 import { curvatureRung } from './curvature-rung.js';
@@ -5,7 +6,6 @@ import { flawFromTheStart } from './existence.js';
 import type { Method, MethodAsk, MethodEnd, SiteAnswers } from './method.js';
 import { flooredDiagonal } from './metric.js';
 import { askProximal, ledByModels } from './model-led.js';
-import { penaltyValue } from './penalty.js';
 import { diagonalCurvatures, evaluate, required, siteCurvatures, siteGradients } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 import {

@@ -1,10 +1,10 @@
 import { packSymmetric } from '../../numerics/packed.js';
+import { penaltyValue } from '../../numerics/penalty.js';
 import { plusScaled } from '../../numerics/vector.js';
 import { measuredCertificate, modelStep, relativeTo } from './certificate.js';
 import { type Flaw, flawFromTheStart, verdict } from './existence.js';
 import type { Certificate, MethodAsk, Progress, SiteAnswers } from './method.js';
 import { definiteMetric, diagonalOf, flooredDiagonal } from './metric.js';
-import { penaltyValue } from './penalty.js';
 import { evaluate, type PooledEvaluation, required } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 

@@ -1,5 +1,5 @@
-import type { Penalty } from './penalty.js';
-import { zStepDiagonal } from './z-step.js';
+import type { Penalty } from '../../numerics/penalty.js';
+import { zStepDiagonal } from '../../numerics/z-step.js';
 
 /** The sites' metrics M_i = scales[i] · diag(diagonal), and what consensus ADMM computes with them. K sites, p columns. */
 export class SiteMetric {

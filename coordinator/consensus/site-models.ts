@@ -1,9 +1,9 @@
+import { leastSubgradient, type Penalty } from '../../numerics/penalty.js';
 import { dot, norm, plusScaled, subtract, sumOf } from '../../numerics/vector.js';
 import type { Extrapolation, Iteration } from './acceleration.js';
 import { type ModelStep, modelStep } from './certificate.js';
 import { symmetricTimes } from './matrix.js';
 import { definiteMetric, diagonalOf } from './metric.js';
-import { leastSubgradient, type Penalty } from './penalty.js';
 import type { SiteMetric } from './site-metric.js';
 
 /** An SR1 update is skipped where its denominator is this small a share of the lengths in it. */

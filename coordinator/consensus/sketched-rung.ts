@@ -1,10 +1,10 @@
+import { penaltyValue } from '../../numerics/penalty.js';
 import { seededRandom } from '../../numerics/random.js';
 import { type ModelStep, modelStep, relativeTo, sketchedCertificate } from './certificate.js';
 import { Damping, FAILURES_MOST } from './damping.js';
 import { runawayColumns } from './existence.js';
 import type { Certificate, Method, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
 import { plusDiagonal } from './metric.js';
-import { penaltyValue } from './penalty.js';
 import { evaluate, type PooledEvaluation, required } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
 import { productsOf, SketchDirections, sketchAsk } from './sketch-directions.js';

@@ -1,5 +1,5 @@
+import { clipToBounds, type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import { plusScaled } from '../../numerics/vector.js';
-import { clipToBounds, type Penalty, penaltyValue } from './penalty.js';
 
 /** Step lengths along Δ tried with curvature, and those tried by value alone. */
 const TRIALS = [1, 0.3, 2] as const;

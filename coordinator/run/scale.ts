@@ -1,7 +1,7 @@
+import { noPenalty, type Penalty } from '../../numerics/penalty.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import { perTermMultipliers } from '../../protocol/specification/design-columns.js';
 import type { DesignColumn, FitSpecification } from '../../protocol/specification/types.js';
-import { noPenalty, type Penalty } from '../consensus/penalty.js';
 import type { PooledSurvey } from './survey.js';
 
 /** A standard deviation this small beside the mean is rounding: the column has no spread. */

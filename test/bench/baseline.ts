@@ -1,4 +1,4 @@
-import { type Penalty, penaltyValue } from '../../coordinator/consensus/penalty.js';
+import { type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import type { LocalSolver } from '../../worker/local/local-solver.js';
 import { must } from '../support/method-driver.js';
 

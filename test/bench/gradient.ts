@@ -1,7 +1,7 @@
 import { flooredDiagonal } from '../../coordinator/consensus/metric.js';
-import { zStepDiagonal } from '../../coordinator/consensus/z-step.js';
 import { seededRandom } from '../../numerics/random.js';
 import { dot, norm, plusScaled, subtract, sumOf } from '../../numerics/vector.js';
+import { zStepDiagonal } from '../../numerics/z-step.js';
 import type { LocalSolver } from '../../worker/local/local-solver.js';
 import { must } from '../support/method-driver.js';
 import { type BaselineProblem, type BaselineRun, GapWatch } from './baseline.js';

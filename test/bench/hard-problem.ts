@@ -1,4 +1,4 @@
-import { noPenalty, type Penalty } from '../../coordinator/consensus/penalty.js';
+import { noPenalty, type Penalty } from '../../numerics/penalty.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
 import type { LossKind } from '../../protocol/specification/types.js';
 import {

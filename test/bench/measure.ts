@@ -1,10 +1,10 @@
 import { curvatureRung } from '../../coordinator/consensus/curvature-rung.js';
 import type { Method, MethodEnd } from '../../coordinator/consensus/method.js';
-import { clipToBounds, penaltyValue } from '../../coordinator/consensus/penalty.js';
 import { pooledRung } from '../../coordinator/consensus/pooled-rung.js';
 import type { ConsensusProblem } from '../../coordinator/consensus/problem.js';
 import { proximalRung } from '../../coordinator/consensus/proximal-rung.js';
 import { sketchedRung } from '../../coordinator/consensus/sketched-rung.js';
+import { clipToBounds, penaltyValue } from '../../numerics/penalty.js';
 import type { LossKind } from '../../protocol/specification/types.js';
 import { type LocalSolver, localSolver } from '../../worker/local/local-solver.js';
 import { lossOf } from '../../worker/losses/index.js';

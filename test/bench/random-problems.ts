@@ -1,4 +1,4 @@
-import { noPenalty } from '../../coordinator/consensus/penalty.js';
+import { noPenalty } from '../../numerics/penalty.js';
 import { seededRandom } from '../../numerics/random.js';
 import type { LossKind } from '../../protocol/specification/types.js';
 import type { Shard } from '../../worker/design/shard.js';

@@ -1,7 +1,7 @@
 import { curvatureRung } from '../../coordinator/consensus/curvature-rung.js';
 import type { MethodEnd } from '../../coordinator/consensus/method.js';
-import type { Penalty } from '../../coordinator/consensus/penalty.js';
 import { pooledRung } from '../../coordinator/consensus/pooled-rung.js';
+import type { Penalty } from '../../numerics/penalty.js';
 import { maxAbs } from '../../numerics/vector.js';
 import type { Shard } from '../../worker/design/shard.js';
 import type { LocalSolver } from '../../worker/local/local-solver.js';

@@ -1,4 +1,4 @@
-import { zStepDiagonal } from '../../coordinator/consensus/z-step.js';
+import { zStepDiagonal } from '../../numerics/z-step.js';
 import { must } from '../support/method-driver.js';
 import { type BaselineProblem, type BaselineRun, GapWatch } from './baseline.js';
 

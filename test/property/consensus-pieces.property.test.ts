@@ -1,14 +1,16 @@
 import fc from 'fast-check';
 import { describe, expect, test } from 'vitest';
-import { minimiseByActiveSet } from '../../coordinator/consensus/active-set.js';
 import {
   estimatedCertificate,
   measuredCertificate,
   modelStep,
 } from '../../coordinator/consensus/certificate.js';
-import { minimiseQuadratic } from '../../coordinator/consensus/coordinate-descent.js';
 import { symmetricTimes } from '../../coordinator/consensus/matrix.js';
 import { definiteMetric, diagonalOf, flooredDiagonal } from '../../coordinator/consensus/metric.js';
+import { balancingFactor } from '../../coordinator/consensus/residuals.js';
+import { minimiseByActiveSet } from '../../numerics/active-set.js';
+import { cholesky } from '../../numerics/cholesky.js';
+import { minimiseQuadratic } from '../../numerics/coordinate-descent.js';
 import {
   clipToBounds,
   leastSubgradient,
@@ -16,12 +18,10 @@ import {
   type Penalty,
   penaltyValue,
   proximalOperator,
-} from '../../coordinator/consensus/penalty.js';
-import { balancingFactor } from '../../coordinator/consensus/residuals.js';
-import { zStepDiagonal, zStepFull } from '../../coordinator/consensus/z-step.js';
-import { cholesky } from '../../numerics/cholesky.js';
+} from '../../numerics/penalty.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
 import { dot, maxAbs } from '../../numerics/vector.js';
+import { zStepDiagonal, zStepFull } from '../../numerics/z-step.js';
 
 const seeds = fc.integer({ min: 1, max: 1e6 });
 

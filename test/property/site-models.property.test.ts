@@ -1,9 +1,9 @@
 import fc from 'fast-check';
 import { describe, expect, test } from 'vitest';
 import { symmetricTimes } from '../../coordinator/consensus/matrix.js';
-import { leastSubgradient, noPenalty } from '../../coordinator/consensus/penalty.js';
 import { SiteMetric } from '../../coordinator/consensus/site-metric.js';
 import { SiteModels } from '../../coordinator/consensus/site-models.js';
+import { leastSubgradient, noPenalty } from '../../numerics/penalty.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
 import { maxAbs, sumOf } from '../../numerics/vector.js';
 

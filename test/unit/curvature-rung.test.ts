@@ -1,7 +1,7 @@
 import { describe, expect, test } from 'vitest';
 import { curvatureRung } from '../../coordinator/consensus/curvature-rung.js';
 import type { MethodAsk, MethodEnd } from '../../coordinator/consensus/method.js';
-import { noPenalty } from '../../coordinator/consensus/penalty.js';
+import { noPenalty } from '../../numerics/penalty.js';
 
 /**
  * One site with φ(z) = 1 + √(1 + z²): convex, but a Newton step from z goes to −z³, so that from far out it overshoots

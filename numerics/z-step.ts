@@ -1,4 +1,4 @@
-import { cholesky, choleskySolve } from '../../numerics/cholesky.js';
+import { cholesky, choleskySolve } from './cholesky.js';
 import { minimiseQuadratic } from './coordinate-descent.js';
 import { isSmooth, type Penalty, proximalOperator } from './penalty.js';
 

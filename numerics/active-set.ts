@@ -1,4 +1,4 @@
-import { cholesky, choleskySolve } from '../../numerics/cholesky.js';
+import { cholesky, choleskySolve } from './cholesky.js';
 import type { Penalty } from './penalty.js';
 
 /** Solves on a free set at most, per coordinate. */

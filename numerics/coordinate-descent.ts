@@ -1,5 +1,5 @@
-import { cholesky, choleskySolve } from '../../numerics/cholesky.js';
 import { minimiseByActiveSet } from './active-set.js';
+import { cholesky, choleskySolve } from './cholesky.js';
 import { type Penalty, proximalOperator } from './penalty.js';
 
 const SWEEPS_MOST = 2000;
