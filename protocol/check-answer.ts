@@ -4,6 +4,7 @@
  */
 import { type Failure, type FailureCode, fail } from './failure.js';
 import type { EvaluateAnswer, EvaluateWork, Want } from './messages/evaluate.js';
+import type { JointAnswer, JointWork } from './messages/joint.js';
 import type { ProximalAnswer, ProximalWork } from './messages/proximal.js';
 import type { Answer, Ask, Work, WorkAnswer } from './messages/round.js';
 import type { SurveyAnswer } from './messages/survey.js';
@@ -28,8 +29,8 @@ function firstOf<T>(items: readonly T[], check: (item: T, index: number) => Fail
 
 /**
  * Null where a worker may compute this ask; p is null until the scaling is known. Codes: `dimension-wrong` (a length,
- * a repeated problem, an index, work that needs the scaling), `memory-missing` (a diagonal or start left out without
- * an ask to take it from).
+ * a repeated problem, an index, a negative weight of a penalty, work that needs the scaling), `memory-missing` (a
+ * diagonal or start left out without an ask to take it from).
  */
 export function checkAsk(ask: Ask, p: number | null): Failure | null {
   const seen = new Set<number>();
@@ -40,7 +41,8 @@ export function checkAsk(ask: Ask, p: number | null): Failure | null {
       return wrong('dimension-wrong', field, `Work "${work.work}" before the scaling of the run is known.`);
     }
     if (work.work === 'proximal') return checkProximalWork(work, ask.ask, p, field, seen);
-    return work.work === 'evaluate' ? checkEvaluateWork(work, p, field) : null;
+    if (work.work === 'evaluate') return checkEvaluateWork(work, p, field);
+    return work.work === 'joint' ? checkJointWork(work, p, field) : null;
   });
 }
 
@@ -95,6 +97,22 @@ function pointIs(at: number, points: number, field: string): Failure | null {
   return wrong('dimension-wrong', field, `Point ${at} of ${points} (counted from 0).`);
 }
 
+function checkJointWork(work: JointWork, p: number, field: string): Failure | null {
+  return (
+    lengthIs(work.start, p, `${field}.start`) ??
+    lengthIs(work.curvature, packedLength(p), `${field}.curvature`) ??
+    lengthIs(work.linear, p, `${field}.linear`) ??
+    weightsAre(work.l1, p, `${field}.l1`) ??
+    weightsAre(work.l2, p, `${field}.l2`)
+  );
+}
+
+function weightsAre(weights: Float64Array, p: number, field: string): Failure | null {
+  const negative = weights.findIndex((weight) => weight < 0);
+  if (negative < 0) return lengthIs(weights, p, field);
+  return wrong('dimension-wrong', field, `Weight ${negative} (counted from 0) of the penalty is negative.`);
+}
+
 /**
  * Null where the answer belongs to this ask and every vector has its length. Codes: `answer-unasked` (another run or
  * ask, other work, other problems, more or less than was wanted), `dimension-wrong`.
@@ -123,6 +141,7 @@ function checkItem(work: Work, answer: WorkAnswer, p: number | null, field: stri
   }
   if (work.work === 'proximal' && answer.work === 'proximal') return checkProximal(work, answer, p, field);
   if (work.work === 'evaluate' && answer.work === 'evaluate') return checkEvaluate(work, answer, p, field);
+  if (work.work === 'joint' && answer.work === 'joint') return checkJoint(work, answer, p, field);
   if (answer.work === 'factor') return lengthIs(answer.factor, packedLength(p + 1), `${field}.factor`);
   return null;
 }
@@ -142,25 +161,21 @@ function checkProximal(work: ProximalWork, answer: ProximalAnswer, p: number, fi
   return firstOf(work.problems, ({ problem }, index) => {
     const at = `${field}.problems[${index}]`;
     const given = answer.problems[index];
-    if (given.problem !== problem) {
-      return wrong('answer-unasked', `${at}.problem`, `Problem ${given.problem}; ${problem} was asked.`);
-    }
-    return lengthIs(given.point, p, `${at}.point`);
+    return problemIs(given.problem, problem, `${at}.problem`) ?? lengthIs(given.point, p, `${at}.point`);
   });
 }
 
+function problemIs(given: number, asked: number, field: string): Failure | null {
+  if (given === asked) return null;
+  return wrong('answer-unasked', field, `Problem ${given}; ${asked} was asked.`);
+}
+
 function checkEvaluate(work: EvaluateWork, answer: EvaluateAnswer, p: number, field: string): Failure | null {
-  if (answer.problem !== work.problem) {
-    return wrong(
-      'answer-unasked',
-      `${field}.problem`,
-      `Problem ${answer.problem}; ${work.problem} was asked.`,
-    );
-  }
   if (answer.points.length !== work.points.length) {
     return wrong('answer-unasked', `${field}.points`, 'The number of points is not the one asked.');
   }
   return (
+    problemIs(answer.problem, work.problem, `${field}.problem`) ??
     firstOf(work.points, ({ want }, index) =>
       checkPoint(want, answer.points[index], p, `${field}.points[${index}]`),
     ) ??
@@ -205,5 +220,17 @@ function checkOwnFit(work: EvaluateWork, answer: EvaluateAnswer, p: number, fiel
   return (
     lengthIs(answer.ownFit.curvature, packedLength(p), `${field}.curvature`) ??
     lengthIs(answer.ownFit.linear, p, `${field}.linear`)
+  );
+}
+
+function checkJoint(work: JointWork, answer: JointAnswer, p: number, field: string): Failure | null {
+  const end = (at: JointAnswer['start'], name: string): Failure | null =>
+    lengthIs(at.gradient, p, `${field}.${name}.gradient`) ??
+    lengthIs(at.curvature, packedLength(p), `${field}.${name}.curvature`);
+  return (
+    problemIs(answer.problem, work.problem, `${field}.problem`) ??
+    end(answer.start, 'start') ??
+    lengthIs(answer.point, p, `${field}.point`) ??
+    end(answer.end, 'end')
   );
 }

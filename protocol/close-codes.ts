@@ -16,12 +16,14 @@ export const CLOSE_CODES = {
   versionUnsupported: 4002,
   /** The token is missing, unknown or speaks for another site. */
   tokenRefused: 4003,
-  /** The same member is connected already: the newer link wins, the older one gets this code. */
+  /** The same member has a link that was opened later: the older one gets this code. */
   replaced: 4004,
   /** No `hello` in time. */
   helloLate: 4005,
   /** The peer reads or answers too slowly for the bounded buffers. */
   tooSlow: 4006,
+  /** The certificate of the worker is missing, not trusted, or another site's, or has expired since. */
+  certificateRefused: 4007,
 } as const;
 
 export type CloseCode = (typeof CLOSE_CODES)[keyof typeof CLOSE_CODES];

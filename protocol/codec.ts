@@ -77,7 +77,7 @@ function decodeMessage<T>(bytes: Uint8Array, schema: z.ZodType<T>, kinds: Readon
   if (typeof kind !== 'string') return fail('frame-malformed', 'The message has no text field "kind".');
   if (!kinds.has(kind)) {
     const known = [...kinds].join(', ');
-    return fail('message-unknown', `A message of kind "${kind.slice(0, 40)}"; this side takes ${known}.`);
+    return fail('message-unknown', `A message of kind "${shown(kind, 40)}"; this side takes ${known}.`);
   }
   if (typeof version === 'number' && version !== PROTOCOL_VERSION) {
     return fail(
@@ -95,7 +95,7 @@ function decodeMap(bytes: Uint8Array): Checked<Record<string, unknown>> {
     return succeed(decode(bytes, decodeOptions));
   } catch (error) {
     const reason = error instanceof Error ? error.message : String(error);
-    return fail('frame-malformed', `The frame is not in preferred CBOR: ${reason}.`);
+    return fail('frame-malformed', `The frame is not in preferred CBOR: ${shown(reason, REASON_MOST)}.`);
   }
 }
 
@@ -105,8 +105,15 @@ function describeIssue(kind: string, error: z.ZodError): Checked<never> {
     (path, step) => (typeof step === 'number' ? `${path}[${step}]` : `${path}.${String(step)}`),
     kind,
   );
-  return fail(failureOf(issue), `${issue.message}.`, { where: { field } });
+  return fail(failureOf(issue), `${shown(issue.message, REASON_MOST)}.`, { where: { field } });
 }
+
+/** Characters of a reason: what is in a frame may be long, and ends on a terminal. */
+const REASON_MOST = 300;
+
+/** The beginning of what a peer wrote, without characters that would move a terminal's cursor or turn its text round. */
+const shown = (text: string, most: number): string =>
+  `${text.slice(0, most).replaceAll(/[\p{C}\p{Zl}\p{Zp}]/gu, '\ufffd')}${text.length > most ? ' …' : ''}`;
 
 /** A schema may name the code of its refinement in the issue's `params`; every other issue is a malformed message. */
 function failureOf(issue: z.core.$ZodIssue): FailureCode {

@@ -82,6 +82,8 @@ class Scan {
     const argument = this.argument(info);
     this.at += headBytes;
     if (major === TEXT) return this.text(argument);
+    if (major === MAP && argument > LIMITS.fieldsMost)
+      return malformed(`more than ${LIMITS.fieldsMost} fields`);
     if (major === ARRAY || major === MAP) return this.open(argument, major === MAP ? 2 : 1);
     return malformed('a byte string that is not a float64 vector');
   }

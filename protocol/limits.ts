@@ -4,8 +4,10 @@ export const LIMITS = {
   frameBytesMost: 128 * 1024 * 1024,
   /** Deepest nesting of maps and arrays in one frame. */
   nestingMost: 12,
-  /** Most elements in one map or array of a frame (vectors are byte strings, not arrays). */
+  /** Most elements in one array of a frame (vectors are byte strings, not arrays). */
   elementsMost: 200_000,
+  /** Most fields of one map: no message has nearly as many, and a reader pays dearly for names it does not know. */
+  fieldsMost: 64,
   /** Most data items in one frame, map keys counted too. */
   itemsMost: 1_000_000,
   /** Longest text string, in bytes of UTF-8: a fit specification fits. */
@@ -21,4 +23,8 @@ export const LIMITS = {
   /** Ping interval and the silence after which a link counts as dead. Milliseconds. */
   pingEveryMs: 10_000,
   silenceMostMs: 120_000,
+  /** A peer that takes what waits for it more slowly than this, and `silenceMostMs`, is closed. Bytes a second. */
+  readBytesPerSecondLeast: 4096,
+  /** How long the peer has for its half of the closing handshake. Milliseconds. */
+  closeDeadlineMs: 5000,
 } as const;

@@ -23,6 +23,8 @@ export function numbersOfWork(work: Work): number {
         (work.ownFit === null ? 0 : 1) +
         (work.sketch?.directions.length ?? 0)
       );
+    case 'joint':
+      return sum([work.start, work.curvature, work.linear, work.l1, work.l2], lengthOf);
   }
 }
 
@@ -43,6 +45,10 @@ export function numbersOfAnswer(answer: WorkAnswer): number {
       const fit = ownFit === null ? 0 : ownFit.curvature.length + ownFit.linear.length;
       return atPoints + fit + lengthOf(sketch);
     }
+    case 'joint': {
+      const ends = sum([answer.start, answer.end], (at) => 1 + at.gradient.length + at.curvature.length);
+      return ends + answer.point.length + 1;
+    }
     case 'factor':
       return answer.factor.length;
   }
@@ -56,6 +62,8 @@ export function curvatureMatricesOf(work: Work): number {
       return 0;
     case 'evaluate':
       return work.points.filter(({ want }) => want === 'curvature').length + (work.ownFit === null ? 0 : 1);
+    case 'joint':
+      return 2;
     case 'factor':
       return 1;
   }

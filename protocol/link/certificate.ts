@@ -1,7 +1,7 @@
 /** Why a TLS connection was not trusted, by the codes of Node and OpenSSL. */
 const WORDS: Readonly<Record<string, string>> = {
-  CERT_HAS_EXPIRED: 'it has expired',
-  CERT_NOT_YET_VALID: 'it is not valid yet',
+  CERT_HAS_EXPIRED: 'it or its authority has expired, or the clock of this machine is ahead',
+  CERT_NOT_YET_VALID: 'it or its authority is not valid yet, or the clock of this machine is behind',
   CERT_REVOKED: 'it was revoked',
   CERT_UNTRUSTED: 'its authority is not trusted',
   DEPTH_ZERO_SELF_SIGNED_CERT: 'it is a self-signed certificate and not the one trusted here',
@@ -9,6 +9,8 @@ const WORDS: Readonly<Record<string, string>> = {
   UNABLE_TO_GET_ISSUER_CERT: 'it was signed by an authority that is not trusted here',
   UNABLE_TO_GET_ISSUER_CERT_LOCALLY: 'it was signed by an authority that is not trusted here',
   UNABLE_TO_VERIFY_LEAF_SIGNATURE: 'it was signed by an authority that is not trusted here',
+  INVALID_PURPOSE: 'it was not made for this use',
+  INVALID_CA: 'its authority is none that may sign certificates',
   ERR_TLS_CERT_ALTNAME_INVALID: 'it is for another host name or address',
 };
 

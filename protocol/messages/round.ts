@@ -2,15 +2,23 @@ import { z } from 'zod';
 import { FAILURE_CODES } from '../failure.js';
 import { evaluateAnswer, evaluateWork } from './evaluate.js';
 import { factorAnswer, factorWork } from './factor.js';
+import { jointAnswer, jointWork } from './joint.js';
 import { proximalAnswer, proximalWork } from './proximal.js';
 import { surveyAnswer, surveyWork } from './survey.js';
 import { count } from './vector.js';
 
-export const work = z.discriminatedUnion('work', [surveyWork, proximalWork, evaluateWork, factorWork]);
+export const work = z.discriminatedUnion('work', [
+  surveyWork,
+  proximalWork,
+  evaluateWork,
+  jointWork,
+  factorWork,
+]);
 export const workAnswer = z.discriminatedUnion('work', [
   surveyAnswer,
   proximalAnswer,
   evaluateAnswer,
+  jointAnswer,
   factorAnswer,
 ]);
 

@@ -26,6 +26,7 @@ export function checkRules(
   checkColumnRoles(document, complain);
   for (const [index, penalty] of (document.penalty ?? []).entries()) checkMixture(penalty, index, complain);
   checkLambdaLengths(document.penalty ?? [], complain);
+  checkBarrier(document, complain);
   if (terms !== null) checkTerms(document, terms, complain);
 }
 
@@ -99,6 +100,36 @@ function checkLambdaLengths(penalties: readonly WrittenPenalty[], complain: Comp
       'Give lists of the same length: one fit for each place.',
     );
   });
+}
+
+/** A quorum lets answers of the late stand in, which need an age that they may have. */
+function checkBarrier({ barrier, sites }: Partial<FitDocument>, complain: Complain): void {
+  if (barrier === undefined) return;
+  const { quorum, oldest } = barrier;
+  if (quorum === 'all') {
+    if (oldest === 0) return;
+    const message = `Found oldest: ${oldest} with quorum: all; allowed: 0, as every round hears every site.`;
+    complain(
+      ['barrier', 'oldest'],
+      'field-conflict',
+      message,
+      'Remove it, or set quorum to a number of sites.',
+    );
+    return;
+  }
+  if (oldest === 0) {
+    const message = `Found quorum: ${quorum} with oldest: 0, so that no older answer may stand in; allowed: oldest of 1 or more.`;
+    complain(
+      ['barrier', 'oldest'],
+      'field-conflict',
+      message,
+      'Set it, for instance to 40, or use quorum: all.',
+    );
+  }
+  if (Array.isArray(sites) && quorum > sites.length) {
+    const message = `Found a quorum of ${quorum} among ${sites.length} sites; allowed: 1 to ${sites.length}, or all.`;
+    complain(['barrier', 'quorum'], 'field-conflict', message, 'Use a quorum of at most as many sites.');
+  }
 }
 
 function checkTerms(document: Partial<FitDocument>, terms: readonly Term[], complain: Complain): void {

@@ -124,28 +124,22 @@ const rounds = mapping({
   rung: words('highest', 'pooled', 'curvature', 'sketched', 'proximal').default('highest'),
 });
 
+const QUORUM_ALLOWED = 'all, or a whole number of 1 or more';
+
 const barrier = mapping({
   /** Time after which a site of a round counts as a straggler. Default 30s. */
   deadline: duration.default(30_000),
-  /** Answers needed to end a round. Default and only choice: all. */
-  quorum: chosen((input) =>
-    typeof input === 'number' && Number.isInteger(input) && input >= 1
-      ? notBuilt('Rounds with a quorum of fewer than all sites are', 'Use all.')
-      : words('all'),
+  /** Sites whose answers end a round; older answers stand in for the others'. Default all. */
+  quorum: chosen(
+    (input): z.ZodType<number | 'all'> =>
+      typeof input === 'number' ? wholeFrom(1, 10_000) : z.literal('all', { error: QUORUM_ALLOWED }),
   ).default('all'),
-  /** Age of an answer that may stand in for a missing one, in rounds. Default and only choice: 0. */
-  oldest: chosen(
-    (input): z.ZodType<number> =>
-      typeof input === 'number' && Number.isInteger(input) && input > 0
-        ? notBuilt('Older answers that stand in are', 'Use 0.')
-        : wholeFrom(0),
-  ).default(0),
+  /** Most rounds that an answer which stands in may be old; a site with an older one is waited for. Default 0. */
+  oldest: wholeFrom(0, 1_000_000).default(0),
   /** Time to wait for a missing site before `missing` applies. Default 30m. */
   patience: duration.default(1_800_000),
-  /** What to do then. Default and only choice: stop. */
-  missing: wordsBuilt(['stop'], { 'go-without': 'Runs that go on without a missing site are' }).default(
-    'stop',
-  ),
+  /** What to do then: end the run, or fit again without the site. Default stop. */
+  missing: words('stop', 'go-without').default('stop'),
 });
 
 const oneColumn = mapping({ column: columnName });

@@ -1,6 +1,7 @@
 import { createHash } from 'node:crypto';
 import type { EvaluateWork } from '../../protocol/messages/evaluate.js';
 import type { FactorWork } from '../../protocol/messages/factor.js';
+import type { JointWork } from '../../protocol/messages/joint.js';
 import type { Work } from '../../protocol/messages/round.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import type { SurveyWork } from '../../protocol/messages/survey.js';
@@ -18,6 +19,7 @@ export type FilledWork =
   | SurveyWork
   | FactorWork
   | EvaluateWork
+  | JointWork
   | { readonly work: 'proximal'; readonly problems: readonly FilledProblem[] };
 
 /** Anything that hashes plainly: objects by sorted field, float64 bit for bit. */

@@ -55,6 +55,8 @@ export function kindsOfWork(work: Work): LeaveKind[] {
       return ['counts', 'moments'];
     case 'proximal':
       return ['proximal'];
+    case 'joint':
+      return ['proximal', 'gradients', 'curvature'];
     case 'factor':
       return ['curvature'];
     case 'evaluate': {
@@ -73,7 +75,7 @@ export function curvatureOfWorks(works: readonly Work[]): CurvatureCount {
   const sketched = new Map<number, number>();
   for (const work of works) {
     const matrices = curvatureMatricesOf(work);
-    if (work.work !== 'evaluate') {
+    if (work.work !== 'evaluate' && work.work !== 'joint') {
       all += matrices;
       continue;
     }

@@ -15,6 +15,8 @@ export interface SiteFile {
     readonly tokenFile: string;
     /** Certificate authority to trust instead of the platform's; null: the platform's. */
     readonly caFile: string | null;
+    /** Certificate of this site and its key; null: none is shown. */
+    readonly pairFiles: { readonly certificate: string; readonly key: string } | null;
   };
   readonly table: TableSource;
   /** This worker's share of the rows, `index` from 1. */
@@ -53,12 +55,18 @@ function siteFileFrom(document: z.output<typeof siteDocument>, file: string): Si
   const folder = dirname(file);
   const { coordinator, policy } = document;
   const caFile = coordinator['ca-file'];
+  const certificate = coordinator['certificate-file'];
+  const key = coordinator['key-file'];
   return {
     site: document.site,
     coordinator: {
       url: coordinator.url,
       tokenFile: resolve(folder, coordinator['token-file']),
       caFile: caFile === undefined ? null : resolve(folder, caFile),
+      pairFiles:
+        certificate === undefined || key === undefined
+          ? null
+          : { certificate: resolve(folder, certificate), key: resolve(folder, key) },
     },
     table: tableFrom(document.table, folder),
     shard: { index: document.shard.index, of: document.shard.of },

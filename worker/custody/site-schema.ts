@@ -126,6 +126,16 @@ export const siteDocument = mapping({
     'token-file': path,
     /** Certificate authority of the coordinator. Default: the platform's. */
     'ca-file': path.optional(),
+    /** Certificate of this site, and its key, for a coordinator that asks for one: both or neither. */
+    'certificate-file': path.optional(),
+    'key-file': path.optional(),
+  }).superRefine((written, context) => {
+    const given = written['certificate-file'] === undefined ? 'key-file' : 'certificate-file';
+    const missing = given === 'key-file' ? 'certificate-file' : 'key-file';
+    if ((written[given] === undefined) === (written[missing] === undefined)) return;
+    const note: IssueNote = { code: 'field-conflict', remedy: `Name the ${missing} too, or neither.` };
+    const message = `Found ${given} without ${missing}; allowed: both, or neither.`;
+    context.addIssue({ code: 'custom', path: [given], message, params: { ...note } });
   }),
   table,
   /** Default: all rows. */

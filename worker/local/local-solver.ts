@@ -1,13 +1,15 @@
 import { weightedGram } from '../../numerics/gram.js';
 import { packSymmetric } from '../../numerics/packed.js';
-import { addWeightedRows, addWeightedSquares, rowProducts } from '../../numerics/rows.js';
+import { addWeightedRows, rowProducts } from '../../numerics/rows.js';
 import { FACTOR_BLOCK_ROWS, factorAccumulator } from '../../numerics/triangular-factor.js';
 import { allFinite, maxOf } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Want } from '../../protocol/messages/evaluate.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
+import { type Evaluation, evaluate } from './evaluate.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
+import { type JointEnd, jointSteps, type Others } from './joint.js';
 import { type NewtonEnd, type NewtonLimits, newtonProximal } from './newton.js';
 import { type Quadratic, quadratic, targetOf, weightOf } from './quadratic.js';
 import { rowCurvatures, rowPass, rowState } from './row-pass.js';
@@ -37,21 +39,24 @@ export interface LocalSolver {
   ownFit(point: Float64Array, hold: number): Checked<{ curvature: Float64Array; linear: Float64Array }>;
   /** ∇²φ(point) S for `columns` directions S, p numbers each, one after the other: Xᵀ(w ∘ XS) / N. */
   sketch(point: Float64Array, directions: Float64Array, columns: number): Checked<Float64Array>;
+  /**
+   * x = argmin φ(x) + ½ xᵀBx − cᵀx + Σ_j l1_j |x_j| + ½ l2_j x_j², `others` B and c, with the quadratics of φ at `start`
+   * and at x. A squared loss takes one step. Fails with `not-positive-definite`, `number-not-finite`.
+   */
+  joint(start: Float64Array, others: Others, l1: Float64Array, l2: Float64Array): Checked<JointEnd>;
+  /** The same, one step at a time. */
+  jointSteps(
+    start: Float64Array,
+    others: Others,
+    l1: Float64Array,
+    l2: Float64Array,
+  ): Generator<void, Checked<JointEnd>>;
   /** Packed triangular factor of √(w/N) · [X, y − offset], p + 1 columns (mathematics.md §2, rung `pooled`). */
   factor(): Checked<Float64Array>;
 }
 
-export interface Evaluation {
-  readonly value: number;
-  readonly gradient: Float64Array | null;
-  readonly diagonal: Float64Array | null;
-  readonly curvature: Float64Array | null;
-}
-
 const PROXIMAL_LIMITS: NewtonLimits = { stepsMost: 200, accuracy: 1e-13 };
 const OWN_FIT_LIMITS: NewtonLimits = { stepsMost: 20, accuracy: 1e-8 };
-/** A value beyond this is reported as this: the wire carries finite numbers only, and any comparison refuses it. */
-const VALUE_MOST = 1e300;
 /** Rows that all directions of a sketch pass over before the next: they stay in the cache. */
 const SKETCH_BLOCK_ROWS = 64;
 /** Floor of the own-fit metric: share of the largest diagonal curvature, and share of the shard's weight in the rows. */
@@ -59,6 +64,8 @@ const OWN_FIT_FLOOR = 1e-3;
 
 export function localSolver(shard: Shard, loss: Loss): LocalSolver {
   const squares: Quadratic | null = loss.quadratic ? quadratic(shard) : null;
+  const steps: LocalSolver['jointSteps'] = (start, others, l1, l2) =>
+    jointSteps({ shard, loss, squares, start, others, l1, l2 });
   return {
     proximal: (center, scale, diagonal, start) => {
       const metric = diagonal.map((d) => scale * d);
@@ -75,8 +82,16 @@ export function localSolver(shard: Shard, loss: Loss): LocalSolver {
     ownFit: (point, hold) =>
       squares === null ? ownFit(shard, loss, point, hold) : quadraticOwnFit(shard, squares),
     sketch: (point, directions, columns) => sketch(shard, loss, point, directions, columns),
+    joint: (...problem) => lastOf(steps(...problem)),
+    jointSteps: steps,
     factor: () => factor(shard),
   };
+}
+
+function lastOf<T>(steps: Generator<void, T>): T {
+  let turn = steps.next();
+  while (!turn.done) turn = steps.next();
+  return turn.value;
 }
 
 function finished(end: Checked<NewtonEnd>): Checked<{ point: Float64Array; newtonSteps: number }> {
@@ -88,35 +103,6 @@ function finished(end: Checked<NewtonEnd>): Checked<{ point: Float64Array; newto
     });
   }
   return allFinite(point) ? succeed({ point, newtonSteps }) : notFinite('The proximal point');
-}
-
-function evaluate(
-  shard: Shard,
-  loss: Loss,
-  squares: Quadratic | null,
-  point: Float64Array,
-  want: Want,
-): Checked<Evaluation> {
-  const { p, rowCount, x } = shard;
-  const rows = rowState(rowCount);
-  const gradient = want === 'value' ? null : new Float64Array(p);
-  const pass = rowPass(shard, loss, point, rows, gradient);
-  if (Number.isNaN(pass.value) || pass.value === Number.NEGATIVE_INFINITY) return notFinite('The loss');
-  const value = Math.min(pass.value, VALUE_MOST);
-  if (gradient !== null && !allFinite(gradient)) return notFinite('The gradient');
-  let diagonal: Float64Array | null = null;
-  let curvature: Float64Array | null = null;
-  if (want === 'diagonal' || want === 'curvature') {
-    const weights = rowCurvatures(shard, loss, rows.eta);
-    diagonal = new Float64Array(p);
-    addWeightedSquares(x, p, 0, rowCount, weights, diagonal);
-    if (want === 'curvature') {
-      curvature = packSymmetric(squares?.gram() ?? weightedGram(x, rowCount, p, weights, 1), p);
-    }
-    if (!allFinite(diagonal) || (curvature !== null && !allFinite(curvature)))
-      return notFinite('The curvature');
-  }
-  return succeed({ value, gradient, diagonal, curvature });
 }
 
 function ownFit(

@@ -42,6 +42,16 @@ export interface AnswerMeans {
   readonly pause: () => Promise<void>;
 }
 
+/** An ask that may be computed, with what that takes. */
+interface Piece {
+  readonly ask: Ask;
+  readonly live: LiveRun;
+  readonly spec: FitSpecification;
+  readonly works: readonly FilledWork[];
+  readonly wanted: () => boolean;
+  readonly started: number;
+}
+
 /** Makes the answer to one ask: checks, computes, writes the ledger, remembers. One ask at a time. */
 export class AnswerMaker {
   readonly #means: AnswerMeans;
@@ -52,7 +62,8 @@ export class AnswerMaker {
     this.#shards = shards;
   }
 
-  async make(ask: Ask, live: LiveRun): Promise<Checked<Answer>> {
+  /** `wanted` is looked at now and then; null where the answer was given up because it is not wanted any more. */
+  async make(ask: Ask, live: LiveRun, wanted: () => boolean): Promise<Checked<Answer> | null> {
     const started = this.#means.nowMs();
     const spec = await this.#admit(live);
     if (!spec.ok) return spec;
@@ -60,7 +71,7 @@ export class AnswerMaker {
     if (wrong !== null) return { ok: false, failure: wrong };
     const filled = fillWorks(ask, live.memory);
     if (!filled.ok) return filled;
-    return this.#answerFilled(ask, live, spec.value, filled.value, started);
+    return this.#answerFilled({ ask, live, spec: spec.value, works: filled.value, wanted, started });
   }
 
   /** The checks that need no row: digest, roster, policy. */
@@ -80,13 +91,8 @@ export class AnswerMaker {
     return refused === null ? spec : { ok: false, failure: refused };
   }
 
-  async #answerFilled(
-    ask: Ask,
-    live: LiveRun,
-    spec: FitSpecification,
-    works: readonly FilledWork[],
-    started: number,
-  ): Promise<Checked<Answer>> {
+  async #answerFilled(piece: Piece): Promise<Checked<Answer> | null> {
+    const { ask, live, spec, works } = piece;
     const { ledger, policy } = this.#means;
     const { digest, scaling } = live.message;
     const content = contentDigest(digest, scaling, works);
@@ -98,9 +104,8 @@ export class AnswerMaker {
     if (refused !== null) return { ok: false, failure: refused };
     rememberAsked(ask, live.memory);
     const same = live.last !== null && live.last.answer.ask === ask.ask && live.last.content === content;
-    const made =
-      same && live.last !== null ? succeed(live.last.answer) : await this.#compute(ask, live, spec, works);
-    if (!made.ok) return made;
+    const made = same && live.last !== null ? succeed(live.last.answer) : await this.#compute(piece);
+    if (made === null || !made.ok) return made;
     const numbers = made.value.work.reduce((sum, item) => sum + numbersOfAnswer(item), 0);
     if (!repeated) {
       const kinds = [...new Set(ask.work.flatMap(kindsOfWork))];
@@ -110,16 +115,11 @@ export class AnswerMaker {
       if (!recorded.ok) return recorded;
     }
     this.#keep(live, made.value, content);
-    this.#tell(ask, numbers, repeated, started);
+    this.#tell(ask, numbers, repeated, piece.started);
     return made;
   }
 
-  async #compute(
-    ask: Ask,
-    live: LiveRun,
-    spec: FitSpecification,
-    works: readonly FilledWork[],
-  ): Promise<Checked<Answer>> {
+  async #compute({ ask, live, spec, works, wanted }: Piece): Promise<Checked<Answer> | null> {
     const raw = await this.#rows(ask.run, spec);
     if (!raw.ok) return raw;
     const solver = solverOf(live, spec, raw.value);
@@ -131,9 +131,11 @@ export class AnswerMaker {
       allowance: allowanceOf(this.#means.policy),
       breathe: async () => {
         await this.#means.pause();
-        return live.ended ? 'stop' : 'go-on';
+        return live.ended || !wanted() ? 'stop' : 'go-on';
       },
     });
+    if (computed === null)
+      return live.ended ? fail('run-cancelled', 'The run ended while its ask was being answered.') : null;
     return computed.ok
       ? succeed({ kind: 'answer', run: ask.run, ask: ask.ask, work: computed.value })
       : computed;

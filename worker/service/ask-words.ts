@@ -12,6 +12,8 @@ export function workInWords(work: Work): string {
       return 'the triangular factor';
     case 'proximal':
       return several(work.problems.length, 'a proximal point', 'proximal points');
+    case 'joint':
+      return 'curvature at a point and at a proximal point in the metric of the other sites';
     case 'evaluate': {
       const wants = [...new Set(work.points.map(({ want }) => want))].join(' and ');
       const points = `${wants} at ${several(work.points.length, 'a point', 'points')}`;

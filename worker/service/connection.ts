@@ -34,7 +34,12 @@ export interface ConnectionDeps {
 }
 
 /** Failures that trying again does not mend. */
-const FINAL: ReadonlySet<FailureCode> = new Set(['token-refused', 'version-unsupported', 'site-unknown']);
+const FINAL: ReadonlySet<FailureCode> = new Set([
+  'token-refused',
+  'certificate-refused',
+  'version-unsupported',
+  'site-unknown',
+]);
 /** Final before the first welcome: later the certificate is one that was trusted, and may be renewed. */
 const FINAL_AT_FIRST: ReadonlySet<FailureCode> = new Set(['certificate-untrusted']);
 
@@ -50,8 +55,7 @@ export async function keepConnected(deps: ConnectionDeps): Promise<Failure | nul
     if (end.kind === 'stopped') return null;
     if (end.kind === 'final') return end.failure;
     everWelcomed ||= end.welcomed;
-    // a try that reached the coordinator starts the count again
-    attempt = end.welcomed ? 1 : attempt + 1;
+    attempt = end.worked ? 1 : attempt + 1;
     const retryMs = backoffMs(attempt, deps.random());
     const { closeCode, reason } = end;
     deps.onEvent({ event: 'disconnected', closeCode, reason, retryMs, attempt });
@@ -66,7 +70,7 @@ async function connectOnce(deps: ConnectionDeps, everWelcomed: boolean): Promise
     const { failure } = link;
     const final = FINAL.has(failure.code) || (!everWelcomed && FINAL_AT_FIRST.has(failure.code));
     if (final) return { kind: 'final', failure };
-    return { kind: 'lost', closeCode: null, reason: failure.message, welcomed: false };
+    return { kind: 'lost', closeCode: null, reason: failure.message, welcomed: false, worked: false };
   }
   const end = await serveLink(link.value, deps);
   if (end.kind !== 'lost' || end.closeCode === null) return end;
@@ -81,6 +85,10 @@ function finalFailure(code: number, reason: string): Failure | null {
     case CLOSE_CODES.tokenRefused:
       return fail('token-refused', `The coordinator refused this worker's token.${said}`, {
         remedy: 'Ask the analyst for a token of this site and put it into the token file.',
+      }).failure;
+    case CLOSE_CODES.certificateRefused:
+      return fail('certificate-refused', `The coordinator refuses this worker's certificate.${said}`, {
+        remedy: 'Renew the certificate named as `certificate-file`.',
       }).failure;
     case CLOSE_CODES.versionUnsupported:
       return fail('version-unsupported', `The coordinator speaks another version of the protocol.${said}`, {

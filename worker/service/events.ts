@@ -45,6 +45,13 @@ export type WorkerEvent =
     }
   | { readonly event: 'refused'; readonly run: string; readonly ask: number; readonly failure: Failure }
   | {
+      /** Left unanswered: `newest` is the ask of the same run that came meanwhile. */
+      readonly event: 'skipped';
+      readonly run: string;
+      readonly ask: number;
+      readonly newest: number;
+    }
+  | {
       readonly event: 'run-ended';
       readonly run: string;
       readonly outcome: string;

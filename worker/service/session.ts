@@ -5,7 +5,9 @@ import type { Answer, Ask, Refusal } from '../../protocol/messages/round.js';
 import type { ToWorker } from '../../protocol/messages/to-worker.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import { curvatureTotal } from '../custody/policy.js';
+import { BACKOFF } from './backoff.js';
 import type { ConnectionDeps, CoordinatorLink } from './connection.js';
+import { LinkUse } from './link-use.js';
 import { refusalOf } from './refusal.js';
 
 export type SessionEnd =
@@ -17,6 +19,8 @@ export type SessionEnd =
       readonly reason: string;
       /** The coordinator had said welcome. */
       readonly welcomed: boolean;
+      /** The link did what it is for (`LinkUse`), or was up for long. */
+      readonly worked: boolean;
     };
 
 /** Room for what an answer holds beside its numbers. Bytes. */
@@ -32,6 +36,7 @@ class Session {
   readonly #link: CoordinatorLink;
   readonly #deps: ConnectionDeps;
   readonly #over = new AbortController();
+  readonly #use = new LinkUse();
   /** Answers being made for this link, by (run, ask): a repeat needs no second one. */
   readonly #making = new Map<string, Promise<void>>();
   #finish: (end: SessionEnd) => void = () => undefined;
@@ -50,7 +55,7 @@ class Session {
     });
     link.onClose((code, reason) => {
       if (this.#stopping) this.#finish({ kind: 'stopped' });
-      else this.#finish({ kind: 'lost', closeCode: code, reason, welcomed: this.#frameBytesMost !== null });
+      else this.#finish(this.#lost(code, reason));
     });
     link.onMessage((message) => this.#receive(message));
     deps.stop.addEventListener('abort', this.#stop, { once: true });
@@ -59,12 +64,24 @@ class Session {
     else void this.#awaitWelcome();
   }
 
+  #lost(closeCode: number, reason: string): SessionEnd {
+    const welcomed = this.#frameBytesMost !== null;
+    return { kind: 'lost', closeCode, reason, welcomed, worked: this.#use.worked(closeCode) };
+  }
+
   async #awaitWelcome(): Promise<void> {
     await this.#deps.timers.wait(LIMITS.helloDeadlineMs, this.#over.signal);
     if (this.#frameBytesMost === null) this.#link.close(CLOSE_CODES.helloLate, 'no welcome in time');
   }
 
+  async #awaitSteady(): Promise<void> {
+    const { signal } = this.#over;
+    await this.#deps.timers.wait(BACKOFF.steadyMs, signal);
+    if (!signal.aborted) this.#use.stayedUp();
+  }
+
   #receive(message: ToWorker): void {
+    this.#use.received(message);
     if (message.kind === 'welcome') {
       if (this.#frameBytesMost !== null) this.#unexpected('a second welcome');
       else this.#welcome(message.software, message.frameBytesMost);
@@ -76,6 +93,7 @@ class Session {
 
   #welcome(coordinator: string, frameBytesMost: number): void {
     this.#frameBytesMost = frameBytesMost;
+    void this.#awaitSteady();
     const { url, hello } = this.#deps;
     this.#deps.onEvent({ event: 'connected', url, site: hello.site, shard: hello.shard, coordinator });
   }
@@ -94,10 +112,12 @@ class Session {
   }
 
   async #answer(ask: Ask): Promise<void> {
-    const answer = this.#fitting(await this.#deps.answerer.answer(ask));
+    const reply = await this.#deps.answerer.answer(ask);
+    if (reply === null) return;
+    const answer = this.#fitting(reply);
     // a closed link needs nothing: the coordinator asks again on the next one
-    if (!this.#link.send(answer) && this.#link.open)
-      this.#link.close(CLOSE_CODES.tooSlow, 'answers wait faster than they are read');
+    if (this.#link.send(answer)) this.#use.sent(answer);
+    else if (this.#link.open) this.#link.close(CLOSE_CODES.tooSlow, 'answers wait faster than they are read');
   }
 
   /** The answer, or a refusal where the coordinator does not take a frame of its size. */

@@ -57,6 +57,9 @@ export async function addApproval(file: string, added: Approval): Promise<Checke
   return written.ok ? succeed(true) : written;
 }
 
+/** Finds out before a run whether the ledger could be written; makes an empty one where there is none. */
+export const checkLedgerWritable = (name: string): Promise<Checked<null>> => withFile(name, async () => {});
+
 /**
  * The ledger on disk, mode 0600. `append` first checks that the file still has the length this process left it with:
  * two workers on one ledger would break its chain.
@@ -84,8 +87,9 @@ export function ledgerOnDisk(name: string): LedgerFile {
         changed = (await handle.stat()).size !== length;
         if (changed) return;
         try {
-          const { bytesWritten } = await handle.write(bytes, 0, bytes.length, length);
-          if (bytesWritten < bytes.length) throw new Error('short write');
+          for (let at = 0; at < bytes.length; ) {
+            at += (await handle.write(bytes, at, bytes.length - at, length + at)).bytesWritten;
+          }
           await handle.datasync();
         } catch (error) {
           await handle.truncate(length);
