@@ -24,6 +24,12 @@ const ESTIMATE_FLOOR = 0.01;
 /** Objectives smaller than this share of the one at the start count as it when a gap is made relative. */
 const OBJECTIVE_LEAST = 1e-12;
 
+/** What a decrement measured with the curvature at z is multiplied by to bound the gap. */
+export const measuredFactor = ({
+  curvatureMayVanish,
+}: Pick<ConsensusProblem, 'curvatureMayVanish'>): number =>
+  curvatureMayVanish ? VANISHING_FACTOR : MEASURED_FACTOR;
+
 /** A proximal Newton step from z and the decrease the quadratic model promises for it. */
 export interface ModelStep {
   readonly z: Float64Array;
@@ -68,14 +74,14 @@ export const relativeTo = (objective: number, start = 1): number =>
 
 /** Certificate from a decrement under the curvature measured at z itself. */
 export function measuredCertificate(
-  { penalty: g, curvatureMayVanish }: Pick<ConsensusProblem, 'penalty' | 'curvatureMayVanish'>,
+  problem: Pick<ConsensusProblem, 'penalty' | 'curvatureMayVanish'>,
   z: Float64Array,
   gradient: Float64Array,
   decrement: number,
   objective: number,
 ): Certificate {
-  const gap = (curvatureMayVanish ? VANISHING_FACTOR : MEASURED_FACTOR) * decrement;
-  const kkt = maxAbs(leastSubgradient(g, z, gradient));
+  const gap = measuredFactor(problem) * decrement;
+  const kkt = maxAbs(leastSubgradient(problem.penalty, z, gradient));
   return { kind: 'measured', gap, relativeGap: gap / relativeTo(objective), kkt };
 }
 

@@ -97,7 +97,7 @@ export function* curvatureRung(problem: ConsensusProblem): Method {
  * The step under a damped metric, damped at least a little. Where curvature may vanish, a column has lost it rather
  * than never had it: columns of unit spread are damped alike.
  */
-function dampedStep(
+export function dampedStep(
   problem: ConsensusProblem,
   here: Iterate,
   metric: Float64Array,
@@ -110,7 +110,7 @@ function dampedStep(
 }
 
 /** One model step beyond `here`. */
-const after = (here: Iterate, step: ModelStep): Iterate => ({
+export const after = (here: Iterate, step: ModelStep): Iterate => ({
   ...here,
   z: step.z,
   loss: here.loss + step.lossChange,
@@ -182,7 +182,7 @@ function quadraticEnd(
   );
 }
 
-const flawed = (
+export const flawed = (
   problem: ConsensusProblem,
   here: Iterate,
   certificate: Certificate | null,
@@ -199,7 +199,7 @@ const flawed = (
     columns,
   );
 
-function ending(
+export function ending(
   problem: ConsensusProblem,
   here: Iterate,
   certificate: Certificate | null,

@@ -69,7 +69,8 @@ export function verdict(
   step: { readonly direction: Float64Array; readonly bend: number },
   startDiagonal: Float64Array,
 ): 'stands' | 'goes on' | Flaw {
-  if (certificate.relativeGap > problem.tolerance) return 'goes on';
+  // what is not a number certifies nothing
+  if (!(certificate.relativeGap <= problem.tolerance)) return 'goes on';
   if (!problem.curvatureMayVanish) {
     const columns = runawayColumns(step.direction, step.bend, startDiagonal);
     return columns.length === 0 ? 'stands' : { reason: 'separable', columns };

@@ -126,7 +126,8 @@ function estimate(
   });
   const separated = separatedColumns(problem, z, at.value);
   if (separated.length > 0) return ended('unbounded', separated);
-  if (standing.certificate.relativeGap > problem.tolerance) return null;
+  // what is not a number certifies nothing
+  if (!(standing.certificate.relativeGap <= problem.tolerance)) return null;
   // learned models know slopes along which the diagonal sees curvature, but lag where it has just gone
   const steps = [diagonalStep(g, z, gradient, diagonal), ...(learned === null ? [] : [learned])];
   const runaway = problem.curvatureMayVanish

@@ -47,17 +47,20 @@ export class SiteModels implements Extrapolation {
 
   /** New gradients at new points: one secant per site. */
   learn(points: readonly Float64Array[], gradients: readonly Float64Array[]): void {
-    points.forEach((point, i) => {
-      const step = subtract(point, this.points[i]);
-      const yardstick =
-        dot(
-          step,
-          step.map((value, j) => this.diagonal[j] * value),
-        ) / points.length;
-      addSecant(this.curvatures[i], step, subtract(gradients[i], this.gradients[i]), yardstick);
-      this.points[i] = point;
-      this.gradients[i] = gradients[i];
-    });
+    for (const [i, point] of points.entries()) this.learnOf(i, point, gradients[i]);
+  }
+
+  /** A new gradient of one site at a new point: one secant. */
+  learnOf(site: number, point: Float64Array, gradient: Float64Array): void {
+    const step = subtract(point, this.points[site]);
+    const yardstick =
+      dot(
+        step,
+        step.map((value, j) => this.diagonal[j] * value),
+      ) / this.points.length;
+    addSecant(this.curvatures[site], step, subtract(gradient, this.gradients[site]), yardstick);
+    this.points[site] = point;
+    this.gradients[site] = gradient;
   }
 
   /** Curvature measured anew at one point: the models begin again there. */
@@ -141,7 +144,7 @@ const sum = (values: Iterable<number>): number => {
 };
 
 /** B ← B + r rᵀ / rᵀs with r = y − B s: the symmetric rank-one update that makes B s = y. */
-function addSecant(b: Float64Array, s: Float64Array, y: Float64Array, yardstick: number): void {
+export function addSecant(b: Float64Array, s: Float64Array, y: Float64Array, yardstick: number): void {
   const p = s.length;
   const r = subtract(y, symmetricTimes(b, s));
   const denominator = dot(r, s);

@@ -1,110 +1,31 @@
-import type { Refusal, WorkAnswer } from '../../protocol/messages/round.js';
+import { opensAtMs } from './barrier.js';
+import { asked, LACKS, lackOf, leave, longestSilence, owing, postponed, repliedAtMs } from './member.js';
+import {
+  isRefusal,
+  type Lack,
+  type MemberState,
+  type PanelEffect,
+  type PanelEvent,
+  type PanelState,
+  type PanelStep,
+} from './panel-state.js';
 
 /**
- * The panel of one run as a state machine: `step(state, event) → { state, effects }`. It owns the current ask, its
- * deadline and the patience of the run; it knows no clock and no link. Members are indices in roster order, times are
- * milliseconds on any one clock that does not go back.
+ * The panel of one run as a state machine: `step(state, event) → { state, effects }`. It owns what each member owes,
+ * its deadline and the patience of the run, and says when the barrier opens; it knows no clock and no link.
  */
-export interface PanelState {
-  readonly settings: PanelSettings;
-  readonly members: readonly MemberState[];
-  readonly current: CurrentAsk | null;
-  /** Number of the latest ask opened; 0 before the first. */
-  readonly latestAsk: number;
-}
-
-export interface PanelSettings {
-  /** Time after which a member without an answer is asked again. Milliseconds. */
-  readonly deadlineMs: number;
-  /** Time after which an ask is given up, naming the missing. Milliseconds. */
-  readonly patienceMs: number;
-}
-
-export interface MemberState {
-  readonly connected: boolean;
-  readonly reply: Reply | null;
-  /** When the reply came. */
-  readonly repliedAtMs: number | null;
-  /** The member has said that it lacks what an ask left out: on its present connection it is asked in full. */
-  readonly full: boolean;
-}
-
-export interface CurrentAsk {
-  readonly ask: number;
-  readonly openedAtMs: number;
-  readonly deadlineAtMs: number;
-  readonly giveUpAtMs: number;
-}
-
-/** What counts as a member's one reply to an ask. */
-export type Reply = readonly WorkAnswer[] | Refusal;
-
-export type PanelEvent =
-  | { readonly kind: 'ask'; readonly ask: number; readonly atMs: number }
-  | { readonly kind: 'connected'; readonly member: number; readonly atMs: number }
-  | { readonly kind: 'lost'; readonly member: number; readonly atMs: number }
-  | {
-      readonly kind: 'reply';
-      readonly member: number;
-      readonly ask: number;
-      readonly reply: Reply;
-      readonly atMs: number;
-    }
-  | { readonly kind: 'time'; readonly atMs: number };
-
-export type PanelEffect =
-  /** Send the current ask to this member; not `full`: what its connection has already may be left out. */
-  | { readonly kind: 'send'; readonly member: number; readonly full: boolean }
-  | {
-      readonly kind: 'drop';
-      readonly member: number;
-      readonly ask: number;
-      readonly code: 'answer-unasked';
-      readonly why: 'duplicate' | 'older' | 'unasked';
-    }
-  | {
-      readonly kind: 'late';
-      readonly members: readonly number[];
-      readonly waitedMs: number;
-      readonly patienceLeftMs: number;
-    }
-  /** Everyone has replied: the replies in roster order. */
-  | {
-      readonly kind: 'pass';
-      readonly ask: number;
-      readonly replies: readonly Reply[];
-      readonly tookMs: number;
-      readonly slowest: { readonly member: number; readonly ms: number } | null;
-    }
-  | { readonly kind: 'give-up'; readonly members: readonly number[]; readonly waitedMs: number };
-
-export interface PanelStep {
-  readonly state: PanelState;
-  readonly effects: readonly PanelEffect[];
-}
-
-const UNASKED = { reply: null, repliedAtMs: null, full: false } as const;
-
-/** A panel of `memberCount` members, none connected, nothing asked. */
-export function openPanel(memberCount: number, settings: PanelSettings): PanelState {
-  const members = Array.from({ length: memberCount }, () => ({ connected: false, ...UNASKED }));
-  return { settings, members, current: null, latestAsk: 0 };
-}
-
-/** When the panel wants its next `time` event; null while nothing is asked. */
-export const wakeAtMs = ({ current }: PanelState): number | null =>
-  current === null ? null : Math.min(current.deadlineAtMs, current.giveUpAtMs);
-
-export const isRefusal = (reply: Reply): reply is Refusal => 'code' in reply;
-
 export function step(state: PanelState, event: PanelEvent): PanelStep {
   switch (event.kind) {
     case 'ask':
-      return openAsk(state, event.ask, event.atMs);
+      return openAsk(state, event);
+    case 'owes':
+      return still(withMember(state, event.member, (member) => asked(member, event.ask, event.atMs, state)));
+    case 'gone':
+      return still(withMember(state, event.member, leave));
     case 'connected':
       return connect(state, event.member);
     case 'lost':
-      return still(withMember(state, event.member, { connected: false }));
+      return still(withMember(state, event.member, (member) => ({ ...member, connected: false })));
     case 'reply':
       return takeReply(state, event);
     case 'time':
@@ -112,94 +33,168 @@ export function step(state: PanelState, event: PanelEvent): PanelStep {
   }
 }
 
-function openAsk(state: PanelState, ask: number, atMs: number): PanelStep {
-  const { deadlineMs, patienceMs } = state.settings;
-  const opened: PanelState = {
-    ...state,
-    members: state.members.map(({ connected }) => ({ connected, ...UNASKED })),
-    current: { ask, openedAtMs: atMs, deadlineAtMs: atMs + deadlineMs, giveUpAtMs: atMs + patienceMs },
-    latestAsk: ask,
-  };
-  return sendTo(opened, unanswered(opened));
+/** When the panel wants its next `time` event; null while no barrier is closed. */
+export function wakeAtMs({ settings, members, barrier }: PanelState): number | null {
+  if (barrier === null) return null;
+  const wakes = members.flatMap(({ open, silentSinceMs }) =>
+    open === null || silentSinceMs === null ? [] : [open.deadlineAtMs, silentSinceMs + settings.patienceMs],
+  );
+  const opens = opensAtMs(barrier, repliedAtMs(members));
+  const next = Math.min(...wakes, ...(opens === null ? [] : [opens]));
+  return next === Number.POSITIVE_INFINITY ? null : next;
+}
+
+function openAsk(state: PanelState, event: Extract<PanelEvent, { kind: 'ask' }>): PanelStep {
+  const { ask, waitFor, quorum, atMs } = event;
+  const now = event.asked.filter((member) => !state.members[member].gone);
+  const superseded = now.flatMap((member): PanelEffect[] =>
+    state.members[member].reply === null ? [] : [dropped(member, state.members[member].newest, 'older')],
+  );
+  const members = state.members.map((member, index) =>
+    now.includes(index) ? asked(member, ask, atMs, state) : member,
+  );
+  const barrier = { ask, asked: now, waitFor, quorum, openedAtMs: atMs };
+  const sent = sendTo({ ...state, members, barrier }, now);
+  const passed = passIfOpen(sent.state, atMs);
+  return { state: passed.state, effects: [...superseded, ...sent.effects, ...passed.effects] };
 }
 
 /** A new connection remembers nothing, so what was sent on the one before counts no more. */
 function connect(state: PanelState, member: number): PanelStep {
-  const fresh = withMember(state, member, { connected: true, full: false });
-  const waits = fresh.current !== null && fresh.members[member]?.reply === null;
-  return waits ? sendTo(fresh, [member]) : still(fresh);
+  const fresh = withMember(state, member, (before) => ({ ...before, connected: true, lacks: 'nothing' }));
+  return sendTo(fresh, [member]);
 }
 
 function takeReply(state: PanelState, event: Extract<PanelEvent, { kind: 'reply' }>): PanelStep {
   const { member, ask, reply, atMs } = event;
-  const { current } = state;
   const before = state.members[member];
-  const drop = (why: 'duplicate' | 'older' | 'unasked'): PanelStep => ({
+  const drop = (why: Extract<PanelEffect, { kind: 'drop' }>['why']): PanelStep => ({
     state,
-    effects: [{ kind: 'drop', member, ask, code: 'answer-unasked', why }],
+    effects: [dropped(member, ask, why)],
   });
-  if (before === undefined || ask > state.latestAsk) return drop('unasked');
-  if (ask !== current?.ask) return drop('older');
-  if (before.reply !== null) return drop('duplicate');
-  if (isRefusal(reply) && reply.code === 'memory-missing') return askInFull(state, member, before);
-  return passIfComplete(withMember(state, member, { reply, repliedAtMs: atMs }), current, atMs);
+  if (before === undefined) return drop('unasked');
+  if (before.gone) return drop('gone');
+  if (ask > before.newest) return drop('unasked');
+  if (ask < before.newest) return heard(drop('older'), member);
+  const { open } = before;
+  if (open === null) return drop(before.reply === null ? 'older' : 'duplicate');
+  const lacks = isRefusal(reply) ? lackOf(reply.code) : 'nothing';
+  if (lacks !== 'nothing') return askAgain(state, member, lacks);
+  const taken = withMember(state, member, (owing) => ({
+    ...owing,
+    open: null,
+    silentSinceMs: null,
+    reply: { reply, atMs, tookMs: atMs - open.openedAtMs },
+  }));
+  return passIfOpen(taken, atMs);
 }
+
+/** A reply to an older ask does not count, but it is a sign of life: what is not answered is the newest ask only. */
+const heard = ({ state, effects }: PanelStep, member: number): PanelStep => ({
+  state: withMember(state, member, (before) => ({
+    ...before,
+    silentSinceMs: before.open?.openedAtMs ?? null,
+  })),
+  effects,
+});
 
 /**
- * Lacking a vector is no answer: the full ask goes out, once. A further such refusal is of a slim copy that went before
- * (or came twice); a member that refuses the full ask too is asked again at the deadline, and is missing in the end.
+ * Lacking a vector or the run is no answer: what is lacking goes out, once. A further such refusal is of a copy that
+ * went before (or came twice); a member that refuses the full ask too is asked again at the deadline, and is missing in
+ * the end.
  */
-function askInFull(state: PanelState, member: number, before: MemberState): PanelStep {
-  return before.full ? still(state) : sendTo(withMember(state, member, { full: true }), [member]);
-}
-
-function passIfComplete(state: PanelState, current: CurrentAsk, atMs: number): PanelStep {
-  const replies: Reply[] = [];
-  let slowest: { member: number; ms: number } | null = null;
-  for (const [member, { reply, repliedAtMs }] of state.members.entries()) {
-    if (reply === null || repliedAtMs === null) return still(state);
-    replies.push(reply);
-    const ms = repliedAtMs - current.openedAtMs;
-    if (slowest === null || ms > slowest.ms) slowest = { member, ms };
-  }
-  const tookMs = atMs - current.openedAtMs;
-  return {
-    state: { ...state, current: null },
-    effects: [{ kind: 'pass', ask: current.ask, replies, tookMs, slowest }],
-  };
+function askAgain(state: PanelState, member: number, lacks: Lack): PanelStep {
+  if (LACKS.indexOf(state.members[member].lacks) >= LACKS.indexOf(lacks)) return still(state);
+  return sendTo(
+    withMember(state, member, (before) => ({ ...before, lacks })),
+    [member],
+  );
 }
 
 function passTime(state: PanelState, atMs: number): PanelStep {
-  const { current } = state;
-  if (current === null) return still(state);
-  const members = unanswered(state);
-  const waitedMs = atMs - current.openedAtMs;
-  if (atMs >= current.giveUpAtMs) {
-    return { state: { ...state, current: null }, effects: [{ kind: 'give-up', members, waitedMs }] };
+  if (state.barrier === null) return still(state);
+  const passed = passIfOpen(state, atMs);
+  if (passed.state.barrier === null) return passed;
+  const silent = owing(state, ({ silentSinceMs }) => atMs >= silentSinceMs + state.settings.patienceMs);
+  if (silent.length > 0) return giveUp(state, silent, atMs);
+  const late = owing(state, ({ deadlineAtMs }) => atMs >= deadlineAtMs);
+  if (late.length === 0) return still(state);
+  let again = state;
+  for (const member of late) again = withMember(again, member, (before) => postponed(before, atMs, state));
+  const waitedMs = longestSilence(state, late, atMs);
+  const patienceLeftMs = state.settings.patienceMs - waitedMs;
+  const sent = sendTo(again, late);
+  return {
+    state: sent.state,
+    effects: [{ kind: 'late', members: late, waitedMs, patienceLeftMs }, ...sent.effects],
+  };
+}
+
+function giveUp(state: PanelState, silent: readonly number[], atMs: number): PanelStep {
+  if (state.settings.missing === 'stop') {
+    const waitedMs = longestSilence(state, silent, atMs);
+    return {
+      state: { ...state, barrier: null },
+      effects: [{ kind: 'give-up', members: silent, waitedMs }],
+    };
   }
-  if (atMs < current.deadlineAtMs) return still(state);
-  const deadlineAtMs = atMs + state.settings.deadlineMs;
-  const again = sendTo({ ...state, current: { ...current, deadlineAtMs } }, members);
-  const late: PanelEffect = { kind: 'late', members, waitedMs, patienceLeftMs: current.giveUpAtMs - atMs };
-  return { state: again.state, effects: [late, ...again.effects] };
+  const sites = new Set(silent.map((member) => state.members[member].site));
+  const gone = [...state.members.keys()].filter((member) => sites.has(state.members[member].site));
+  return pass(state, atMs, gone);
+}
+
+function passIfOpen(state: PanelState, atMs: number): PanelStep {
+  if (state.barrier === null) return still(state);
+  const opens = opensAtMs(state.barrier, repliedAtMs(state.members));
+  return opens !== null && opens <= atMs ? pass(state, atMs, []) : still(state);
+}
+
+/** All that has come goes to the run, late replies to older asks among it. */
+function pass(state: PanelState, atMs: number, gone: readonly number[]): PanelStep {
+  const { barrier, members } = state;
+  if (barrier === null) return still(state);
+  let slowest: { member: number; ms: number } | null = null;
+  for (const member of barrier.asked) {
+    const ms = members[member].reply?.tookMs ?? null;
+    if (ms !== null && (slowest === null || ms > slowest.ms)) slowest = { member, ms };
+  }
+  const batch = {
+    replies: members.map(({ reply }) => reply?.reply ?? null),
+    agesMs: members.map(({ reply, silentSinceMs }) =>
+      Math.round(reply?.tookMs ?? (silentSinceMs === null ? 0 : atMs - silentSinceMs)),
+    ),
+    gone,
+  };
+  const passed = members.map((member, index) =>
+    gone.includes(index) ? leave(member) : { ...member, reply: null },
+  );
+  return {
+    state: { ...state, members: passed, barrier: null },
+    effects: [{ kind: 'pass', ask: barrier.ask, batch, tookMs: atMs - barrier.openedAtMs, slowest }],
+  };
 }
 
 function sendTo(state: PanelState, members: readonly number[]): PanelStep {
   const effects = members.flatMap((member): PanelEffect[] => {
-    const { connected, full } = state.members[member];
-    return connected ? [{ kind: 'send', member, full }] : [];
+    const { connected, open, lacks } = state.members[member];
+    return connected && open !== null ? [{ kind: 'send', member, ask: open.ask, lacks }] : [];
   });
   return { state, effects };
 }
 
-const unanswered = (state: PanelState): number[] =>
-  state.members.flatMap(({ reply }, member) => (reply === null ? [member] : []));
+const dropped = (
+  member: number,
+  ask: number,
+  why: Extract<PanelEffect, { kind: 'drop' }>['why'],
+): PanelEffect => ({ kind: 'drop', member, ask, code: 'answer-unasked', why });
 
 const still = (state: PanelState): PanelStep => ({ state, effects: [] });
 
-function withMember(state: PanelState, member: number, change: Partial<MemberState>): PanelState {
-  const members = state.members.map((before, index) =>
-    index === member ? { ...before, ...change } : before,
-  );
+function withMember(
+  state: PanelState,
+  member: number,
+  change: (before: MemberState) => MemberState,
+): PanelState {
+  const members = state.members.map((before, index) => (index === member ? change(before) : before));
   return { ...state, members };
 }

@@ -1,6 +1,6 @@
-import type { Work } from '../../protocol/messages/round.js';
+import type { Work, WorkAnswer } from '../../protocol/messages/round.js';
 import { numbersOfAnswer, numbersOfWork } from '../../protocol/numbers.js';
-import { isRefusal, type Reply } from './panel.js';
+import { isRefusal, type Reply } from './panel-state.js';
 import {
   type ConnectionMemory,
   EMPTY_MEMORY,
@@ -24,17 +24,32 @@ export class NumbersTally {
     this.up = new Array<number>(memberCount).fill(0);
   }
 
-  /** One ask, in full, and what it was answered with. */
-  add(ask: number, works: readonly (readonly Work[])[], replies: readonly Reply[]): void {
+  /**
+   * What one ask asked of each member, in full (null: nothing), and what came before its barrier opened: per member the
+   * number of the ask it owed the reply to, and the reply.
+   */
+  add(
+    works: readonly (readonly Work[] | null)[],
+    owed: readonly (number | null)[],
+    replies: readonly (Reply | null)[],
+  ): void {
     for (const [member, full] of works.entries()) {
-      const sent = slimWorks(full, this.memories[member]);
-      this.memories[member] = rememberSent(this.memories[member], sent);
-      for (const work of sent) this.down[member] += numbersOfWork(work);
+      this.sent(member, full ?? []);
+      const ask = owed[member];
       const reply = replies[member];
-      if (isRefusal(reply)) continue;
-      this.memories[member] = rememberAnswered(this.memories[member], ask, reply);
-      for (const answer of reply) this.up[member] += numbersOfAnswer(answer);
+      if (ask !== null && reply !== null && !isRefusal(reply)) this.answered(member, ask, reply);
     }
+  }
+
+  private sent(member: number, full: readonly Work[]): void {
+    const sent = slimWorks(full, this.memories[member]);
+    this.memories[member] = rememberSent(this.memories[member], sent);
+    for (const work of sent) this.down[member] += numbersOfWork(work);
+  }
+
+  private answered(member: number, ask: number, reply: readonly WorkAnswer[]): void {
+    this.memories[member] = rememberAnswered(this.memories[member], ask, reply);
+    for (const answer of reply) this.up[member] += numbersOfAnswer(answer);
   }
 
   numbers(): { readonly up: number; readonly down: number }[] {

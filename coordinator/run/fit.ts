@@ -3,22 +3,35 @@ import { designColumns } from '../../protocol/specification/design-columns.js';
 import type { FitSpecification, LossForm } from '../../protocol/specification/types.js';
 import { SOFTWARE } from '../../protocol/version.js';
 import type { MethodEnd } from '../consensus/method.js';
+import { type AttemptBefore, goingOnWithout } from './going-on-without.js';
 import type { FitDocument, ResultDocument } from './result.js';
 import { type Member, memberName, type Run, type RunEnd, type RunOutcome, type Shown } from './run.js';
 import { chooseRung, type RungChoice } from './rung.js';
 import { type Frame, lambdaOf, originalScale, scale } from './scale.js';
 import { type Solved, solve } from './solve.js';
+import { solveLate, waitsForAll } from './solve-late.js';
+import { lessSpent } from './spending.js';
 import { type PooledSurvey, type Stop, survey } from './survey.js';
 
 /**
  * One run, stage by stage: survey → scale → solve → report. The nth ask it yields has number n, from 1. The roster's
- * order is the order of every sum.
+ * order is the order of every sum. Members given up on for good, where the specification allows that, are left out and
+ * the stages begin again without them.
  */
 export function* fit(specification: FitSpecification, digest: string, roster: readonly Member[]): Run {
-  const about: About = { specification, digest, roster };
+  const about = { specification, digest };
+  return yield* goingOnWithout(specification, roster, {
+    begin: (present, before, without) => attempt({ ...about, roster: present, without }, before),
+    tooFew: (present, without, reason) =>
+      stopped({ ...about, roster: present, without }, { outcome: 'site-missing', reason }),
+  });
+}
 
-  const surveyed = yield* survey(specification, roster);
-  if ('outcome' in surveyed) return stopped(about, surveyed);
+function* attempt(about: About, before: AttemptBefore): Run {
+  const { specification, roster } = about;
+  const pooled = yield* survey(specification, roster, before.shown);
+  if ('outcome' in pooled) return stopped(about, pooled);
+  const surveyed = lessSpent(pooled, roster, before.spent);
 
   const columns = designColumns(specification);
   const frame = scale(specification, columns, surveyed);
@@ -32,13 +45,15 @@ export function* fit(specification: FitSpecification, digest: string, roster: re
   const choice = chooseRung(specification, surveyed, roster, frame.p);
   if ('outcome' in choice) return stopped(about, choice, surveyed);
 
-  const solved = yield* solve(
+  const stage = waitsForAll(specification, choice) ? solve : solveLate;
+  const solved = yield* stage(
     specification,
     roster,
     surveyed,
     frame,
     choice,
     shownSurvey(surveyed, frame, choice),
+    { asks: before.asks + 1, rounds: before.rounds },
   );
   if ('outcome' in solved) return stopped(about, solved, surveyed);
 
@@ -49,6 +64,8 @@ interface About {
   readonly specification: FitSpecification;
   readonly digest: string;
   readonly roster: readonly Member[];
+  /** Whom the run went on without. */
+  readonly without: ResultDocument['without'];
 }
 
 function shownSurvey(surveyed: PooledSurvey, frame: Frame, choice: RungChoice): Shown {
@@ -70,7 +87,7 @@ function notesOf(surveyed: PooledSurvey, frame: Frame): string[] {
 
 /** A run that ended before any fit was made. */
 export function stopped(
-  { specification, digest, roster }: About,
+  { specification, digest, roster, without }: About,
   stop: Omit<Stop, 'outcome'> & { readonly outcome: RunOutcome },
   surveyed: PooledSurvey | null = null,
 ): RunEnd {
@@ -82,6 +99,7 @@ export function stopped(
     specification: digest,
     software: SOFTWARE,
     sites: siteRows(roster, surveyed),
+    without,
     rowsTotal: surveyed?.rowsTotal ?? null,
     rung: null,
     rungReason: null,
@@ -105,7 +123,7 @@ function ended(
   choice: RungChoice,
   solved: Solved,
 ): RunEnd {
-  const { specification, digest, roster } = about;
+  const { specification, digest, roster, without } = about;
   const fits = solved.ends.map((end, number) => fitDocument(specification, surveyed, frame, end, number));
   const unsolved = fits.find((one) => one.outcome !== 'solved');
   const outcome = unsolved?.outcome ?? 'solved';
@@ -118,6 +136,7 @@ function ended(
     specification: digest,
     software: SOFTWARE,
     sites: siteRows(roster, surveyed),
+    without,
     rowsTotal: surveyed.rowsTotal,
     rung: choice.rung,
     rungReason: choice.reason,

@@ -45,6 +45,16 @@ export type LogEvent =
       readonly at: string;
     }
   | {
+      /** Sites given up on: the fit begins again from the survey, without their rows. */
+      readonly event: 'without';
+      /** Rounds before it began again. */
+      readonly round: number;
+      readonly sites: readonly { readonly site: string; readonly rowsUsed: number | null }[];
+      /** How long they were waited for. */
+      readonly waitedMs: number;
+      readonly at: string;
+    }
+  | {
       readonly event: 'resumed';
       readonly round: number;
       readonly at: string;
@@ -56,6 +66,8 @@ export type LogEvent =
       readonly rounds: number;
       readonly relativeGap: number | null;
       readonly certificate: string | null;
+      /** Sites that the run went on without. */
+      readonly without: readonly string[];
       /** Where the result folder is, on the coordinator's machine. */
       readonly folder: string;
       readonly at: string;
@@ -76,6 +88,8 @@ export interface RoundEvent {
   readonly dualResidual: number | null;
   readonly objective: number | null;
   readonly tookMs: number;
+  /** Sites whose older answer stands in for the one that is due, and the round it is of (null: not heard yet). */
+  readonly standIns: readonly { readonly site: string; readonly round: number | null }[];
   readonly slowest: { readonly site: string; readonly ms: number } | null;
   /** Numbers sent by all sites and to all sites in this round. */
   readonly numbersUp: number;

@@ -19,6 +19,8 @@ export interface ResultDocument {
     readonly rowsDropped: number | null;
     readonly kernel: string;
   }[];
+  /** Members that the run was begun with and went on without (`missing: go-without`): their rows are not in the fit. */
+  readonly without: readonly { readonly site: string; readonly rowsUsed: number | null }[];
   readonly rowsTotal: number | null;
   readonly rung: Rung | null;
   readonly rungReason: string | null;

@@ -9,10 +9,11 @@ import type { ConsensusProblem } from '../consensus/problem.js';
 import { proximalRung } from '../consensus/proximal-rung.js';
 import { sketchedRung } from '../consensus/sketched-rung.js';
 import { Lockstep } from './lockstep.js';
-import type { Member, RosterAnswers, RunAsk, Shown } from './run.js';
+import { refusalsOf } from './refusals.js';
+import { askAll, type Batch, type Member, type RunAsk, type Shown } from './run.js';
 import type { RungChoice } from './rung.js';
 import { type Frame, fitCount, interceptOnly, penaltyOn } from './scale.js';
-import { firstRefusal, type PooledSurvey, type Stop } from './survey.js';
+import type { PooledSurvey, Stop } from './survey.js';
 import { numbersDown } from './traffic.js';
 
 /**
@@ -31,6 +32,12 @@ export interface Solved {
   readonly down: readonly number[];
 }
 
+/** What a run had asked before this stage began: asks, the survey's among them, and rounds of a solve stage. */
+export interface Before {
+  readonly asks: number;
+  readonly rounds: number;
+}
+
 /** Stage three: the consensus method on the rung chosen, one problem per fit, all in lock-step. */
 export function* solve(
   specification: FitSpecification,
@@ -39,7 +46,8 @@ export function* solve(
   frame: Frame,
   choice: RungChoice,
   surveyed: Shown,
-): Generator<RunAsk, Solved | Stop, RosterAnswers> {
+  before: Before,
+): Generator<RunAsk, Solved | Stop, Batch> {
   const fits = fitCount(specification);
   const methods = Array.from({ length: fits }, (_, fit) =>
     methodOn(choice.rung, consensusProblem(specification, survey, frame, choice, fit)),
@@ -50,11 +58,10 @@ export function* solve(
   let shown = surveyed;
   let round = 0;
   while (lockstep.asks.length > 0) {
-    // ask 1 is the survey
-    const askNumber = round + 2;
+    const askNumber = before.asks + round + 1;
     const works = lockstep.works(askNumber);
-    const answers = yield { stage: 'solve', works, scaling: frame.scaling, shown };
-    const refused = firstRefusal(answers, roster);
+    const { answers } = yield* askAll({ stage: 'solve', works, scaling: frame.scaling, shown });
+    const refused = refusalsOf(answers, roster);
     if (refused !== null) return refused;
     const given = answers as readonly (readonly WorkAnswer[])[];
     round++;
@@ -66,7 +73,7 @@ export function* solve(
     lockstep.receive(given, askNumber);
     shown = {
       kind: 'round',
-      round,
+      round: before.rounds + round,
       // what this round was for, and what its answers have shown
       progress: {
         ...shownProgress(lockstep, specification.rounds.tolerance),
@@ -75,12 +82,13 @@ export function* solve(
       tolerance: specification.rounds.tolerance,
       fitsOpen: asked.length,
       fitsTotal: fits,
+      standIns: [],
     };
   }
   return { ends: lockstep.ends, rounds: round, shown, up, down };
 }
 
-function consensusProblem(
+export function consensusProblem(
   specification: FitSpecification,
   survey: PooledSurvey,
   frame: Frame,
@@ -130,17 +138,16 @@ const farthest = (a: Progress, b: Progress): Progress =>
 function shownProgress(lockstep: Lockstep, tolerance: number): Progress {
   const open = lockstep.asks.map(({ progress }) => progress);
   if (open.length > 0) return open.reduce(farthest);
-  return lockstep.ends
-    .map(
-      (end): Progress => ({
-        rung: end.rung,
-        purpose: 'certificate',
-        primalResidual: null,
-        dualResidual: null,
-        relativeGap: end.certificate?.relativeGap ?? null,
-        gapMeasured: (end.certificate?.relativeGap ?? Number.POSITIVE_INFINITY) <= tolerance,
-        objective: end.loss + end.penalty,
-      }),
-    )
-    .reduce(farthest);
+  return lockstep.ends.map((end) => progressAtEnd(end, tolerance)).reduce(farthest);
 }
+
+/** What the last round of a fit has shown. */
+export const progressAtEnd = (end: MethodEnd, tolerance: number): Progress => ({
+  rung: end.rung,
+  purpose: 'certificate',
+  primalResidual: null,
+  dualResidual: null,
+  relativeGap: end.certificate?.relativeGap ?? null,
+  gapMeasured: (end.certificate?.relativeGap ?? Number.POSITIVE_INFINITY) <= tolerance,
+  objective: end.loss + end.penalty,
+});

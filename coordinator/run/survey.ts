@@ -1,7 +1,7 @@
-import type { Refusal } from '../../protocol/messages/round.js';
 import type { SurveyAnswer } from '../../protocol/messages/survey.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
-import { type Member, memberName, type RosterAnswers, type RunAsk } from './run.js';
+import { refusalsOf } from './refusals.js';
+import { askAll, type Batch, type Member, memberName, type RunAsk, type Shown } from './run.js';
 
 /** What all sites together bring: the pooled moments and sums, and who brings how many rows. */
 export interface PooledSurvey {
@@ -24,12 +24,14 @@ export interface PooledSurvey {
     readonly saturatedLoss: number;
   };
   readonly answers: readonly SurveyAnswer[];
+  /** How long each member took to answer. Milliseconds. */
+  readonly agesMs: readonly number[];
   readonly notes: readonly string[];
 }
 
 /** Why a run cannot go on: an outcome with its reason, in words for the analyst. */
 export interface Stop {
-  readonly outcome: 'refused' | 'unbounded' | 'broken';
+  readonly outcome: 'refused' | 'unbounded' | 'broken' | 'site-missing';
   readonly reason: string;
 }
 
@@ -37,14 +39,15 @@ export interface Stop {
 export function* survey(
   specification: FitSpecification,
   roster: readonly Member[],
-): Generator<RunAsk, PooledSurvey | Stop, RosterAnswers> {
-  const answers = yield {
+  shown: Shown | null,
+): Generator<RunAsk, PooledSurvey | Stop, Batch> {
+  const { answers, agesMs } = yield* askAll({
     stage: 'survey',
     works: roster.map(() => [{ work: 'survey' as const }]),
     scaling: null,
-    shown: null,
-  };
-  const refused = firstRefusal(answers, roster);
+    shown,
+  });
+  const refused = refusalsOf(answers, roster);
   if (refused !== null) return refused;
   const surveys = answers.map((answer) => {
     const [first] = answer as readonly SurveyAnswer[];
@@ -57,24 +60,12 @@ export function* survey(
       outcome: 'refused',
       reason: `site ${memberName(roster[odd])} built other design columns than ${memberName(roster[0])}: do both run the same version?`,
     };
-  const pooled = pool(surveys, roster);
+  const pooled = { ...pool(surveys, roster), agesMs };
   return responseProblem(specification, pooled) ?? pooled;
 }
 
-/** The first refusal in roster order as a reason to stop, or null. */
-export function firstRefusal(answers: RosterAnswers, roster: readonly Member[]): Stop | null {
-  const at = answers.findIndex((answer) => !Array.isArray(answer));
-  if (at < 0) return null;
-  const refusal = answers[at] as Refusal;
-  const remedy = refusal.remedy === null ? '' : ` ${refusal.remedy}`;
-  return {
-    outcome: 'refused',
-    reason: `site ${memberName(roster[at])} refused: ${refusal.message}${remedy} [${refusal.code}]`,
-  };
-}
-
 /** Means and centred squares merged pairwise (Chan, Golub, LeVeque 1983), in roster order. */
-function pool(surveys: readonly SurveyAnswer[], roster: readonly Member[]): PooledSurvey {
+function pool(surveys: readonly SurveyAnswer[], roster: readonly Member[]): Omit<PooledSurvey, 'agesMs'> {
   const [first] = surveys;
   const mean = Float64Array.from(first.mean);
   const squares = Float64Array.from(first.centredSquares);
