@@ -39,6 +39,8 @@ function storeOn(path: string, handle: FileHandle): JournalStore {
       attempt(path, async () => {
         await writeFully(handle, bytes);
         await handle.datasync();
+        // Bytes in a file that has no name any more are lost with this process.
+        if ((await handle.stat()).nlink === 0) throw new Error('the file was removed');
         return null;
       }),
     truncate: (length) =>

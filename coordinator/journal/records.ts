@@ -4,8 +4,7 @@ import { z } from 'zod';
 import { decodeToCoordinator, encodeMessage } from '../../protocol/codec.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Work } from '../../protocol/messages/round.js';
-import type { Reply } from '../panel/panel.js';
-import { isRefusal } from '../panel/panel.js';
+import { isRefusal, type Reply } from '../panel/panel-state.js';
 
 const count = z.int().min(0);
 
@@ -33,8 +32,15 @@ const answered = z.strictObject({
   ask: z.int().min(1),
   /** SHA-256 (hex) of what was asked of the whole roster, in full. */
   asked: z.string().length(64),
-  /** Per member, in roster order: its answer or refusal as the message it came in. */
-  replies: z.array(z.custom<Uint8Array>((value) => value instanceof Uint8Array)),
+  /**
+   * Per member, in roster order: its answer or refusal as the message it came in, to this ask or to the older one that
+   * it owed; null: none came before the barrier opened.
+   */
+  replies: z.array(z.custom<Uint8Array>((value) => value instanceof Uint8Array).nullable()),
+  /** Per member: how long its reply took or has been waited for. Milliseconds. */
+  agesMs: z.array(count),
+  /** Members given up on for good when the barrier opened. */
+  gone: z.array(count),
   /** For the round log only; the run never sees it. */
   measured: z.strictObject({
     tookMs: z.number().min(0),
@@ -77,10 +83,13 @@ export function decodeRecord(payload: Uint8Array): Checked<JournalRecord> {
     : fail('journal-broken', `A journal record is not of a known form: ${z.prettifyError(parsed.error)}.`);
 }
 
+const NOT_ASKED = encode(null);
+
 /** SHA-256 (hex) over the ask as each member would get it in full, in roster order. */
-export function digestOfAsk(run: string, ask: number, works: readonly (readonly Work[])[]): string {
+export function digestOfAsk(run: string, ask: number, works: readonly (readonly Work[] | null)[]): string {
   const hash = createHash('sha256');
-  for (const work of works) hash.update(encodeMessage({ kind: 'ask', run, ask, work: [...work] }));
+  for (const work of works)
+    hash.update(work === null ? NOT_ASKED : encodeMessage({ kind: 'ask', run, ask, work: [...work] }));
   return hash.digest('hex');
 }
 

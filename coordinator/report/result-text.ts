@@ -1,6 +1,7 @@
 import type { FitDocument, ResultDocument } from '../run/result.js';
 import { certificateText, OUTCOME_HEAD } from './outcome-text.js';
 import { counted, grouped, listed, roughly, sentence, shortened, wrapped } from './phrases.js';
+import { rowsText } from './stand-in-text.js';
 import { coefficientsOf, lambdaText } from './tables.js';
 
 /** Fits shown in full; the rest are in `coefficients.csv`. */
@@ -113,6 +114,9 @@ function figure(value: number): string {
   return size >= 1e-5 && size < 1e9 ? String(Number(text)) : text.replace('e+', 'e');
 }
 
+const withoutText = (left: ResultDocument['without'][number]): string =>
+  `Without ${left.site}, which was given up on: its ${rowsText([left])} are not in the fit.`;
+
 function sitesText(result: ResultDocument, width: number): string[] {
   const total = result.rowsTotal === null ? '' : `, ${counted(result.rowsTotal, 'row')} in all`;
   const lines = result.sites.map((site) => {
@@ -127,5 +131,6 @@ function sitesText(result: ResultDocument, width: number): string[] {
   return [
     `${counted(result.sites.length, 'site')}${total}.`,
     ...lines.flatMap((line) => wrapped(line, width, 4, 2)),
+    ...result.without.flatMap((left) => wrapped(withoutText(left), width, 4, 2)),
   ];
 }

@@ -3,6 +3,7 @@ import { certificateText, OUTCOME_HEAD } from './outcome-text.js';
 import { counted, duration, grouped, listed, sentence, shortened, wrapped } from './phrases.js';
 import { namesWithin, Presence } from './presence.js';
 import { bar, barWidth, MARKS, roundSentence } from './round-line.js';
+import { StandInTeller, withoutLines } from './stand-in-text.js';
 import { timeLeftMs } from './time-left.js';
 
 /** The round log of one run for a terminal: each event as lines that read as sentences. */
@@ -37,6 +38,7 @@ export function roundLog(options: RoundLogOptions): RoundLog {
     options.colour && text !== '' ? `${TONES[tone][0]}${text}${TONES[tone][1]}` : text;
   const memory: Memory = {
     presence: new Presence(width),
+    standIns: new StandInTeller(width),
     served: options.served,
     run: null,
     title: null,
@@ -55,6 +57,7 @@ export function roundLog(options: RoundLogOptions): RoundLog {
 
 interface Memory {
   readonly presence: Presence;
+  readonly standIns: StandInTeller;
   readonly served: boolean;
   run: string | null;
   title: string | null;
@@ -75,6 +78,10 @@ function remember(memory: Memory, event: LogEvent): void {
   } else if (event.event === 'round') {
     memory.tolerance = event.tolerance;
     memory.recent = [...memory.recent.slice(1 - REMEMBERED), event];
+  } else if (event.event === 'without') {
+    memory.rows = null;
+    memory.siteCount = null;
+    memory.recent = [];
   } else if (event.event === 'resumed') {
     memory.presence.forget();
   }
@@ -92,7 +99,9 @@ function linesOf(event: LogEvent, memory: Memory, width: number, paint: Paint): 
     case 'survey':
       return surveyLines(event, width, paint);
     case 'round':
-      return [roundLine(event, memory, width, paint)];
+      return [roundLine(event, memory, width, paint), ...memory.standIns.linesFor(event)];
+    case 'without':
+      return withoutLines(event, width).map((line) => paint('bad', line));
     case 'late':
       return memory.presence.stillOut(event).map((line) => paint('bad', line));
     case 'resumed':
@@ -163,7 +172,8 @@ function outcomeLines(
   const rows = memory.rows === null ? '' : ` over ${counted(memory.rows, 'row')}`;
   const sites = memory.siteCount === null ? '' : ` at ${counted(memory.siteCount, 'site')}`;
   const title = memory.title === null ? 'The run' : `“${shortened(memory.title, Math.max(16, width - 40))}”`;
-  const took = `${title} took ${counted(event.rounds, 'round')}${rows}${sites}.`;
+  const without = event.without.length === 0 ? '' : `, without ${listed(event.without, 8)}`;
+  const took = `${title} took ${counted(event.rounds, 'round')}${rows}${sites}${without}.`;
   const reason = event.reason === null ? '' : ` ${sentence(event.reason)}`;
   const certificate =
     event.outcome === 'solved' || event.relativeGap !== null

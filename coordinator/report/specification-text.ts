@@ -127,11 +127,15 @@ function roundsText(spec: FitSpecification): string {
 }
 
 function barrierText(spec: FitSpecification): string {
-  const { quorum, deadlineMs, patienceMs, missing } = spec.barrier;
-  const who = quorum === 'all' ? 'every site' : `${quorum} sites`;
+  const { quorum, oldest, deadlineMs, patienceMs, missing } = spec.barrier;
+  const who = quorum === 'all' ? 'every site' : counted(quorum, 'site');
+  const older =
+    quorum === 'all'
+      ? ''
+      : ` For the others their older answers stand in, of up to ${counted(oldest, 'round')} before; the result is certified by answers of all sites at one point.`;
   const gone =
     missing === 'stop'
       ? 'then the run ends as site-missing'
-      : 'then the run goes on without it and the result says so';
-  return `A round waits for ${who}: ${duration(deadlineMs)} before a site counts as late, ${duration(patienceMs)} in all; ${gone}.`;
+      : 'then the fit begins again without its rows, and the result says so';
+  return `A round waits for ${who}.${older} A site without an answer is asked again after ${duration(deadlineMs)} and waited for up to ${duration(patienceMs)}; ${gone}.`;
 }

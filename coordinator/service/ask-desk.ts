@@ -3,23 +3,17 @@ import { CLOSE_CODES } from '../../protocol/close-codes.js';
 import type { Answer, Ask, Refusal } from '../../protocol/messages/round.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import type { Measured } from '../journal/records.js';
-import {
-  isRefusal,
-  openPanel,
-  type PanelEffect,
-  type PanelEvent,
-  type PanelState,
-  type Reply,
-  step,
-  wakeAtMs,
-} from '../panel/panel.js';
-import { type Member, memberName, type RunAsk } from '../run/run.js';
+import { openPanel } from '../panel/member.js';
+import { step, wakeAtMs } from '../panel/panel.js';
+import { isRefusal, type PanelEffect, type PanelEvent, type PanelState } from '../panel/panel-state.js';
+import { type Batch, type Member, memberName, type RunAsk } from '../run/run.js';
+import type { OwedAsk } from './drive.js';
 import type { HostParts, LinkedMember } from './host-parts.js';
 import { MemberLink } from './member-link.js';
 
 /** What the desk reports to its run. */
 export interface DeskReports {
-  pass(asked: RunAsk, ask: number, replies: readonly Reply[], measured: Measured): void;
+  pass(asked: RunAsk, ask: number, batch: Batch, measured: Measured): void;
   giveUp(members: readonly string[], waitedMs: number): void;
   late(members: readonly string[], waitedMs: number, patienceLeftMs: number): void;
 }
@@ -30,6 +24,8 @@ export class AskDesk {
   private readonly names: readonly string[];
   private readonly links = new Map<number, MemberLink>();
   private current: { readonly ask: number; readonly asked: RunAsk } | null = null;
+  /** Per member: its newest ask. */
+  private readonly newest: (OwedAsk | null)[];
   private numbersDown = 0;
   private stopTimer: () => void = () => {};
   private readonly queue: PanelEvent[] = [];
@@ -41,21 +37,43 @@ export class AskDesk {
     private readonly roster: readonly Member[],
     private readonly reports: DeskReports,
   ) {
-    const { deadlineMs, patienceMs } = parts.accepted.specification.barrier;
-    this.panel = openPanel(roster.length, { deadlineMs, patienceMs });
+    const { deadlineMs, patienceMs, missing } = parts.accepted.specification.barrier;
+    const sites = roster.map(({ site }) => site);
+    this.panel = openPanel(sites, { deadlineMs, patienceMs, missing });
     this.names = roster.map(memberName);
+    this.newest = roster.map(() => null);
+  }
+
+  /** What a run taken up again left open: who is gone, and who owes the reply to an ask before the one that comes. */
+  resume(owed: readonly (OwedAsk | null)[], gone: Iterable<number>): void {
+    const atMs = this.parts.time.steadyMs();
+    for (const member of gone) this.take({ kind: 'gone', member, atMs });
+    for (const [member, own] of owed.entries()) {
+      if (own === null) continue;
+      this.newest[member] = own;
+      this.take({ kind: 'owes', member, ask: own.ask, atMs });
+    }
   }
 
   open(ask: number, asked: RunAsk): void {
+    const { works, scaling, barrier } = asked;
     this.current = { ask, asked };
     this.numbersDown = 0;
-    this.take({ kind: 'ask', ask, atMs: this.parts.time.steadyMs() });
+    const members = works.flatMap((own, member) => (own === null ? [] : [member]));
+    for (const [member, own] of works.entries())
+      if (own !== null) this.newest[member] = { ask, works: own, scaling };
+    this.take({ kind: 'ask', ask, asked: members, ...barrier, atMs: this.parts.time.steadyMs() });
   }
 
   /** True when the member is one of this run's. */
   connected(linked: LinkedMember): boolean {
     const index = this.indexOf(linked);
     if (index < 0) return false;
+    if (this.panel.members[index].gone) {
+      const message = `${this.names[index]} came after the run went on without it.`;
+      this.parts.notice({ level: 'info', message, site: this.names[index] });
+      return false;
+    }
     const { kernel } = this.roster[index];
     if (kernel !== linked.member.kernel) {
       const message = `The kernel is ${linked.member.kernel} now; the run started with ${kernel}.`;
@@ -100,13 +118,13 @@ export class AskDesk {
   }
 
   private fits(link: MemberLink, index: number, answer: Answer): boolean {
-    const { current } = this;
-    if (current === null || answer.ask !== current.ask) return true;
-    const { scaling, works } = current.asked;
+    const newest = this.newest[index];
+    if (newest === null || answer.ask !== newest.ask) return true;
+    const { scaling, works } = newest;
     const { run, specification } = this.parts.accepted;
     const intercept = specification.intercept === 'shared' ? 1 : 0;
     const p = scaling === null ? null : scaling.kept.length + intercept;
-    const asked: Ask = { kind: 'ask', run, ask: current.ask, work: [...works[index]] };
+    const asked: Ask = { kind: 'ask', run, ask: newest.ask, work: [...works] };
     const failure = checkAnswer(asked, answer, p);
     if (failure === null) {
       link.answered(answer.ask, answer.work);
@@ -136,7 +154,7 @@ export class AskDesk {
     const { current } = this;
     switch (effect.kind) {
       case 'send':
-        if (current !== null) this.send(current.ask, current.asked, effect.member, effect.full);
+        this.send(effect);
         return;
       case 'drop': {
         const message = `A reply to ask ${effect.ask} was dropped: ${effect.why}.`;
@@ -152,20 +170,29 @@ export class AskDesk {
         return;
       case 'pass':
         if (current !== null)
-          this.reports.pass(current.asked, current.ask, effect.replies, this.measure(effect));
+          this.reports.pass(current.asked, current.ask, effect.batch, this.measure(effect));
+        for (const member of effect.batch.gone) this.dismiss(member);
         return;
     }
   }
 
-  private send(ask: number, asked: RunAsk, member: number, full: boolean): void {
-    const sent = this.links.get(member)?.ask(ask, asked.works[member], asked.scaling, full);
-    this.numbersDown += sent ?? 0;
+  private send({ member, ask, lacks }: Extract<PanelEffect, { kind: 'send' }>): void {
+    const newest = this.newest[member];
+    // a newer one is in the line, and goes out in its turn
+    if (newest?.ask !== ask) return;
+    this.numbersDown += this.links.get(member)?.ask(ask, newest.works, newest.scaling, lacks) ?? 0;
   }
 
-  private measure({ replies, tookMs, slowest }: Extract<PanelEffect, { kind: 'pass' }>): Measured {
+  /** For a member that is gone the run is over. */
+  private dismiss(member: number): void {
+    this.links.get(member)?.end('site-missing');
+    this.links.delete(member);
+  }
+
+  private measure({ batch, tookMs, slowest }: Extract<PanelEffect, { kind: 'pass' }>): Measured {
     let numbersUp = 0;
-    for (const reply of replies) {
-      if (isRefusal(reply)) continue;
+    for (const reply of batch.replies) {
+      if (reply === null || isRefusal(reply)) continue;
       for (const answer of reply) numbersUp += numbersOfAnswer(answer);
     }
     const at = new Date(this.parts.time.wallMs()).toISOString();

@@ -1,23 +1,45 @@
 import { randomBytes } from 'node:crypto';
 import { mkdir, open, rename, rm, stat, unlink } from 'node:fs/promises';
-import { dirname } from 'node:path';
+import { dirname, resolve } from 'node:path';
 import { setTimeout as delay } from 'node:timers/promises';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 
 /** Makes a folder, its parents too, readable by its owner only. */
 export const makeFolder = (path: string): Promise<Checked<null>> =>
   unwritableIfFails(path, async () => {
-    await mkdir(path, { recursive: true, mode: 0o700 });
+    await makePath(path, 0o700);
     return null;
   });
 
+/** Makes a folder, its parents too; throws what the file system says. */
+export async function makePath(path: string, mode = 0o777): Promise<void> {
+  try {
+    await mkdir(path, { recursive: true, mode });
+  } catch (error) {
+    // Node says so of a read-only file system too: the first folder that is missing tells the true reason.
+    if ((error as NodeJS.ErrnoException).code === 'ENOENT') await mkdir(await firstMissing(resolve(path)));
+    throw error;
+  }
+}
+
+async function firstMissing(path: string): Promise<string> {
+  const parent = dirname(path);
+  const isThere = await stat(parent).then(
+    () => true,
+    () => false,
+  );
+  return isThere || parent === path ? path : firstMissing(parent);
+}
+
+/** Mode of every file in the state folder: for its owner only. */
+export const FILE_MODE = 0o600;
+
 /** Replaces a file as a whole: after a crash there is the old one or the new one, never a part. */
-export const writeWhole = (path: string, text: string, mode = 0o644): Promise<Checked<null>> =>
+export const writeWhole = (path: string, text: string): Promise<Checked<null>> =>
   unwritableIfFails(path, async () => {
     const draft = `${path}.${randomBytes(4).toString('hex')}.draft`;
-    const handle = await open(draft, 'w', mode);
+    const handle = await open(draft, 'wx', FILE_MODE);
     try {
-      await handle.chmod(mode);
       await handle.writeFile(text);
       await handle.sync();
     } catch (error) {
@@ -27,14 +49,19 @@ export const writeWhole = (path: string, text: string, mode = 0o644): Promise<Ch
     }
     await handle.close();
     await rename(draft, path);
-    const folder = await open(dirname(path), 'r');
-    try {
-      await folder.sync();
-    } finally {
-      await folder.close();
-    }
+    await syncFolder(dirname(path));
     return null;
   });
+
+/** A name in a folder is on stable storage only once the folder is. */
+export async function syncFolder(path: string): Promise<void> {
+  const folder = await open(path, 'r');
+  try {
+    await folder.sync();
+  } finally {
+    await folder.close();
+  }
+}
 
 const HOLD_TRIES_MOST = 200;
 const HOLD_AGAIN_MS = 25;
@@ -56,7 +83,7 @@ export async function holding<T>(path: string, action: () => Promise<Checked<T>>
 async function takeHold(hold: string): Promise<null> {
   for (let tries = 1; ; tries++) {
     try {
-      await (await open(hold, 'wx', 0o600)).close();
+      await (await open(hold, 'wx', FILE_MODE)).close();
       return null;
     } catch (error) {
       if ((error as NodeJS.ErrnoException).code !== 'EEXIST' || tries === HOLD_TRIES_MOST) throw error;
@@ -80,10 +107,15 @@ export async function unwritableIfFails<T>(path: string, action: () => Promise<T
   try {
     return succeed(await action());
   } catch (error) {
-    const reason = error instanceof Error ? error.message : String(error);
-    return fail('state-unwritable', `The state folder cannot be read or written: ${reason}.`, {
-      remedy: 'Check the space and the rights of the folder given with --state.',
-      where: { file: path },
-    });
+    return unwritable(path, error);
   }
+}
+
+/** What the file system refused, as a failure. */
+export function unwritable(path: string, error: unknown): Checked<never> {
+  const reason = error instanceof Error ? error.message : String(error);
+  return fail('state-unwritable', `The state folder cannot be read or written: ${reason}.`, {
+    remedy: 'Check the space and the rights of the folder given with --state.',
+    where: { file: path },
+  });
 }

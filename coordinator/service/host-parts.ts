@@ -54,10 +54,18 @@ export interface HostParts {
   notice(notice: Notice): void;
   /** Writes the result folder, durably; returns its path. */
   keepResult(end: RunEnd): Promise<Checked<string>>;
-  /** What the round log holds already (a run taken up again); rounds up to `round` are not logged twice. */
-  readonly logged: { readonly survey: boolean; readonly round: number };
+  readonly logged: Logged;
   /** Node's version, for the journal. */
   readonly node: string;
+}
+
+/** What the round log of a run taken up again holds already, and is not to hold twice. */
+export interface Logged {
+  readonly surveys: number;
+  /** Times that the run went on without a site. */
+  readonly withouts: number;
+  /** The last round. */
+  readonly round: number;
 }
 
 export type HostState =

@@ -1,6 +1,7 @@
 import type { Work, WorkAnswer } from '../../protocol/messages/round.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import { numbersOfWork } from '../../protocol/numbers.js';
+import type { Lack } from '../panel/panel-state.js';
 import {
   type ConnectionMemory,
   EMPTY_MEMORY,
@@ -12,7 +13,8 @@ import type { AcceptedRun, LinkedMember } from './host-parts.js';
 
 /** One connection of one member in one run: what it was told, and what later asks may leave out. */
 export class MemberLink {
-  private prepared: 'no' | 'without scaling' | 'with scaling' = 'no';
+  /** The scaling it was prepared with last; null: not at all. */
+  private prepared: { readonly scaling: Scaling | null } | null = null;
   private memory: ConnectionMemory = EMPTY_MEMORY;
   private last: { readonly ask: number; readonly works: readonly Work[] } | null = null;
 
@@ -23,12 +25,13 @@ export class MemberLink {
 
   /**
    * Sends the ask, preparing the member first where that is due. A repeated ask is the same message as before, unless
-   * it is wanted in full. Returns the numbers sent, 0 when the connection did not take it.
+   * the member lacks something. Returns the numbers sent, 0 when the connection did not take it.
    */
-  ask(ask: number, works: readonly Work[], scaling: Scaling | null, full: boolean): number {
+  ask(ask: number, works: readonly Work[], scaling: Scaling | null, lacks: Lack): number {
+    if (lacks === 'run') this.prepared = null;
     if (!this.prepare(scaling)) return 0;
     const repeated = this.last?.ask === ask ? this.last.works : slimWorks(works, this.memory);
-    const sent = full ? works : repeated;
+    const sent = lacks === 'nothing' ? repeated : works;
     if (!this.linked.send({ kind: 'ask', run: this.accepted.run, ask, work: [...sent] })) return 0;
     this.last = { ask, works: sent };
     this.memory = rememberSent(this.memory, sent);
@@ -41,15 +44,18 @@ export class MemberLink {
 
   /** Tells the member that the run is over, if it ever heard of it. */
   end(outcome: string): void {
-    if (this.prepared !== 'no') this.linked.send({ kind: 'run-end', run: this.accepted.run, outcome });
+    if (this.prepared !== null) this.linked.send({ kind: 'run-end', run: this.accepted.run, outcome });
   }
 
   private prepare(scaling: Scaling | null): boolean {
-    const due = scaling === null ? 'without scaling' : 'with scaling';
-    if (this.prepared === due || this.prepared === 'with scaling') return true;
+    if (this.prepared?.scaling === scaling) return true;
     const { run, canonical, digest } = this.accepted;
     const sent = this.linked.send({ kind: 'prepare', run, specification: canonical, digest, scaling });
-    if (sent) this.prepared = due;
-    return sent;
+    if (!sent) return false;
+    // a member that is prepared otherwise keeps no vector from before
+    this.prepared = { scaling };
+    this.memory = EMPTY_MEMORY;
+    this.last = null;
+    return true;
   }
 }

@@ -12,7 +12,7 @@ import { fit as runOf } from '../run/fit.js';
 import type { RunEnd, RunOutcome } from '../run/run.js';
 import { Drive, type Turn } from './drive.js';
 import { firstDifference } from './first-difference.js';
-import { askDiffers, recordedReplies } from './replay.js';
+import { askDiffers, recordedBatch } from './replay.js';
 import { forcedEnd } from './round-events.js';
 import { RUN_FILES, resultJson } from './run-entry.js';
 
@@ -187,12 +187,12 @@ function walk(drive: Drive | null, run: string, answered: readonly AnsweredRecor
     if (drive === null || turn === null) break;
     const stage = turn.kind === 'ask' ? turn.asked.stage : 'end';
     const differs = askDiffers(drive, turn, record);
-    const replies = recordedReplies(run, record);
-    if (differs !== null || turn.kind !== 'ask' || !replies.ok) {
-      const what = differs ?? (replies.ok ? 'The run has ended.' : replies.failure.message);
+    const batch = differs === null ? recordedBatch(drive, run, record) : null;
+    if (turn.kind !== 'ask' || batch === null || !batch.ok) {
+      const what = differs ?? (batch?.ok === false ? batch.failure.message : 'The run has ended.');
       return { asksAgreed, turn, difference: { ask: record.ask, stage, what } };
     }
-    turn = drive.feed(turn.asked, replies.value, record.measured);
+    turn = drive.feed(turn.asked, batch.value, record.measured);
   }
   return { asksAgreed: answered.length, turn, difference: null };
 }

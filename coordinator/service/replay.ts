@@ -1,7 +1,8 @@
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Journal } from '../journal/journal.js';
 import { type AnsweredRecord, decodeReply, type EndedRecord, type OpenedRecord } from '../journal/records.js';
-import type { Reply } from '../panel/panel.js';
+import type { Reply } from '../panel/panel-state.js';
+import type { Batch } from '../run/run.js';
 import type { Drive, Turn } from './drive.js';
 
 /** What the journal led to: nothing recorded yet, a run in the middle, or a run that had ended. */
@@ -57,11 +58,9 @@ export async function replay(
 function feedRecorded(drive: Drive, turn: Turn, run: string, record: AnsweredRecord): Checked<Turn> {
   const differs = askDiffers(drive, turn, record);
   if (differs !== null) return broken(differs);
-  const replies = recordedReplies(run, record);
-  if (!replies.ok) return replies;
-  return turn.kind === 'ask'
-    ? succeed(drive.feed(turn.asked, replies.value, record.measured))
-    : succeed(turn);
+  const batch = recordedBatch(drive, run, record);
+  if (!batch.ok) return batch;
+  return turn.kind === 'ask' ? succeed(drive.feed(turn.asked, batch.value, record.measured)) : succeed(turn);
 }
 
 /** How the ask the run stands at differs from the recorded one, as a sentence; null where they agree. */
@@ -69,23 +68,34 @@ export function askDiffers(drive: Drive, turn: Turn, record: AnsweredRecord): st
   if (turn.kind !== 'ask' || turn.ask !== record.ask) {
     return `Ask ${record.ask} is recorded where the run does not ask it.`;
   }
-  if (record.replies.length !== drive.roster.length) {
-    return `Ask ${record.ask} is recorded with ${record.replies.length} replies; the roster has ${drive.roster.length} members.`;
+  const { replies, agesMs, gone } = record;
+  const count = drive.roster.length;
+  if (replies.length !== count || agesMs.length !== count || gone.some((member) => member >= count)) {
+    return `Ask ${record.ask} is recorded with ${replies.length} replies and ${agesMs.length} times; the roster has ${count} members.`;
   }
   return drive.digestOf(turn.asked) === record.asked
     ? null
     : `Ask ${record.ask} was another one when it was recorded.`;
 }
 
-/** The replies to one ask, in roster order. Fails with `journal-broken`. */
-export function recordedReplies(run: string, record: AnsweredRecord): Checked<Reply[]> {
-  const replies: Reply[] = [];
-  for (const bytes of record.replies) {
-    const reply = decodeReply(run, record.ask, bytes);
+/**
+ * What came before the barrier of one ask opened; each reply is to the ask that its member owed then. Fails with
+ * `journal-broken`.
+ */
+export function recordedBatch(drive: Drive, run: string, record: AnsweredRecord): Checked<Batch> {
+  const replies: (Reply | null)[] = [];
+  for (const [member, ask] of drive.owedAsks().entries()) {
+    const bytes = record.replies[member];
+    if (bytes === null) {
+      replies.push(null);
+      continue;
+    }
+    if (ask === null) return broken(`With ask ${record.ask} a reply is recorded that nobody was asked for.`);
+    const reply = decodeReply(run, ask, bytes);
     if (!reply.ok) return reply;
     replies.push(reply.value);
   }
-  return succeed(replies);
+  return succeed({ replies, agesMs: record.agesMs, gone: record.gone });
 }
 
 const broken = (what: string) =>

@@ -11,11 +11,15 @@ export function eventOfShown(
   shown: Shown,
   measured: Measured,
   roster: readonly Member[],
-  roundsMost: number,
+  { roundsMost, patienceMs }: { readonly roundsMost: number; readonly patienceMs: number },
 ): LogEvent {
   if (shown.kind === 'survey') {
     const { kind: _, ...survey } = shown;
     return { event: 'survey', ...survey, tookMs: measured.tookMs, at: measured.at };
+  }
+  if (shown.kind === 'without') {
+    const { round, sites } = shown;
+    return { event: 'without', round, sites, waitedMs: patienceMs, at: measured.at };
   }
   const { slowest, tookMs, numbersUp, numbersDown, at } = measured;
   const { progress } = shown;
@@ -34,6 +38,7 @@ export function eventOfShown(
     dualResidual: progress.dualResidual,
     objective: progress.objective,
     tookMs,
+    standIns: shown.standIns,
     slowest: slowest === null ? null : { site: memberName(roster[slowest.member]), ms: slowest.ms },
     numbersUp,
     numbersDown,
@@ -56,6 +61,7 @@ export function outcomeEvent(end: RunEnd, folder: string, at: string): LogEvent 
     rounds: end.result.rounds,
     relativeGap: worst?.relativeGap ?? null,
     certificate: worst?.kind ?? null,
+    without: end.result.without.map(({ site }) => site),
     folder,
     at,
   };
@@ -65,10 +71,14 @@ export function outcomeEvent(end: RunEnd, folder: string, at: string): LogEvent 
 export function forcedEnd(
   ending: { readonly outcome: RunEnd['outcome']; readonly reason: string },
   { specification, digest }: Pick<AcceptedRun, 'specification' | 'digest'>,
-  drive: Pick<Drive, 'roster' | 'survey' | 'round' | 'tally'> | null,
+  drive: Pick<Drive, 'roster' | 'survey' | 'without' | 'round' | 'tally'> | null,
 ): RunEnd {
-  const roster = drive?.roster ?? [];
+  const without = drive?.without ?? [];
+  const present = [...(drive?.roster.entries() ?? [])]
+    .map(([index, { kernel, ...member }]) => ({ index, site: memberName(member), kernel }))
+    .filter(({ site }) => without.every((left) => left.site !== site));
   const survey = drive?.survey ?? null;
+  const rowsOf = (name: string) => survey?.sites.find(({ site }) => site === name);
   const numbers = drive?.tally.numbers() ?? [];
   const result: ResultDocument = {
     format: 1,
@@ -77,12 +87,13 @@ export function forcedEnd(
     title: specification.title,
     specification: digest,
     software: SOFTWARE,
-    sites: roster.map((member, index) => ({
-      site: memberName(member),
-      rowsUsed: survey?.sites[index]?.rowsUsed ?? null,
-      rowsDropped: survey?.sites[index]?.rowsDropped ?? null,
-      kernel: member.kernel,
+    sites: present.map(({ site, kernel }) => ({
+      site,
+      rowsUsed: rowsOf(site)?.rowsUsed ?? null,
+      rowsDropped: rowsOf(site)?.rowsDropped ?? null,
+      kernel,
     })),
+    without,
     rowsTotal: survey?.rowsTotal ?? null,
     rung: survey?.rung ?? null,
     rungReason: survey?.rungReason ?? null,
@@ -90,7 +101,7 @@ export function forcedEnd(
     fits: [],
     notes: survey?.notes ?? [],
     rounds: drive?.round ?? 0,
-    numbersSent: roster.map((member, index) => ({ site: memberName(member), ...numbers[index] })),
+    numbersSent: present.map(({ index, site }) => ({ site, ...numbers[index] })),
   };
   return { outcome: ending.outcome, reason: ending.reason, shown: null, result };
 }

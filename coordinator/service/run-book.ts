@@ -1,5 +1,5 @@
 import { randomBytes } from 'node:crypto';
-import { readdir, readFile } from 'node:fs/promises';
+import { readdir, readFile, rm } from 'node:fs/promises';
 import { join, resolve } from 'node:path';
 import { type Checked, type Failure, fail, succeed } from '../../protocol/failure.js';
 import type { Answer, Refusal } from '../../protocol/messages/round.js';
@@ -10,9 +10,18 @@ import { fileStore } from '../journal/file-store.js';
 import { openJournal } from '../journal/journal.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { Member, Run } from '../run/run.js';
-import { makeFolder, unwritableIfFails, writeWhole } from './files.js';
+import { makeFolder, syncFolder, unwritableIfFails, writeWhole } from './files.js';
 import type { HostTime, LinkedMember, Notice } from './host-parts.js';
-import { keepResult, loggedIn, RUN_FILES, type RunEntry, type RunSummary, summaryOf } from './run-entry.js';
+import {
+  isCancelled,
+  keepCancellation,
+  keepResult,
+  loggedIn,
+  RUN_FILES,
+  type RunEntry,
+  type RunSummary,
+  summaryOf,
+} from './run-entry.js';
 import { RunHost } from './run-host.js';
 import { RunLog, readLog } from './run-log.js';
 
@@ -35,6 +44,8 @@ export type Submitted =
 export class RunBook {
   private readonly entries = new Map<string, RunEntry>();
   private closing = false;
+  /** Submissions that are being written down. */
+  private accepting = 0;
 
   constructor(private readonly parts: BookParts) {}
 
@@ -63,7 +74,7 @@ export class RunBook {
   async submit(text: string, file: string): Promise<Submitted> {
     const parsed = parseFitSpecification(text, file);
     if (!parsed.ok) return parsed;
-    if (this.count('waiting') >= this.parts.waitingMost) {
+    if (this.count('waiting') + this.accepting >= this.parts.waitingMost) {
       const { failure } = fail('coordinator-full', `${this.parts.waitingMost} runs are waiting already.`, {
         remedy: 'Submit again when one of them has started, or cancel one.',
       });
@@ -72,13 +83,20 @@ export class RunBook {
     const digest = digestOf(canonicalText(parsed.value));
     const submittedAt = new Date(this.parts.time.wallMs()).toISOString();
     const run = newRunId(submittedAt);
-    const accepted = await this.accept(run, text, parsed.value, digest, submittedAt);
+    this.accepting += 1;
+    const accepted = await this.accept(run, text, parsed.value, digest, submittedAt).finally(() => {
+      this.accepting -= 1;
+    });
     return accepted.ok ? { ok: true, run, digest } : { ok: false, failures: [accepted.failure] };
   }
 
-  /** False when the run has ended already. */
-  cancel(entry: RunEntry): boolean {
-    return entry.open?.host.cancel() ?? false;
+  /** Ends a run that has not ended; once this succeeds, the cancellation survives a crash. */
+  async cancel(entry: RunEntry): Promise<Checked<null>> {
+    if (entry.open === null) return succeed(null);
+    const kept = await keepCancellation(entry.folder, new Date(this.parts.time.wallMs()).toISOString());
+    if (!kept.ok) return kept;
+    entry.open?.host.cancel();
+    return succeed(null);
   }
 
   connected(linked: LinkedMember): void {
@@ -128,19 +146,36 @@ export class RunBook {
     digest: string,
     submittedAt: string,
   ): Promise<Checked<null>> {
-    const { title, sites } = specification;
     const folder = join(this.runsFolder, run);
+    const opened = await this.openNew(run, folder, text, specification, digest, submittedAt);
+    // What the analyst is told was not accepted must not be taken up at the next start.
+    if (!opened.ok) await rm(folder, { recursive: true, force: true });
+    return opened;
+  }
+
+  private async openNew(
+    run: string,
+    folder: string,
+    text: string,
+    specification: FitSpecification,
+    digest: string,
+    submittedAt: string,
+  ): Promise<Checked<null>> {
+    const { title, sites } = specification;
     const made = await makeFolder(folder);
     if (!made.ok) return made;
+    const named = await unwritableIfFails(this.runsFolder, () => syncFolder(this.runsFolder));
+    if (!named.ok) return named;
     const kept = await writeWhole(join(folder, RUN_FILES.specification), text);
     if (!kept.ok) return kept;
     const log = await RunLog.open(join(folder, RUN_FILES.log));
     if (!log.ok) return log;
     const accepted = { event: 'accepted', run, title, digest, sites, at: submittedAt } as const;
-    const logged = await log.value.append(accepted);
-    if (!logged.ok) return logged;
     const entry = { run, title, digest, submittedAt, folder, open: null, ended: null };
-    return this.openRun(entry, specification, log.value, [accepted]);
+    const logged = log.value.append(accepted);
+    const opened = logged.ok ? await this.openRun(entry, specification, log.value, [accepted]) : logged;
+    if (!opened.ok) log.value.close();
+    return opened;
   }
 
   private async recoverRun(run: string): Promise<Checked<null>> {
@@ -166,8 +201,14 @@ export class RunBook {
     const file = join(folder, RUN_FILES.specification);
     const text = await unwritableIfFails(file, () => readFile(file, 'utf8'));
     if (!text.ok) return text;
+    const cancelled = await isCancelled(folder);
+    if (!cancelled.ok) return cancelled;
     const parsed = parseFitSpecification(text.value, file);
-    if (parsed.ok) return this.openRun(entry, parsed.value, log.value, events.value);
+    if (parsed.ok) {
+      const opened = await this.openRun(entry, parsed.value, log.value, events.value);
+      if (opened.ok && cancelled.value) entry.open?.host.cancel();
+      return opened;
+    }
     log.value.close();
     const [failure] = parsed.failures;
     entry.ended = { outcome: null, reason: `It cannot be taken up: ${failure.message}`, round: 0 };
@@ -194,9 +235,9 @@ export class RunBook {
         time: parts.time,
         connected: () => parts.connected(),
         mayStart: () => this.count('running') < parts.runningMost,
-        log: (event) => void this.log(log, event),
+        log: (event) => this.log(entry, log, event),
         notice: (notice) => parts.notice({ ...notice, detail: { run: entry.run, about: notice.detail } }),
-        keepResult: (end) => keepResult(entry.folder, end),
+        keepResult: (end) => keepResult(entry.folder, end, specification),
         logged: loggedIn(events),
         node: parts.node,
       },
@@ -208,9 +249,10 @@ export class RunBook {
     return succeed(null);
   }
 
-  private async log(log: RunLog, event: LogEvent): Promise<void> {
-    const kept = await log.append(event);
-    if (!kept.ok) this.parts.notice({ level: 'error', ...kept.failure });
+  /** A log with gaps would leave the tables of the result with gaps: the run stops, and says again what is missing. */
+  private log(entry: RunEntry, log: RunLog, event: LogEvent): void {
+    const kept = log.append(event);
+    if (!kept.ok) entry.open?.host.halt(kept.failure);
   }
 
   /** Lets go of a run that has ended and gives its place to those that wait, first come first served. */

@@ -1,10 +1,15 @@
+import { access } from 'node:fs/promises';
 import { join } from 'node:path';
 import { type Checked, succeed } from '../../protocol/failure.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+import { handOverFiles } from '../report/hand-over.js';
+import { fitToHandOver } from '../report/model-document.js';
 import { coefficientsCsv, roundsCsv } from '../report/tables.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { ResultDocument } from '../run/result.js';
 import type { RunEnd } from '../run/run.js';
-import { writeWhole } from './files.js';
+import { unwritableIfFails, writeWhole } from './files.js';
+import type { Logged } from './host-parts.js';
 import type { RunHost } from './run-host.js';
 import { type RunLog, readLog } from './run-log.js';
 
@@ -37,6 +42,7 @@ export const RUN_FILES = {
   specification: 'specification.yaml',
   journal: 'journal',
   log: 'log.jsonl',
+  cancelled: 'cancelled',
   result: 'result.json',
   coefficients: 'coefficients.csv',
   rounds: 'rounds.csv',
@@ -64,11 +70,17 @@ export function summaryOf(entry: RunEntry): RunSummary {
 /** The text of `result.json`. */
 export const resultJson = (result: ResultDocument): string => `${JSON.stringify(result, null, 2)}\n`;
 
-/** Writes the result files, each as a whole. Gives the folder back. */
-export async function keepResult(folder: string, end: RunEnd): Promise<Checked<string>> {
+/** Writes the result files, each as a whole; with the model where one fit is the one to hand over. Gives the folder back. */
+export async function keepResult(
+  folder: string,
+  end: RunEnd,
+  specification: FitSpecification,
+): Promise<Checked<string>> {
   const events = await readLog(join(folder, RUN_FILES.log));
   if (!events.ok) return events;
+  const fit = fitToHandOver(end.result);
   const files = [
+    ...(fit === null ? [] : handOverFiles(specification, end.result, fit)),
     [RUN_FILES.coefficients, coefficientsCsv(end.result)],
     [RUN_FILES.rounds, roundsCsv(events.value)],
     [RUN_FILES.result, resultJson(end.result)],
@@ -80,13 +92,33 @@ export async function keepResult(folder: string, end: RunEnd): Promise<Checked<s
   return succeed(folder);
 }
 
+/**
+ * Keeps on stable storage that a run is to end as cancelled: what is told to an analyst must not be lost with the
+ * records that come after it. `at`: ISO 8601.
+ */
+export const keepCancellation = (folder: string, at: string): Promise<Checked<null>> =>
+  writeWhole(join(folder, RUN_FILES.cancelled), `${at}\n`);
+
+export const isCancelled = (folder: string): Promise<Checked<boolean>> => {
+  const file = join(folder, RUN_FILES.cancelled);
+  return unwritableIfFails(file, async () => {
+    try {
+      await access(file);
+      return true;
+    } catch (error) {
+      if ((error as NodeJS.ErrnoException).code === 'ENOENT') return false;
+      throw error;
+    }
+  });
+};
+
 /** What a round log holds already, so that a run taken up again does not say it twice. */
-export function loggedIn(events: readonly LogEvent[]): { survey: boolean; round: number } {
-  let round = 0;
-  let survey = false;
+export function loggedIn(events: readonly LogEvent[]): Logged {
+  const logged = { surveys: 0, withouts: 0, round: 0 };
   for (const event of events) {
-    if (event.event === 'survey') survey = true;
-    if (event.event === 'round') round = Math.max(round, event.round);
+    if (event.event === 'survey') logged.surveys += 1;
+    if (event.event === 'without') logged.withouts += 1;
+    if (event.event === 'round') logged.round = Math.max(logged.round, event.round);
   }
-  return { survey, round };
+  return logged;
 }

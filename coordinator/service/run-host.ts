@@ -2,8 +2,7 @@ import { type Checked, describeFailure, type Failure, fail, succeed } from '../.
 import type { Answer, Refusal } from '../../protocol/messages/round.js';
 import { SOFTWARE } from '../../protocol/version.js';
 import { type EndedRecord, encodeReply, type Measured, type OpenedRecord } from '../journal/records.js';
-import type { Reply } from '../panel/panel.js';
-import type { Member, RunAsk, RunEnd, RunOutcome } from '../run/run.js';
+import type { Batch, Member, RunAsk, RunEnd, RunOutcome } from '../run/run.js';
 import { AskDesk } from './ask-desk.js';
 import { Drive, type Turn } from './drive.js';
 import type { HostParts, HostState, LinkedMember } from './host-parts.js';
@@ -93,6 +92,17 @@ export class RunHost {
     return true;
   }
 
+  /** Stops without an outcome where a file of the run cannot be written; the next start takes it up. */
+  halt(failure: Failure): void {
+    if (this.phase === 'ended' || this.phase === 'halted' || this.phase === 'stopped') return;
+    this.phase = 'halted';
+    this.haltReason = describeFailure(failure);
+    this.room?.close();
+    this.desk?.stop(null);
+    this.parts.notice({ level: 'error', code: failure.code, message: this.haltReason });
+    this.onChange();
+  }
+
   /** Stops without an outcome, as a crash would, but after the write in progress. */
   async close(): Promise<void> {
     if (this.phase !== 'ended') this.phase = 'stopped';
@@ -157,42 +167,42 @@ export class RunHost {
   }
 
   private async run(drive: Drive, turn: Turn): Promise<void> {
-    if (this.phase === 'stopped') return;
+    if (this.phase === 'stopped' || this.phase === 'halted') return;
     this.phase = 'running';
     this.desk = new AskDesk(this.parts, drive.roster, {
-      pass: (asked, ask, replies, measured) =>
-        void this.line.add(() => this.take(asked, ask, replies, measured)),
+      pass: (asked, ask, batch, measured) => void this.line.add(() => this.take(asked, ask, batch, measured)),
       giveUp: (names) => void this.line.add(() => this.endForced(siteMissing(names))),
       late: (sites, waitedMs, patienceLeftMs) =>
         this.tell.late(drive.survey === null ? 0 : drive.round + 1, sites, waitedMs, patienceLeftMs),
     });
+    this.desk.resume(drive.owedBefore(turn), drive.gone);
     for (const linked of this.parts.connected()) this.desk.connected(linked);
     this.onChange();
     return this.go(turn);
   }
 
   /** Records the replies, then feeds them to the generator. */
-  private async take(
-    asked: RunAsk,
-    ask: number,
-    replies: readonly Reply[],
-    measured: Measured,
-  ): Promise<void> {
+  private async take(asked: RunAsk, ask: number, batch: Batch, measured: Measured): Promise<void> {
     const { drive } = this;
     // What was in the line before it may have ended the run.
     if (drive === null || this.phase !== 'running') return;
     const { run } = this.parts.accepted;
+    const owed = drive.owedAsks();
     const kept = await this.parts.journal.append({
       record: 'answered',
       ask,
       asked: drive.digestOf(asked),
-      replies: replies.map((reply) => encodeReply(run, ask, reply)),
+      replies: batch.replies.map((reply, member) =>
+        reply === null ? null : encodeReply(run, owed[member] ?? ask, reply),
+      ),
+      agesMs: [...batch.agesMs],
+      gone: [...batch.gone],
       measured,
     });
     if (!kept.ok) return this.halt(kept.failure);
     if (this.phase !== 'running') return;
     // What the journal holds counts, so that it leads to the same result document when it is replayed.
-    const turn = drive.feed(asked, replies, measured);
+    const turn = drive.feed(asked, batch, measured);
     return this.cancelled ? this.endCancelled() : this.go(turn);
   }
 
@@ -240,9 +250,11 @@ export class RunHost {
   private async publish(end: RunEnd): Promise<void> {
     const folder = await this.parts.keepResult(end);
     if (!folder.ok) return this.halt(folder.failure);
+    this.tell.outcome(end, folder.value);
+    // Nobody has been told where the round log could not be written.
+    if (this.phase === 'halted') return;
     this.end = end;
     this.phase = 'ended';
-    this.tell.outcome(end, folder.value);
     this.onChange();
   }
 
@@ -250,14 +262,6 @@ export class RunHost {
     this.parts.notice({ level: 'error', code: failure.code, message: describeFailure(failure) });
     if (failure.code !== 'journal-broken') return this.halt(failure);
     return this.publish(this.forced({ outcome: 'broken', reason: describeFailure(failure) }));
-  }
-
-  private halt(failure: Failure): void {
-    this.phase = 'halted';
-    this.haltReason = describeFailure(failure);
-    this.desk?.stop(null);
-    this.parts.notice({ level: 'error', code: failure.code, message: this.haltReason });
-    this.onChange();
   }
 
   private isExpected({ site }: Member): boolean {

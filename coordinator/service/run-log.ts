@@ -1,8 +1,8 @@
 import { closeSync, fdatasyncSync, fstatSync, ftruncateSync, openSync, readSync, writeSync } from 'node:fs';
 import { open } from 'node:fs/promises';
-import type { Checked } from '../../protocol/failure.js';
+import { type Checked, succeed } from '../../protocol/failure.js';
 import type { LogEvent } from '../run/log-event.js';
-import { unwritableIfFails } from './files.js';
+import { FILE_MODE, unwritable, unwritableIfFails } from './files.js';
 
 /** Bytes read at a time when a log is followed. */
 const PIECE_BYTES = 64 * 1024;
@@ -30,19 +30,34 @@ export class RunLog {
   /** Opens the log, new or not; a last line that was cut off is removed. */
   static open(path: string): Promise<Checked<RunLog>> {
     return unwritableIfFails(path, () => {
-      const fd = openSync(path, 'a+', 0o644);
+      const fd = openSync(path, 'a+', FILE_MODE);
       cutTornLine(fd);
       return new RunLog(path, fd);
     });
   }
 
-  append(event: LogEvent): Promise<Checked<null>> {
-    return unwritableIfFails(this.path, () => {
-      writeSync(this.fd, `${JSON.stringify(event)}\n`);
+  /** Done when it returns, so that nothing comes between a line and what it tells of. */
+  append(event: LogEvent): Checked<null> {
+    try {
+      this.write(Buffer.from(`${JSON.stringify(event)}\n`));
       if (event.event === 'accepted' || event.event === 'outcome') fdatasyncSync(this.fd);
-      for (const wake of this.followers) wake();
-      return null;
-    });
+    } catch (error) {
+      return unwritable(this.path, error);
+    }
+    for (const wake of this.followers) wake();
+    return succeed(null);
+  }
+
+  /** The whole line or nothing: on a disk that is full a part may be written. */
+  private write(line: Buffer): void {
+    const { size, nlink } = fstatSync(this.fd);
+    if (nlink === 0) throw new Error('the file was removed');
+    try {
+      for (let at = 0; at < line.length; ) at += writeSync(this.fd, line, at);
+    } catch (error) {
+      ftruncateSync(this.fd, size);
+      throw error;
+    }
   }
 
   /** Calls `wake` after every line from now on; returns what ends that. */

@@ -5,6 +5,10 @@ import { eventOfShown, outcomeEvent } from './round-events.js';
 
 /** Writes the round log of one run: what happened, with the time. */
 export class RunTeller {
+  /** How often each has been shown, by the journal or since. */
+  private surveys = 0;
+  private withouts = 0;
+
   constructor(private readonly parts: Pick<HostParts, 'accepted' | 'time' | 'log' | 'logged'>) {}
 
   waiting(sites: readonly string[]): void {
@@ -25,11 +29,24 @@ export class RunTeller {
 
   /** Says what a round has shown, unless the log had it before the run was taken up again. */
   shown(shown: Shown, measured: Measured, roster: readonly Member[]): void {
-    const { survey, round } = this.parts.logged;
-    const known = shown.kind === 'survey' ? survey : shown.round <= round;
-    if (known) return;
-    const { most } = this.parts.accepted.specification.rounds;
-    this.parts.log(eventOfShown(shown, measured, roster, most));
+    if (this.isLogged(shown)) return;
+    const { rounds, barrier } = this.parts.accepted.specification;
+    const limits = { roundsMost: rounds.most, patienceMs: barrier.patienceMs };
+    this.parts.log(eventOfShown(shown, measured, roster, limits));
+  }
+
+  private isLogged(shown: Shown): boolean {
+    const { logged } = this.parts;
+    switch (shown.kind) {
+      case 'survey':
+        this.surveys += 1;
+        return this.surveys <= logged.surveys;
+      case 'without':
+        this.withouts += 1;
+        return this.withouts <= logged.withouts;
+      case 'round':
+        return shown.round <= logged.round;
+    }
   }
 
   outcome(end: RunEnd, folder: string): void {

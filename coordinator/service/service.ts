@@ -1,25 +1,21 @@
-import { readFile } from 'node:fs/promises';
 import { join } from 'node:path';
-import swagger from '@fastify/swagger';
-import Fastify, {
-  type FastifyBaseLogger,
-  type FastifyError,
-  type FastifyInstance,
-  LogController,
-} from 'fastify';
+import type { FastifyInstance } from 'fastify';
 import { type Logger, pino } from 'pino';
 import { z } from 'zod';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
-import { LIMITS } from '../../protocol/limits.js';
+import type { Pulse } from '../../protocol/link/websocket-link.js';
 import { fit } from '../run/fit.js';
+import { openApp } from './app.js';
+import { Connections } from './connections.js';
+import { Doorkeeper } from './doorkeeper.js';
 import { makeFolder, writeWhole } from './files.js';
 import type { HostTime, Notice } from './host-parts.js';
-import { problemOfError, sendProblem } from './problem.js';
 import { addRoutes } from './routes.js';
 import { type BookParts, RunBook } from './run-book.js';
 import { type ServiceOptions, type ServiceSettings, serviceSettings } from './settings.js';
 import { SiteHub } from './site-hub.js';
 import { lockState } from './state-lock.js';
+import { outOfDateFailure, readTls, type Tls } from './tls.js';
 import { openTokenUses } from './token-uses.js';
 import { openTokens, type Tokens } from './tokens.js';
 import { upgradeHandler } from './upgrade.js';
@@ -30,9 +26,13 @@ export interface Service {
   close(): Promise<void>;
 }
 
-/** A specification of the largest size, escaped as JSON, with its file name. Bytes. */
-const BODY_BYTES_MOST = 6 * LIMITS.textMost + 16_384;
-/** How long workers have for the closing handshake. Milliseconds. */
+/** What the programs leave as it is and tests replace. */
+export interface ServiceParts {
+  readonly fit: BookParts['fit'];
+  readonly pulse?: Pulse;
+}
+
+/** How long workers have for the closing handshake, and requests for their replies. Milliseconds. */
 const CLOSE_GRACE_MS = 1000;
 /** How often open links are closed whose tokens were revoked or have expired. Milliseconds. */
 const TOKENS_RECHECKED_MS = 2000;
@@ -53,7 +53,7 @@ const steadyTime: HostTime = {
  */
 export async function startService(
   options: ServiceOptions,
-  parts: { readonly fit: BookParts['fit'] } = { fit },
+  parts: ServiceParts = { fit },
 ): Promise<Checked<Service>> {
   const settings = checkSettings(options);
   if (!settings.ok) return settings;
@@ -64,8 +64,8 @@ export async function startService(
   if (!folder.ok) return folder;
   const unlock = await lockState(state, process.pid);
   if (!unlock.ok) return unlock;
-  const logger = pino({ level: logLevel }, pino.destination({ dest: 2, sync: true }));
-  const started = await run(settings.value, tls.value, logger, parts.fit, unlock.value);
+  const logger = pino({ level: logLevel }, logDestination());
+  const started = await run(settings.value, tls.value, logger, parts, unlock.value);
   if (!started.ok) await unlock.value();
   return started;
 }
@@ -74,10 +74,12 @@ async function run(
   settings: ServiceSettings,
   tls: Tls | null,
   logger: Logger,
-  fitRun: BookParts['fit'],
+  parts: ServiceParts,
   unlock: () => Promise<void>,
 ): Promise<Checked<Service>> {
   const notice = noticeTo(logger);
+  const outOfDate = tls === null ? null : outOfDateFailure(tls.cert, steadyTime.wallMs());
+  if (outOfDate !== null) notice({ level: 'warn', ...outOfDate });
   const uses = openTokenUses(settings.state, steadyTime.wallMs, notice);
   const tokens = openTokens(settings.state, { onUse: uses.note });
   const analyst = await issueFirstAnalyst(tokens, settings.state);
@@ -88,29 +90,36 @@ async function run(
     message: (linked, message) => book.message(linked, message),
     notice,
   });
-  const { state, runningMost, waitingMost, linksMost, streamsMost } = settings;
+  const { state, runningMost, waitingMost } = settings;
   const book: RunBook = new RunBook({
     state,
     runningMost,
     waitingMost,
     time: steadyTime,
     node: process.version,
-    fit: fitRun,
+    fit: parts.fit,
     connected: () => hub.connected(),
     notice,
   });
   const recovered = await book.recover();
   if (!recovered.ok) return recovered;
-  const app = await openApp(logger, tls);
-  const upgrade = upgradeHandler(hub, tokens, linksMost);
+  const app = await openApp(logger, tls, settings);
+  const connections = new Connections(settings, steadyTime.steadyMs, notice);
+  connections.guard(app.server, tls !== null);
+  const doorkeeper = new Doorkeeper({ tokens, settings, time: steadyTime, notice });
+  const { pulse } = parts;
+  const upgrade = upgradeHandler({ hub, doorkeeper, connections, settings, pulse });
   app.server.on('upgrade', upgrade.handle);
-  addRoutes(app, { book, hub, tokens, streamsMost });
+  addRoutes(app, { book, hub, doorkeeper, settings, notice });
   const recheck = setInterval(upgrade.recheck, TOKENS_RECHECKED_MS);
   const close = async (): Promise<void> => {
     clearInterval(recheck);
     await book.close();
     hub.close();
-    const grace = setTimeout(upgrade.breakAll, CLOSE_GRACE_MS);
+    const grace = setTimeout(() => {
+      upgrade.breakAll();
+      connections.breakAll();
+    }, CLOSE_GRACE_MS);
     await app.close();
     clearTimeout(grace);
     await uses.settled();
@@ -128,10 +137,15 @@ function checkSettings(options: ServiceOptions): Checked<ServiceSettings> {
   const parsed = serviceSettings.safeParse(options);
   if (!parsed.success)
     return fail('field-value', `A setting is not valid: ${z.prettifyError(parsed.error)}.`);
-  const { host, certFile, keyFile, plainText } = parsed.data;
+  const { host, certFile, keyFile, clientCaFile, plainText } = parsed.data;
   if ((certFile === undefined) !== (keyFile === undefined)) {
     return fail('field-conflict', 'A certificate needs its key, and a key its certificate.', {
       remedy: 'Give both files or neither.',
+    });
+  }
+  if (clientCaFile !== undefined && certFile === undefined) {
+    return fail('field-conflict', 'Certificates of clients are asked for over TLS only.', {
+      remedy: "Give the coordinator's own certificate and its key too.",
     });
   }
   const loopback = host === 'localhost' || host === '::1' || /^127\.\d+\.\d+\.\d+$/.test(host);
@@ -144,55 +158,13 @@ function checkSettings(options: ServiceOptions): Checked<ServiceSettings> {
   return succeed(parsed.data);
 }
 
-interface Tls {
-  readonly cert: string;
-  readonly key: string;
-}
-
-async function readTls({ certFile, keyFile }: ServiceSettings): Promise<Checked<Tls | null>> {
-  if (certFile === undefined || keyFile === undefined) return succeed(null);
-  try {
-    return succeed({ cert: await readFile(certFile, 'utf8'), key: await readFile(keyFile, 'utf8') });
-  } catch (error) {
-    return fail('file-unreadable', `The certificate or its key cannot be read: ${String(error)}.`);
-  }
-}
-
 /** At the first start there is nobody who could submit a run: the first analyst's token is left in a file. */
 async function issueFirstAnalyst(tokens: Tokens, state: string): Promise<Checked<null>> {
   const holders = tokens.holders();
   if (!holders.ok) return holders;
   if (holders.value.some(({ kind }) => kind === 'analyst')) return succeed(null);
   const token = await tokens.issue({ kind: 'analyst', name: 'analyst' });
-  return token.ok ? writeWhole(join(state, 'analyst.token'), `${token.value}\n`, 0o600) : token;
-}
-
-async function openApp(logger: Logger, tls: Tls | null): Promise<FastifyInstance> {
-  const app: FastifyInstance = Fastify({
-    loggerInstance: logger as FastifyBaseLogger,
-    logController: new LogController({ disableRequestLogging: true }),
-    bodyLimit: BODY_BYTES_MOST,
-    forceCloseConnections: 'idle',
-    ...(tls === null ? {} : { https: tls }),
-  });
-  app.setSerializerCompiler(() => (data) => JSON.stringify(data));
-  app.setErrorHandler<FastifyError>((error, _, reply) => {
-    const problem = problemOfError(error);
-    if (problem.status >= 500) logger.error({ err: error }, 'A request failed.');
-    return sendProblem(reply, problem);
-  });
-  app.setNotFoundHandler((request, reply) => {
-    const detail = `There is nothing at ${request.method} ${request.url.split('?')[0]}.`;
-    return sendProblem(reply, { status: 404, title: 'Not found', detail, code: 'not-found' });
-  });
-  await app.register(swagger, {
-    openapi: {
-      openapi: '3.1.0',
-      info: { title: 'commonfit coordinator', version: '1' },
-      components: { securitySchemes: { bearer: { type: 'http', scheme: 'bearer' } } },
-    },
-  });
-  return app;
+  return token.ok ? writeWhole(join(state, 'analyst.token'), `${token.value}\n`) : token;
 }
 
 async function listen(app: FastifyInstance, { host, port }: ServiceSettings): Promise<Checked<string>> {
@@ -205,8 +177,15 @@ async function listen(app: FastifyInstance, { host, port }: ServiceSettings): Pr
         remedy: 'Give another with --listen.',
       });
     }
-    return fail('field-value', `The coordinator cannot listen at ${host}, port ${port}: ${message}.`);
+    return fail('field-value', `The coordinator cannot listen at ${host}, port ${port}: ${message}.`, {
+      remedy: 'Give an address of this machine, and a port that this user may take, with --listen.',
+    });
   }
+}
+
+/** Standard error. Where it cannot be written (a pipe that ended, a full disk), lines are lost and runs go on. */
+function logDestination(): pino.DestinationStream {
+  return pino.destination({ dest: 2, sync: true }).on('error', () => undefined);
 }
 
 /** The operational log: one JSON object a line on standard error. Tokens and numbers of sites never come here. */

@@ -29,12 +29,15 @@ const SHARDS_MOST = 1000;
 
 /**
  * All links to workers. A link counts once its `hello` names the site of its token; of two links of the same member
- * the newer wins. Members stay listed after their link is lost.
+ * the one that was opened later wins. Members stay listed after their link is lost.
  */
 export class SiteHub {
   private readonly present = new Map<string, LinkedMember>();
   private readonly seen = new Map<string, Omit<SiteSummary, 'connected'>>();
   private readonly links = new Set<Link<ToWorker, ToCoordinator>>();
+  /** How many links were opened before a member's. */
+  private readonly places = new WeakMap<LinkedMember, number>();
+  private opened = 0;
 
   constructor(
     private readonly time: Pick<HostTime, 'after'>,
@@ -60,6 +63,7 @@ export class SiteHub {
   /** Takes a new link whose token speaks for `site`. */
   add(link: Link<ToWorker, ToCoordinator>, site: string): void {
     let linked: LinkedMember | null = null;
+    const place = this.opened++;
     this.links.add(link);
     const stopTimer = this.time.after(LIMITS.helloDeadlineMs, () =>
       link.close(CLOSE_CODES.helloLate, `no hello within ${LIMITS.helloDeadlineMs} ms`),
@@ -83,7 +87,7 @@ export class SiteHub {
         return;
       }
       stopTimer();
-      if (linked === null) linked = this.greet(link, site, message);
+      if (linked === null) linked = this.greet(link, place, site, message);
       else link.close(CLOSE_CODES.messageUnexpected, 'a second hello');
     });
   }
@@ -93,7 +97,12 @@ export class SiteHub {
     for (const link of this.links) link.close(CLOSE_CODES.goingAway, 'the coordinator is stopping');
   }
 
-  private greet(link: Link<ToWorker, ToCoordinator>, site: string, hello: Hello): LinkedMember | null {
+  private greet(
+    link: Link<ToWorker, ToCoordinator>,
+    place: number,
+    site: string,
+    hello: Hello,
+  ): LinkedMember | null {
     const { shard, software, kernel } = hello;
     if (hello.site !== site) {
       link.close(CLOSE_CODES.tokenRefused, `the token is not one of site ${hello.site}`);
@@ -112,20 +121,34 @@ export class SiteHub {
       send: (message) => link.send(message),
       close: (code, reason) => link.close(code, reason),
     };
-    const name = keyOf(member);
-    const older = this.present.get(name);
-    if (older !== undefined) {
-      this.remove(older);
-      older.close(CLOSE_CODES.replaced, 'a newer link of the same member');
+    if (!this.takePlace(linked, place)) {
+      link.close(CLOSE_CODES.replaced, 'a newer link of the same member');
+      return null;
     }
     const { frameBytesMost } = LIMITS;
     link.send({ kind: 'welcome', version: PROTOCOL_VERSION, software: SOFTWARE, frameBytesMost });
-    this.present.set(name, linked);
     this.seen.set(memberName(member), { site, shard, software, kernel });
     const message = `${memberName(member)} connected (${software}, ${kernel}).`;
     this.reports.notice({ level: 'info', message, site });
     this.reports.connected(linked);
     return linked;
+  }
+
+  /**
+   * False where the member has a link that was opened later: a hello may be under way for longer than its worker waits
+   * for the welcome, and then comes after that of the worker's next link.
+   */
+  private takePlace(linked: LinkedMember, place: number): boolean {
+    const name = keyOf(linked.member);
+    const present = this.present.get(name);
+    if (present !== undefined) {
+      if ((this.places.get(present) ?? 0) > place) return false;
+      this.remove(present);
+      present.close(CLOSE_CODES.replaced, 'a newer link of the same member');
+    }
+    this.places.set(linked, place);
+    this.present.set(name, linked);
+    return true;
   }
 
   private remove(linked: LinkedMember): void {

@@ -34,7 +34,7 @@ export function openTokenUses(
     const kept = before.ok ? [...before.value] : [];
     const uses = [...noted].map(([sha256, ms]) => [sha256, new Date(ms).toISOString()] as const);
     const text = JSON.stringify({ format: 1, uses: Object.fromEntries([...kept, ...uses]) }, null, 2);
-    const done = await writeWhole(join(stateFolder, FILE), `${text}\n`, 0o600);
+    const done = await writeWhole(join(stateFolder, FILE), `${text}\n`);
     if (!done.ok) notice({ level: 'warn', ...done.failure });
   };
   return {

@@ -79,7 +79,9 @@ export function openTokens(stateFolder: string, parts: Partial<TokenParts> = {})
   let read: { readonly stamp: string; readonly document: TokenDocument } | null = null;
 
   const current = (): Checked<TokenDocument> => {
-    const stamp = stampOf(path);
+    const stamped = stampOf(path);
+    if (!stamped.ok) return stamped;
+    const stamp = stamped.value;
     if (stamp === null) return succeed({ format: 2, tokens: [] });
     if (read?.stamp === stamp) return succeed(read.document);
     const parsed = readDocument(path);
@@ -94,7 +96,7 @@ export function openTokens(stateFolder: string, parts: Partial<TokenParts> = {})
     const { tokens } = before.value;
     const others = tokens.filter(({ kind, name }) => kind !== holder.kind || name !== holder.name);
     const next: TokenDocument = { format: 2, tokens: [...others, ...issued] };
-    const kept = await writeWhole(path, `${JSON.stringify(next, null, 2)}\n`, 0o600);
+    const kept = await writeWhole(path, `${JSON.stringify(next, null, 2)}\n`);
     return kept.ok ? succeed(others.length < tokens.length) : kept;
   };
 
@@ -116,7 +118,9 @@ export function openTokens(stateFolder: string, parts: Partial<TokenParts> = {})
     },
     async revoke(holder) {
       // A folder that is not there is not made for the sake of saying that nobody has a token in it.
-      return stampOf(path) === null ? succeed(false) : holding(path, () => replace(holder, []));
+      const stamp = stampOf(path);
+      if (!stamp.ok) return stamp;
+      return stamp.value === null ? succeed(false) : holding(path, () => replace(holder, []));
     },
     holderOf(token) {
       const known = current();
@@ -160,9 +164,13 @@ export function bearerOf(authorization: string | undefined): string | null {
 const digestOf = (token: string): Buffer => createHash('sha256').update(token, 'utf8').digest();
 
 /** Changes whenever the file is replaced; null where there is none. */
-function stampOf(path: string): string | null {
-  const stat = statSync(path, { throwIfNoEntry: false, bigint: true });
-  return stat === undefined ? null : `${stat.ino}:${stat.mtimeNs}:${stat.size}`;
+function stampOf(path: string): Checked<string | null> {
+  try {
+    const stat = statSync(path, { throwIfNoEntry: false, bigint: true });
+    return succeed(stat === undefined ? null : `${stat.ino}:${stat.mtimeNs}:${stat.size}`);
+  } catch (error) {
+    return unreadable(path, error instanceof Error ? error.message : String(error));
+  }
 }
 
 function readDocument(path: string): Checked<TokenDocument> {

@@ -1,73 +1,104 @@
-import { type IncomingMessage, STATUS_CODES } from 'node:http';
+import type { IncomingMessage } from 'node:http';
 import type { Duplex } from 'node:stream';
 import { CLOSE_CODES } from '../../protocol/close-codes.js';
-import { type Failure, fail } from '../../protocol/failure.js';
+import { fail } from '../../protocol/failure.js';
 import { linkServer } from '../../protocol/link/websocket.js';
-import { PROBLEM_TYPE, problemOf, problemText } from './problem.js';
+import type { Pulse } from '../../protocol/link/websocket-link.js';
+import type { Connections } from './connections.js';
+import type { Doorkeeper, Let } from './doorkeeper.js';
+import { MeteredLink } from './metered-link.js';
+import { type Problem, problemOf, problemReply } from './problem.js';
+import type { ServiceSettings } from './settings.js';
 import type { SiteHub } from './site-hub.js';
-import { bearerOf, type Tokens } from './tokens.js';
 
 export const LINK_PATH = '/v1/site';
 
+export interface UpgradeParts {
+  readonly hub: SiteHub;
+  readonly doorkeeper: Doorkeeper;
+  readonly connections: Connections;
+  readonly settings: Pick<ServiceSettings, 'linksMost' | 'linksPerSiteMost'>;
+  readonly pulse?: Pulse;
+}
+
+interface LinkPlace {
+  readonly site: string;
+  /** Closes the link where its token has been voided or has expired since, or its certificate. */
+  recheck(): void;
+}
+
 /** Upgrades requests of workers: the path, the token and the room are checked before a byte of WebSocket is spoken. */
-export function upgradeHandler(hub: SiteHub, tokens: Tokens, linksMost: number) {
-  const server = linkServer();
-  /** Per open connection: closes its link where its token has been voided or has expired since. */
-  const sockets = new Map<Duplex, () => void>();
-  const full = fail('coordinator-full', `${linksMost} workers are linked already.`);
+export function upgradeHandler({ hub, doorkeeper, connections, settings, pulse }: UpgradeParts) {
+  const server = linkServer(pulse);
+  const places = new Map<Duplex, LinkPlace>();
+
+  const letIn = (request: IncomingMessage): Let<string> => {
+    const path = (request.url ?? '/').split('?', 1)[0];
+    if (path !== LINK_PATH) {
+      const { failure } = fail('not-found', `Workers link at ${LINK_PATH} only.`);
+      return doorkeeper.refuse(request, failure);
+    }
+    const site = doorkeeper.site(request);
+    return site.ok ? (full(places, site.value, settings) ?? site) : site;
+  };
+
   return {
     handle(request: IncomingMessage, socket: Duplex, head: Buffer): void {
-      const checked = sockets.size < linksMost ? siteOf(request, tokens) : full;
-      if (!checked.ok) {
-        refuse(socket, checked.failure);
+      const site = letIn(request);
+      if (!site.ok) {
+        refuse(socket, site.problem);
         return;
       }
-      sockets.set(socket, () => {});
-      socket.once('close', () => sockets.delete(socket));
+      places.set(socket, { site: site.value, recheck: () => {} });
+      socket.once('close', () => places.delete(socket));
       server.upgrade(request, socket, head, (link) => {
-        sockets.set(socket, () => {
-          const still = siteOf(request, tokens);
-          if (!still.ok && still.failure.code === 'token-refused') {
-            link.close(CLOSE_CODES.tokenRefused, still.failure.message);
-          }
-        });
-        hub.add(link, checked.value);
+        connections.linked(socket);
+        const recheck = (): void => {
+          const refused = doorkeeper.stillRefused(request);
+          const code = refused === null ? undefined : CLOSING[refused.code];
+          if (refused !== null && code !== undefined) link.close(code, refused.message);
+        };
+        places.set(socket, { site: site.value, recheck });
+        hub.add(new MeteredLink(link), site.value);
       });
     },
-    /** Closes the links whose tokens are good no longer. */
+    /** Closes the links whose tokens or certificates are good no longer. */
     recheck(): void {
-      for (const closeIfRefused of sockets.values()) closeIfRefused();
+      for (const place of places.values()) place.recheck();
     },
     /** Breaks the connections whose peers do not take part in the closing handshake. */
     breakAll(): void {
-      for (const socket of sockets.keys()) socket.destroy();
+      for (const socket of places.keys()) socket.destroy();
     },
   };
 }
 
-function siteOf(request: IncomingMessage, tokens: Tokens) {
-  const { pathname } = new URL(request.url ?? '/', 'http://coordinator');
-  if (pathname !== LINK_PATH) return fail('not-found', `Workers link at ${LINK_PATH}, not at ${pathname}.`);
-  const token = bearerOf(request.headers.authorization);
-  const holder = token === null ? null : tokens.holderOf(token);
-  if (holder !== null && !holder.ok) return holder;
-  if (holder?.value?.kind === 'site') return { ok: true, value: holder.value.name } as const;
-  return fail('token-refused', 'The token is missing, unknown or not one of a site.', {
-    remedy: 'Ask the analyst for a token of this site.',
+/** What closes an open link; a token file that cannot be read at the moment does not. */
+const CLOSING: Partial<Record<string, number>> = {
+  'token-refused': CLOSE_CODES.tokenRefused,
+  'certificate-refused': CLOSE_CODES.certificateRefused,
+};
+
+function full(
+  places: ReadonlyMap<Duplex, LinkPlace>,
+  site: string,
+  { linksMost, linksPerSiteMost }: UpgradeParts['settings'],
+): Let<never> | null {
+  const refused = (found: string): Let<never> => ({
+    ok: false,
+    problem: problemOf(fail('coordinator-full', found).failure),
   });
+  if (places.size >= linksMost) return refused(`${linksMost} workers are linked already.`);
+  let ofSite = 0;
+  for (const place of places.values()) if (place.site === site) ofSite += 1;
+  return ofSite < linksPerSiteMost
+    ? null
+    : refused(`${linksPerSiteMost} workers of ${site} are linked already.`);
 }
 
-function refuse(socket: Duplex, failure: Failure): void {
-  const problem = problemOf(failure);
-  const body = problemText(problem);
-  const head = [
-    `HTTP/1.1 ${problem.status} ${STATUS_CODES[problem.status] ?? ''}`,
-    'Connection: close',
-    `Content-Type: ${PROBLEM_TYPE}`,
-    `Content-Length: ${Buffer.byteLength(body)}`,
-    ...(problem.status === 401 ? ['WWW-Authenticate: Bearer'] : []),
-  ];
-  // Whether the refused peer still reads it does not matter.
+function refuse(socket: Duplex, problem: Problem): void {
+  // Whether the refused peer still reads it does not matter; nor does the connection wait for it to end its half.
   socket.once('error', () => socket.destroy());
-  socket.end(`${head.join('\r\n')}\r\n\r\n${body}`);
+  socket.once('finish', () => socket.destroy());
+  socket.end(problemReply(problem));
 }
