@@ -14,6 +14,16 @@ import { serveCommand } from './commands/serve.js';
 import { submitCommand } from './commands/submit.js';
 import { watchCommand } from './commands/watch.js';
 
+/** A reader that has seen enough ends the program quietly; anything else that the output meets is told. */
+function outputFailed({ code = 'unknown' }: NodeJS.ErrnoException): never {
+  if (code !== 'EPIPE') {
+    process.stderr.write(
+      `The output cannot be written (${code}). Check the space where it goes. [state-unwritable]\n`,
+    );
+  }
+  process.exit(code === 'EPIPE' ? EXIT.ok : EXIT.machine);
+}
+
 const program = new Command('commonfit')
   .description(
     'Fits one regression model over rows that stay at several sites.\nSites join with the command commonfit-worker.',
@@ -40,6 +50,7 @@ const commands = [
 for (const command of [program, ...commands]) command.exitOverride();
 for (const command of commands) program.addCommand(command);
 
+process.stdout.on('error', outputFailed);
 try {
   await program.parseAsync();
 } catch (error) {

@@ -17,7 +17,7 @@ export function program(): Command {
     .exitOverride((error) => {
       process.exit(error.exitCode === 0 ? EXIT.ok : EXIT.usage);
     });
-  for (const command of [joinCommand(), inspectCommand(), approveCommand(), splitCommand()])
+  for (const command of [joinCommand(), inspectCommand(), approveCommand(), splitCommand(), scoreCommand()])
     main.addCommand(command.copyInheritedSettings(main));
   return main;
 }
@@ -101,6 +101,37 @@ function splitCommand(): Command {
   return withTail(command, {
     example: 'commonfit-worker split all-pipes.csv --by utility --out ./parts',
     exits: [EXIT.table, EXIT.machine],
+  });
+}
+
+function scoreCommand(): Command {
+  const command = new Command('score')
+    .summary('compute predictions from a model')
+    .description('compute predictions for the rows of a table from model.json; connects to nothing')
+    .argument('<model>', 'model.json of a result folder')
+    .argument('<table>', 'a .csv, .parquet or .jsonl file')
+    .option(
+      '--out <file>',
+      'where the predictions go, .csv, .parquet or .jsonl (default: CSV to standard output)',
+    )
+    .option('--format <format>', 'csv, parquet or jsonl, where the name of the file does not say it')
+    .option('--columns <names>', 'columns of the table to write as well, parted by commas (default: all)')
+    .option(
+      '--flag-rows',
+      'write a row that cannot be scored without a prediction, and why, in "note"',
+      false,
+    )
+    .option('--quiet', 'say nothing but errors', false)
+    .action(
+      acting(async (model: string, table: string, options) => {
+        const { score } = await import('./commands/score.js');
+        return score(model, table, options);
+      }),
+    );
+  return withTail(command, {
+    example: 'commonfit-worker score result/model.json pipes.parquet --out predicted.parquet',
+    more: 'Adds "prediction" (the expected response) and "linear_predictor" to each row, in the order of the table.\nWithout --flag-rows the first row that cannot be scored ends the work, and nothing is written.\nA prediction is an estimate; decisions belong to licensed practice and local codes.',
+    exits: [EXIT.document, EXIT.table, EXIT.machine, EXIT.flagged, EXIT.interrupted],
   });
 }
 

@@ -4,22 +4,23 @@ import { z } from 'zod';
 import { FAILURE_CODES, type Failure } from '../../protocol/failure.js';
 import { untrustedReason } from '../../protocol/link/certificate.js';
 import { EXIT } from './exit-codes.js';
-import { requestTo } from './request.js';
+import { requestTo, type Trust } from './request.js';
 import { type Attempt, done, ending } from './terminal.js';
+import { trustOf } from './trust.js';
 
 /** Whom an analyst's command talks to, and as whom. */
-export interface Analyst {
+export interface Analyst extends Trust {
   /** `http://127.0.0.1:7443`, no slash at the end. */
   readonly url: string;
   readonly token: string;
-  /** PEM text of the authority to trust instead of the system's; null: the system's. */
-  readonly ca: string | null;
 }
 
 export interface AnalystOptions {
   readonly url: string;
   readonly tokenFile?: string;
   readonly caFile?: string;
+  readonly certificateFile?: string;
+  readonly keyFile?: string;
   readonly plainText?: true;
 }
 
@@ -46,6 +47,13 @@ export function withAnalyst(command: Command): Command {
         "certificate, PEM, of the authority to trust with https instead of the system's",
       ).env('COMMONFIT_CA_FILE'),
     )
+    .addOption(
+      new Option(
+        '--certificate-file <file>',
+        "the analyst's certificate, PEM, for a coordinator that asks for one; goes with --key-file",
+      ).env('COMMONFIT_CERTIFICATE_FILE'),
+    )
+    .addOption(new Option('--key-file <file>', 'its private key, PEM').env('COMMONFIT_KEY_FILE'))
     .option('--plain-text', 'allow an http address that is not this machine');
 }
 
@@ -72,16 +80,21 @@ export async function analystOf(options: AnalystOptions): Promise<Attempt<Analys
       },
     ]);
   }
-  const ca = options.caFile === undefined ? done(null) : await authorityIn(options.caFile);
-  if (!ca.ok) return ca;
+  const trust = await trustOf(options);
+  if (!trust.ok) return trust;
   const file = options.tokenFile ?? process.env.COMMONFIT_TOKEN_FILE ?? TOKEN_FILE_DEFAULT;
   try {
     const token = (await readFile(file, 'utf8')).trim();
     if (token !== '' && !/\s/.test(token)) {
-      return done({ url: options.url.replace(/\/+$/, ''), token, ca: ca.value });
+      return done({ url: options.url.replace(/\/+$/, ''), token, ...trust.value });
     }
     return ending(EXIT.unauthorised, [
-      { code: 'unauthorised', message: 'The file holds no token.', where: { file } },
+      {
+        code: 'unauthorised',
+        message: 'The file does not hold one token.',
+        remedy: 'Put the token alone into it, on one line.',
+        where: { file },
+      },
     ]);
   } catch (error) {
     return ending(EXIT.unauthorised, [
@@ -91,21 +104,6 @@ export async function analystOf(options: AnalystOptions): Promise<Attempt<Analys
         remedy: 'Name the file with --token-file; `commonfit serve` writes one into its state folder.',
         where: { file },
       },
-    ]);
-  }
-}
-
-async function authorityIn(file: string): Promise<Attempt<string>> {
-  try {
-    const text = await readFile(file, 'utf8');
-    if (text.includes('-----BEGIN CERTIFICATE-----')) return done(text);
-    return ending(EXIT.usage, [
-      { code: 'field-value', message: 'The file holds no certificate in PEM.', where: { file } },
-    ]);
-  } catch (error) {
-    const code = (error as NodeJS.ErrnoException).code ?? 'unknown';
-    return ending(EXIT.usage, [
-      { code: 'file-unreadable', message: `The certificate cannot be read (${code}).`, where: { file } },
     ]);
   }
 }
@@ -142,7 +140,7 @@ export async function send(
   more: { body?: unknown; headers?: Record<string, string>; signal?: AbortSignal } = {},
 ): Promise<Attempt<Response>> {
   try {
-    const response = await requestTo(analyst.ca)(`${analyst.url}${path}`, {
+    const response = await requestTo(analyst)(`${analyst.url}${path}`, {
       method,
       headers: {
         authorization: `Bearer ${analyst.token}`,
@@ -232,7 +230,7 @@ function exitOf(status: number, aboutDocument: boolean): number {
   if (status === 401 || status === 403) return EXIT.unauthorised;
   if (status === 404 || status === 409) return EXIT.notFound;
   if (aboutDocument || status === 400 || status === 413 || status === 422) return EXIT.document;
-  return status === 503 ? EXIT.unreachable : EXIT.defect;
+  return [408, 429, 503].includes(status) ? EXIT.unreachable : EXIT.defect;
 }
 
 /** A run as the coordinator lists it. */

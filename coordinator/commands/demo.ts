@@ -66,7 +66,7 @@ async function demo(options: { out: string }): Promise<number> {
       ),
     );
     say(wrapped('The rows are made up. Nothing here says anything about real pipes.', width));
-    return Math.max(...shown.map(({ result }) => exitCodeOf(result.outcome)));
+    return Math.max(...shown.map(({ result }) => exitCodeOf(result.outcome, result.without)));
   });
 }
 

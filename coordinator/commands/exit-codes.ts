@@ -15,6 +15,8 @@ export const EXIT = {
   differs: 8,
   /** Nobody vouches for the coordinator's certificate, or not any more. */
   untrusted: 9,
+  /** A run solved without the rows of a site that it began with. */
+  solvedWithout: 19,
   /** 128 + SIGINT, as shells expect. */
   interrupted: 130,
 } as const;
@@ -34,16 +36,21 @@ const OUTCOME_CODES: Readonly<Record<RunOutcome, number>> = {
 
 export type ExitCode = (typeof EXIT)[keyof typeof EXIT] | number;
 
-/** The exit code of a run's outcome; an outcome this program does not know (a newer coordinator's) is `broken`. */
-export const exitCodeOf = (outcome: string): number =>
-  Object.hasOwn(OUTCOME_CODES, outcome) ? OUTCOME_CODES[outcome as RunOutcome] : OUTCOME_CODES.broken;
+/**
+ * The exit code of a run's outcome; `without`: the sites that it went on without. An outcome that this program does not
+ * know (a newer coordinator's) is `broken`.
+ */
+export function exitCodeOf(outcome: string, without: readonly unknown[]): number {
+  if (outcome === 'solved' && without.length > 0) return EXIT.solvedWithout;
+  return Object.hasOwn(OUTCOME_CODES, outcome) ? OUTCOME_CODES[outcome as RunOutcome] : OUTCOME_CODES.broken;
+}
 
 const MEANINGS: readonly [number, string][] = [
   [EXIT.ok, 'done; of a run: solved'],
   [EXIT.defect, 'a defect of this program'],
   [EXIT.usage, 'the command line is wrong'],
   [EXIT.document, 'the document, folder or journal is wrong or cannot be read'],
-  [EXIT.unreachable, 'the coordinator cannot be reached'],
+  [EXIT.unreachable, 'the coordinator cannot be reached, or has no room or no disk space at present'],
   [EXIT.unauthorised, 'the token is missing or not accepted'],
   [EXIT.notFound, 'no such run or token, or the run has no result yet'],
   [EXIT.machine, 'a port, file or folder of this machine is in the way'],
@@ -58,7 +65,8 @@ export function exitCodeTable(codes: readonly number[], withOutcomes: boolean): 
   const outcomes = withOutcomes
     ? Object.entries(OUTCOME_CODES)
         .filter(([, code]) => code !== EXIT.ok)
-        .map(([outcome, code]) => [code, `the run ended as ${outcome}`])
+        .map(([outcome, code]): [number, string] => [code, `the run ended as ${outcome}`])
+        .concat([[EXIT.solvedWithout, 'the run ended as solved, without the rows of a site']])
     : [];
   return [...rows, ...outcomes]
     .sort((a, b) => Number(a[0]) - Number(b[0]))

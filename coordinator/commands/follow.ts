@@ -2,7 +2,7 @@ import { setTimeout as pause } from 'node:timers/promises';
 import { z } from 'zod';
 import { roundLog } from '../report/round-log.js';
 import type { LogEvent } from '../run/log-event.js';
-import { type Analyst, send, unreachable } from './analyst.js';
+import { type Analyst, ask, runSummarySchema, send, unreachable } from './analyst.js';
 import { eventCutter } from './event-stream.js';
 import { EXIT, exitCodeOf } from './exit-codes.js';
 import {
@@ -31,7 +31,7 @@ export type Followed =
 
 /** `event` names a kind of `LogEvent`; the rest is the coordinator's word. Unknown kinds are a newer coordinator's. */
 const eventSchema = z.looseObject({
-  event: z.enum(['accepted', 'waiting', 'site', 'survey', 'round', 'late', 'resumed', 'outcome']),
+  event: z.enum(['accepted', 'waiting', 'site', 'survey', 'round', 'late', 'without', 'resumed', 'outcome']),
 });
 
 /** Hands every event of a run's log to `sink`, once, from the start, over as many connections as it takes. */
@@ -109,20 +109,49 @@ export function logSink(json: boolean, served: boolean): (event: LogEvent) => vo
   return (event) => say(log.linesFor(event));
 }
 
+/** How often a quiet run is looked at. Milliseconds. */
+const LOOK_EVERY_MS = 2_000;
+
+/** Tells why a run stands still, where the coordinator cannot write its files: its log cannot say that. Until `signal`. */
+export async function tellOfHalt(
+  analyst: Analyst,
+  run: string,
+  tell: (reason: string) => void,
+  signal: AbortSignal,
+): Promise<void> {
+  let told: string | null = null;
+  while (!signal.aborted) {
+    await pause(LOOK_EVERY_MS, undefined, { signal }).catch(() => undefined);
+    if (signal.aborted) return;
+    const read = await ask(analyst, 'GET', `/v1/runs/${encodeURIComponent(run)}`, runSummarySchema);
+    // Whether the coordinator answers at all, following the log finds out.
+    if (signal.aborted || !read.ok) continue;
+    const { state, reason } = read.value;
+    const halted = state === 'ended' ? null : reason;
+    if (halted !== null && halted !== told) tell(halted);
+    told = halted;
+  }
+}
+
 /** Follows a run for the user: Ctrl-C ends the watching, not the run. The exit code. */
 export async function watchRun(analyst: Analyst, run: string, json: boolean): Promise<number> {
   const stop = new AbortController();
   const onInterrupt = (): void => stop.abort();
   process.once('SIGINT', onInterrupt);
   process.once('SIGTERM', onInterrupt);
+  const over = new AbortController();
+  const tell = (reason: string): void =>
+    complain(`The run stands still until the coordinator is started again: ${reason}`);
+  void tellOfHalt(analyst, run, tell, over.signal);
   try {
     const followed = await followRun(analyst, run, logSink(json, true), stop.signal);
-    if (followed.kind === 'outcome') return exitCodeOf(followed.event.outcome);
+    if (followed.kind === 'outcome') return exitCodeOf(followed.event.outcome, followed.event.without);
     if (followed.kind === 'ending') return sayEnding(followed.ending, json);
     complain(`You stopped watching; the run goes on. To come back: commonfit watch ${run}`);
     complain(`To end it: commonfit cancel ${run}`);
     return EXIT.interrupted;
   } finally {
+    over.abort();
     process.removeListener('SIGINT', onInterrupt);
     process.removeListener('SIGTERM', onInterrupt);
   }

@@ -3,7 +3,7 @@ import { join } from 'node:path';
 import { openTokens } from '../service/tokens.js';
 import type { Analyst } from './analyst.js';
 import { EXIT } from './exit-codes.js';
-import { type Attempt, done, ending } from './terminal.js';
+import { type Attempt, done, ending, machineFault } from './terminal.js';
 
 /** A coordinator in this process, on a free port of loopback. */
 export interface LocalCoordinator {
@@ -20,9 +20,15 @@ export async function startLocalCoordinator(state: string): Promise<Attempt<Loca
   const started = await startService({ state, host: '127.0.0.1', port: 0, logLevel: 'error' });
   if (!started.ok) return ending(EXIT.machine, [started.failure]);
   const { address, close } = started.value;
+  const file = join(state, 'analyst.token');
+  const token = await machineFault('The token cannot be read', file, () => readFile(file, 'utf8'));
+  if (!token.ok) {
+    await close();
+    return token;
+  }
   const tokens = openTokens(state);
   return done({
-    analyst: { url: address, token: (await readFile(join(state, 'analyst.token'), 'utf8')).trim(), ca: null },
+    analyst: { url: address, token: token.value.trim(), ca: null, pair: null },
     siteUrl: `${address.replace(/^http/, 'ws')}/v1/site`,
     admitSite: async (site) => {
       const issued = await tokens.issue({ kind: 'site', name: site });

@@ -1,14 +1,15 @@
-import { mkdir, writeFile } from 'node:fs/promises';
+import { writeFile } from 'node:fs/promises';
 import { join } from 'node:path';
 import type { LogEvent } from '../run/log-event.js';
+import { makePath } from '../service/files.js';
 import type { Analyst } from './analyst.js';
 import type { Document } from './document.js';
 import { EXIT, exitCodeOf } from './exit-codes.js';
-import { followRun, type OutcomeEvent } from './follow.js';
+import { followRun, type OutcomeEvent, tellOfHalt } from './follow.js';
 import { type LocalCoordinator, startLocalCoordinator } from './local-coordinator.js';
 import { type Fetched, fetchResult } from './result-folder.js';
 import { submitDocument } from './submit.js';
-import { type Attempt, done } from './terminal.js';
+import { type Attempt, done, machineFault } from './terminal.js';
 import { startWorker, tailOf, type WorkerProcess } from './worker-process.js';
 
 /** One site of a run on this machine: its site file, and where that file says its token is. */
@@ -62,11 +63,15 @@ async function runWith(
   if (!document.ok) return document;
   const died = new AbortController();
   const logs = join(plan.folder, 'logs');
-  await mkdir(logs, { recursive: true });
+  const made = await machineFault('The folder cannot be made', logs, () => makePath(logs));
+  if (!made.ok) return made;
   for (const { site, siteFile, tokenFile } of sites.value) {
     const token = await coordinator.admitSite(site);
     if (!token.ok) return token;
-    await writeFile(tokenFile, `${token.value}\n`, { mode: 0o600 });
+    const written = await machineFault('The token cannot be written', tokenFile, () =>
+      writeFile(tokenFile, `${token.value}\n`, { mode: 0o600 }),
+    );
+    if (!written.ok) return written;
     const ended = (name: string, how: string): void => died.abort({ name, how });
     workers.push(startWorker(site, siteFile, join(logs, `${site}.log`), ended));
   }
@@ -89,12 +94,24 @@ async function followed(
     events.push(event);
     sink(event);
   };
-  const end = await followRun(analyst, submitted.value.run, keep, signal);
+  const { run } = submitted.value;
+  const halted = new AbortController();
+  const over = new AbortController();
+  void tellOfHalt(analyst, run, (reason) => halted.abort(reason), AbortSignal.any([signal, over.signal]));
+  const end = await followRun(analyst, run, keep, AbortSignal.any([signal, halted.signal]));
+  over.abort();
   if (end.kind === 'ending') return { ok: false, ending: end.ending };
+  if (halted.signal.aborted && end.kind === 'stopped') return standstill(halted.signal.reason);
   if (end.kind === 'stopped') return interrupted();
-  const result = await fetchResult(analyst, submitted.value.run);
+  const result = await fetchResult(analyst, run);
   return result.ok ? done({ outcome: end.event, result: result.value, events }) : result;
 }
+
+/** Here nobody starts the coordinator again. */
+const standstill = (reason: string): Attempt<never> => ({
+  ok: false,
+  ending: { exit: EXIT.machine, texts: [reason], failures: [{ code: 'state-unwritable', message: reason }] },
+});
 
 export const interrupted = (): Attempt<never> => ({
   ok: false,
@@ -114,7 +131,7 @@ async function workerEnded(
   return {
     ok: false,
     ending: {
-      exit: exitCodeOf('site-missing'),
+      exit: exitCodeOf('site-missing', []),
       texts: [
         `The worker of ${reason.name} ended before the run did (${reason.how}). It last said:`,
         ...tail,

@@ -5,6 +5,7 @@ import { Command } from 'commander';
 import { stringify } from 'yaml';
 import { z } from 'zod';
 import { listed } from '../report/phrases.js';
+import { makePath } from '../service/files.js';
 import { acting, withTail } from './action.js';
 import { type Document, readDocument } from './document.js';
 import { EXIT, exitCodeOf } from './exit-codes.js';
@@ -12,7 +13,7 @@ import { logSink } from './follow.js';
 import { interruptible } from './interrupt.js';
 import { interrupted, type LocalSite, runOnThisMachine } from './on-this-machine.js';
 import { writeResultFolder } from './result-folder.js';
-import { type Attempt, done, ending, say, sayEnding } from './terminal.js';
+import { type Attempt, done, ending, machineFault, say, sayEnding } from './terminal.js';
 import { runWorkerCommand } from './worker-process.js';
 
 export function rehearseCommand(): Command {
@@ -79,14 +80,14 @@ async function rehearseIn(
   const written = await writeResultFolder(out, run.value.result, run.value.events, run.value.outcome.folder);
   if (!written.ok) return sayEnding(written.ending, json);
   if (!json) say([`The result is in ${options.out}: result.json, coefficients.csv, rounds.csv, journal.`]);
-  return exitCodeOf(run.value.outcome.outcome);
+  return exitCodeOf(run.value.outcome.outcome, run.value.outcome.without);
 }
 
 async function workFolder(out: string, keep: boolean): Promise<Attempt<string>> {
   try {
     if (!keep) return done(await mkdtemp(join(tmpdir(), 'commonfit-rehearsal-')));
     const folder = join(out, 'rehearsal');
-    await mkdir(out, { recursive: true });
+    await makePath(out);
     await mkdir(folder);
     return done(folder);
   } catch (error) {
@@ -115,7 +116,8 @@ async function splitIntoSites(
   const split = await runWorkerCommand(args, signal);
   if (signal.aborted) return interrupted();
   if (split.code !== 0) {
-    return { ok: false, ending: { exit: EXIT.document, texts: linesOf(split.stderr), failures: [] } };
+    const exit = split.code === EXIT.machine ? EXIT.machine : EXIT.document;
+    return { ok: false, ending: { exit, texts: linesOf(split.stderr), failures: [] } };
   }
   const parts = splitSchema.parse(JSON.parse(split.stdout));
   const { sites } = document.specification;
@@ -135,12 +137,21 @@ async function splitIntoSites(
     ]);
   }
   const made: LocalSite[] = [];
-  for (const part of wanted) made.push(await writeSite(url, tables, part.site, resolve(tables, part.file)));
+  for (const part of wanted) {
+    const site = await writeSite(url, tables, part.site, resolve(tables, part.file));
+    if (!site.ok) return site;
+    made.push(site.value);
+  }
   return done(made);
 }
 
 /** A site file with an open policy for one part of the table. */
-async function writeSite(url: string, folder: string, site: string, table: string): Promise<LocalSite> {
+async function writeSite(
+  url: string,
+  folder: string,
+  site: string,
+  table: string,
+): Promise<Attempt<LocalSite>> {
   // The name of the part is fit for a file; a site's name as it stands in a table may not be.
   const name = basename(table, extname(table));
   const siteFile = join(folder, `${name}.site.yaml`);
@@ -161,8 +172,10 @@ async function writeSite(url: string, folder: string, site: string, table: strin
       approvals: 'any',
     },
   });
-  await writeFile(siteFile, text);
-  return { site, siteFile, tokenFile };
+  return machineFault('The site file cannot be written', siteFile, async () => {
+    await writeFile(siteFile, text);
+    return { site, siteFile, tokenFile };
+  });
 }
 
 const linesOf = (text: string): string[] => text.split('\n').filter((line) => line.trim() !== '');

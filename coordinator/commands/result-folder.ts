@@ -1,13 +1,14 @@
-import { copyFile, mkdir, writeFile } from 'node:fs/promises';
+import { copyFile, readdir, rm, writeFile } from 'node:fs/promises';
 import { join } from 'node:path';
 import { z } from 'zod';
+import { HAND_OVER_FILES } from '../report/hand-over.js';
 import { coefficientsCsv, roundsCsv } from '../report/tables.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { ResultDocument } from '../run/result.js';
+import { makePath } from '../service/files.js';
 import { RUN_FILES } from '../service/run-entry.js';
 import { type Analyst, readReply, send, unreachable } from './analyst.js';
-import { EXIT } from './exit-codes.js';
-import { type Attempt, done, ending } from './terminal.js';
+import { type Attempt, done, machineFault } from './terminal.js';
 
 const numbers = z.union([z.number(), z.array(z.number())]).nullable();
 /** What the terminal shows of `result.json`, format 1; the rest passes through. */
@@ -18,6 +19,7 @@ const resultSchema = z.looseObject({
   title: z.string(),
   specification: z.string(),
   sites: z.array(z.looseObject({ site: z.string() })),
+  without: z.array(z.object({ site: z.string(), rowsUsed: z.number().nullable() })),
   fits: z.array(
     z.looseObject({
       lambda: numbers,
@@ -52,32 +54,30 @@ export async function fetchResult(analyst: Analyst, run: string): Promise<Attemp
 }
 
 /**
- * Writes `result.json`, `coefficients.csv` and `rounds.csv` into a folder, made if it is not there; and, with the run's
- * own folder at hand, its journal and specification, so that `commonfit replay` can compute the run again.
+ * Writes `result.json`, `coefficients.csv`, `rounds.csv` and the files a fit is handed over with into a folder, made if it is not there; and, with the run's
+ * own folder at hand, what is there of those, its journal and specification, so that `commonfit replay` can compute the run again.
  */
 export async function writeResultFolder(
   folder: string,
   result: Fetched,
   events: readonly LogEvent[],
   runFolder: string | null = null,
+  handOver: readonly (readonly [string, string])[] = [],
 ): Promise<Attempt<null>> {
-  try {
-    await mkdir(folder, { recursive: true });
+  return machineFault('The result cannot be written', folder, async () => {
+    await makePath(folder);
     await writeFile(join(folder, 'result.json'), result.text);
     await writeFile(join(folder, 'coefficients.csv'), coefficientsCsv(result.document));
     await writeFile(join(folder, 'rounds.csv'), roundsCsv(events));
-    if (runFolder !== null) {
-      for (const name of [RUN_FILES.journal, RUN_FILES.specification])
-        await copyFile(join(runFolder, name), join(folder, name));
-    }
-    return done(null);
-  } catch (error) {
-    return ending(EXIT.machine, [
-      {
-        code: 'state-unwritable',
-        message: `The result cannot be written (${(error as NodeJS.ErrnoException).code ?? 'unknown'}).`,
-        where: { file: folder },
-      },
-    ]);
-  }
+    // those of another fit must not stay beside this result
+    for (const name of Object.values(HAND_OVER_FILES)) await rm(join(folder, name), { force: true });
+    for (const [name, text] of handOver) await writeFile(join(folder, name), text);
+    if (runFolder === null) return null;
+    const there = await readdir(runFolder);
+    for (const name of Object.values(HAND_OVER_FILES))
+      if (there.includes(name)) await copyFile(join(runFolder, name), join(folder, name));
+    for (const name of [RUN_FILES.journal, RUN_FILES.specification])
+      await copyFile(join(runFolder, name), join(folder, name));
+    return null;
+  });
 }

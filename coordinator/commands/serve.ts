@@ -21,7 +21,20 @@ export function serveCommand(): Command {
     .option('--state <folder>', 'tokens, runs and journals', STATE_DEFAULT)
     .option('--tls-cert <file>', 'certificate chain, PEM; goes with --tls-key')
     .option('--tls-key <file>', 'its private key, PEM')
+    .option(
+      '--client-ca-file <file>',
+      'let in only who shows a certificate of this authority, PEM, that names the site or analyst; needs --tls-cert',
+    )
     .option('--plain-text', 'no TLS off loopback, where something in front of it does TLS')
+    .addOption(mostOption('--running-most', 'runs at once; others wait their turn', 'runningMost'))
+    .addOption(mostOption('--links-most', 'workers linked at once', 'linksMost'))
+    .addOption(
+      mostOption(
+        '--connections-per-address-most',
+        'connections of one address at once, linked workers not counted; raise it behind a proxy',
+        'connectionsPerAddressMost',
+      ),
+    )
     .addOption(
       new Option('--log-level <level>', 'of the operational log, JSON lines on standard error')
         .choices(serviceSettings.shape.logLevel.unwrap().options)
@@ -43,13 +56,21 @@ interface ServeOptions {
   readonly state: string;
   readonly tlsCert?: string;
   readonly tlsKey?: string;
+  readonly clientCaFile?: string;
   readonly plainText?: true;
+  readonly runningMost: number;
+  readonly linksMost: number;
+  readonly connectionsPerAddressMost: number;
   readonly logLevel: ServiceOptions['logLevel'];
 }
 
 async function serve(options: ServeOptions): Promise<number> {
   if ((options.tlsCert === undefined) !== (options.tlsKey === undefined)) {
     complain('--tls-cert and --tls-key go together: give both, or neither.');
+    return EXIT.usage;
+  }
+  if (options.clientCaFile !== undefined && options.tlsCert === undefined) {
+    complain('--client-ca-file needs --tls-cert and --tls-key: certificates are asked for over TLS only.');
     return EXIT.usage;
   }
   // Loaded here: the other commands start faster without it.
@@ -60,7 +81,11 @@ async function serve(options: ServeOptions): Promise<number> {
     port: options.listen.port,
     ...(options.tlsCert === undefined ? {} : { certFile: options.tlsCert }),
     ...(options.tlsKey === undefined ? {} : { keyFile: options.tlsKey }),
+    ...(options.clientCaFile === undefined ? {} : { clientCaFile: options.clientCaFile }),
     plainText: options.plainText === true,
+    runningMost: options.runningMost,
+    linksMost: options.linksMost,
+    connectionsPerAddressMost: options.connectionsPerAddressMost,
     logLevel: options.logLevel,
   });
   if (!started.ok) return sayEnding(ending(EXIT.machine, [started.failure]).ending, false);
@@ -72,6 +97,20 @@ async function serve(options: ServeOptions): Promise<number> {
     });
   });
   return EXIT.ok;
+}
+
+/** A limit of `serviceSettings`, with its default. */
+function mostOption(
+  flag: string,
+  description: string,
+  setting: 'runningMost' | 'linksMost' | 'connectionsPerAddressMost',
+): Option {
+  const schema = serviceSettings.shape[setting];
+  return new Option(`${flag} <count>`, description).default(schema.parse(undefined)).argParser((text) => {
+    const parsed = schema.safeParse(/^\d+$/.test(text) ? Number(text) : text);
+    if (parsed.success) return parsed.data;
+    throw new InvalidArgumentError('It is a whole number of at least 1.');
+  });
 }
 
 /** `HOST:PORT`, with an IPv6 address in brackets. */

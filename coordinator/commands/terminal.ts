@@ -1,6 +1,7 @@
 import type { Failure } from '../../protocol/failure.js';
 import { describeFailure } from '../../protocol/failure.js';
 import { wrapped } from '../report/phrases.js';
+import { EXIT } from './exit-codes.js';
 
 const WIDTH_DEFAULT = 80;
 
@@ -54,4 +55,26 @@ export function sayEnding(why: Ending, json: boolean): number {
   for (const text of why.texts) complain(text);
   if (json) sayJson({ event: 'failed', exit: why.exit, failures: why.failures });
   return why.exit;
+}
+
+/** The value of `action`; where the file system refuses, an ending that says what could not be done to which file. */
+export async function machineFault<T>(
+  what: string,
+  file: string,
+  action: () => Promise<T>,
+): Promise<Attempt<T>> {
+  try {
+    return done(await action());
+  } catch (error) {
+    const code = (error as NodeJS.ErrnoException).code;
+    if (code === undefined) throw error;
+    return ending(EXIT.machine, [
+      {
+        code: 'state-unwritable',
+        message: `${what} (${code}).`,
+        remedy: 'Check the space and the rights of the folder.',
+        where: { file },
+      },
+    ]);
+  }
 }

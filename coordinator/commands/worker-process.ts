@@ -29,6 +29,11 @@ export function startWorker(
   const log = createWriteStream(logFile, { mode: 0o600 });
   child.stdout.pipe(log, { end: false });
   child.stderr.pipe(log, { end: false });
+  // On a full disk the worker goes on unlogged; what stops the run there is the journal.
+  log.on('error', () => {
+    child.stdout.resume();
+    child.stderr.resume();
+  });
   let stopping = false;
   const gone = new Promise<void>((resolve) => {
     const settle = (how: string): void => {

@@ -10,6 +10,9 @@ export const EXIT = {
   policy: 5,
   coordinator: 6,
   machine: 7,
+  flagged: 8,
+  /** 128 + SIGINT, as shells expect. */
+  interrupted: 130,
 } as const;
 
 export type ExitCode = (typeof EXIT)[keyof typeof EXIT];
@@ -18,11 +21,13 @@ const MEANINGS: readonly [ExitCode, string][] = [
   [EXIT.ok, 'done'],
   [EXIT.defect, 'a defect of this program'],
   [EXIT.usage, 'the command line is wrong'],
-  [EXIT.document, 'the site file, fit specification or approvals file is wrong'],
+  [EXIT.document, 'the site file, fit specification, approvals file or model is wrong'],
   [EXIT.table, 'the table cannot be read, or not as the specification needs it'],
   [EXIT.policy, "the site's policy does not let the specification in"],
   [EXIT.coordinator, 'the coordinator refuses this worker, or its certificate is not trusted'],
   [EXIT.machine, 'a file or folder of this machine is in the way, or the ledger is broken'],
+  [EXIT.flagged, 'done, but some rows could not be scored and are flagged'],
+  [EXIT.interrupted, 'interrupted'],
 ];
 
 /** Exit codes with their meaning, for `--help`. */
@@ -80,6 +85,7 @@ const CODES: readonly [ExitCode, readonly FailureCode[]][] = [
     [
       'token-refused',
       'certificate-untrusted',
+      'certificate-refused',
       'version-unsupported',
       'site-unknown',
       'site-taken',
@@ -87,6 +93,7 @@ const CODES: readonly [ExitCode, readonly FailureCode[]][] = [
     ],
   ],
   [EXIT.machine, ['ledger-broken', 'state-unwritable']],
+  [EXIT.interrupted, ['run-cancelled']],
 ];
 
 const BY_FAILURE = new Map(CODES.flatMap(([exit, codes]) => codes.map((code) => [code, exit] as const)));

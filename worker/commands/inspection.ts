@@ -178,6 +178,8 @@ function departuresOf(
   const perFit = fits === 1 ? '' : ' and fit';
   const squaredOnly = spec.loss.kind === 'squared' ? null : 'only for squared loss';
   const noMatrix = policy.curvatureMost === 0 ? 'policy.curvature-most is 0' : null;
+  const few = policy.curvatureMost !== 'any' && policy.curvatureMost < 2;
+  const lessThanTwo = few ? `policy.curvature-most is ${policy.curvatureMost}` : null;
   const most = policy.curvatureMost === 'any' ? 'a point' : `${policy.curvatureMost} a fit at most`;
   const kept = (kinds: readonly LeaveKind[]): string | null => {
     const missing = kinds.filter((kind) => !policy.leave.includes(kind));
@@ -211,6 +213,18 @@ function departuresOf(
       ['gradients', 'curvature'],
       noMatrix,
     ),
+    ...(spec.barrier.quorum === 'all'
+      ? []
+      : [
+          row(
+            'curvature',
+            'a proximal point, and losses, gradients and curvature matrices at both ends of it',
+            2 * (1 + p + matrix) + p + 1,
+            'where this site is late',
+            ['proximal', 'gradients', 'curvature'],
+            lessThanTwo,
+          ),
+        ]),
     row('pooled', 'the triangular factor', matrix + p + 1, 'once', ['curvature'], squaredOnly ?? noMatrix),
   ];
 }

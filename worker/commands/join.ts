@@ -1,5 +1,5 @@
 import { setTimeout as delay } from 'node:timers/promises';
-import { type Checked, type Failure, fail, succeed } from '../../protocol/failure.js';
+import { type Failure, fail, succeed } from '../../protocol/failure.js';
 import { connectLink } from '../../protocol/link/websocket.js';
 import { PROTOCOL_VERSION, SOFTWARE } from '../../protocol/version.js';
 import { Ledger } from '../custody/ledger.js';
@@ -7,11 +7,12 @@ import type { SiteFile } from '../custody/site-file.js';
 import { type Answerer, createAnswerer } from '../service/answerer.js';
 import { keepConnected, type Timers } from '../service/connection.js';
 import type { WorkerEvent } from '../service/events.js';
-import { besideSiteFile, ledgerOnDisk, readApprovals, readDocument } from '../service/site-folder.js';
+import { besideSiteFile, checkLedgerWritable, ledgerOnDisk, readApprovals } from '../service/site-folder.js';
 import { readTable } from '../source/read-table.js';
 import { readSiteFile } from './documents.js';
 import { EXIT, type ExitCode, exitCodeOf } from './exit-codes.js';
 import { levelOf, sentenceOf } from './log-lines.js';
+import { readSecrets } from './secrets.js';
 import { giveUp, tell } from './terminal.js';
 
 export interface JoinOptions {
@@ -49,7 +50,10 @@ async function joinAs(
   if (plain !== null) return plain;
   const secrets = await readSecrets(site);
   if (!secrets.ok) return secrets.failure;
-  const opened = await Ledger.open(ledgerOnDisk(besideSiteFile(site.file, 'ledger')), () => new Date());
+  const ledgerFile = besideSiteFile(site.file, 'ledger');
+  const writable = await checkLedgerWritable(ledgerFile);
+  if (!writable.ok) return writable.failure;
+  const opened = await Ledger.open(ledgerOnDisk(ledgerFile), () => new Date());
   if (!opened.ok) return opened.failure;
   const { ledger, warning } = opened.value;
   if (warning !== null) onEvent({ event: 'warning', message: warning });
@@ -118,21 +122,6 @@ function checkPlainText(site: SiteFile, allowed: boolean): Failure | null {
     remedy: 'Use a wss:// address, or say --plain-text if the network between is trusted.',
     where: { file: site.file, field: 'coordinator.url' },
   }).failure;
-}
-
-async function readSecrets(site: SiteFile): Promise<Checked<{ token: string; ca?: string }>> {
-  const { tokenFile, caFile } = site.coordinator;
-  const text = await readDocument(tokenFile);
-  if (!text.ok) return text;
-  const token = text.value.trim();
-  if (!/^\S+$/.test(token))
-    return fail('field-value', 'The token file does not hold one token.', {
-      remedy: 'Put the token that the analyst gave you into it, on one line.',
-      where: { file: tokenFile },
-    });
-  if (caFile === null) return succeed({ token });
-  const ca = await readDocument(caFile);
-  return ca.ok ? succeed({ token, ca: ca.value }) : ca;
 }
 
 const timers: Timers = {

@@ -29,6 +29,8 @@ export function sentenceOf(event: WorkerEvent): string {
       return answered(event);
     case 'refused':
       return `Refused ask ${event.ask} of run ${event.run}: ${describeFailure(event.failure)}`;
+    case 'skipped':
+      return `Skipped ask ${event.ask} of run ${event.run}: ask ${event.newest} is the newest.`;
     case 'run-ended':
       return `Run ${event.run} ended: ${event.outcome}. In all ${leftWords(event)} left, in ${counted(event.asks, 'answer')}.`;
     case 'warning':

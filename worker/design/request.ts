@@ -31,5 +31,5 @@ export function tableRequest(
 }
 
 /** Every numeric and levels term, those inside products among them. */
-export const factorsOf = (spec: FitSpecification): (NumericTerm | LevelsTerm)[] =>
+export const factorsOf = (spec: Pick<FitSpecification, 'terms'>): (NumericTerm | LevelsTerm)[] =>
   spec.terms.flatMap((term) => (term.kind === 'product' ? term.factors : [term]));

@@ -21,8 +21,9 @@ export const doubleSql = (column: RelationColumn): string =>
 /** Finite double, or a mark. */
 export function numericSql(column: RelationColumn): string {
   const number = doubleSql(column);
+  const value = column.type === 'number' ? column.sql : textSql(column);
   return (
-    `case when ${textSql(column)} is null then 'inf'::double ` +
+    `case when ${value} is null then 'inf'::double ` +
     `when isfinite(${number}) then ${number} else 'nan'::double end`
   );
 }

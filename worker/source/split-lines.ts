@@ -31,8 +31,27 @@ export async function splitLines(options: {
   if (row === 0) return fail('table-empty', 'The table has no rows.', { where: { file: table } });
 
   const parts = [...rowsOf].map(([site, rows]) => ({ site, file: join(folder, `${site}.jsonl`), rows }));
+  try {
+    await writeParts(table, by, parts);
+  } catch (error) {
+    if ((error as NodeJS.ErrnoException).code === undefined) throw error;
+    return partUnwritable(folder);
+  }
+  return succeed(parts);
+}
+
+/** Whatever the reason in detail, a part is there whole or the command says that it is not. */
+export const partUnwritable = (file: string): Checked<never> =>
+  fail('state-unwritable', 'The part cannot be written.', {
+    remedy: 'Check the space and the rights of the folder.',
+    where: { file },
+  });
+
+async function writeParts(table: string, by: string, parts: readonly SplitPart[]): Promise<void> {
   const outputs = new Map(parts.map(({ site, file }) => [site, createWriteStream(file)]));
-  const ends = [...outputs.values()].map((output) => finished(output));
+  const ends = Promise.all([...outputs.values()].map((output) => finished(output)));
+  // It may fail while a line is waited for, which then fails too.
+  ends.catch(() => undefined);
   for await (const line of linesOf(table)) {
     const site = siteOf(line, by, 0, table);
     const output = site.ok ? outputs.get(site.value ?? '') : undefined;
@@ -40,8 +59,7 @@ export async function splitLines(options: {
     await writeLine(output, line);
   }
   for (const output of outputs.values()) output.end();
-  await Promise.all(ends);
-  return succeed(parts);
+  await ends;
 }
 
 async function* linesOf(table: string): AsyncGenerator<string> {

@@ -4,7 +4,7 @@ import { type Checked, fail, type Place, succeed } from '../../protocol/failure.
 import { textSql } from './column-sql.js';
 import { type Engine, openEngine, sqlText, textRows } from './duckdb.js';
 import { missingColumn, openRelation, type Relation } from './relation.js';
-import { splitLines } from './split-lines.js';
+import { partUnwritable, splitLines } from './split-lines.js';
 import { siteFileName } from './split-name.js';
 import type { TableSource } from './table.js';
 
@@ -98,7 +98,8 @@ async function splitRelation(
   }
   for (const part of parts) {
     const written = await textRows(engine, copySql(relation, kind, site, part), { file: part.file });
-    if (!written.ok) return written;
+    // All rows were read once, for the sites: what fails here is the writing.
+    if (!written.ok) return partUnwritable(part.file);
   }
   return succeed(parts);
 }
