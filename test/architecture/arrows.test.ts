@@ -27,7 +27,17 @@ const COORDINATOR_ORDER = [
   'run',
   'consensus',
 ];
-const WORKER_ORDER = ['main.ts', 'commands', 'service', 'custody', 'local', 'design', 'losses', 'source'];
+const WORKER_ORDER = [
+  'main.ts',
+  'commands',
+  'service',
+  'custody',
+  'score',
+  'local',
+  'design',
+  'losses',
+  'source',
+];
 
 const PURE = [
   'numerics',

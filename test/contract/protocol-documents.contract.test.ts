@@ -90,7 +90,7 @@ describe('README.md', () => {
   test('every kind of message and of work is explained', () => {
     for (const kind of [...kindsOf(toWorker), ...kindsOf(toCoordinator)])
       expect(readme).toContain(`\`${kind}\``);
-    for (const work of ['survey', 'proximal', 'evaluate', 'factor'])
+    for (const work of ['survey', 'proximal', 'evaluate', 'joint', 'factor'])
       expect(readme).toContain(`**\`${work}\`**`);
   });
 

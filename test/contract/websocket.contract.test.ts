@@ -8,7 +8,8 @@ import { CLOSE_CODES } from '../../protocol/close-codes.js';
 import { decodeToCoordinator, encodeMessage } from '../../protocol/codec.js';
 import { LIMITS } from '../../protocol/limits.js';
 import type { Link } from '../../protocol/link/link.js';
-import { connectLink, linkServer, websocketLink } from '../../protocol/link/websocket.js';
+import { connectLink, linkServer } from '../../protocol/link/websocket.js';
+import { websocketLink } from '../../protocol/link/websocket-link.js';
 import type { ToCoordinator } from '../../protocol/messages/to-coordinator.js';
 import type { ToWorker } from '../../protocol/messages/to-worker.js';
 import { SUBPROTOCOL } from '../../protocol/version.js';
@@ -181,10 +182,10 @@ describe('raw frames', () => {
 });
 
 describe('silence', () => {
-  /** A socket that only counts, so that time can be made up. */
-  function silentSocket(): { socket: WebSocket; pings: () => number; say: (event: string) => void } {
+  /** A socket that only counts, so that time can be made up. `hear`: bytes come in, of whatever frame. */
+  function silentSocket(): { socket: WebSocket; pings: () => number; hear: () => void; heard: () => number } {
     const socket = new WebSocket(null as never, undefined, {});
-    let pings = 0;
+    let [pings, bytes] = [0, 0];
     Object.defineProperty(socket, 'readyState', { value: WebSocket.OPEN, writable: true });
     socket.pause = () => undefined;
     socket.resume = () => undefined;
@@ -194,19 +195,22 @@ describe('silence', () => {
     socket.terminate = () => {
       socket.emit('close', CLOSE_CODES.connectionLost, Buffer.alloc(0));
     };
-    return { socket, pings: () => pings, say: (event) => socket.emit(event, Buffer.alloc(0)) };
+    const hear = (): void => {
+      bytes += 2;
+    };
+    return { socket, pings: () => pings, hear, heard: () => bytes };
   }
 
-  test('a peer that says nothing for silenceMostMs is given up, one that answers pings is not', () => {
+  test('a peer that says nothing for silenceMostMs is given up, one that sends a byte now and then is not', () => {
     vi.useFakeTimers();
-    const { socket, pings, say } = silentSocket();
-    const link = websocketLink<ToWorker, ToCoordinator>(socket, decodeToCoordinator);
+    const { socket, pings, hear, heard } = silentSocket();
+    const link = websocketLink<ToWorker, ToCoordinator>(socket, decodeToCoordinator, heard);
     const closings: number[] = [];
     link.onMessage(() => undefined);
     link.onClose((code) => closings.push(code));
     for (let second = 0; second < 300; second += 10) {
       vi.advanceTimersByTime(LIMITS.pingEveryMs);
-      say('pong');
+      hear();
     }
     expect(pings()).toBe(30);
     expect(closings).toEqual([]);

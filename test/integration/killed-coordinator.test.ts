@@ -1,6 +1,7 @@
-import { stat, truncate } from 'node:fs/promises';
+import { copyFile, rm, stat, truncate } from 'node:fs/promises';
 import { join } from 'node:path';
 import { afterAll, beforeAll, describe, expect, test } from 'vitest';
+import { until } from '../support/processes.js';
 import { setSmallScenario } from '../support/small-scenario.js';
 import { type Following, PATIENT, roundsOf, Stage } from '../support/stage.js';
 
@@ -119,3 +120,29 @@ test('runs that have ended stay as they ended; a second coordinator is kept off'
     `Process ${stage.coordinator?.pid} uses this state folder`,
   );
 });
+
+test(
+  'a cancellation that was accepted holds, although all that was written after it is lost',
+  PATIENT,
+  async () => {
+    const following = stage.submit('long.fit.yaml');
+    await stage.holdAt(following, 5, 'castlefen');
+    const run = await following.run();
+    const folder = join(stage.folder, 'state', 'runs', run);
+    for (const file of ['journal', 'log.jsonl'])
+      await copyFile(join(folder, file), join(folder, `${file}.before`));
+    expect((await stage.analyst('cancel', run)).code).toBe(0);
+    await stage.killCoordinator();
+    for (const file of ['journal', 'log.jsonl'])
+      await copyFile(join(folder, `${file}.before`), join(folder, file));
+    await rm(join(folder, 'result.json'), { force: true });
+    await stage.serve();
+    stage.workerOf('castlefen').signal('SIGCONT');
+
+    const result = await until('the result', () => stage.resultOf(run).catch(() => null));
+    expect(JSON.parse(result)).toMatchObject({ outcome: 'cancelled', reason: 'Cancelled by the analyst.' });
+    expect((await following.program.end()).code).toBe(17);
+    const replayed = await stage.commonfit('replay', folder, '--json');
+    expect(JSON.parse(replayed.stdout)).toMatchObject({ agrees: true, result: 'equal' });
+  },
+);

@@ -83,3 +83,15 @@ test('a ledger that cannot be written says so', async () => {
     failure: { code: 'state-unwritable', where: { file } },
   });
 });
+
+test('a clock that is set back or ahead leaves a ledger that is sound', async () => {
+  for (const [index, year] of ['2031', '2001', '2099'].entries()) {
+    const clock = (): Date => new Date(`${year}-03-01T09:00:00Z`);
+    const result = await Ledger.open(ledgerOnDisk(file), clock);
+    if (!result.ok) expect.unreachable(result.failure.message);
+    expect(result.value.ledger.departed('r1').asks).toBe(index);
+    expect(await result.value.ledger.append(departure(index + 1))).toMatchObject({ ok: true });
+  }
+  const years = (await readFile(file, 'utf8')).match(/(?<="at":")\d{4}/g);
+  expect(years).toEqual(['2031', '2001', '2099']);
+});

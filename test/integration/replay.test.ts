@@ -10,7 +10,7 @@ import {
   encodeReply,
   type JournalRecord,
 } from '../../coordinator/journal/records.js';
-import { isRefusal } from '../../coordinator/panel/panel.js';
+import { isRefusal } from '../../coordinator/panel/panel-state.js';
 import { longFit, SMALL_SITES, smallTable } from '../support/small-scenario.js';
 import { PATIENT, Stage } from '../support/stage.js';
 
@@ -66,7 +66,7 @@ async function changeOneNumber(file: string, ask: number): Promise<void> {
   const [opened] = all;
   const answered = all[ask];
   if (opened.record !== 'opened' || answered.record !== 'answered') throw new Error('another journal');
-  const reply = decodeReply(opened.run, ask, answered.replies[0]);
+  const reply = decodeReply(opened.run, ask, answered.replies[0] as Uint8Array);
   if (!reply.ok || isRefusal(reply.value)) throw new Error('no answer');
   const [work] = reply.value;
   if (work.work !== 'proximal') throw new Error(`a ${work.work}`);
@@ -111,7 +111,7 @@ describe('what was changed is told', () => {
     const all = await records(changed('journal'));
     const ask = all.findIndex((record) => {
       if (record.record !== 'answered') return false;
-      const reply = decodeReply((all[0] as { run: string }).run, record.ask, record.replies[0]);
+      const reply = decodeReply((all[0] as { run: string }).run, record.ask, record.replies[0] as Uint8Array);
       return reply.ok && !isRefusal(reply.value) && reply.value[0].work === 'proximal';
     });
     await changeOneNumber(changed('journal'), ask);

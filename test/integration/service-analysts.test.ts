@@ -1,4 +1,4 @@
-import { readdir, readFile } from 'node:fs/promises';
+import { mkdir, readdir, readFile } from 'node:fs/promises';
 import { join } from 'node:path';
 import { describe, expect, test } from 'vitest';
 import { bench, call, connectBoth, follow, siteToken, start, submit } from '../support/service-bench.js';
@@ -59,6 +59,17 @@ describe('analysts', () => {
     expect((await call(`/v1/runs/${run}/result`)).status).toBe(200);
   });
 
+  test('a cancellation that cannot be kept is refused, and the run goes on', async () => {
+    const address = await start();
+    const run = await submit();
+    await mkdir(join(bench.state, 'runs', run, 'cancelled'));
+    const response = await call(`/v1/runs/${run}/cancel`, { method: 'POST' });
+    expect(response.status).toBe(503);
+    expect(await response.json()).toMatchObject({ code: 'state-unwritable' });
+    await connectBoth(address);
+    expect((await follow(run)).at(-1)?.event).toMatchObject({ outcome: 'solved' });
+  });
+
   test.each([
     ['/v1/runs', {}, 401, 'unauthorised'],
     ['/v1/openapi.json', { authorization: 'Bearer wrong' }, 401, 'unauthorised'],
@@ -106,6 +117,7 @@ describe('analysts', () => {
       '/v1/runs/{run}/cancel',
       '/v1/runs/{run}/log',
       '/v1/runs/{run}/result',
+      '/v1/runs/{run}/specification',
       '/v1/sites',
     ]);
   });

@@ -2,6 +2,7 @@ import { describe, expect, test } from 'vitest';
 import { CLOSE_CODES } from '../../protocol/close-codes.js';
 import { LIMITS } from '../../protocol/limits.js';
 import type { Answer, Ask } from '../../protocol/messages/round.js';
+import { until } from '../support/processes.js';
 import {
   analystToken,
   connectBoth,
@@ -85,6 +86,20 @@ describe('workers that do not keep to the protocol', () => {
     await toySite(address, await siteToken('castlefen'), 'castlefen', MEANS.castlefen);
     expect((await follow(await submit())).at(-1)?.event).toMatchObject({ outcome: 'solved' });
     expect(newer.received[0]).toMatchObject({ kind: 'welcome' });
+  });
+
+  test('a hello that was longer under way than that of a later link does not take its place', async () => {
+    const address = await start();
+    const token = await siteToken('harrowmere');
+    const given = await ToySocket.open(address, token);
+    if (!(given instanceof ToySocket)) throw new Error('refused');
+    const newer = await toySite(address, token, 'harrowmere', MEANS.harrowmere);
+    await until('the welcome', () => newer.received.length > 0);
+    given.send(helloOf('harrowmere'));
+    expect(await given.closed).toBe(CLOSE_CODES.replaced);
+    await toySite(address, await siteToken('castlefen'), 'castlefen', MEANS.castlefen);
+    expect((await follow(await submit())).at(-1)?.event).toMatchObject({ outcome: 'solved' });
+    expect(newer.socket.readyState).toBe(newer.socket.OPEN);
   });
 
   const spoil = (change: (gradient: Float64Array) => Float64Array) => (ask: Ask) => {

@@ -1,9 +1,15 @@
 import fc from 'fast-check';
 import { describe, expect, test } from 'vitest';
-import { openPanel, type PanelEvent, type Reply, step } from '../../coordinator/panel/panel.js';
+import { step } from '../../coordinator/panel/panel.js';
+import type { PanelEvent, Reply } from '../../coordinator/panel/panel-state.js';
+import { askAll, panelOf } from '../support/panel-play.js';
 
 const MEMBERS = 4;
 const ASK = 7;
+const patientPanel = () => {
+  const panel = panelOf(MEMBERS);
+  return { ...panel, settings: { ...panel.settings, deadlineMs: 10, patienceMs: 1e6 } };
+};
 
 /** Every reply is told apart by its value. */
 const reply = (value: number): Reply => [
@@ -33,13 +39,9 @@ describe('panel under any order of events', () => {
   test('the first reply of each member to the current ask counts, and they pass once, in roster order', () => {
     fc.assert(
       fc.property(fc.array(disturbance, { maxLength: 60 }), (events) => {
-        let state = step(openPanel(MEMBERS, { deadlineMs: 10, patienceMs: 1e6 }), {
-          kind: 'ask',
-          ask: ASK,
-          atMs: 0,
-        }).state;
+        let state = step(patientPanel(), askAll(MEMBERS, ASK)).state;
         const firstOf = new Map<number, Reply>();
-        const passes: (readonly Reply[])[] = [];
+        const passes: (readonly (Reply | null)[])[] = [];
         const drops: number[] = [];
         let replies = 0;
         for (const [index, event] of events.entries()) {
@@ -53,7 +55,7 @@ describe('panel under any order of events', () => {
           const after = step(state, full);
           state = after.state;
           for (const effect of after.effects) {
-            if (effect.kind === 'pass') passes.push(effect.replies);
+            if (effect.kind === 'pass') passes.push(effect.batch.replies);
             if (effect.kind === 'drop') drops.push(effect.ask);
           }
         }
@@ -67,11 +69,7 @@ describe('panel under any order of events', () => {
   test('while an ask is open, a connected member without a reply has been sent it on its present connection', () => {
     fc.assert(
       fc.property(fc.array(disturbance, { maxLength: 60 }), (events) => {
-        let state = step(openPanel(MEMBERS, { deadlineMs: 10, patienceMs: 1e6 }), {
-          kind: 'ask',
-          ask: ASK,
-          atMs: 0,
-        }).state;
+        let state = step(patientPanel(), askAll(MEMBERS, ASK)).state;
         const sent = new Set<number>();
         for (const [index, event] of events.entries()) {
           const atMs = index + 1;
@@ -82,7 +80,7 @@ describe('panel under any order of events', () => {
           );
           state = after.state;
           for (const effect of after.effects) if (effect.kind === 'send') sent.add(effect.member);
-          if (state.current === null) return;
+          if (state.barrier === null) return;
           for (const [who, { connected, reply: given }] of state.members.entries()) {
             if (connected && given === null) expect(sent.has(who)).toBe(true);
           }

@@ -15,6 +15,11 @@ import { type SimMember, SimWorker } from './sim-worker.js';
 export interface RunPlan {
   readonly model: ModelName;
   readonly sites: readonly string[];
+  /** In place of the names, how many sites at least; null: the sites are named. */
+  readonly least: number | null;
+  /** Sites whose replies end a round, and how old an answer that stands in may be; null: all sites. */
+  readonly quorum: { readonly sites: number; readonly oldest: number } | null;
+  readonly missing: 'stop' | 'go-without';
   readonly patienceMinutes: number;
   readonly submitAtMs: number;
 }
@@ -28,8 +33,15 @@ export interface ClusterPlan {
   readonly runningMost: number;
   /** Numbers a worker remembers; few make it ask for vectors again. */
   readonly workerMemoryNumbers: number;
+  /** A site that computes longer than the others. */
+  readonly slowSite: string | null;
+  /** A site whose workers start later than the others'. */
+  readonly joinsLate: { readonly site: string; readonly afterMs: number } | null;
   readonly runs: readonly RunPlan[];
 }
+
+/** How many times longer the slow site computes. */
+const SLOWER = 50;
 
 /**
  * Coordinator, workers, links and disks in one process on virtual time. Everything that happens follows from the
@@ -80,7 +92,7 @@ export class Cluster {
   async play(standstillMs: number): Promise<void> {
     this.startCoordinator();
     for (const worker of this.workers)
-      this.after(this.network.delayMs(worker.name), () => this.startWorker(worker));
+      this.after(this.network.delayMs(worker.name) + this.lateBy(worker), () => this.startWorker(worker));
     this.plan.runs.forEach((run, index) => {
       this.after(run.submitAtMs, () => this.submit(`r${index + 1}`, run));
     });
@@ -114,8 +126,9 @@ export class Cluster {
   }
 
   /** Milliseconds a worker computes at one problem. */
-  computeMs(): number {
-    return this.plan.distance === 'even' ? 1 : 30 * this.random.uniform() ** 3;
+  computeMs(site: string): number {
+    const slower = site === this.plan.slowSite ? SLOWER : 1;
+    return slower * (this.plan.distance === 'even' ? 1 : 30 * this.random.uniform() ** 3);
   }
 
   weatherOf(name: string, crash: () => void): DiskWeather {
@@ -211,10 +224,17 @@ export class Cluster {
     worker.start().catch((error) => this.violated(`${worker.name} failed: ${String(error)}`));
   }
 
-  private submit(run: string, { model, sites, patienceMinutes }: RunPlan): void {
+  private lateBy({ site }: SimWorker): number {
+    const { joinsLate } = this.plan;
+    if (joinsLate?.site !== site) return 0;
+    this.lasts(joinsLate.afterMs);
+    return joinsLate.afterMs;
+  }
+
+  private submit(run: string, plan: RunPlan): void {
     const stored: StoredRun = {
       run,
-      model: modelOf(model, sites, patienceMinutes),
+      model: modelOf(plan),
       journal: new SimFile(),
       log: [],
       result: null,

@@ -2,7 +2,7 @@ import { describe, expect, test } from 'vitest';
 import { reportText } from './report.js';
 import { playSeed } from './seed.js';
 
-const SEEDS = 100;
+const SEEDS = 300;
 const FIRST = 1001;
 const AT_ONCE = 25;
 
@@ -20,9 +20,13 @@ const holds = async (seed: number): Promise<void> => {
 
 describe('the whole cluster under faults drawn from a seed', () => {
   const starts = Array.from({ length: SEEDS / AT_ONCE }, (_, index) => FIRST + index * AT_ONCE);
-  test.each(starts)(`every invariant holds for ${AT_ONCE} seeds from %i`, async (start) => {
-    for (let seed = start; seed < start + AT_ONCE; seed++) await holds(seed);
-  });
+  test.each(starts)(
+    `every invariant holds for ${AT_ONCE} seeds from %i`,
+    async (start) => {
+      for (let seed = start; seed < start + AT_ONCE; seed++) await holds(seed);
+    },
+    120_000,
+  );
 
   test.each(FOUND)('seed %i: %s', (seed) => holds(seed));
 

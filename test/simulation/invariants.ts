@@ -10,6 +10,7 @@ import { Drive } from '../../coordinator/service/drive.js';
 import { replay } from '../../coordinator/service/replay.js';
 import { decodeToCoordinator, encodeMessage } from '../../protocol/codec.js';
 import { succeed } from '../../protocol/failure.js';
+import type { Answer, Refusal } from '../../protocol/messages/round.js';
 import { readLedger } from '../../worker/custody/ledger.js';
 import type { Cluster } from './cluster.js';
 import type { StoredRun } from './sim-coordinator.js';
@@ -136,22 +137,31 @@ function ledgerFault(
     const asks = ledger.value.records.filter(({ run }) => run === opened.run).map(({ ask }) => ask);
     if (new Set(asks).size !== asks.length) return `the ledger of ${name} counts an ask twice`;
     const lines = new Set(asks);
-    for (const { ask, replies } of answered) {
-      const reply = decodeToCoordinator(replies[index]);
-      if (reply.ok && reply.value.kind === 'answer' && !lines.has(ask))
-        return `${name} answered ask ${ask} without a line in its ledger`;
+    const counted = new Set<number>();
+    for (const { replies } of answered) {
+      const reply = replyOf(replies[index]);
+      if (reply === null) continue;
+      if (counted.has(reply.ask)) return `a reply of ${name} to ask ${reply.ask} counts twice`;
+      counted.add(reply.ask);
+      if (reply.kind === 'answer' && !lines.has(reply.ask))
+        return `${name} answered ask ${reply.ask} without a line in its ledger`;
     }
   }
   return null;
+}
+
+/** A recorded reply; null where none had come. */
+function replyOf(bytes: Uint8Array | null): Answer | Refusal | null {
+  const reply = bytes === null ? null : decodeToCoordinator(bytes);
+  return reply?.ok && reply.value.kind !== 'hello' ? reply.value : null;
 }
 
 function digestOfAnswers(answered: readonly AnsweredRecord[]): string {
   const hash = createHash('sha256');
   for (const { replies } of answered) {
     for (const bytes of replies) {
-      const reply = decodeToCoordinator(bytes);
-      if (reply.ok && reply.value.kind !== 'hello')
-        hash.update(encodeMessage({ ...reply.value, run: 'any' }));
+      const reply = replyOf(bytes);
+      if (reply !== null) hash.update(encodeMessage({ ...reply, run: 'any' }));
     }
   }
   return hash.digest('hex');

@@ -4,6 +4,7 @@ import { parseFitSpecification } from '../../protocol/specification/parse.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { Policy } from '../../worker/custody/site-file.js';
 import type { Table } from '../../worker/source/table.js';
+import type { RunPlan } from './cluster.js';
 
 /** What is fitted in a simulation. Together they use every rung, both finishes and a list of λ. */
 const MODEL_LINES = {
@@ -56,15 +57,16 @@ export interface Model {
 
 export const DEADLINE_MS = 5000;
 
-/** `patienceMinutes`: longer than all faults of a seed together where the run must live through them. */
-export function modelOf(name: ModelName, sites: readonly string[], patienceMinutes: number): Model {
+export function modelOf(run: RunPlan): Model {
+  const { model: name, sites, least, quorum, missing, patienceMinutes } = run;
+  const heard = quorum === null ? '' : `, quorum: ${quorum.sites}, oldest: ${quorum.oldest}`;
   const text = [
     'commonfit: 1',
     `title: ${name}`,
-    `sites: [${sites.join(', ')}]`,
+    `sites: ${least === null ? `[${sites.join(', ')}]` : `{least: ${least}}`}`,
     ...MODEL_LINES[name],
     'rounds: {tolerance: 1e-7, most: 200}',
-    `barrier: {deadline: ${DEADLINE_MS / 1000}s, patience: ${patienceMinutes}m}`,
+    `barrier: {deadline: ${DEADLINE_MS / 1000}s, patience: ${patienceMinutes}m, missing: ${missing}${heard}}`,
   ].join('\n');
   const parsed = parseFitSpecification(text, `${name}.fit.yaml`);
   if (!parsed.ok) throw new Error(parsed.failures.map(({ message }) => message).join(' '));

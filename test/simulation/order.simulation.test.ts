@@ -3,6 +3,7 @@ import { describe, expect, test } from 'vitest';
 import { Cluster } from './cluster.js';
 import { checkRun } from './invariants.js';
 import { type ModelName, type PolicyName, SITES } from './models.js';
+import { plainRun } from './plan.js';
 import { undisturbed } from './undisturbed.js';
 
 /** Each rung, what finishes it, and several λ in one run. */
@@ -16,7 +17,7 @@ const CASES: readonly (readonly [ModelName, PolicyName, string])[] = [
 
 describe('answers in any order, after any delay', () => {
   test.each(CASES)('%s under the %s policy gives the same bytes', async (model, policy, rung) => {
-    const run = { model, sites: SITES, patienceMinutes: 60, submitAtMs: 0 };
+    const run = plainRun({ model }, SITES);
     const expected = await undisturbed({ policy, sharded: false }, run);
     expect(expected.result).toMatchObject({ outcome: 'solved', rung });
     await fc.assert(
@@ -28,6 +29,8 @@ describe('answers in any order, after any delay', () => {
           sharded: false,
           runningMost: 1,
           workerMemoryNumbers: 1_000_000,
+          slowSite: null,
+          joinsLate: null,
           runs: [run],
         });
         await cluster.play(3_600_000);

@@ -26,6 +26,7 @@ export const nameOf = ({ site, shard }: SimMember): string =>
 /** A worker on one member's machine: its ledger outlives its processes, everything else dies with them. */
 export class SimWorker {
   readonly name: string;
+  readonly site: string;
   readonly ledger = new SimFile();
   process: SimProcess | null = null;
   hangUntilMs = 0;
@@ -44,6 +45,7 @@ export class SimWorker {
     private readonly random: Random,
   ) {
     this.name = nameOf(member);
+    this.site = member.site;
   }
 
   /** Runs until it is killed or leaves in good order, then comes back. Nothing here tells it to go for good. */
@@ -120,7 +122,9 @@ export class SimWorker {
           this.cluster.violated(`${this.name} met a defect: ${event.failure.message}`);
       },
       pause: () =>
-        self.sleep(this.cluster.computeMs() + Math.max(0, this.hangUntilMs - this.cluster.time.steadyMs())),
+        self.sleep(
+          this.cluster.computeMs(this.site) + Math.max(0, this.hangUntilMs - this.cluster.time.steadyMs()),
+        ),
       bounds: { memoryNumbersMost: this.cluster.workerMemoryNumbers },
     });
   }

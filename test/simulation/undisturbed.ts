@@ -6,7 +6,7 @@ const known = new Map<string, Promise<Ending>>();
 /** How the run ends where nothing goes wrong and every message takes the same time. */
 export function undisturbed(plan: Pick<ClusterPlan, 'policy' | 'sharded'>, run: RunPlan): Promise<Ending> {
   const { policy, sharded } = plan;
-  const key = JSON.stringify([policy, sharded, run.model, run.sites, run.patienceMinutes]);
+  const key = JSON.stringify([policy, sharded, { ...run, submitAtMs: 0 }]);
   const before = known.get(key) ?? play(plan, run);
   known.set(key, before);
   return before;
@@ -23,6 +23,8 @@ async function play(
     sharded,
     runningMost: 1,
     workerMemoryNumbers: 1_000_000,
+    slowSite: null,
+    joinsLate: null,
     runs: [{ ...run, submitAtMs: 0 }],
   });
   await cluster.play(600_000);

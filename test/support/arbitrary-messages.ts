@@ -49,6 +49,15 @@ const work: fc.Arbitrary<Work> = fc.oneof(
     ownFit: orNull(fc.record({ at: count, hold: positive })),
     sketch: orNull(fc.record({ at: count, directions: vector, columns: askNumber })),
   }),
+  fc.record({
+    work: fc.constant('joint' as const),
+    problem: count,
+    start: vector,
+    curvature: vector,
+    linear: vector,
+    l1: vector,
+    l2: vector,
+  }),
 );
 
 const surveyAnswer = fc.record({
@@ -75,6 +84,8 @@ const surveyAnswer = fc.record({
   notes: fc.array(text, { maxLength: 3 }),
 });
 
+const quadratic = fc.record({ value: number, gradient: vector, curvature: vector });
+
 const workAnswer: fc.Arbitrary<WorkAnswer> = fc.oneof(
   surveyAnswer,
   fc.record({ work: fc.constant('factor' as const), factor: vector }),
@@ -95,6 +106,14 @@ const workAnswer: fc.Arbitrary<WorkAnswer> = fc.oneof(
     ),
     ownFit: orNull(fc.record({ curvature: vector, linear: vector })),
     sketch: orNull(vector),
+  }),
+  fc.record({
+    work: fc.constant('joint' as const),
+    problem: count,
+    start: quadratic,
+    point: vector,
+    end: quadratic,
+    newtonSteps: count,
   }),
 );
 

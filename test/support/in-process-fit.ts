@@ -3,7 +3,8 @@ import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { fit as runOf } from '../../coordinator/run/fit.js';
 import type { ResultDocument } from '../../coordinator/run/result.js';
-import type { Member, RosterAnswers, RunAsk } from '../../coordinator/run/run.js';
+import type { Batch, Member, RunAsk } from '../../coordinator/run/run.js';
+import type { WorkAnswer } from '../../protocol/messages/round.js';
 import type { Allowance } from '../../protocol/messages/survey.js';
 import { canonicalText, digestOf } from '../../protocol/specification/canonical.js';
 import { parseFitSpecification } from '../../protocol/specification/parse.js';
@@ -39,16 +40,17 @@ export async function fitInProcess(
   const raws = await rawShards(text, table, spec.sites);
   const roster: Member[] = spec.sites.map((site) => ({ site, shard: SHARD, kernel: 'here' }));
   let solvers: LocalSolver[] | null = null;
-  const answer = ({ works, scaling }: RunAsk): RosterAnswers => {
+  const answer = ({ works, scaling }: RunAsk): Batch => {
     if (scaling !== null)
       solvers ??= raws.map((raw) => localSolver(scaleShard(raw, scaling, spec.intercept === 'shared'), loss));
-    return works.map((own, i) =>
-      own.map((work) => {
+    const replies = works.map((own, i) =>
+      (own ?? []).map((work): WorkAnswer => {
         if (work.work === 'survey') return { work: 'survey', ...surveyOf(raws[i], loss), allowance };
         if (solvers === null) throw new Error('asked before the scaling was known');
         return answerLocally(work, solvers[i]);
       }),
     );
+    return { replies, agesMs: works.map(() => 0), gone: [] };
   };
   const run = runOf(spec, digestOf(canonicalText(spec)), roster);
   for (let step = run.next(); ; ) {

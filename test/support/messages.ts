@@ -83,6 +83,15 @@ export const ask: Ask = {
       sketch: null,
     },
     { work: 'factor' },
+    {
+      work: 'joint',
+      problem: 2,
+      start: vector(1, 2),
+      curvature: vector(3, 0.5, 4),
+      linear: vector(1, 1),
+      l1: vector(0, 0.1),
+      l2: vector(0, 0.2),
+    },
   ],
 };
 
@@ -137,6 +146,14 @@ export const answer: Answer = {
       sketch: null,
     },
     { work: 'factor', factor: vector(1, 0.5, 2, 0.25, 0.125, 3) },
+    {
+      work: 'joint',
+      problem: 2,
+      start: { value: 1.5, gradient: vector(1, 2), curvature: vector(3, 0.5, 4) },
+      point: vector(0.5, 0),
+      end: { value: 1.25, gradient: vector(0.5, 1), curvature: vector(2, 0.5, 4) },
+      newtonSteps: 4,
+    },
   ],
 };
 

@@ -35,6 +35,10 @@ export function answerLocally(work: Work, site: LocalSolver): WorkAnswer {
                 site.sketch(work.points[work.sketch.at].point, work.sketch.directions, work.sketch.columns),
               ),
       };
+    case 'joint': {
+      const { problem, start, curvature, linear, l1, l2 } = work;
+      return { work: 'joint', problem, ...must(site.joint(start, { curvature, linear }, l1, l2)) };
+    }
     case 'proximal':
       return {
         work: 'proximal',

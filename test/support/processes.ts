@@ -37,8 +37,10 @@ export class Program {
   readonly #ended: Promise<Ended>;
   #end: Ended | null = null;
 
-  constructor(program: string, args: readonly string[], cwd: string) {
-    const child = spawn(process.execPath, [program, ...args], { cwd, env: { PATH: '' } });
+  /** `launcher`: a command that starts what follows it, such as one that puts it into a network namespace. */
+  constructor(program: string, args: readonly string[], cwd: string, launcher: readonly string[] = []) {
+    const [command, ...rest] = [...launcher, process.execPath, program, ...args];
+    const child = spawn(command, rest, { cwd, env: { PATH: '' } });
     child.stdout.setEncoding('utf8').on('data', (piece: string) => {
       this.stdout += piece;
     });
@@ -104,6 +106,11 @@ export class Program {
       .map((line) => JSON.parse(line) as T);
   }
 
+  /** The end of what it said on either stream. */
+  get lastWords(): string {
+    return `${this.stdout}${this.stderr}`.slice(-3000);
+  }
+
   readonly #seen = (): string =>
-    `Exit ${JSON.stringify(this.#end?.code ?? null)}; it said: ${`${this.stdout}${this.stderr}`.slice(-3000)}`;
+    `Exit ${JSON.stringify(this.#end?.code ?? null)}; it said: ${this.lastWords}`;
 }

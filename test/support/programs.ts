@@ -1,8 +1,10 @@
 import { existsSync } from 'node:fs';
-import { dirname, join } from 'node:path';
+import { basename, dirname, join } from 'node:path';
 import { fileURLToPath } from 'node:url';
 
-const dist = join(dirname(fileURLToPath(import.meta.url)), '../../dist');
+const root = join(dirname(fileURLToPath(import.meta.url)), '../..');
+/** A benchmark is compiled itself, a test is not. */
+const dist = basename(root) === 'dist' ? root : join(root, 'dist');
 
 /** The two compiled programs; `npm test` builds them first. */
 export const programs = {

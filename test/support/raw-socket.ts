@@ -52,10 +52,20 @@ export class RawSocket {
 
   /** The code of the close frame that comes (RFC 6455, section 5.5.1). */
   async closeCode(): Promise<number> {
-    const frame = await until('a close frame', () => this.received.length >= 4 && this.received);
+    const frame = await until('a close frame', () => {
+      const from = pingBytes(this.received);
+      return this.received.length >= from + 4 && this.received.subarray(from);
+    });
     if (frame[0] !== 0x88) throw new Error(`another frame than a close: ${frame.toString('hex')}`);
     return frame.readUInt16BE(2);
   }
+}
+
+/** Bytes of the empty pings that come before anything else. */
+function pingBytes(received: Buffer): number {
+  let at = 0;
+  while (received[at] === 0x89 && received[at + 1] === 0) at += 2;
+  return at;
 }
 
 /** The head of a masked binary frame that promises `bytes` of payload (RFC 6455, section 5.2). */

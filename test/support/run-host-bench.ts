@@ -33,10 +33,15 @@ export class Bench {
   constructor(
     readonly store: MemoryStore = memoryStore(),
     private readonly replies: Replies = honest,
-    more: { logged?: readonly LogEvent[]; sites?: FitSpecification['sites']; run?: typeof toyRun } = {},
+    more: {
+      logged?: readonly LogEvent[];
+      sites?: FitSpecification['sites'];
+      specification?: FitSpecification;
+      run?: typeof toyRun;
+    } = {},
   ) {
     const { logged = [], sites = SITES, run = toyRun } = more;
-    const specification = toySpecification(sites);
+    const specification = more.specification ?? toySpecification(sites);
     this.host = new RunHost({
       accepted: { ...ACCEPTED, specification },
       start: (roster) => run(specification, ACCEPTED.digest, roster),

@@ -53,7 +53,9 @@ export async function setSmallScenario(
   stage: Stage,
   rows: number,
   sites: readonly string[] = SMALL_SITES,
+  state = stage.state,
 ): Promise<void> {
+  stage.state = state;
   await stage.serve();
   for (const [index, site] of sites.entries()) {
     await stage.write(`${site}.csv`, smallTable(site, Math.round(rows / (index + 1))));

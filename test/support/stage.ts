@@ -1,11 +1,9 @@
 import { mkdtemp, readFile, rm, writeFile } from 'node:fs/promises';
 import { tmpdir } from 'node:os';
-import { join } from 'node:path';
+import { join, resolve } from 'node:path';
 import type { LogEvent } from '../../coordinator/run/log-event.js';
 import { type Ended, Program, until } from './processes.js';
 import { programs } from './programs.js';
-
-const STATE = 'state';
 
 /** For tests that start several processes, on a machine that is busy with other tests. */
 export const PATIENT = { timeout: 90_000 } as const;
@@ -18,16 +16,21 @@ export class Stage {
   readonly #started: Program[] = [];
   readonly #workers = new Map<string, Program>();
   coordinator: Program | null = null;
+  /** The coordinator's folder, in that of the stage unless it is absolute. */
+  state = 'state';
   /** `http://127.0.0.1:PORT`; the port stays over restarts. */
   address = '';
 
-  private constructor(readonly folder: string) {
+  private constructor(
+    readonly folder: string,
+    private readonly launcher: readonly string[],
+  ) {
     // a test runner that is stopped leaves no process behind
     process.once('exit', this.#killAll);
   }
 
-  static async open(name: string): Promise<Stage> {
-    return new Stage(await mkdtemp(join(tmpdir(), `commonfit-${name}-`)));
+  static async open(name: string, launcher: readonly string[] = []): Promise<Stage> {
+    return new Stage(await mkdtemp(join(tmpdir(), `commonfit-${name}-`)), launcher);
   }
 
   readonly #killAll = (): void => {
@@ -42,7 +45,7 @@ export class Stage {
 
   /** Starts a program in the folder. */
   start(program: string, ...args: readonly string[]): Program {
-    const started = new Program(program, args, this.folder);
+    const started = new Program(program, args, this.folder, this.launcher);
     this.#started.push(started);
     return started;
   }
@@ -58,7 +61,7 @@ export class Stage {
   }
 
   startAnalyst(...args: readonly string[]): Program {
-    const token = join(STATE, 'analyst.token');
+    const token = join(this.state, 'analyst.token');
     return this.start(programs.commonfit, ...args, '--url', this.address, '--token-file', token);
   }
 
@@ -71,7 +74,7 @@ export class Stage {
     const port = this.address === '' ? '0' : new URL(this.address).port;
     this.coordinator = this.start(
       programs.commonfit,
-      ...['serve', '--listen', `127.0.0.1:${port}`, '--state', STATE],
+      ...['serve', '--listen', `127.0.0.1:${port}`, '--state', this.state],
     );
     const said = await this.coordinator.says(/coordinator is at \S+,/);
     this.address = /coordinator is at (\S+),/.exec(said)?.[1] ?? '';
@@ -83,13 +86,25 @@ export class Stage {
 
   /** Writes a token for a site beside its site file. */
   async admit(site: string): Promise<void> {
-    const { code, stderr } = await this.commonfit('admit', site, '--state', STATE, '--out', `${site}.token`);
+    const { code, stderr } = await this.commonfit(
+      'admit',
+      site,
+      '--state',
+      this.state,
+      '--out',
+      `${site}.token`,
+    );
     if (code !== 0) throw new Error(stderr);
   }
 
   /** Starts the worker of `SITE.site.yaml`. */
   join(site: string): Program {
-    const worker = this.start(programs.worker, 'join', `${site}.site.yaml`, '--json');
+    return this.joinFile(site, `${site}.site.yaml`);
+  }
+
+  /** The same with the site file given. */
+  joinFile(site: string, siteFile: string): Program {
+    const worker = this.start(programs.worker, 'join', siteFile, '--json');
     this.#workers.set(site, worker);
     return worker;
   }
@@ -113,7 +128,7 @@ export class Stage {
   }
 
   read(file: string): Promise<string> {
-    return readFile(join(this.folder, file), 'utf8');
+    return readFile(resolve(this.folder, file), 'utf8');
   }
 
   /** Submits a specification and follows it in a process of its own. */
@@ -123,7 +138,7 @@ export class Stage {
 
   /** The bytes of a file of a run, where the coordinator keeps them. */
   resultOf(run: string, file = 'result.json'): Promise<string> {
-    return this.read(join(STATE, 'runs', run, file));
+    return this.read(join(this.state, 'runs', run, file));
   }
 }
 

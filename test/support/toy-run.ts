@@ -1,6 +1,7 @@
 import type { Member, Run, RunAsk, Shown } from '../../coordinator/run/run.js';
 import { memberName } from '../../coordinator/run/run.js';
 import type { Answer, Ask } from '../../protocol/messages/round.js';
+import type { SurveyAnswer } from '../../protocol/messages/survey.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 
 /** The mean of one number per site by gradient steps: a run small enough to be checked by hand. */
@@ -43,12 +44,14 @@ export function* toyRun(specification: FitSpecification, digest: string, roster:
           sketch: null,
         },
       ]),
+      barrier: { waitFor: [...roster.keys()], quorum: roster.length },
       scaling,
       shown,
     };
-    const answers = yield ask;
+    const { replies } = yield ask;
     let sum = 0;
-    for (const [index, answer] of answers.entries()) {
+    for (const [index, answer] of replies.entries()) {
+      if (answer === null) throw new Error('a reply is not there');
       if ('code' in answer) refused = `${memberName(roster[index])} refused: ${answer.code}`;
       else if (answer[0].work === 'evaluate') sum += answer[0].points[0].gradient?.[0] ?? Number.NaN;
     }
@@ -73,6 +76,7 @@ export function* toyRun(specification: FitSpecification, digest: string, roster:
         rowsDropped: null,
         kernel: member.kernel,
       })),
+      without: [],
       rowsTotal: null,
       rung: 'pooled',
       rungReason: null,
@@ -92,6 +96,7 @@ function shownRound(round: number, objective: number): Shown {
     tolerance: 1e-8,
     fitsOpen: 1,
     fitsTotal: 1,
+    standIns: [],
     progress: {
       rung: 'pooled',
       purpose: 'gradient',
@@ -104,6 +109,18 @@ function shownRound(round: number, objective: number): Shown {
   };
 }
 
+const toySurvey: SurveyAnswer = {
+  work: 'survey',
+  rowsUsed: 10,
+  rowsDropped: 0,
+  columns: [],
+  mean: new Float64Array(),
+  centredSquares: new Float64Array(),
+  response: { weightSum: 10, weightedSum: 5, exposureSum: 10, least: 0, most: 1, saturatedLoss: 0 },
+  allowance: { leave: [], curvatureMost: null, numbersMost: null, roundsMost: null },
+  notes: [],
+};
+
 /** What a toy site with this mean answers. */
 export function toyAnswer(ask: Ask, mean: number): Answer {
   return {
@@ -111,6 +128,7 @@ export function toyAnswer(ask: Ask, mean: number): Answer {
     run: ask.run,
     ask: ask.ask,
     work: ask.work.map((work) => {
+      if (work.work === 'survey') return toySurvey;
       if (work.work !== 'evaluate') throw new Error(`a toy site has no answer to ${work.work}`);
       const points = work.points.map(({ point }) => ({
         value: 0,

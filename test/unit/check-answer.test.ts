@@ -36,6 +36,13 @@ describe('checkAsk', () => {
     [['work', 2, 'sketch', 'directions'], vector(2)],
     [['work', 2, 'sketch', 'columns'], 3],
     [['work', 1, 'problems', 1, 'problem'], 0],
+    [['work', 5, 'start'], vector(3)],
+    [['work', 5, 'curvature'], vector(2)],
+    [['work', 5, 'linear'], vector(1)],
+    [['work', 5, 'l1'], vector(3)],
+    [['work', 5, 'l2'], vector(1)],
+    [['work', 5, 'l1'], Float64Array.of(0.1, -1e-9)],
+    [['work', 5, 'l2'], Float64Array.of(-1, 0)],
   ])('dimension-wrong where %j does not fit', (path, member) => {
     expect(checkAsk(changed(ask, path, member), 2)?.code).toBe('dimension-wrong');
   });
@@ -63,8 +70,8 @@ describe('checkAnswer', () => {
   test.each<[readonly (string | number)[], unknown]>([
     [['run'], 'r2'],
     [['ask'], 6],
-    [['work'], answer.work.slice(0, 4)],
-    [['work'], [...answer.work, answer.work[4]]],
+    [['work'], answer.work.slice(0, 5)],
+    [['work'], [...answer.work, answer.work[5]]],
     [['work', 0], answer.work[1]],
     [['work', 4], answer.work[0]],
     [['work', 1, 'problems', 0, 'problem'], 1],
@@ -81,6 +88,8 @@ describe('checkAnswer', () => {
     [['work', 3, 'ownFit'], { curvature: vector(3), linear: vector(2) }],
     [['work', 2, 'sketch'], null],
     [['work', 3, 'sketch'], vector(2)],
+    [['work', 5, 'problem'], 0],
+    [['work', 5], answer.work[4]],
   ])('answer-unasked where %j is not what was asked', (path, member) => {
     const wrong: Answer = changed(answer, path, member);
     expect(checkAnswer(ask, wrong, 2)?.code).toBe('answer-unasked');
@@ -97,6 +106,11 @@ describe('checkAnswer', () => {
     [['work', 2, 'ownFit', 'linear'], vector(3)],
     [['work', 2, 'sketch'], vector(2)],
     [['work', 4, 'factor'], vector(3)],
+    [['work', 5, 'start', 'gradient'], vector(3)],
+    [['work', 5, 'start', 'curvature'], vector(2)],
+    [['work', 5, 'point'], vector(1)],
+    [['work', 5, 'end', 'gradient'], vector(1)],
+    [['work', 5, 'end', 'curvature'], vector(4)],
   ])('dimension-wrong where %j has another length', (path, member) => {
     expect(checkAnswer(ask, changed(answer, path, member), 2)?.code).toBe('dimension-wrong');
   });

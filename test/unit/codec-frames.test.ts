@@ -88,6 +88,19 @@ describe('limits', () => {
     });
   });
 
+  test('a map may have fieldsMost fields and no more', () => {
+    const fields = Array.from({ length: LIMITS.fieldsMost - 1 }, (_, i) => [`field${i}`, 0] as const);
+    const read = (more: object) =>
+      decodeToWorker(encodeMessage({ ...Object.fromEntries(fields), ...more } as never));
+    expect(read({ kind: 0 })).toMatchObject({ failure: { message: expect.stringContaining('"kind"') } });
+    expect(read({ kind: 0, more: 0 })).toMatchObject({
+      failure: {
+        code: 'frame-malformed',
+        message: expect.stringContaining(`more than ${LIMITS.fieldsMost} fields`),
+      },
+    });
+  });
+
   test('a frame may hold itemsMost items and no more, however they are spread', () => {
     const arrays = LIMITS.itemsMost / LIMITS.elementsMost + 1;
     const message = { kind: Array.from({ length: arrays }, () => new Array(LIMITS.elementsMost).fill(0)) };

@@ -5,7 +5,7 @@ import type { Link } from '../../protocol/link/link.js';
 import { memoryLinks } from '../../protocol/link/memory.js';
 import type { ToCoordinator } from '../../protocol/messages/to-coordinator.js';
 import type { ToWorker } from '../../protocol/messages/to-worker.js';
-import { backoffMs } from '../../worker/service/backoff.js';
+import { BACKOFF, backoffMs } from '../../worker/service/backoff.js';
 import {
   type ConnectionDeps,
   type CoordinatorLink,
@@ -89,6 +89,11 @@ async function worker(more: Partial<ConnectionDeps> & { pause?: () => Promise<vo
   return { ended, timers, stop, links, events, site };
 }
 
+type Made = Awaited<ReturnType<typeof worker>>;
+
+const retriesIn = (events: readonly WorkerEvent[]): number[] =>
+  events.flatMap((event) => (event.event === 'disconnected' ? [event.retryMs] : []));
+
 const kindsOf = (end: FarEnd): string[] => end.received.map(({ kind }) => kind);
 
 describe('waiting before the next try', () => {
@@ -116,10 +121,54 @@ describe('waiting before the next try', () => {
     await settle();
     pair.coordinator.send(welcome);
     await settle();
+    timers.pass(BACKOFF.steadyMs);
+    await settle();
     pair.coordinator.close(CLOSE_CODES.goingAway, 'restarting');
     await settle();
-    const retries = events.filter((event) => event.event === 'disconnected').map(({ retryMs }) => retryMs);
-    expect(retries).toEqual([250, 500, 1000, 2000, 250]);
+    expect(retriesIn(events)).toEqual([250, 500, 1000, 2000, 250]);
+  });
+
+  /** On the latest link: welcomed, asked, answered, asked `more`; then the coordinator closes it. */
+  async function serveAndClose(made: Made, more: readonly ToWorker[], code: number): Promise<void> {
+    const far = made.links[made.links.length - 1];
+    for (const message of [welcome, prepareOf('r1'), gradientAsk(1), ...more]) {
+      far.send(message);
+      await settle();
+    }
+    far.close(code, 'as it is');
+    await settle();
+    made.timers.pass(retriesIn(made.events).at(-1) ?? Number.NaN);
+    await settle();
+  }
+
+  test('a worker all of whose answers close the link comes back ever more slowly', async () => {
+    const made = await worker();
+    for (let link = 0; link < 4; link++) await serveAndClose(made, [], CLOSE_CODES.messageUnexpected);
+    expect(retriesIn(made.events)).toEqual([250, 500, 1000, 2000]);
+  });
+
+  test('the ask sent again is no sign that the answer was taken', async () => {
+    const made = await worker();
+    for (let link = 0; link < 3; link++) await serveAndClose(made, [gradientAsk(1)], CLOSE_CODES.goingAway);
+    expect(retriesIn(made.events)).toEqual([250, 500, 1000]);
+  });
+
+  test.each<[string, ToWorker]>([
+    ['a later ask of its run', gradientAsk(2)],
+    ['the end of its run', { kind: 'run-end', run: 'r1', outcome: 'solved' }],
+  ])('an answer was taken where %s came: the waits begin anew', async (_, next) => {
+    const made = await worker();
+    await serveAndClose(made, [], CLOSE_CODES.connectionLost);
+    await serveAndClose(made, [], CLOSE_CODES.connectionLost);
+    await serveAndClose(made, [next], CLOSE_CODES.connectionLost);
+    expect(retriesIn(made.events)).toEqual([250, 500, 250]);
+  });
+
+  test('answers taken in one run do not excuse those of another that close the link', async () => {
+    const made = await worker();
+    for (let link = 0; link < 3; link++)
+      await serveAndClose(made, [gradientAsk(2)], CLOSE_CODES.messageUnexpected);
+    expect(retriesIn(made.events)).toEqual([250, 500, 1000]);
   });
 
   test('a coordinator that never says welcome counts as away', async () => {

@@ -17,7 +17,9 @@ const answered = (ask: number): JournalRecord => ({
   record: 'answered',
   ask,
   asked: 'a'.repeat(64),
-  replies: [Uint8Array.of(ask, 2, 3)],
+  replies: [Uint8Array.of(ask, 2, 3), null],
+  agesMs: [2, 30],
+  gone: [],
   measured: { tookMs: 1.5, slowest: { member: 0, ms: 1.5 }, numbersUp: 3, numbersDown: 4, at: 'then' },
 });
 const RECORDS: JournalRecord[] = [

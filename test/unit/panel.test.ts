@@ -1,93 +1,46 @@
 import { describe, expect, test } from 'vitest';
-import {
-  openPanel,
-  type PanelEvent,
-  type PanelState,
-  type Reply,
-  step,
-  wakeAtMs,
-} from '../../coordinator/panel/panel.js';
+import { wakeAtMs } from '../../coordinator/panel/panel.js';
 import { checkRoster } from '../../coordinator/panel/roster.js';
 import { EMPTY_MEMORY, rememberAnswered, rememberSent, slimWorks } from '../../coordinator/panel/slim-ask.js';
-import type { Refusal, Work } from '../../protocol/messages/round.js';
-
-const settings = { deadlineMs: 100, patienceMs: 350 };
-const answer = (value: number): Reply => [
-  {
-    work: 'evaluate',
-    problem: 0,
-    points: [{ value, gradient: null, diagonal: null, curvature: null }],
-    ownFit: null,
-    sketch: null,
-  },
-];
-const refusal = (code: Refusal['code'], ask = 1): Refusal => ({
-  kind: 'refusal',
-  run: 'r',
-  ask,
-  code,
-  message: 'no',
-  remedy: null,
-});
-
-function play(state: PanelState, events: readonly PanelEvent[]) {
-  let now = state;
-  const effects = events.flatMap((event) => {
-    const after = step(now, event);
-    now = after.state;
-    return after.effects;
-  });
-  return { state: now, effects };
-}
-
-const connectAll = (count: number): PanelEvent[] =>
-  Array.from({ length: count }, (_, member) => ({ kind: 'connected', member, atMs: 0 }));
-const ask = (number: number, atMs = 0): PanelEvent => ({ kind: 'ask', ask: number, atMs });
-const reply = (member: number, number: number, body: Reply, atMs = 10): PanelEvent => ({
-  kind: 'reply',
-  member,
-  ask: number,
-  reply: body,
-  atMs,
-});
-const time = (atMs: number): PanelEvent => ({ kind: 'time', atMs });
+import type { Work } from '../../protocol/messages/round.js';
+import { answer, askAll, connectAll, panelOf, play, refusal, reply, time } from '../support/panel-play.js';
 
 describe('panel', () => {
   test('asks the connected, and lets the replies through in roster order once all are there', () => {
-    const { effects } = play(openPanel(3, settings), [
+    const { effects } = play(panelOf(3), [
       ...connectAll(3),
-      ask(1),
+      askAll(3, 1),
       reply(2, 1, answer(2), 5),
       reply(0, 1, answer(0), 20),
       reply(1, 1, answer(1), 30),
     ]);
     expect(effects.filter(({ kind }) => kind === 'send')).toEqual(
-      [0, 1, 2].map((member) => ({ kind: 'send', member, full: false })),
+      [0, 1, 2].map((member) => ({ kind: 'send', member, ask: 1, lacks: 'nothing' })),
     );
     expect(effects.at(-1)).toEqual({
       kind: 'pass',
       ask: 1,
-      replies: [answer(0), answer(1), answer(2)],
+      batch: { replies: [answer(0), answer(1), answer(2)], agesMs: [20, 30, 5], gone: [] },
       tookMs: 30,
       slowest: { member: 1, ms: 30 },
     });
   });
 
   test('a member that connects later is asked when it connects, and again after a reconnect', () => {
-    const { effects } = play(openPanel(2, settings), [
+    const { effects } = play(panelOf(2), [
       { kind: 'connected', member: 0, atMs: 0 },
-      ask(1),
+      askAll(2, 1),
       { kind: 'connected', member: 1, atMs: 5 },
       { kind: 'lost', member: 1, atMs: 6 },
       { kind: 'connected', member: 1, atMs: 7 },
     ]);
-    expect(effects).toEqual([0, 1, 1].map((member) => ({ kind: 'send', member, full: false })));
+    expect(effects).toEqual([0, 1, 1].map((member) => ({ kind: 'send', member, ask: 1, lacks: 'nothing' })));
   });
 
   test('a member that has replied is not asked again when it reconnects', () => {
-    const { effects } = play(openPanel(2, settings), [
+    const { effects } = play(panelOf(2), [
       ...connectAll(2),
-      ask(1),
+      askAll(2, 1),
       reply(0, 1, answer(0)),
       { kind: 'lost', member: 0, atMs: 11 },
       { kind: 'connected', member: 0, atMs: 12 },
@@ -96,12 +49,12 @@ describe('panel', () => {
   });
 
   test('at each deadline those without a reply are named and asked again; then patience ends', () => {
-    const opened = play(openPanel(3, settings), [...connectAll(2), ask(1), reply(0, 1, answer(0))]);
+    const opened = play(panelOf(3), [...connectAll(2), askAll(3, 1), reply(0, 1, answer(0))]);
     expect(wakeAtMs(opened.state)).toBe(100);
     const first = play(opened.state, [time(99), time(100)]);
     expect(first.effects).toEqual([
       { kind: 'late', members: [1, 2], waitedMs: 100, patienceLeftMs: 250 },
-      { kind: 'send', member: 1, full: false },
+      { kind: 'send', member: 1, ask: 1, lacks: 'nothing' },
     ]);
     expect(wakeAtMs(first.state)).toBe(200);
     const last = play(first.state, [time(200), time(300), time(350)]);
@@ -110,13 +63,13 @@ describe('panel', () => {
   });
 
   test('replies that nobody waits for are dropped with a code and a reason', () => {
-    const { state, effects } = play(openPanel(2, settings), [
+    const { state, effects } = play(panelOf(2), [
       ...connectAll(2),
-      ask(1),
+      askAll(2, 1),
       reply(0, 1, answer(0)),
       reply(1, 1, answer(1)),
       reply(1, 1, answer(9)),
-      ask(2),
+      askAll(2, 2),
       reply(0, 1, answer(9)),
       reply(0, 3, answer(9)),
       reply(0, 2, answer(0)),
@@ -125,14 +78,14 @@ describe('panel', () => {
     const drops = effects.filter((effect) => effect.kind === 'drop');
     expect(drops.map(({ why }) => why)).toEqual(['older', 'older', 'unasked', 'duplicate']);
     expect(new Set(drops.map(({ code }) => code))).toEqual(new Set(['answer-unasked']));
-    expect(state.members[0].reply).toEqual(answer(0));
+    expect(state.members[0].reply?.reply).toEqual(answer(0));
   });
 
   test('memory-missing brings the ask again in full, once, and is never an answer, however often it comes', () => {
     const missing = refusal('memory-missing');
-    const { effects } = play(openPanel(1, settings), [
+    const { effects } = play(panelOf(1), [
       ...connectAll(1),
-      ask(1),
+      askAll(1, 1),
       reply(0, 1, missing, 50),
       reply(0, 1, missing, 51),
       time(100),
@@ -140,22 +93,25 @@ describe('panel', () => {
       reply(0, 1, answer(4), 112),
     ]);
     expect(effects.map(({ kind }) => kind)).toEqual(['send', 'send', 'late', 'send', 'pass']);
-    expect(effects.flatMap((effect) => (effect.kind === 'send' ? [effect.full] : []))).toEqual([
-      false,
-      true,
-      true,
+    expect(effects.flatMap((effect) => (effect.kind === 'send' ? [effect.lacks] : []))).toEqual([
+      'nothing',
+      'vectors',
+      'vectors',
     ]);
-    expect(effects.at(-1)).toMatchObject({ replies: [answer(4)] });
+    expect(effects.at(-1)).toMatchObject({ batch: { replies: [answer(4)] } });
   });
 
   test('any other refusal passes the barrier in its place', () => {
-    const { effects } = play(openPanel(2, settings), [
+    const { effects } = play(panelOf(2), [
       ...connectAll(2),
-      ask(1),
+      askAll(2, 1),
       reply(0, 1, refusal('policy-rows')),
       reply(1, 1, answer(1)),
     ]);
-    expect(effects.at(-1)).toMatchObject({ kind: 'pass', replies: [refusal('policy-rows'), answer(1)] });
+    expect(effects.at(-1)).toMatchObject({
+      kind: 'pass',
+      batch: { replies: [refusal('policy-rows'), answer(1)] },
+    });
   });
 });
 

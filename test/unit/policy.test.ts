@@ -46,6 +46,11 @@ const evaluate = (want: Want, more: Partial<EvaluateWork> = {}): Work => ({
   ...more,
 });
 
+const joint = (problem = 0): Work => {
+  const one = Float64Array.of(1);
+  return { work: 'joint', problem, start: one, curvature: one, linear: one, l1: one, l2: one };
+};
+
 const sketch = (columns: number, problem = 0): Work =>
   evaluate('gradient', { problem, sketch: { at: 0, directions: new Float64Array(columns), columns } });
 
@@ -109,6 +114,7 @@ describe('kinds of answer', () => {
     ['a curvature matrix', evaluate('curvature'), ['gradients', 'curvature']],
     ['a fit of its own', evaluate('value', { ownFit: { at: 0, hold: 0.3 } }), ['gradients', 'curvature']],
     ['a sketch', sketch(3), ['gradients', 'sketches']],
+    ['a joint step', joint(), ['proximal', 'gradients', 'curvature']],
     ['a factor', factor, ['curvature']],
   ])('%s leaves with its kinds and with none of them missing', (_name, work, kinds) => {
     expect(codeFor(policyWith({ leave: kinds }), NOTHING_DEPARTED, [work])).toBeNull();
@@ -137,6 +143,12 @@ describe('curvature matrices', () => {
     const point = { point: Float64Array.of(0), want: 'curvature' as const };
     const four = evaluate('curvature', { points: [point, point, point], ownFit: { at: 0, hold: 0.3 } });
     expect(codeFor(three, NOTHING_DEPARTED, [four])).toBe('policy-curvature');
+  });
+
+  test('a joint step counts both of its ends, for its own fit', () => {
+    expect(codeFor(three, departedAfter(one), [joint()])).toBeNull();
+    expect(codeFor(three, departedAfter(one, one), [joint()])).toBe('policy-curvature');
+    expect(codeFor(three, departedAfter(one, one), [joint(1)], 2)).toBeNull();
   });
 
   test('what needs no matrix goes on leaving after the last one', () => {

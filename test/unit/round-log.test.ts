@@ -20,6 +20,7 @@ const round = (number: number, more: Partial<RoundEvent> = {}): RoundEvent => ({
   dualResidual: 1e-3,
   objective: 0.5,
   tookMs: 200,
+  standIns: [],
   slowest: { site: 'lindell-bay', ms: 180 },
   numbersUp: 40,
   numbersDown: 40,
@@ -51,6 +52,16 @@ const EVENTS: LogEvent[] = [
   { event: 'site', site: LONG_SITE, change: 'connected', at },
   { event: 'site', site: LONG_SITE, change: 'lost', at },
   {
+    event: 'without',
+    round: 8,
+    sites: [
+      { site: LONG_SITE, rowsUsed: 120_456 },
+      { site: 'oakhythe', rowsUsed: null },
+    ],
+    waitedMs: 1_800_000,
+    at,
+  },
+  {
     event: 'survey',
     rowsTotal: 123_456,
     coefficients: 9,
@@ -80,6 +91,12 @@ const EVENTS: LogEvent[] = [
     patienceLeftMs: 1_740_000,
     at,
   },
+  round(8, {
+    standIns: [
+      { site: LONG_SITE, round: 3 },
+      { site: 'oakhythe', round: null },
+    ],
+  }),
   { event: 'resumed', round: 0, at },
   { event: 'resumed', round: 17, at },
   {
@@ -89,6 +106,7 @@ const EVENTS: LogEvent[] = [
     rounds: 12,
     relativeGap: 3.1e-10,
     certificate: 'measured',
+    without: [],
     folder: '/srv/commonfit-state/runs/4f6c2a91',
     at,
   },
@@ -99,6 +117,7 @@ const EVENTS: LogEvent[] = [
     rounds: 4,
     relativeGap: null,
     certificate: null,
+    without: [],
     folder: '/srv/commonfit-state/runs/4f6c2a91',
     at,
   },
@@ -122,7 +141,7 @@ describe('round log', () => {
 
   test.each([60, 80, 120])('every round is one line that ends as a sentence at %i columns', (width) => {
     for (const event of EVENTS.filter((event) => event.event === 'round')) {
-      const lines = linesAt(width, [event]);
+      const lines = linesAt(width, [{ ...event, standIns: [] }]);
       expect(lines).toHaveLength(1);
       expect(lines[0]).toMatch(/ Round \d+ (\(.+\) )?(is|gathered) .+\.$/);
     }
@@ -166,6 +185,38 @@ describe('round log', () => {
         [1, 2, 3, 4].map((number) => round(number, { tookMs: 2000 })),
       ).at(-1),
     ).toMatch(/; 8\.0 s left\.$/);
+  });
+
+  test('says who is late and what stands in, once for each answer that does', () => {
+    const standIns = (number: number, ...late: RoundEvent['standIns']) =>
+      round(number, { rung: 'curvature', standIns: late });
+    const said = linesAt(80, [
+      standIns(1, { site: 'castlefen', round: null }),
+      standIns(2, { site: 'castlefen', round: null }),
+      standIns(4, { site: 'castlefen', round: 3 }),
+      standIns(5, { site: 'castlefen', round: 3 }),
+      standIns(6),
+      standIns(7, { site: 'castlefen', round: 3 }),
+    ]).filter((line) => !line.includes(' Round '));
+    expect(said).toEqual([
+      'castlefen has not been heard: the others stand in for it.',
+      'castlefen is late: its quadratic of round 3 stands in.',
+      'castlefen is late: its quadratic of round 3 stands in.',
+    ]);
+    expect(only(round(5, { standIns: [{ site: 'castlefen', round: 3 }] }))).toContain(
+      'its answer of round 3',
+    );
+  });
+
+  test('says that it goes on without a site, and at the end that its rows are not in the fit', () => {
+    const sites = [{ site: 'castlefen', rowsUsed: 1204 }];
+    expect(only({ event: 'without', round: 4, sites, waitedMs: 1_800_000, at }).split('\n')).toEqual([
+      'Going on without castlefen: it has not answered for 30 min; the fit begins again',
+      '  from the survey, its 1,204 rows are not in it.',
+    ]);
+    const outcome = EVENTS.find((event) => event.event === 'outcome');
+    if (outcome?.event !== 'outcome') throw new Error('no outcome');
+    expect(only({ ...outcome, without: ['castlefen'] })).toContain('took 12 rounds, without castlefen.');
   });
 
   test('the names of long sites keep their head and tail', () => {

@@ -49,7 +49,17 @@ function surveyed(allowances: readonly Allowance[]): PooledSurvey {
   );
   const sites = roster.map(({ site }) => ({ site, rowsUsed: 100, rowsDropped: 0 }));
   const none = new Float64Array();
-  return { rowsTotal: 200, sites, columns: [], mean: none, sd: none, response, answers, notes: [] };
+  return {
+    rowsTotal: 200,
+    sites,
+    columns: [],
+    mean: none,
+    sd: none,
+    response,
+    answers,
+    agesMs: [10, 10],
+    notes: [],
+  };
 }
 
 /** The choice where castlefen has this policy and harrowmere an open one. */

@@ -25,6 +25,7 @@ describe('a site file', () => {
         url: 'wss://fit.example.net:7443',
         tokenFile: '/srv/pipes/harrowmere.token',
         caFile: null,
+        pairFiles: null,
       },
       table: { kind: 'csv', path: '/srv/pipes/pipes.csv' },
       shard: { index: 1, of: 1 },
@@ -57,6 +58,13 @@ describe('a site file', () => {
     );
     expect(site.coordinator).toMatchObject({ tokenFile: '/etc/site.token', caFile: '/srv/ca.pem' });
     expect(site.shard).toEqual({ index: 2, of: 3 });
+    const showing = parse(
+      siteWith({ 5: '  token-file: t\n  certificate-file: ./site.pem\n  key-file: /etc/site.key' }),
+    );
+    expect(showing.coordinator.pairFiles).toEqual({
+      certificate: '/srv/pipes/site.pem',
+      key: '/etc/site.key',
+    });
     expect(site.policy).toEqual({
       columns: 'any',
       rowsLeast: 1,
@@ -142,5 +150,17 @@ describe('a site file is refused', () => {
     const remedy = (text: string) => failuresOf(parseSiteFile(text, FILE))[0]?.remedy;
     expect(remedy(siteWith({}, ['  rows_least: 10']))).toBe('Did you mean "rows-least"?');
     expect(remedy(siteWith({}, ['  leave: [counts, gradient]']))).toBe('Did you mean "gradients"?');
+  });
+});
+
+test.each([
+  ['certificate-file', 'key-file'],
+  ['key-file', 'certificate-file'],
+])('%s needs %s', (given, missing) => {
+  const [failure] = failuresOf(parseSiteFile(siteWith({ 5: `  token-file: t\n  ${given}: ./x.pem` }), FILE));
+  expect(failure).toMatchObject({
+    code: 'field-conflict',
+    where: { field: `coordinator.${given}`, line: 6 },
+    message: `Found ${given} without ${missing}; allowed: both, or neither.`,
   });
 });

@@ -120,6 +120,21 @@ describe('a fit specification', () => {
     });
   });
 
+  test('takes a quorum with the age that answers standing in may have, and going on without a site', () => {
+    expect(
+      parse(breaksWith({ 15: 'barrier: {quorum: 3, oldest: 40, missing: go-without}' })).barrier,
+    ).toEqual({
+      deadlineMs: 30_000,
+      quorum: 3,
+      oldest: 40,
+      patienceMs: 1_800_000,
+      missing: 'go-without',
+    });
+    expect(
+      parse(breaksWith({ 3: 'sites: {least: 2}', 15: 'barrier: {quorum: 9, oldest: 1}' })).barrier,
+    ).toMatchObject({ quorum: 9, oldest: 1 });
+  });
+
   test('takes site names of both cases, and numbers', () => {
     expect(parse(breaksWith({ 3: 'sites: [North_Central, b.2, 7]' })).sites).toEqual([
       'North_Central',

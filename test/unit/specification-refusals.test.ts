@@ -237,13 +237,24 @@ describe('a fit specification is refused', () => {
     ['quantile losses', breaksWith({ 5: 'loss: {kind: quantile, tau: 0.9}' }), '5 loss'],
     ['event times', breaksWith({ 4: 'response: {time: t, event: e}' }), '4 response'],
     ['classes', breaksWith({ 4: 'response: {column: kind, classes: [a, b]}' }), '4 response.classes'],
-    ['a quorum', breaksWith({ 15: 'barrier: {quorum: 3}' }), '15 barrier.quorum'],
-    ['older answers', breaksWith({ 15: 'barrier: {oldest: 2}' }), '15 barrier.oldest'],
-    ['going without a site', breaksWith({ 15: 'barrier: {missing: go-without}' }), '15 barrier.missing'],
   ])('as not supported, and not as unknown, for %s', (_, text, place) => {
     const found = failures(text);
     expect(marks(found)).toEqual([`not-supported ${place}`]);
     expect(found[0]?.message).toMatch(/ are part of the format, but this version cannot do them yet\.$/);
+  });
+
+  test('a quorum needs answers that may stand in, and sites enough; without one no answer may be old', () => {
+    const barrier = (text: string) => failures(breaksWith({ 15: `barrier: {${text}}` }));
+    expect(marks(barrier('quorum: 3'))).toEqual(['field-conflict 15 barrier.oldest']);
+    expect(barrier('quorum: 3')[0]?.remedy).toBe('Set it, for instance to 40, or use quorum: all.');
+    expect(marks(barrier('oldest: 2'))).toEqual(['field-conflict 15 barrier.oldest']);
+    expect(marks(barrier('quorum: all, oldest: 2'))).toEqual(['field-conflict 15 barrier.oldest']);
+    expect(marks(barrier('quorum: 5, oldest: 2'))).toEqual(['field-conflict 15 barrier.quorum']);
+    expect(marks(barrier('quorum: 0, oldest: 2'))).toEqual(['field-value 15 barrier.quorum']);
+    expect(marks(barrier('quorum: 2.5, oldest: 2'))).toEqual(['field-value 15 barrier.quorum']);
+    expect(marks(barrier('quorum: most, oldest: 2'))).toEqual(['field-value 15 barrier.quorum']);
+    expect(marks(barrier('quorum: 3, oldest: -1'))).toEqual(['field-value 15 barrier.oldest']);
+    expect(marks(barrier('missing: go_without'))).toEqual(['field-value 15 barrier.missing']);
   });
 
   test('with the nearest known name for a slip', () => {

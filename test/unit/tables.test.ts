@@ -33,6 +33,7 @@ const result = (more: Partial<ResultDocument> = {}): ResultDocument => ({
     { site: 'harrowmere', rowsUsed: 3000, rowsDropped: 12, kernel: 'plain' },
     { site: 'oakhythe', rowsUsed: null, rowsDropped: null, kernel: 'plain' },
   ],
+  without: [],
   rowsTotal: 3000,
   rung: 'curvature',
   rungReason: 'every site lets curvature leave',
@@ -110,6 +111,20 @@ describe('coefficients.csv', () => {
   });
 });
 
+describe('a result without a site', () => {
+  test('says whose rows are not in the fit, and how many', () => {
+    const without = [
+      { site: 'castlefen', rowsUsed: 1204 },
+      { site: 'lindell-bay', rowsUsed: null },
+    ];
+    const lines = resultText(result({ without }), 100).filter((line) => /Without/.test(line));
+    expect(lines).toEqual([
+      '  Without castlefen, which was given up on: its 1,204 rows are not in the fit.',
+      '  Without lindell-bay, which was given up on: its rows are not in the fit.',
+    ]);
+  });
+});
+
 describe('rounds.csv', () => {
   const at = '2031-05-04T10:00:00.000Z';
   const round: LogEvent = {
@@ -127,17 +142,33 @@ describe('rounds.csv', () => {
     dualResidual: 0.25,
     objective: 1.5,
     tookMs: 12,
+    standIns: [],
     slowest: null,
     numbersUp: 40,
     numbersDown: 44,
     at,
   };
 
+  test('names what stood in, and from when on a site was done without', () => {
+    const standIns = [
+      { site: 'castlefen', round: 3 },
+      { site: 'oakhythe', round: null },
+    ];
+    const sites = [{ site: 'castlefen', rowsUsed: 1 }];
+    const gone: LogEvent = { event: 'without', round: 1, sites, waitedMs: 1, at };
+    const rows = readCsv(roundsCsv([{ ...round, standIns }, gone, round]));
+    expect(rows.map((row) => row.slice(-2))).toEqual([
+      ['stand_ins', 'without'],
+      ['castlefen 3; oakhythe none', ''],
+      ['', 'castlefen'],
+    ]);
+  });
+
   test('one row for each round event; what a round did not have is empty', () => {
     const text = roundsCsv([{ event: 'waiting', sites: ['oakhythe'], at }, round]);
     expect(text.split('\r\n')).toEqual([
-      'round,at,rung,purpose,fits_open,fits_total,relative_gap,gap_measured,tolerance,primal_residual,dual_residual,objective,took_ms,slowest_site,slowest_ms,numbers_up,numbers_down',
-      `1,${at},proximal,"gradient, and diagonal",1,2,,,1e-8,,0.25,1.5,12,,,40,44`,
+      'round,at,rung,purpose,fits_open,fits_total,relative_gap,gap_measured,tolerance,primal_residual,dual_residual,objective,took_ms,slowest_site,slowest_ms,numbers_up,numbers_down,stand_ins,without',
+      `1,${at},proximal,"gradient, and diagonal",1,2,,,1e-8,,0.25,1.5,12,,,40,44,,`,
       '',
     ]);
   });

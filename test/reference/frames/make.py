@@ -65,6 +65,10 @@ frames = {
                 "sketch": None,
             },
             {"work": "factor"},
+            {
+                "work": "joint", "problem": 2, "start": vector(1, 2), "curvature": H, "linear": vector(1, 1),
+                "l1": vector(0, 0.1), "l2": vector(0, 0.2),
+            },
         ],
     },
     "answer": {
@@ -99,6 +103,12 @@ frames = {
             },
             {"work": "evaluate", "problem": 0, "points": [answered(2)], "ownFit": None, "sketch": None},
             {"work": "factor", "factor": vector(1, 0.5, 2, 0.25, 0.125, 3)},
+            {
+                "work": "joint", "problem": 2, "start": {"value": 1.5, "gradient": G, "curvature": H},
+                "point": vector(0.5, 0),
+                "end": {"value": 1.25, "gradient": vector(0.5, 1), "curvature": vector(2, 0.5, 4)},
+                "newtonSteps": 4,
+            },
         ],
     },
     "refusal": {
