@@ -41,20 +41,23 @@ export function planOf(seed: number, random: Random, impatientAbout: string | nu
     joinsLate: null,
     runs,
   };
-  return withStragglers(plan, seed);
+  return withStragglers(plan, seed, impatientAbout !== null);
 }
 
 /** Drawn apart from all else, so that what is found under a seed stays under that seed. */
 const STRAGGLERS = 2 ** 40;
 
 /** Quorums, going without a site, sites that are not named, slow ones, and ones that join late. */
-function withStragglers(plan: ClusterPlan, seed: number): ClusterPlan {
+function withStragglers(plan: ClusterPlan, seed: number, oneIsGivenUp: boolean): ClusterPlan {
   const random = seededRandom(STRAGGLERS + seed);
   const runs = plan.runs.map((run): RunPlan => {
     const quorum =
       random.uniform() < 0.4 ? { sites: run.sites.length - 1, oldest: one(random, [1, 5, 40]) } : null;
     const missing = random.uniform() < 0.5 ? 'go-without' : 'stop';
-    return { ...run, quorum, missing, least: random.uniform() < 0.15 ? run.sites.length - 1 : null };
+    const least = random.uniform() < 0.15 ? run.sites.length - 1 : null;
+    // whoever is there takes part, the site that is given up on too
+    const patienceMinutes = least !== null && oneIsGivenUp ? IMPATIENT_MINUTES : run.patienceMinutes;
+    return { ...run, quorum, missing, least, patienceMinutes };
   });
   const slowSite = random.uniform() < 0.5 ? one(random, SITES) : null;
   const joinsLate =

@@ -279,7 +279,10 @@ describe('round log', () => {
   });
 
   test('the survey says rows, left-out rows, the rung and why', () => {
-    const text = linesAt(200, [EVENTS[6] as LogEvent]).join('\n');
+    const text = linesAt(
+      200,
+      EVENTS.filter(({ event }) => event === 'survey'),
+    ).join('\n');
     expect(text).toContain('123,456 rows at 2 sites for 9 coefficients');
     expect(text).toContain('harrowmere 3,000 (left out: 12)');
     expect(text).toContain('The rung is proximal: castlefen lets at most 3 curvature matrices leave');
