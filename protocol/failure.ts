@@ -110,6 +110,7 @@ export const FAILURE_CODES = [
   // method
   'no-spread',
   'no-rows',
+  'rows-too-few',
   'separable',
   'rank-deficient',
   'not-positive-definite',

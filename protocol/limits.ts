@@ -16,6 +16,8 @@ export const LIMITS = {
   coefficientsMost: 200_000,
   /** Most problems in one proximal work item, most points in one evaluate work item. */
   batchMost: 4096,
+  /** Most folds of a cross-validation. */
+  foldsMost: 100,
   /** Most bytes that may wait to be sent on one link; a message that would pass it is not queued. */
   sendBufferBytesMost: 256 * 1024 * 1024,
   /** A peer that has not sent `hello` within this time after the upgrade is closed. Milliseconds. */

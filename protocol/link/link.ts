@@ -14,4 +14,6 @@ export interface Link<Outgoing, Incoming> {
   /** Payload bytes sent and received so far. */
   readonly bytesSent: number;
   readonly bytesReceived: number;
+  /** Payload bytes that were taken by `send` and have not gone out. */
+  readonly bytesWaiting: number;
 }

@@ -30,7 +30,7 @@ class MemoryEnd<Outgoing extends ToWorker | ToCoordinator, Incoming> implements 
   open = true;
   bytesSent = 0;
   bytesReceived = 0;
-  private waitingBytes = 0;
+  bytesWaiting = 0;
   private readonly outbox: Parcel[] = [];
   /** Deliveries that came before `onMessage`: they wait at the sender, as on a socket that is not read. */
   private heldDeliveries = 0;
@@ -49,9 +49,9 @@ class MemoryEnd<Outgoing extends ToWorker | ToCoordinator, Incoming> implements 
       this.close(CLOSE_CODES.frameTooLarge, `a message of ${frame.length} bytes was to be sent`);
       return false;
     }
-    if (this.waitingBytes + frame.length > LIMITS.sendBufferBytesMost) return false;
+    if (this.bytesWaiting + frame.length > LIMITS.sendBufferBytesMost) return false;
     this.bytesSent += frame.length;
-    this.waitingBytes += frame.length;
+    this.bytesWaiting += frame.length;
     this.dispatch({ frame });
     return true;
   }
@@ -95,7 +95,7 @@ class MemoryEnd<Outgoing extends ToWorker | ToCoordinator, Incoming> implements 
 
   handOver(): Parcel | undefined {
     const parcel = this.outbox.shift();
-    if (parcel !== undefined && 'frame' in parcel) this.waitingBytes -= parcel.frame.length;
+    if (parcel !== undefined && 'frame' in parcel) this.bytesWaiting -= parcel.frame.length;
     return parcel;
   }
 

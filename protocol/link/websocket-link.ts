@@ -66,6 +66,10 @@ class WebSocketLink<Outgoing extends ToWorker | ToCoordinator, Incoming> impleme
     return this.ending === null && this.socket.readyState === WebSocket.OPEN;
   }
 
+  get bytesWaiting(): number {
+    return this.socket.bufferedAmount;
+  }
+
   send(message: Outgoing): boolean {
     if (!this.open) return false;
     const frame = encodeMessage(message);

@@ -1,5 +1,6 @@
 import { z } from 'zod';
 import { LIMITS } from '../limits.js';
+import { part } from './part.js';
 import { count, finite, vector } from './vector.js';
 
 /** How much is wanted at a point; each includes those before it. */
@@ -14,6 +15,7 @@ export const want = z.enum(['value', 'gradient', 'diagonal', 'curvature']);
 export const evaluateWork = z.strictObject({
   work: z.literal('evaluate'),
   problem: count,
+  part,
   points: z
     .array(z.strictObject({ point: vector, want }))
     .min(1)

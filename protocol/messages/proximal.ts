@@ -1,5 +1,6 @@
 import { z } from 'zod';
 import { LIMITS } from '../limits.js';
+import { part } from './part.js';
 import { count, finite, vector } from './vector.js';
 
 /**
@@ -12,6 +13,7 @@ import { count, finite, vector } from './vector.js';
  */
 export const proximalProblem = z.strictObject({
   problem: count,
+  part,
   center: vector,
   scale: finite.positive(),
   diagonal: vector.nullable(),

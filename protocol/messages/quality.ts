@@ -11,7 +11,7 @@ export const qualityWork = z.strictObject({
   point: vector,
   /** Ascending inner edges of the bins, on the scale of the linear predictor: one more bin than edges. */
   edges: vector,
-  /** Packed inverse of the pooled curvature, for leverages h = w μ′ aᵀ H⁻¹ a / N; null: none are asked. */
+  /** Packed inverse of the pooled curvature, for leverages h = w loss″ aᵀ H⁻¹ a / N; null: none are asked. */
   inverse: vector.nullable(),
   /** A leverage above this counts as high. */
   leverageHigh: finite,

@@ -3,7 +3,11 @@ import { FAILURE_CODES } from '../failure.js';
 import { evaluateAnswer, evaluateWork } from './evaluate.js';
 import { factorAnswer, factorWork } from './factor.js';
 import { jointAnswer, jointWork } from './joint.js';
+import { marginsAnswer, marginsWork } from './margins.js';
 import { proximalAnswer, proximalWork } from './proximal.js';
+import { qualityAnswer, qualityWork } from './quality.js';
+import { scoresAnswer, scoresWork } from './scores.js';
+import { siteFitAnswer, siteFitWork } from './site-fit.js';
 import { surveyAnswer, surveyWork } from './survey.js';
 import { count } from './vector.js';
 
@@ -13,6 +17,10 @@ export const work = z.discriminatedUnion('work', [
   evaluateWork,
   jointWork,
   factorWork,
+  scoresWork,
+  siteFitWork,
+  marginsWork,
+  qualityWork,
 ]);
 export const workAnswer = z.discriminatedUnion('work', [
   surveyAnswer,
@@ -20,6 +28,10 @@ export const workAnswer = z.discriminatedUnion('work', [
   evaluateAnswer,
   jointAnswer,
   factorAnswer,
+  scoresAnswer,
+  siteFitAnswer,
+  marginsAnswer,
+  qualityAnswer,
 ]);
 
 const identity = { run: z.string().min(1).max(64), ask: count.min(1) };

@@ -1,4 +1,5 @@
 import { z } from 'zod';
+import { LIMITS } from '../limits.js';
 import { count, finite, vector } from './vector.js';
 
 /**
@@ -24,7 +25,7 @@ export const siteFitAnswer = z.strictObject({
       /** Packed curvature of φ at the point. */
       curvature: vector,
       /** Solver columns that the site's rows do not determine; their entries are zero. */
-      undetermined: z.array(count),
+      undetermined: z.array(count).max(LIMITS.coefficientsMost),
       /** Σ w (y − μ)² / V(μ) over the site's rows at the point. */
       pearson: finite,
     })

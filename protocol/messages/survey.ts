@@ -24,13 +24,9 @@ export const allowance = z.strictObject({
   roundsMost: count.nullable(),
 });
 
-export const surveyAnswer = z.strictObject({
-  work: z.literal('survey'),
+/** Counts, moments and sums over some rows of a site. */
+const moments = {
   rowsUsed: count,
-  /** Rows left out because a used column has no value (`missing: drop`). */
-  rowsDropped: count,
-  /** Names of the design columns, intercept not among them, in the order of the vectors below. */
-  columns: z.array(z.string()).max(LIMITS.coefficientsMost),
   /** Per design column, over the rows used: mean, and sum of squares about that mean. Unweighted. */
   mean: vector,
   centredSquares: vector,
@@ -44,6 +40,17 @@ export const surveyAnswer = z.strictObject({
     /** Σ w · loss(y, η at its best for that row alone): turns a loss into a deviance. */
     saturatedLoss: finite,
   }),
+};
+
+export const surveyAnswer = z.strictObject({
+  work: z.literal('survey'),
+  ...moments,
+  /** Rows left out because a used column has no value (`missing: drop`). */
+  rowsDropped: count,
+  /** Names of the design columns, intercept not among them, in the order of the vectors. */
+  columns: z.array(z.string()).max(LIMITS.coefficientsMost),
+  /** The same over the rows in each fold of the specification's cross-validation, in order of their labels. */
+  folds: z.array(z.strictObject({ fold: z.string().min(1).max(200), ...moments })).max(LIMITS.foldsMost),
   allowance,
   /** Plain sentences for the report: what looked odd in this table. */
   notes: z.array(z.string()),

@@ -1,7 +1,7 @@
 import { createHash } from 'node:crypto';
 import { type Checked, fail, succeed } from '../failure.js';
 import { specificationOf } from './parse.js';
-import type { FitSpecification, LossForm, Penalty, Term } from './types.js';
+import type { Choice, FitSpecification, LossForm, Penalty, ReportParts, Term } from './types.js';
 
 /**
  * The canonical form: the fit specification as one line of JSON after RFC 8785, keys sorted by code unit at every depth
@@ -51,6 +51,8 @@ function documentOf(specification: FitSpecification): Record<string, unknown> {
     intercept: specification.intercept,
     terms: specification.terms.map(writtenTermOf),
     penalty: specification.penalties.map(writtenPenaltyOf),
+    choose: specification.choose === null ? undefined : writtenChoiceOf(specification.choose),
+    report: writtenReportOf(specification.report),
     rounds,
     barrier: {
       deadline: `${barrier.deadlineMs}ms`,
@@ -75,11 +77,36 @@ function writtenTermOf(term: Term): Record<string, unknown> {
 
 const writtenPenaltyOf = (penalty: Penalty): Record<string, unknown> => ({
   kind: penalty.kind,
-  lambda: penalty.lambda,
+  lambda: penalty.path ?? penalty.lambda,
   l1: penalty.kind === 'elastic-net' ? penalty.l1 : undefined,
   scaled: penalty.scaled,
   'per-term': penalty.perTerm,
 });
+
+function writtenChoiceOf(choice: Choice): Record<string, unknown> {
+  if (choice.kind === 'criterion') return { criterion: choice.criterion };
+  const { by, rule } = choice;
+  return by.kind === 'hash'
+    ? { folds: by.folds, seed: by.seed, rule }
+    : { folds: { column: by.column }, rule };
+}
+
+/** What is asked, in a fixed order; undefined where nothing is. */
+function writtenReportOf(report: ReportParts): unknown[] | undefined {
+  const { sandwich, profile } = report;
+  const clustered = sandwich === null || sandwich.cluster === null ? null : { cluster: sandwich.cluster };
+  const parts = [
+    report.covariance ? 'covariance' : null,
+    sandwich === null ? null : clustered === null ? 'sandwich' : { sandwich: clustered },
+    report.termTests ? 'term-tests' : null,
+    profile.length === 0 ? null : { profile },
+    report.debiased ? 'debiased' : null,
+    report.margins ? 'margins' : null,
+    report.compareSites ? 'compare-sites' : null,
+    report.fitQuality ? 'fit-quality' : null,
+  ].filter((part) => part !== null);
+  return parts.length === 0 ? undefined : parts;
+}
 
 /** Members without a value are left out. */
 function canonicalJson(value: unknown): string {

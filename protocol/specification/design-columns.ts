@@ -48,17 +48,21 @@ const combinations = (factors: readonly NamedFactor[][]): NamedFactor[][] =>
 
 export interface UsedColumn {
   readonly column: string;
-  readonly role: 'response' | 'exposure' | 'offset' | 'weights' | 'term';
+  readonly role: 'response' | 'exposure' | 'offset' | 'weights' | 'term' | 'fold' | 'cluster';
 }
 
 /** Every column of the table that the specification reads, once for each role it has. */
 export function usedColumns(specification: FitSpecification): UsedColumn[] {
-  const { response, offset, weights, terms } = specification;
+  const { response, offset, weights, terms, choose, report } = specification;
   const used: UsedColumn[] = [{ column: response.column, role: 'response' }];
   if (offset !== null) used.push({ column: offset.column, role: offset.kind });
   if (weights !== null) used.push({ column: weights.column, role: 'weights' });
   const termColumns = terms.flatMap((term) => (term.kind === 'product' ? [] : [term.column]));
   for (const column of new Set(termColumns)) used.push({ column, role: 'term' });
+  if (choose?.kind === 'folds' && choose.by.kind === 'column')
+    used.push({ column: choose.by.column, role: 'fold' });
+  const cluster = report.sandwich?.cluster ?? null;
+  if (cluster !== null) used.push({ column: cluster, role: 'cluster' });
   return used;
 }
 

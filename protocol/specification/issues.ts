@@ -16,6 +16,14 @@ export interface IssueNote {
   readonly known?: readonly string[];
 }
 
+/** Takes a failure found at a field of the document. */
+export type Complain = (
+  path: readonly PropertyKey[],
+  code: FailureCode,
+  message: string,
+  remedy: string,
+) => void;
+
 /** A document against its schema; every failure, in the order of the schema's fields. */
 export function checkDocument<S extends z.ZodType>(schema: S, source: DocumentSource): Parsed<z.output<S>> {
   const result = schema.safeParse(source.value);

@@ -1,9 +1,12 @@
 import type { Failure } from '../failure.js';
-import { failuresOfIssues } from './issues.js';
-import { type Complain, checkRules } from './rules.js';
+import { designColumns } from './design-columns.js';
+import { type Complain, failuresOfIssues } from './issues.js';
+import { checkRules } from './rules.js';
+import { profiledColumns } from './rules-analysis.js';
 import { type FitDocument, fitDocument, type WrittenPenalty } from './schema.js';
+import type { WrittenPart } from './schema-choose.js';
 import { nameTerms } from './terms.js';
-import type { FitSpecification, Penalty, Term } from './types.js';
+import type { FitSpecification, Penalty, ReportParts, Term } from './types.js';
 import { type DocumentSource, type Parsed, placeOf, readYaml } from './yaml-document.js';
 
 /** Reads `NAME.fit.yaml`. `file` is named in failures as given; all that is wrong is reported, in the order of the fields. */
@@ -57,6 +60,8 @@ function specificationFrom(document: FitDocument, terms: readonly Term[]): FitSp
     intercept: document.intercept,
     terms,
     penalties: document.penalty.map(penaltyFrom),
+    choose: document.choose ?? null,
+    report: reportFrom(document.report, terms),
     rounds: { tolerance: rounds.tolerance, most: rounds.most, rung: rounds.rung },
     barrier: {
       deadlineMs: barrier.deadline,
@@ -72,7 +77,8 @@ const L1_OF_KIND = { ridge: 0, lasso: 1, 'elastic-net': 0 } as const;
 
 const penaltyFrom = (written: WrittenPenalty): Penalty => ({
   kind: written.kind,
-  lambda: written.lambda,
+  lambda: Array.isArray(written.lambda) ? written.lambda : [],
+  path: Array.isArray(written.lambda) ? null : written.lambda,
   l1: written.l1 ?? L1_OF_KIND[written.kind],
   scaled: written.scaled,
   // A multiplier of 1 written out is the default.
@@ -80,3 +86,19 @@ const penaltyFrom = (written: WrittenPenalty): Penalty => ({
     Object.entries(written['per-term']).filter(([, multiplier]) => multiplier !== 1),
   ),
 });
+
+function reportFrom(written: readonly WrittenPart[], terms: readonly Term[]): ReportParts {
+  const has = (part: WrittenPart['part']): boolean => written.some((entry) => entry.part === part);
+  const sandwich = written.find((entry) => entry.part === 'sandwich');
+  const names = written.flatMap((entry) => (entry.part === 'profile' ? entry.names : []));
+  return {
+    covariance: has('covariance') || has('sandwich') || has('term-tests'),
+    sandwich: sandwich === undefined ? null : { cluster: sandwich.cluster },
+    termTests: has('term-tests'),
+    profile: names.length === 0 ? [] : profiledColumns(names, terms, designColumns({ terms })),
+    debiased: has('debiased'),
+    margins: has('margins'),
+    compareSites: has('compare-sites'),
+    fitQuality: has('fit-quality'),
+  };
+}

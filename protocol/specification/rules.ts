@@ -1,17 +1,9 @@
-import type { FailureCode } from '../failure.js';
 import { LIMITS } from '../limits.js';
 import { designColumnCount, designColumns } from './design-columns.js';
-import { nearestName } from './nearest.js';
-import type { FitDocument, WrittenPenalty } from './schema.js';
+import type { Complain } from './issues.js';
+import { checkAnalysis, checkNamed, checkPenalties } from './rules-analysis.js';
+import type { FitDocument } from './schema.js';
 import type { Term } from './types.js';
-
-/** Takes a failure found at a field of the document. */
-export type Complain = (
-  path: readonly PropertyKey[],
-  code: FailureCode,
-  message: string,
-  remedy: string,
-) => void;
 
 /** Most coefficients: the wire carries their names in one list. */
 const COEFFICIENTS_MOST = Math.min(LIMITS.coefficientsMost, LIMITS.elementsMost);
@@ -24,8 +16,8 @@ export function checkRules(
 ): void {
   checkOffsets(document, complain);
   checkColumnRoles(document, complain);
-  for (const [index, penalty] of (document.penalty ?? []).entries()) checkMixture(penalty, index, complain);
-  checkLambdaLengths(document.penalty ?? [], complain);
+  checkPenalties(document.penalty ?? [], complain);
+  checkAnalysis(document, complain);
   checkBarrier(document, complain);
   if (terms !== null) checkTerms(document, terms, complain);
 }
@@ -75,33 +67,6 @@ function checkColumnRoles(document: Partial<FitDocument>, complain: Complain): v
   });
 }
 
-function checkMixture(penalty: WrittenPenalty, index: number, complain: Complain): void {
-  const path = ['penalty', index, 'l1'];
-  if (penalty.kind === 'elastic-net' && penalty.l1 === undefined) {
-    const message = 'The field "l1" is missing; allowed: a number from 0 to 1.';
-    complain(path, 'field-missing', message, 'Add l1, the share of the lasso part.');
-  }
-  if (penalty.kind !== 'elastic-net' && penalty.l1 !== undefined) {
-    const message = `Found l1 with the kind ${penalty.kind}; allowed: only with elastic-net.`;
-    complain(path, 'field-conflict', message, 'Remove it, or use the kind elastic-net.');
-  }
-}
-
-function checkLambdaLengths(penalties: readonly WrittenPenalty[], complain: Complain): void {
-  const first = penalties.findIndex((penalty) => penalty.lambda.length > 1);
-  const length = penalties[first]?.lambda.length;
-  penalties.forEach((penalty, index) => {
-    if (penalty.lambda.length === 1 || penalty.lambda.length === length) return;
-    const message = `Found ${penalty.lambda.length} values, where penalty[${first}] has ${length}; allowed: ${length} or one.`;
-    complain(
-      ['penalty', index, 'lambda'],
-      'field-conflict',
-      message,
-      'Give lists of the same length: one fit for each place.',
-    );
-  });
-}
-
 /** A quorum lets answers of the late stand in, which need an age that they may have. */
 function checkBarrier({ barrier, sites }: Partial<FitDocument>, complain: Complain): void {
   if (barrier === undefined) return;
@@ -134,8 +99,11 @@ function checkBarrier({ barrier, sites }: Partial<FitDocument>, complain: Compla
 
 function checkTerms(document: Partial<FitDocument>, terms: readonly Term[], complain: Complain): void {
   const count = designColumnCount(terms);
-  if (count === 0 && document.intercept === 'none') {
-    const message = 'Found no terms and no intercept; allowed: a model with a coefficient.';
+  if (count === 0 && document.intercept !== 'shared') {
+    const message =
+      document.intercept === 'per-site'
+        ? 'Found no terms and an intercept for each site; allowed: a model with a coefficient that sites share.'
+        : 'Found no terms and no intercept; allowed: a model with a coefficient.';
     complain(['terms'], 'field-conflict', message, 'List a term, or use intercept: shared.');
     return;
   }
@@ -151,11 +119,7 @@ function checkTerms(document: Partial<FitDocument>, terms: readonly Term[], comp
     columns.map((column) => column.name),
     complain,
   );
-  checkPerTerm(
-    document.penalty ?? [],
-    [...new Set([...terms, ...columns].map((named) => named.name))],
-    complain,
-  );
+  checkNamed(document, terms, columns, complain);
 }
 
 function checkNames(
@@ -176,24 +140,6 @@ function checkNames(
       told.add(term);
       const message = `Found the coefficient "${name}" a second time (terms[${first}] has it); allowed: each once.`;
       complain(['terms', term], 'field-conflict', message, 'Remove one of the two terms.');
-    }
-  });
-}
-
-function checkPerTerm(
-  penalties: readonly WrittenPenalty[],
-  known: readonly string[],
-  complain: Complain,
-): void {
-  const set = new Set(known);
-  penalties.forEach((penalty, index) => {
-    for (const name of Object.keys(penalty['per-term'])) {
-      if (set.has(name)) continue;
-      const near = nearestName(name, known.slice(0, 2000));
-      const list = known.length > 20 ? `${known.slice(0, 20).join(', ')}, …` : known.join(', ');
-      const message = `Found "${name}", which is no term or coefficient; allowed: ${list}.`;
-      const remedy = near === null ? 'Name a term or a coefficient.' : `Did you mean "${near}"?`;
-      complain(['penalty', index, 'per-term', name], 'field-unknown', message, remedy);
     }
   });
 }

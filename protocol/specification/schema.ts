@@ -16,6 +16,7 @@ import {
   words,
   wordsBuilt,
 } from './fields.js';
+import { choose, report } from './schema-choose.js';
 import { writtenTerm } from './schema-terms.js';
 import type { LossForm } from './types.js';
 
@@ -75,12 +76,23 @@ const loss = chosen((input): z.ZodType<LossForm> => {
     .transform((plain) => ({ kind: plain }));
 });
 
-/** A number, or a list: one fit each. */
-const lambda = chosen((input): z.ZodType<number[]> => {
-  if (isMapping(input) && ('count' in input || 'ratio' in input)) {
-    return notBuilt('Paths of lambda by count and ratio are', 'Write the values of lambda as a list.');
-  }
-  const allowed = 'a number of 0 or more, or a list of 1 to 1000 of them';
+const ratioAllowed = 'a number above 0 and below 1';
+
+const path = mapping({
+  /** Values of λ. Default 30. */
+  count: wholeFrom(2, 1000).default(30),
+  /** The last over the first. Default 1e-3, no unit. */
+  ratio: z
+    .number({ error: ratioAllowed })
+    .gt(0, { error: ratioAllowed })
+    .lt(1, { error: ratioAllowed })
+    .default(1e-3),
+}).transform(({ count, ratio }) => ({ count, ratio }));
+
+/** A number, a list or a path: one fit each. */
+const lambda = chosen((input): z.ZodType<number[] | { count: number; ratio: number }> => {
+  if (isMapping(input)) return path;
+  const allowed = 'a number of 0 or more, a list of 1 to 1000 of them, or a path {count: …, ratio: …}';
   if (!Array.isArray(input))
     return z
       .number({ error: allowed })
@@ -160,16 +172,18 @@ export const fitDocument = mapping({
   offset: oneColumn.optional(),
   /** Used as they are. Default: every weight 1. */
   weights: oneColumn.optional(),
-  /** Default shared: one intercept for all sites, never penalised. */
-  intercept: wordsBuilt(['shared', 'none'], { 'per-site': 'Intercepts of each site are' }).default('shared'),
+  /** Default shared: one intercept for all sites, never penalised. per-site: one for each, which stays there. */
+  intercept: words('shared', 'per-site', 'none').default('shared'),
   terms: z.array(writtenTerm, { error: 'a list of terms' }),
   /** They add up. Default: none. */
   penalty: z.array(penalty, { error: 'a list of penalties' }).default([]),
   constraints: notBuiltField('Constraints on coefficients are'),
-  choose: notBuiltField('Choices of a fit by folds are'),
+  /** How one of the fits is chosen. Default: none is. */
+  choose: choose.optional(),
   rounds: rounds.prefault({}),
   barrier: barrier.prefault({}),
-  report: notBuiltField('Reports of covariances and comparisons are'),
+  /** What is computed beside the coefficients. Default: nothing. */
+  report: report.default([]),
 });
 
 export type FitDocument = z.output<typeof fitDocument>;

@@ -1,5 +1,5 @@
+import type { Complain } from './issues.js';
 import { nearestName } from './nearest.js';
-import type { Complain } from './rules.js';
 import type { WrittenTerm } from './schema-terms.js';
 import type { LevelsTerm, NumericTerm, Term, Transform } from './types.js';
 

@@ -12,10 +12,14 @@ export interface FitSpecification {
   /** Offset of the linear predictor: ln(exposure) or a column as it is. At most one. */
   readonly offset: { readonly kind: 'exposure' | 'offset'; readonly column: string } | null;
   readonly weights: { readonly column: string } | null;
-  readonly intercept: 'shared' | 'none';
+  /** `per-site`: each site has its own, which never leaves it. */
+  readonly intercept: 'shared' | 'per-site' | 'none';
   readonly terms: readonly Term[];
   /** They add up. Empty: no penalty. */
   readonly penalties: readonly Penalty[];
+  /** How one of several fits is chosen; null: none is. */
+  readonly choose: Choice | null;
+  readonly report: ReportParts;
   readonly rounds: { readonly tolerance: number; readonly most: number; readonly rung: RungLimit };
   readonly barrier: {
     readonly deadlineMs: number;
@@ -24,6 +28,30 @@ export interface FitSpecification {
     readonly patienceMs: number;
     readonly missing: 'stop' | 'go-without';
   };
+}
+
+/** By held-out loss over folds of the rows, or by an information criterion of the fits. */
+export type Choice =
+  | { readonly kind: 'folds'; readonly by: Folds; readonly rule: 'minimum' | 'one-standard-error' }
+  | { readonly kind: 'criterion'; readonly criterion: 'aic' | 'bic' | 'extended-bic' };
+
+/** Which rows are held out together: by a seeded hash of the row's number at its site, or by the values of a column. */
+export type Folds =
+  | { readonly kind: 'hash'; readonly folds: number; readonly seed: number }
+  | { readonly kind: 'column'; readonly column: string };
+
+/** What is computed of the chosen, or only, fit beside its coefficients. `sandwich` and `termTests` imply `covariance`. */
+export interface ReportParts {
+  readonly covariance: boolean;
+  /** With sums of scores over the values of a column as well, where one is named. */
+  readonly sandwich: { readonly cluster: string | null } | null;
+  readonly termTests: boolean;
+  /** Coefficients whose profile intervals are asked, in design order. */
+  readonly profile: readonly string[];
+  readonly debiased: boolean;
+  readonly margins: boolean;
+  readonly compareSites: boolean;
+  readonly fitQuality: boolean;
 }
 
 /** A loss with what it needs; Huber's threshold is positive, in units of the response. */
@@ -61,8 +89,10 @@ export interface ProductTerm {
 
 export interface Penalty {
   readonly kind: 'ridge' | 'lasso' | 'elastic-net';
-  /** One fit for each. */
+  /** One fit for each; empty where there is a path. */
   readonly lambda: readonly number[];
+  /** `count` values of λ, log-spaced from the least that zeroes every slope down to `ratio` times it; null: a list. */
+  readonly path: { readonly count: number; readonly ratio: number } | null;
   /** Share of the ℓ₁ part: 0 ridge, 1 lasso. */
   readonly l1: number;
   /** true: penalises b_j · sd_j; false: b_j itself. */
