@@ -66,6 +66,7 @@ const CODES: readonly [ExitCode, readonly FailureCode[]][] = [
       'exposure-not-positive',
       'weight-negative',
       'no-rows',
+      'rows-too-few',
     ],
   ],
   [

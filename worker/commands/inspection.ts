@@ -1,20 +1,15 @@
 import type { Failure } from '../../protocol/failure.js';
 import type { SurveyAnswer } from '../../protocol/messages/survey.js';
-import { numbersOfAnswer } from '../../protocol/numbers.js';
 import { usedColumns } from '../../protocol/specification/design-columns.js';
+import { fitCount } from '../../protocol/specification/fit-count.js';
 import type { FitSpecification, LossForm, Term } from '../../protocol/specification/types.js';
-import {
-  allowanceOf,
-  checkApproval,
-  checkColumns,
-  checkRows,
-  fitCount,
-  type LeaveKind,
-} from '../custody/policy.js';
+import { allowanceOf, checkApproval, checkColumns, checkFolds, checkRows } from '../custody/policy.js';
 import type { Policy, SiteFile } from '../custody/site-file.js';
 import type { RawShard } from '../design/shard.js';
 import { surveyOf } from '../design/survey.js';
 import { lossOf } from '../losses/index.js';
+import { checkWholeSite } from '../service/whole-site.js';
+import { departuresOf, type PossibleDeparture } from './departures.js';
 import type { SpecificationFile } from './documents.js';
 
 /** What one specification would read at one site and what would leave, without a coordinator. */
@@ -54,17 +49,6 @@ export interface DesignSummary {
   readonly sd: number;
 }
 
-/** One kind of answer: what leaves with it, how often, and whether the policy lets it. */
-export interface PossibleDeparture {
-  readonly rung: 'every run' | 'proximal' | 'sketched' | 'curvature' | 'pooled';
-  readonly what: string;
-  readonly numbers: number;
-  readonly times: string;
-  readonly kinds: readonly LeaveKind[];
-  /** Null where it may leave. */
-  readonly kept: string | null;
-}
-
 /** `raw`: the rows as read, the failure that stopped it, or null where the policy kept the table shut. */
 export function inspectionOf(
   site: SiteFile,
@@ -78,10 +62,12 @@ export function inspectionOf(
   const survey = read === null ? null : surveyOf(read, lossOf(spec.loss));
   const refusals = [
     namesSite(spec, site.site),
+    checkWholeSite(spec, site.shard),
     checkColumns(policy, spec),
     checkApproval(policy, digest, approved),
     raw !== null && 'code' in raw ? raw : null,
     read === null ? null : checkRows(policy, read.rowCount),
+    read === null ? null : checkFolds(policy, read.folds),
   ].filter((failure) => failure !== null);
   return {
     title: spec.title,
@@ -128,6 +114,7 @@ function typeOf(spec: FitSpecification, column: string, role: string): string {
     return spec.response.positive === null
       ? 'number'
       : `one of two values, ${spec.response.positive} counts as 1`;
+  if (role === 'fold' || role === 'cluster') return 'any value, as a label';
   if (role !== 'term') return role === 'exposure' ? 'number, log of it' : 'number';
   return spec.terms
     .filter((term) => term.kind !== 'product' && term.column === column)
@@ -164,67 +151,3 @@ const designOf = ({
   rowsUsed,
 }: ReturnType<typeof surveyOf>): DesignSummary[] =>
   columns.map((name, j) => ({ name, mean: mean[j], sd: Math.sqrt(centredSquares[j] / rowsUsed) }));
-
-function departuresOf(
-  spec: FitSpecification,
-  policy: Policy,
-  survey: ReturnType<typeof surveyOf>,
-): PossibleDeparture[] {
-  const p = survey.columns.length + (spec.intercept === 'shared' ? 1 : 0);
-  const matrix = (p * (p + 1)) / 2;
-  const allowance = allowanceOf(policy);
-  const surveyNumbers = numbersOfAnswer({ work: 'survey', ...survey, allowance });
-  const fits = fitCount(spec);
-  const perFit = fits === 1 ? '' : ' and fit';
-  const squaredOnly = spec.loss.kind === 'squared' ? null : 'only for squared loss';
-  const noMatrix = policy.curvatureMost === 0 ? 'policy.curvature-most is 0' : null;
-  const few = policy.curvatureMost !== 'any' && policy.curvatureMost < 2;
-  const lessThanTwo = few ? `policy.curvature-most is ${policy.curvatureMost}` : null;
-  const most = policy.curvatureMost === 'any' ? 'a point' : `${policy.curvatureMost} a fit at most`;
-  const kept = (kinds: readonly LeaveKind[]): string | null => {
-    const missing = kinds.filter((kind) => !policy.leave.includes(kind));
-    return missing.length === 0 ? null : `policy.leave has no ${missing.join(', ')}`;
-  };
-  const row = (
-    rung: PossibleDeparture['rung'],
-    what: string,
-    numbers: number,
-    times: string,
-    kinds: readonly LeaveKind[],
-    other: string | null = null,
-  ): PossibleDeparture => ({ rung, what, numbers, times, kinds, kept: other ?? kept(kinds) });
-  return [
-    row('every run', 'survey: counts, pooled moments', surveyNumbers, 'once', ['counts', 'moments']),
-    row('proximal', 'a proximal point', p + 1, `a round${perFit}`, ['proximal']),
-    row('proximal', 'loss, gradient, curvature diagonal', 2 * p + 1, 'a check', ['gradients']),
-    row(
-      'sketched',
-      'losses, gradients, curvature in 8 directions',
-      (8 + 4) * p + 7,
-      `a round${perFit}`,
-      ['gradients', 'sketches'],
-      noMatrix,
-    ),
-    row(
-      'curvature',
-      'loss, gradient, curvature matrix',
-      2 * p + 1 + matrix,
-      most,
-      ['gradients', 'curvature'],
-      noMatrix,
-    ),
-    ...(spec.barrier.quorum === 'all'
-      ? []
-      : [
-          row(
-            'curvature',
-            'a proximal point, and losses, gradients and curvature matrices at both ends of it',
-            2 * (1 + p + matrix) + p + 1,
-            'where this site is late',
-            ['proximal', 'gradients', 'curvature'],
-            lessThanTwo,
-          ),
-        ]),
-    row('pooled', 'the triangular factor', matrix + p + 1, 'once', ['curvature'], squaredOnly ?? noMatrix),
-  ];
-}

@@ -2,13 +2,19 @@ import { createHash } from 'node:crypto';
 import type { EvaluateWork } from '../../protocol/messages/evaluate.js';
 import type { FactorWork } from '../../protocol/messages/factor.js';
 import type { JointWork } from '../../protocol/messages/joint.js';
+import type { MarginsWork } from '../../protocol/messages/margins.js';
+import type { Part } from '../../protocol/messages/part.js';
+import type { QualityWork } from '../../protocol/messages/quality.js';
 import type { Work } from '../../protocol/messages/round.js';
 import type { Scaling } from '../../protocol/messages/run.js';
+import type { ScoresWork } from '../../protocol/messages/scores.js';
+import type { SiteFitWork } from '../../protocol/messages/site-fit.js';
 import type { SurveyWork } from '../../protocol/messages/survey.js';
 
 /** A proximal problem with the vectors that were left out filled in: all that its answer depends on. */
 export interface FilledProblem {
   readonly problem: number;
+  readonly part: Part;
   readonly center: Float64Array;
   readonly scale: number;
   readonly diagonal: Float64Array;
@@ -20,6 +26,10 @@ export type FilledWork =
   | FactorWork
   | EvaluateWork
   | JointWork
+  | ScoresWork
+  | SiteFitWork
+  | MarginsWork
+  | QualityWork
   | { readonly work: 'proximal'; readonly problems: readonly FilledProblem[] };
 
 /** Anything that hashes plainly: objects by sorted field, float64 bit for bit. */

@@ -32,6 +32,7 @@ export interface CurvatureCount {
 
 /** What the curvature limit of a run is measured by. */
 export interface RunSize {
+  /** As `fitCount` counts them. */
   readonly fits: number;
   /** Solver columns p; null before the scaling is known, when no curvature can leave. */
   readonly columns: number | null;
@@ -59,6 +60,14 @@ export function kindsOfWork(work: Work): LeaveKind[] {
       return ['proximal', 'gradients', 'curvature'];
     case 'factor':
       return ['curvature'];
+    case 'scores':
+      return curvatureMatricesOf(work) > 0 ? ['gradients', 'curvature'] : ['gradients'];
+    case 'site-fit':
+      return ['site-estimates'];
+    case 'margins':
+      return ['gradients'];
+    case 'quality':
+      return ['residual-bins'];
     case 'evaluate': {
       const kinds: LeaveKind[] = ['gradients'];
       if (curvatureMatricesOf(work) > 0) kinds.push('curvature');
@@ -75,7 +84,7 @@ export function curvatureOfWorks(works: readonly Work[]): CurvatureCount {
   const sketched = new Map<number, number>();
   for (const work of works) {
     const matrices = curvatureMatricesOf(work);
-    if (work.work !== 'evaluate' && work.work !== 'joint') {
+    if (!('problem' in work)) {
       all += matrices;
       continue;
     }
@@ -112,10 +121,6 @@ function matricesByProblem(counted: CurvatureCount, columns: number): number[] {
       (counted.problems.get(problem) ?? 0) + Math.ceil((counted.sketched.get(problem) ?? 0) / columns),
   );
 }
-
-/** Fits in one run of this specification: the λ lists of its penalties run in parallel. */
-export const fitCount = (spec: FitSpecification): number =>
-  Math.max(1, ...spec.penalties.map((penalty) => penalty.lambda.length));
 
 /** The part of the policy that the specification alone decides: columns and approval. */
 export function checkSpecification(
@@ -162,6 +167,24 @@ export function checkRows(policy: Policy, rowsUsed: number): Failure | null {
   );
 }
 
+/** Folds with fewer rows than this, where the policy asks for as many rows at all: their moments would show single rows. */
+const FOLD_ROWS_LEAST = 5;
+
+/** `starts`: where the rows of each fold begin, and the end of the last. */
+export function checkFolds(
+  { rowsLeast }: Policy,
+  folds: { readonly labels: readonly string[]; readonly starts: readonly number[] } | null,
+): Failure | null {
+  const least = Math.min(rowsLeast, FOLD_ROWS_LEAST);
+  const small = folds?.labels.findIndex((_, k) => folds.starts[k + 1] - folds.starts[k] < least) ?? -1;
+  if (folds === null || small < 0) return null;
+  return refused(
+    'policy-rows',
+    `Fold ${folds.labels[small]} would hold ${folds.starts[small + 1] - folds.starts[small]} rows here; fewer than ${least} do not leave as moments.`,
+    'Choose with fewer folds, run without this site, or ask the custodian to lower policy.rows-least.',
+  );
+}
+
 /** Whether a new ask may be answered after what has left so far. A repeated ask is not checked: it was counted once. */
 export function checkWorks(
   policy: Policy,
@@ -198,7 +221,10 @@ function checkRounds(policy: Policy, departed: Departed): Failure | null {
   );
 }
 
-/** The limit holds for each fit, and `fits` times for the run, so that made-up problem numbers gain nothing. */
+/**
+ * The limit of a fit times the fits of the run, whatever problem numbers an ask gives: problems about the same rows share
+ * their points in one item, and made-up numbers gain nothing.
+ */
 function checkCurvature(
   policy: Policy,
   before: CurvatureCount,
@@ -208,14 +234,13 @@ function checkCurvature(
   const most = policy.curvatureMost;
   if (most === 'any' || (curvatureTotal(added) === 0 && added.sketched.size === 0)) return null;
   const after = addCurvature(before, added);
-  const matrices = matricesByProblem(after, columns ?? 1);
-  const largest = after.all + Math.max(0, ...matrices);
-  const total = matrices.reduce((sum, one) => sum + one, after.all);
-  if (largest <= most && total <= most * fits) return null;
+  const total = matricesByProblem(after, columns ?? 1).reduce((sum, one) => sum + one, after.all);
+  if (total <= most * fits) return null;
   const counted = after.sketched.size > 0 ? `, ${columns} sketched columns counted as one,` : '';
+  const allowed = fits === 1 ? `${most}` : `${most} a fit, ${most * fits} for the ${fits} fits of this run`;
   return refused(
     'policy-curvature',
-    `With this ask ${largest} curvature matrices of one fit (${total} in the run)${counted} would have left, the policy allows ${most} a fit.`,
+    `With this ask ${total} curvature matrices of this run${counted} would have left, the policy allows ${allowed}.`,
     'Go on with proximal points, or ask the custodian to raise policy.curvature-most.',
   );
 }

@@ -1,18 +1,22 @@
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import { designColumns } from '../../protocol/specification/design-columns.js';
 import type { DesignColumn, FitSpecification } from '../../protocol/specification/types.js';
-import type { Table } from '../source/table.js';
+import type { LevelColumn, Table } from '../source/table.js';
 import { type FactorsByKey, factorValues, fillDesign, levelColumn, valuesOf } from './factors.js';
+import { clustersOf, foldsOf } from './folds.js';
+import { groupedByFold } from './group-rows.js';
 import { factorsOf } from './request.js';
 import { numericColumn, responseOf, sourceRow } from './response.js';
-import type { RawShard } from './shard.js';
+import type { MarginColumns, RawShard } from './shard.js';
 import { VALUE_MOST } from './value-limit.js';
 
 /**
- * The design of one shard: columns as `designColumns` orders them, without intercept, as the specification defines them.
+ * The design of one shard: columns as `designColumns` orders them, without intercept, as the specification defines them;
+ * rows in table order, or fold after fold where there is a cross-validation.
  *
  * Fails with `no-rows`, `value-not-finite` (a transform that is not defined or too large), `level-unknown` (a level that
- * one of two terms on a column does not list), `response-range`, `exposure-not-positive`, `weight-negative`; the rows
+ * one of two terms on a column does not list), `response-range`, `exposure-not-positive`, `weight-negative`,
+ * `rows-too-few` and `field-value` (folds that these rows do not make); the rows
  * named are those of the source.
  */
 export function buildRawShard(spec: FitSpecification, table: Table): Checked<RawShard> {
@@ -31,13 +35,35 @@ export function buildRawShard(spec: FitSpecification, table: Table): Checked<Raw
   fillDesign(x, columns, factors.value, table.rowCount);
   const overflow = tooLarge(x, columns, table);
   if (overflow !== null) return overflow;
-  return succeed({
+  const folds = foldsOf(spec, table);
+  if (!folds.ok) return folds;
+  const clusters = clustersOf(spec, table);
+  const raw: RawShard = {
     rowCount: table.rowCount,
     rowsDropped: table.rowsDropped,
     columns: columns.map((column) => column.name),
     x,
     ...response.value,
-  });
+    folds: null,
+    clusters: clusters === null ? null : { count: clusters.labels.length, ofRow: clusters.ofRow },
+    margins: spec.report.margins ? marginColumns(spec, columns, table) : null,
+  };
+  return succeed(folds.value === null ? raw : groupedByFold(raw, folds.value));
+}
+
+/** The columns of the terms alone. */
+function marginColumns(
+  spec: FitSpecification,
+  columns: readonly DesignColumn[],
+  table: Table,
+): MarginColumns {
+  const numeric = new Map<string, Float64Array>();
+  const levels = new Map<string, LevelColumn>();
+  for (const { kind, column } of factorsOf(spec)) {
+    if (kind === 'numeric') numeric.set(column, numericColumn(table, column));
+    else levels.set(column, levelColumn(table, column));
+  }
+  return { columns, numeric, levels };
 }
 
 /** Values of every factor; a transform that is not finite names its row. */

@@ -57,6 +57,35 @@ export function transformed(values: Float64Array, transform: Transform): Float64
   return values.map((value) => value ** power);
 }
 
+/** Derivative of `transformed` by the value, element by element; not finite where it is not defined. */
+export function transformSlopes(values: Float64Array, transform: Transform): Float64Array {
+  if (transform === 'none') return new Float64Array(values.length).fill(1);
+  if (transform === 'log') return values.map((value) => 1 / value);
+  if (transform === 'sqrt') return values.map((value) => 0.5 / Math.sqrt(value));
+  const { power } = transform;
+  return values.map((value) => power * value ** (power - 1));
+}
+
+/**
+ * Derivative of each design column by the numeric column `name` as it is in the table, rows × columns, row-major: the
+ * product rule over its factors.
+ */
+export function designSlopes(columns: readonly DesignColumn[], name: string, table: Table): Float64Array {
+  const p = columns.length;
+  const out = new Float64Array(table.rowCount * p);
+  columns.forEach(({ name: label, term, factors }, j) => {
+    factors.forEach((factor, at) => {
+      if (factor.kind !== 'numeric' || factor.column !== name) return;
+      const others = { name: label, term, factors: factors.filter((_, other) => other !== at) };
+      const product = new Float64Array(table.rowCount);
+      fillDesign(product, [others], factorValues([others], table), table.rowCount);
+      const slopes = transformSlopes(numericColumn(table, name), factor.transform);
+      for (let row = 0; row < table.rowCount; row++) out[row * p + j] += product[row] * slopes[row];
+    });
+  });
+  return out;
+}
+
 /** Writes the design, rows × columns, row-major: each column the product of its factors. */
 export function fillDesign(
   x: Float64Array,

@@ -1,9 +1,10 @@
+import { usedColumns } from '../../protocol/specification/design-columns.js';
 import type { FitSpecification, LevelsTerm, NumericTerm } from '../../protocol/specification/types.js';
 import type { LevelsRequest, TableRequest } from '../source/table.js';
 
 /**
  * The columns that a specification uses. A logistic response with a positive class named is read as levels, of which
- * the first is the positive one and one other may follow.
+ * the first is the positive one and one other may follow. Folds and clusters are labels, whatever else the column is.
  */
 export function tableRequest(
   spec: FitSpecification,
@@ -27,7 +28,14 @@ export function tableRequest(
       });
     }
   }
-  return { numeric: [...numeric], levels: [...levels.values()], missing: spec.missing, shard };
+  const labels = usedColumns(spec).filter(({ role }) => role === 'fold' || role === 'cluster');
+  return {
+    numeric: [...numeric],
+    levels: [...levels.values()],
+    labels: [...new Set(labels.map((used) => used.column))],
+    missing: spec.missing,
+    shard,
+  };
 }
 
 /** Every numeric and levels term, those inside products among them. */

@@ -1,3 +1,6 @@
+import type { DesignColumn } from '../../protocol/specification/types.js';
+import type { LevelColumn } from '../source/table.js';
+
 /**
  * What the local solvers work on: the shard's rows as solver columns. Pure data, no names.
  *
@@ -25,4 +28,30 @@ export interface RawShard {
   readonly y: Float64Array;
   readonly weights: Float64Array | null;
   readonly offset: Float64Array | null;
+  /** Null without a cross-validation. Rows stand fold after fold, in table order within one. */
+  readonly folds: FoldRanges | null;
+  /** Null where no clusters are named. */
+  readonly clusters: Clusters | null;
+  /** Null where the report of the specification has no margins: then the table's columns are let go. */
+  readonly margins: MarginColumns | null;
+}
+
+/** Fold `labels[k]` has the rows `starts[k]` ≤ r < `starts[k + 1]`. */
+export interface FoldRanges {
+  /** Those with rows here, by code unit. */
+  readonly labels: readonly string[];
+  readonly starts: readonly number[];
+}
+
+/** Clusters are numbered from 0; every one has rows here. */
+export interface Clusters {
+  readonly count: number;
+  readonly ofRow: Int32Array;
+}
+
+/** What the design was made of, row by row as in the shard. */
+export interface MarginColumns {
+  readonly columns: readonly DesignColumn[];
+  readonly numeric: ReadonlyMap<string, Float64Array>;
+  readonly levels: ReadonlyMap<string, LevelColumn>;
 }

@@ -3,29 +3,37 @@ import type { Loss } from '../losses/loss.js';
 import type { RawShard } from './shard.js';
 
 /**
- * What a site brings, over the rows used: unweighted mean and centred sum of squares of each design column, the sums of
- * the response, and remarks. Two passes with the correction of Chan, Golub and LeVeque (1983, Am. Stat. 37:242), whose
+ * What a site brings, over the rows used and over those in each fold: unweighted mean and centred sum of squares of each
+ * design column, the sums of the response; and remarks. Two passes with the correction of Chan, Golub and LeVeque (1983, Am. Stat. 37:242), whose
  * error does not grow with the size of the mean.
  */
 export function surveyOf(raw: RawShard, loss: Loss): Omit<SurveyAnswer, 'work' | 'allowance'> {
-  const { mean, centredSquares, constant } = momentsOf(raw);
+  const { constant, ...moments } = momentsOf(raw, 0, raw.rowCount);
+  const { labels, starts } = raw.folds ?? { labels: [], starts: [] };
   return {
-    rowsUsed: raw.rowCount,
+    ...moments,
     rowsDropped: raw.rowsDropped,
     columns: [...raw.columns],
-    mean,
-    centredSquares,
-    response: responseSums(raw, loss),
+    response: responseSums(raw, loss, 0, raw.rowCount),
+    folds: labels.map((fold, k) => {
+      const [from, to] = [starts[k], starts[k + 1]];
+      const { rowsUsed, mean, centredSquares } = momentsOf(raw, from, to);
+      return { fold, rowsUsed, mean, centredSquares, response: responseSums(raw, loss, from, to) };
+    }),
     notes: notesOf(raw, constant),
   };
 }
 
-function momentsOf({ x, rowCount, columns }: RawShard): {
-  mean: Float64Array;
-  centredSquares: Float64Array;
-  constant: boolean[];
-} {
+/** Over the rows from ≤ r < to, at least one. */
+function momentsOf(
+  raw: RawShard,
+  from: number,
+  to: number,
+): { rowsUsed: number; mean: Float64Array; centredSquares: Float64Array; constant: boolean[] } {
+  const rowCount = to - from;
+  const { columns } = raw;
   const p = columns.length;
+  const x = raw.x.subarray(from * p, to * p);
   const mean = new Float64Array(p);
   for (let at = 0; at < x.length; at += p) for (let j = 0; j < p; j++) mean[j] += x[at + j];
   for (let j = 0; j < p; j++) mean[j] /= rowCount;
@@ -49,17 +57,22 @@ function momentsOf({ x, rowCount, columns }: RawShard): {
     centredSquares[j] = Math.max(0, centredSquares[j] - (rest[j] * rest[j]) / rowCount);
     mean[j] += rest[j] / rowCount;
   }
-  return { mean, centredSquares, constant };
+  return { rowsUsed: rowCount, mean, centredSquares, constant };
 }
 
-function responseSums({ y, weights, offset, rowCount }: RawShard, loss: Loss): SurveyAnswer['response'] {
+function responseSums(
+  { y, weights, offset }: RawShard,
+  loss: Loss,
+  from: number,
+  to: number,
+): SurveyAnswer['response'] {
   let weightSum = 0;
   let weightedSum = 0;
   let exposureSum = 0;
   let saturatedLoss = 0;
-  let least = y[0];
-  let most = y[0];
-  for (let row = 0; row < rowCount; row++) {
+  let least = y[from];
+  let most = y[from];
+  for (let row = from; row < to; row++) {
     const weight = weights?.[row] ?? 1;
     weightSum += weight;
     weightedSum += weight * y[row];
@@ -83,6 +96,8 @@ function notesOf(raw: RawShard, constant: readonly boolean[]): string[] {
   }
   if (raw.y.every((value) => value === raw.y[0])) notes.push('Every row has the same response.');
   if (raw.weights?.every((weight) => weight === 0)) notes.push('Every row has weight zero.');
+  const [only, ...others] = raw.folds?.labels ?? [];
+  if (only !== undefined && others.length === 0) notes.push(`Every row is in fold ${only}.`);
   if (raw.rowsDropped > 0) notes.push(`Rows left out for a missing value: ${raw.rowsDropped}.`);
   return notes;
 }

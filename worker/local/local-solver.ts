@@ -55,12 +55,12 @@ export interface LocalSolver {
   factor(): Checked<Float64Array>;
 }
 
-const PROXIMAL_LIMITS: NewtonLimits = { stepsMost: 200, accuracy: 1e-13 };
-const OWN_FIT_LIMITS: NewtonLimits = { stepsMost: 20, accuracy: 1e-8 };
+export const PROXIMAL_LIMITS: NewtonLimits = { stepsMost: 200, accuracy: 1e-13 };
+export const OWN_FIT_LIMITS: NewtonLimits = { stepsMost: 20, accuracy: 1e-8 };
 /** Rows that all directions of a sketch pass over before the next: they stay in the cache. */
 const SKETCH_BLOCK_ROWS = 64;
 /** Floor of the own-fit metric: share of the largest diagonal curvature, and share of the shard's weight in the rows. */
-const OWN_FIT_FLOOR = 1e-3;
+export const OWN_FIT_FLOOR = 1e-3;
 
 export function localSolver(shard: Shard, loss: Loss): LocalSolver {
   const squares: Quadratic | null = loss.quadratic ? quadratic(shard) : null;
@@ -88,13 +88,13 @@ export function localSolver(shard: Shard, loss: Loss): LocalSolver {
   };
 }
 
-function lastOf<T>(steps: Generator<void, T>): T {
+export function lastOf<T>(steps: Generator<void, T>): T {
   let turn = steps.next();
   while (!turn.done) turn = steps.next();
   return turn.value;
 }
 
-function finished(end: Checked<NewtonEnd>): Checked<{ point: Float64Array; newtonSteps: number }> {
+export function finished(end: Checked<NewtonEnd>): Checked<{ point: Float64Array; newtonSteps: number }> {
   if (!end.ok) return end;
   const { point, newtonSteps, converged } = end.value;
   if (!converged) {
@@ -112,6 +112,8 @@ function ownFit(
   hold: number,
 ): Checked<{ curvature: Float64Array; linear: Float64Array }> {
   const { p, rowCount, x } = shard;
+  if (rowCount === 0)
+    return succeed({ curvature: new Float64Array((p * (p + 1)) / 2), linear: new Float64Array(p) });
   const there = evaluate(shard, loss, null, point, 'diagonal');
   if (!there.ok) return there;
   const diagonal = there.value.diagonal ?? new Float64Array(p);
@@ -134,7 +136,7 @@ function ownFit(
     : notFinite('The quadratic at the own fit');
 }
 
-function sketch(
+export function sketch(
   shard: Shard,
   loss: Loss,
   point: Float64Array,
@@ -170,7 +172,7 @@ function quadraticOwnFit(
     : notFinite('The curvature');
 }
 
-function factor(shard: Shard): Checked<Float64Array> {
+export function factor(shard: Shard): Checked<Float64Array> {
   const { p, rowCount, x } = shard;
   const columns = p + 1;
   const accumulator = factorAccumulator(columns);

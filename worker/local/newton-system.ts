@@ -26,7 +26,7 @@ export interface NewtonSystem {
 }
 
 export const newtonSystem = (shard: Shard, metric: Float64Array, center: Float64Array): NewtonSystem =>
-  inRowSpace(shard) ? rowSpaceSystem(shard, metric, center) : denseSystem(shard, metric);
+  inRowSpace(shard, metric) ? rowSpaceSystem(shard, metric, center) : denseSystem(shard, metric);
 
 /** Share of the largest diagonal entry added where the matrix does not factor; the direction stays one of descent. */
 const LIFT = 1e-12;

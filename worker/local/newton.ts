@@ -1,4 +1,4 @@
-import { dot, maxAbs, plusScaled } from '../../numerics/vector.js';
+import { dot, maxAbs, plusScaled, subtract } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
@@ -24,6 +24,8 @@ export interface NewtonLimits {
 export interface NewtonEnd {
   readonly point: Float64Array;
   readonly newtonSteps: number;
+  /** The step that ended there; where the limit came first, all the way from the start. */
+  readonly lastStep: Float64Array;
   /** False where the step limit came first. */
   readonly converged: boolean;
 }
@@ -74,7 +76,8 @@ export function newtonProximal(problem: ProximalProblem, limits: NewtonLimits): 
     const last =
       Math.abs(decrement) <= target * iterate.magnitude || (!direction.kept && isRounding(step, iterate.x));
     if (last) {
-      return succeed({ point: plusScaled(iterate.x, 1, step), newtonSteps: steps + 1, converged: true });
+      const point = plusScaled(iterate.x, 1, step);
+      return succeed({ point, newtonSteps: steps + 1, lastStep: step, converged: true });
     }
     const found = decrement > 0 ? search(problem, iterate, direction, rows) : null;
     if (found === null && !direction.kept) return stalled(steps);
@@ -82,7 +85,12 @@ export function newtonProximal(problem: ProximalProblem, limits: NewtonLimits): 
     // a kept factor that gave no descent: back to the point itself, where the next turn makes a new factor
     iterate = found?.iterate ?? iterateAt(problem, iterate.x, rows);
   }
-  return succeed({ point: iterate.x, newtonSteps: limits.stepsMost, converged: false });
+  return succeed({
+    point: iterate.x,
+    newtonSteps: limits.stepsMost,
+    lastStep: subtract(iterate.x, problem.start),
+    converged: false,
+  });
 }
 
 /**

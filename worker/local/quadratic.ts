@@ -29,7 +29,9 @@ export function quadratic(shard: Shard): Quadratic {
     linearKept ??= linearPart(shard);
     return linearKept;
   };
-  const solve = inRowSpace(shard) ? rowSpaceSolve(shard) : denseSolve(shard, gram, linear);
+  const rowSpace = rowSpaceSolve(shard);
+  const dense = denseSolve(shard, gram, linear);
+  const solve: Solve = (center, metric) => (inRowSpace(shard, metric) ? rowSpace : dense)(center, metric);
   const proximalPoint = (center: Float64Array, metric: Float64Array): Checked<Float64Array> => {
     const point = solve(center, metric);
     if (point === null) return notPositiveDefinite('Curvature of the squared loss plus metric');

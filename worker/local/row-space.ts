@@ -3,8 +3,12 @@ import { weightedGram } from '../../numerics/gram.js';
 import { transposed } from '../../numerics/rows.js';
 import type { Shard } from '../design/shard.js';
 
-/** Fewer rows than half the columns: n × n systems are cheaper than p × p ones. */
-export const inRowSpace = (shard: Shard): boolean => 2 * shard.rowCount < shard.p;
+/**
+ * Fewer rows than half the columns: n × n systems are cheaper than p × p ones. They divide by the metric, which must hold
+ * every column.
+ */
+export const inRowSpace = (shard: Shard, metric: Float64Array): boolean =>
+  2 * shard.rowCount < shard.p && metric.every((held) => held > 0);
 
 /** K = X M⁻¹ Xᵀ, n × n, M = diag(metric). */
 export function rowKernel(shard: Shard, metric: Float64Array): Float64Array {

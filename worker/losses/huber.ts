@@ -14,5 +14,8 @@ export const huber = (threshold: number): Loss => ({
   slope: (y, eta) => Math.min(Math.max(eta - y, -threshold), threshold),
   curvature: (y, eta) => (Math.abs(y - eta) <= threshold ? 1 : 0),
   mean: (eta) => eta,
+  meanSlope: () => 1,
+  meanBend: () => 0,
+  variance: () => 1,
   saturated: () => 0,
 });

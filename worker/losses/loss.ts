@@ -13,6 +13,11 @@ export interface Loss {
   curvature(y: number, eta: number): number;
   /** The mean response at η: the inverse link. */
   mean(eta: number): number;
+  /** First and second derivative of the mean by η. */
+  meanSlope(eta: number): number;
+  meanBend(eta: number): number;
+  /** Variance of a response with this mean, up to the dispersion (McCullagh and Nelder 1989, §2.2). */
+  variance(mean: number): number;
   /** The value at the η that is best for this row alone (a limit where it is not attained). */
   saturated(y: number): number;
 }

@@ -17,5 +17,8 @@ export const poisson: Loss = {
   slope: (y, eta) => cappedExp(eta) - y,
   curvature: (_y, eta) => cappedExp(eta),
   mean: cappedExp,
+  meanSlope: cappedExp,
+  meanBend: cappedExp,
+  variance: (mean) => mean,
   saturated: (y) => (y > 0 ? y - y * Math.log(y) : 0),
 };

@@ -8,5 +8,8 @@ export const squared: Loss = {
   slope: (y, eta) => eta - y,
   curvature: () => 1,
   mean: (eta) => eta,
+  meanSlope: () => 1,
+  meanBend: () => 0,
+  variance: () => 1,
   saturated: () => 0,
 };

@@ -1,19 +1,20 @@
-import { checkAsk } from '../../protocol/check-answer.js';
+import { checkAsk } from '../../protocol/check-ask.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Answer, Ask } from '../../protocol/messages/round.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
+import { fitCount } from '../../protocol/specification/fit-count.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import { contentDigest, type FilledWork } from '../custody/content.js';
 import type { Departure, Ledger } from '../custody/ledger.js';
 import {
   allowanceOf,
+  checkFolds,
   checkNumbers,
   checkRows,
   checkSpecification,
   checkWorks,
   curvatureOfWorks,
   curvatureTotal,
-  fitCount,
   kindsOfWork,
   type RunSize,
 } from '../custody/policy.js';
@@ -24,8 +25,9 @@ import type { Table, TableRequest } from '../source/table.js';
 import { workInWords } from './ask-words.js';
 import { computeWorks } from './compute.js';
 import type { WorkerEvent } from './events.js';
-import { type LiveRun, type RawShards, solverColumns, solverOf, specificationOf } from './live-run.js';
+import { type LiveRun, type RawShards, solverColumns, solversOf, specificationOf } from './live-run.js';
 import { fillWorks, rememberAsked } from './memory.js';
+import { checkWholeSite } from './whole-site.js';
 
 /** Everything a worker's answers need from outside. */
 export interface AnswerMeans {
@@ -85,6 +87,8 @@ export class AnswerMaker {
     const { sites } = spec.value;
     if (!('least' in sites) && !sites.includes(site))
       return fail('site-unknown', `The specification does not name site ${site}.`);
+    const partial = checkWholeSite(spec.value, this.#means.shard);
+    if (partial !== null) return { ok: false, failure: partial };
     const approved = await this.#means.approved();
     if (!approved.ok) return approved;
     const refused = checkSpecification(policy, spec.value, digest, approved.value);
@@ -122,17 +126,17 @@ export class AnswerMaker {
   async #compute({ ask, live, spec, works, wanted }: Piece): Promise<Checked<Answer> | null> {
     const raw = await this.#rows(ask.run, spec);
     if (!raw.ok) return raw;
-    const solver = solverOf(live, spec, raw.value);
-    if (!solver.ok) return solver;
-    const computed = await computeWorks(works, {
+    const solvers = solversOf(live, spec, raw.value);
+    if (!solvers.ok) return solvers;
+    const means = {
       raw: raw.value,
       loss: lossOf(spec.loss),
-      solver: solver.value,
+      solvers: solvers.value,
       allowance: allowanceOf(this.#means.policy),
-      breathe: async () => {
-        await this.#means.pause();
-        return live.ended || !wanted() ? 'stop' : 'go-on';
-      },
+    };
+    const computed = await computeWorks(works, means, async () => {
+      await this.#means.pause();
+      return live.ended || !wanted() ? 'stop' : 'go-on';
     });
     if (computed === null)
       return live.ended ? fail('run-cancelled', 'The run ended while its ask was being answered.') : null;
@@ -151,7 +155,8 @@ export class AnswerMaker {
       const tookMs = this.#means.nowMs() - started;
       this.#means.onEvent({ event: 'table', run, rowsUsed, rowsDropped, columns: columns.length, tookMs });
     }
-    const refused = checkRows(this.#means.policy, raw.rowCount);
+    const { policy } = this.#means;
+    const refused = checkRows(policy, raw.rowCount) ?? checkFolds(policy, raw.folds);
     return refused === null ? succeed(raw) : { ok: false, failure: refused };
   }
 

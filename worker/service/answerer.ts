@@ -161,7 +161,7 @@ class OrderedAnswerer implements Answerer {
       before.specification === message.specification
     ) {
       if (!sameScaling(before.scaling, message.scaling)) {
-        live.solver = null;
+        live.solvers = null;
         live.last = null;
         live.memory.clear();
       }
@@ -174,7 +174,7 @@ class OrderedAnswerer implements Answerer {
       message,
       memory: new VectorMemory(this.#bounds.memoryNumbersMost),
       specification: null,
-      solver: null,
+      solvers: null,
       last: null,
       announced: false,
       ended: false,

@@ -9,7 +9,15 @@ export function workInWords(work: Work): string {
     case 'survey':
       return 'the survey';
     case 'factor':
-      return 'the triangular factor';
+      return several(Math.max(1, work.folds.length), 'the triangular factor', 'triangular factors');
+    case 'scores':
+      return work.meat || work.clustered ? 'scores and sums of their products' : 'scores';
+    case 'site-fit':
+      return 'its own fit, with its curvature';
+    case 'margins':
+      return several(work.settings.length, 'a mean prediction', 'mean predictions');
+    case 'quality':
+      return 'binned responses, sums of residuals and leverages';
     case 'proximal':
       return several(work.problems.length, 'a proximal point', 'proximal points');
     case 'joint':

@@ -6,7 +6,12 @@ import type { Allowance } from '../../protocol/messages/survey.js';
 import type { FilledProblem, FilledWork } from '../custody/content.js';
 import type { RawShard } from '../design/shard.js';
 import { surveyOf } from '../design/survey.js';
-import type { LocalSolver } from '../local/local-solver.js';
+import { margins } from '../local/margins.js';
+import type { PartSolvers } from '../local/part-solvers.js';
+import { quality } from '../local/quality.js';
+import { scores } from '../local/scores.js';
+import { siteFit } from '../local/site-fit.js';
+import type { SiteSolvers } from '../local/site-solvers.js';
 import type { Loss } from '../losses/loss.js';
 
 /** What one ask is computed with. */
@@ -14,74 +19,89 @@ export interface Means {
   readonly raw: RawShard;
   readonly loss: Loss;
   /** Null until the scaling is known. */
-  readonly solver: LocalSolver | null;
+  readonly solvers: SiteSolvers | null;
   readonly allowance: Allowance;
-  /** Lets other events in between two pieces of work; says `stop` when the answer is not wanted any more. */
-  readonly breathe: () => Promise<'go-on' | 'stop'>;
 }
 
-/** Null: told to stop on the way. */
-type Computed<T> = Checked<T> | null;
+/** Lets other events in between two pieces of work; says `stop` when the answer is not wanted any more. */
+export type Breathe = () => Promise<'go-on' | 'stop'>;
+
+/** An answer in the making: yields between two pieces of work. */
+type Steps = Generator<void, Checked<WorkAnswer>>;
 
 /** Answers of all work items in order, or the first failure; null where `breathe` said `stop`. */
 export async function computeWorks(
   works: readonly FilledWork[],
   means: Means,
-): Promise<Computed<WorkAnswer[]>> {
+  breathe: Breathe,
+): Promise<Checked<WorkAnswer[]> | null> {
   const answers: WorkAnswer[] = [];
   for (const work of works) {
-    if ((await means.breathe()) === 'stop') return null;
-    const answer = await computeWork(work, means);
-    if (answer === null || !answer.ok) return answer;
-    answers.push(answer.value);
+    const steps = answerSteps(work, means);
+    for (;;) {
+      if ((await breathe()) === 'stop') return null;
+      const step = steps.next();
+      if (!step.done) continue;
+      if (!step.value.ok) return step.value;
+      answers.push(step.value.value);
+      break;
+    }
   }
   return succeed(answers);
 }
 
-async function computeWork(work: FilledWork, means: Means): Promise<Computed<WorkAnswer>> {
-  if (work.work === 'survey')
-    return succeed({ work: 'survey', ...surveyOf(means.raw, means.loss), allowance: means.allowance });
-  const { solver } = means;
-  if (solver === null) return fail('dimension-wrong', 'The scaling of the run is not known yet.');
-  if (work.work === 'proximal') return proximal(work.problems, solver, means);
-  if (work.work === 'evaluate') return evaluate(work, solver, means);
-  if (work.work === 'joint') return joint(work, solver, means);
-  const factor = solver.factor();
-  return factor.ok ? succeed({ work: 'factor', factor: factor.value }) : factor;
+/** The answer to one work item, piece by piece. */
+export function* answerSteps(work: FilledWork, { raw, loss, solvers, allowance }: Means): Steps {
+  if (work.work === 'survey') return succeed({ work: 'survey', ...surveyOf(raw, loss), allowance });
+  if (solvers === null) return fail('dimension-wrong', 'The scaling of the run is not known yet.');
+  const { parts, scaling } = solvers;
+  switch (work.work) {
+    case 'proximal':
+      return yield* proximal(work.problems, parts);
+    case 'evaluate':
+      return yield* evaluate(work, parts);
+    case 'joint':
+      return yield* joint(work, parts);
+    case 'factor': {
+      const factors = parts.factors(work.folds);
+      return factors.ok ? succeed({ work: 'factor', factors: factors.value }) : factors;
+    }
+    case 'scores':
+      return scores(parts, raw.clusters, work);
+    case 'site-fit':
+      return siteFit(parts, work);
+    case 'margins':
+      return yield* margins(parts, raw.margins, scaling, work);
+    case 'quality':
+      return quality(parts, work);
+  }
 }
 
-async function proximal(
-  asked: readonly FilledProblem[],
-  solver: LocalSolver,
-  means: Means,
-): Promise<Computed<WorkAnswer>> {
+function* proximal(asked: readonly FilledProblem[], parts: PartSolvers): Steps {
   const problems = [];
-  for (const { problem, center, scale, diagonal, start } of asked) {
-    if (problems.length > 0 && (await means.breathe()) === 'stop') return null;
-    const solved = solver.proximal(center, scale, diagonal, start);
+  for (const { problem, part, center, scale, diagonal, start } of asked) {
+    if (problems.length > 0) yield;
+    const solved = parts.solver(part).proximal(center, scale, diagonal, start);
     if (!solved.ok) return solved;
     problems.push({ problem, ...solved.value });
   }
   return succeed({ work: 'proximal', problems });
 }
 
-async function evaluate(
-  work: EvaluateWork,
-  solver: LocalSolver,
-  means: Means,
-): Promise<Computed<WorkAnswer>> {
+function* evaluate(work: EvaluateWork, parts: PartSolvers): Steps {
+  const solver = parts.solver(work.part);
   const points = [];
   for (const { point, want } of work.points) {
-    if (points.length > 0 && (await means.breathe()) === 'stop') return null;
+    if (points.length > 0) yield;
     const evaluated = solver.evaluate(point, want);
     if (!evaluated.ok) return evaluated;
     points.push(evaluated.value);
   }
   const { problem, ownFit, sketch } = work;
-  if (ownFit !== null && (await means.breathe()) === 'stop') return null;
+  if (ownFit !== null) yield;
   const own = ownFit === null ? succeed(null) : solver.ownFit(work.points[ownFit.at].point, ownFit.hold);
   if (!own.ok) return own;
-  if (sketch !== null && (await means.breathe()) === 'stop') return null;
+  if (sketch !== null) yield;
   const products =
     sketch === null
       ? succeed(null)
@@ -90,13 +110,7 @@ async function evaluate(
   return succeed({ work: 'evaluate', problem, points, ownFit: own.value, sketch: products.value });
 }
 
-async function joint(work: JointWork, solver: LocalSolver, means: Means): Promise<Computed<WorkAnswer>> {
-  const { problem, start, curvature, linear, l1, l2 } = work;
-  const steps = solver.jointSteps(start, { curvature, linear }, l1, l2);
-  let turn = steps.next();
-  while (!turn.done) {
-    if ((await means.breathe()) === 'stop') return null;
-    turn = steps.next();
-  }
-  return turn.value.ok ? succeed({ work: 'joint', problem, ...turn.value.value }) : turn.value;
+function* joint({ problem, start, curvature, linear, l1, l2 }: JointWork, parts: PartSolvers): Steps {
+  const end = yield* parts.solver(null).jointSteps(start, { curvature, linear }, l1, l2);
+  return end.ok ? succeed({ work: 'joint', problem, ...end.value }) : end;
 }

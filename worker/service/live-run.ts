@@ -5,10 +5,8 @@ import { digestOf, readCanonical } from '../../protocol/specification/canonical.
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import { buildRawShard } from '../design/build.js';
 import { tableRequest } from '../design/request.js';
-import { scaleShard } from '../design/scale.js';
 import type { RawShard } from '../design/shard.js';
-import { type LocalSolver, localSolver } from '../local/local-solver.js';
-import { lossOf } from '../losses/index.js';
+import { type SiteSolvers, siteSolvers } from '../local/site-solvers.js';
 import type { Table, TableRequest } from '../source/table.js';
 import type { VectorMemory } from './memory.js';
 
@@ -17,7 +15,7 @@ export interface LiveRun {
   message: Prepare;
   readonly memory: VectorMemory;
   specification: FitSpecification | null;
-  solver: LocalSolver | null;
+  solvers: SiteSolvers | null;
   /** The newest answer, so that a repeated ask costs nothing. */
   last: { readonly content: string; readonly answer: Answer } | null;
   announced: boolean;
@@ -61,14 +59,14 @@ export const sameScaling = (a: Scaling | null, b: Scaling | null): boolean =>
 const sameNumbers = (a: ArrayLike<number>, b: ArrayLike<number>): boolean =>
   a.length === b.length && Array.from(a).every((value, at) => Object.is(value, b[at]));
 
-/** The run's local solver, built when first needed. */
-export function solverOf(run: LiveRun, spec: FitSpecification, raw: RawShard): Checked<LocalSolver | null> {
+/** The run's local solvers, built when first needed. */
+export function solversOf(run: LiveRun, spec: FitSpecification, raw: RawShard): Checked<SiteSolvers | null> {
   const { scaling } = run.message;
-  if (run.solver !== null || scaling === null) return succeed(run.solver);
+  if (run.solvers !== null || scaling === null) return succeed(run.solvers);
   const fits = checkScaling(scaling, raw.columns.length);
   if (!fits.ok) return fits;
-  run.solver = localSolver(scaleShard(raw, scaling, spec.intercept === 'shared'), lossOf(spec.loss));
-  return succeed(run.solver);
+  run.solvers = siteSolvers(spec, raw, scaling);
+  return succeed(run.solvers);
 }
 
 type Shard = { readonly index: number; readonly of: number };
@@ -93,8 +91,10 @@ export class RawShards {
     spec: FitSpecification,
   ): Promise<Checked<{ readonly raw: RawShard; readonly fresh: boolean }>> {
     const request = tableRequest(spec, this.#shard);
-    const { response, offset, weights, terms, loss } = spec;
-    const key = JSON.stringify([request, response, offset, weights, terms, loss]);
+    const { response, offset, weights, terms, loss, choose, report } = spec;
+    const folds = choose?.kind === 'folds' ? choose.by : null;
+    const beside = [folds, report.sandwich, report.margins];
+    const key = JSON.stringify([request, response, offset, weights, terms, loss, beside]);
     const kept = this.#shards.get(key);
     if (kept !== undefined) {
       kept.runs.add(run);

@@ -90,10 +90,10 @@ export function fillWorks(ask: Ask, memory: VectorMemory): Checked<FilledWork[]>
 }
 
 function fillProblem(asked: ProximalProblem, memory: VectorMemory): FilledProblem | null {
-  const { problem, center, scale } = asked;
+  const { problem, part, center, scale } = asked;
   const diagonal = asked.diagonal ?? memory.recall('diagonal', problem, asked.diagonalAsk);
   const start = asked.start ?? memory.recall('point', problem, asked.startAsk);
-  return diagonal === null || start === null ? null : { problem, center, scale, diagonal, start };
+  return diagonal === null || start === null ? null : { problem, part, center, scale, diagonal, start };
 }
 
 /**

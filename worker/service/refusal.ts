@@ -19,6 +19,7 @@ const OUTSIDE: Partial<Record<FailureCode, string>> = {
   'exposure-not-positive': 'The exposure is not positive in every row.',
   'weight-negative': 'A weight is negative.',
   'no-rows': 'No row is left after those with missing values are dropped.',
+  'rows-too-few': 'The site has fewer usable rows than the cross-validation has folds.',
   'policy-rows': 'The site has fewer usable rows than its policy asks for.',
   'ledger-broken': 'The site cannot write to its ledger.',
   'state-unwritable': 'The site cannot write to its ledger.',

@@ -48,5 +48,23 @@ export function levelsSql(column: RelationColumn, levels: readonly string[], enu
 export const createEnumSql = (enumName: string, levels: readonly string[]): string =>
   `create type ${enumName} as enum (${levels.map(sqlText).join(', ')})`;
 
+/**
+ * The value as a label, null where missing: text as it is, but numbers by value, so that 1, 1.0 and 01 are one label. Numbers
+ * that doubles do not tell apart stay text.
+ */
+export function labelSql(column: RelationColumn): string {
+  const number = doubleSql(column);
+  const text = textSql(column);
+  return `case when abs(${number}) <= ${Number.MAX_SAFE_INTEGER} then cast(${number} + 0.0 as varchar) else ${text} end`;
+}
+
+/** Makes the ENUM type of all labels of a column; their order is that of the type's codes. */
+export const createLabelEnumSql = (enumName: string, column: RelationColumn, from: string): string =>
+  `create type ${enumName} as enum (select distinct label from (select ${labelSql(column)} as label from ${from}) where label is not null)`;
+
+/** Code of the label as a double, or `MARK.levelMissing`. */
+export const labelCodeSql = (column: RelationColumn, enumName: string): string =>
+  `coalesce(enum_code(try_cast(${labelSql(column)} as ${enumName}))::double, ${MARK.levelMissing}::double)`;
+
 const isNumberText = (text: string): boolean =>
   /^[+-]?(\d+\.?\d*|\.\d+)(e[+-]?\d+)?$/i.test(text) && Number.isFinite(Number(text));

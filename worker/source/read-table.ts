@@ -1,10 +1,17 @@
 import { stat } from 'node:fs/promises';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
-import { createEnumSql, levelsSql, numericSql, textSql } from './column-sql.js';
+import {
+  createEnumSql,
+  createLabelEnumSql,
+  labelCodeSql,
+  levelsSql,
+  numericSql,
+  textSql,
+} from './column-sql.js';
 import { diagnose } from './diagnose.js';
 import { type Engine, openEngine, textRows } from './duckdb.js';
 import { inFolder } from './in-folder.js';
-import { jsonNames, missingColumn, openRelation, type Relation } from './relation.js';
+import { jsonNames, missingColumn, openRelation, type Relation, type RelationColumn } from './relation.js';
 import { type Scan, type ScanColumn, scanRelation } from './scan.js';
 import type { LevelColumn, LevelsRequest, Table, TableRequest, TableSource } from './table.js';
 
@@ -46,13 +53,17 @@ const isFolder = (path: string): Promise<boolean> =>
   );
 
 async function readWith(engine: Engine, source: TableSource, request: TableRequest): Promise<Checked<Table>> {
-  const used = [...new Set([...request.numeric, ...request.levels.map((levels) => levels.column)])];
+  const labels = request.labels ?? [];
+  const used = [...new Set([...request.numeric, ...request.levels.map(({ column }) => column), ...labels])];
   const relation = await openRelation(engine, source, used);
   if (!relation.ok) return relation;
   const absent = missingColumn([...relation.value.columns.keys()], used, relation.value.where);
   if (absent !== null) return absent;
   const permitted = await permittedLevels(engine, relation.value, request.levels);
   if (!permitted.ok) return permitted;
+
+  const labelled = await labelsOf(engine, relation.value, labels);
+  if (!labelled.ok) return labelled;
 
   const columns = scanColumns(relation.value, request, permitted.value);
   const scan = await scanRelation(engine, relation.value, columns, request);
@@ -70,7 +81,9 @@ async function readWith(engine: Engine, source: TableSource, request: TableReque
   if (found.found !== null) {
     const position = found.column - request.numeric.length;
     const levels =
-      position < 0 ? null : { request: request.levels[position], permitted: permitted.value[position] };
+      position < 0 || position >= request.levels.length
+        ? null
+        : { request: request.levels[position], permitted: permitted.value[position] };
     return {
       ok: false,
       failure: await diagnose(engine, relation.value, columns[found.column], found, levels),
@@ -81,7 +94,7 @@ async function readWith(engine: Engine, source: TableSource, request: TableReque
       where: relation.value.where,
       remedy: 'Check that the table entry of the site file names the right table.',
     });
-  return succeed(tableOf(found, request, permitted.value));
+  return succeed(tableOf(found, request, permitted.value, labelled.value));
 }
 
 /** The levels of each request in code order: those asked for and, where one more is admitted, the first other value. */
@@ -113,8 +126,7 @@ async function firstOther(
 ): Promise<Checked<string | null>> {
   const created = await textRows(engine, createEnumSql(asked, request.levels), relation.where);
   if (!created.ok) return created;
-  const column = relation.columns.get(request.column);
-  if (column === undefined) throw new Error(`the relation has no column ${request.column}`);
+  const column = columnOf(relation, request.column);
   const rows = await textRows(
     engine,
     `select ${textSql(column)} from ${relation.from} where ${levelsSql(column, request.levels, asked)} = -1 limit 1`,
@@ -123,41 +135,86 @@ async function firstOther(
   return rows.ok ? succeed(rows.value[0]?.[0] ?? null) : rows;
 }
 
+/** Every label of each column, in the order of the codes of its type. */
+async function labelsOf(
+  engine: Engine,
+  relation: Relation,
+  names: readonly string[],
+): Promise<Checked<string[][]>> {
+  const found: string[][] = [];
+  for (const [position, name] of names.entries()) {
+    const column = columnOf(relation, name);
+    const type = labelEnumName(position);
+    const created = await textRows(engine, createLabelEnumSql(type, column, relation.from), relation.where);
+    if (!created.ok) return created;
+    const listed = await textRows(
+      engine,
+      `select unnest(enum_range(null::${type}))::varchar`,
+      relation.where,
+    );
+    if (!listed.ok) return listed;
+    found.push(listed.value.map(([label]) => labelText(label ?? '')));
+  }
+  return succeed(found);
+}
+
+/** A number is spelled as JavaScript spells it: 1, not 1.0. */
+const labelText = (label: string): string =>
+  label.trim() !== '' && Math.abs(Number(label)) <= Number.MAX_SAFE_INTEGER ? String(Number(label)) : label;
+
+function columnOf(relation: Relation, name: string): RelationColumn {
+  const column = relation.columns.get(name);
+  if (column === undefined) throw new Error(`the relation has no column ${name}`);
+  return column;
+}
+
+const labelEnumName = (position: number): string => `labels${position}`;
+
 const enumName = (position: number): string => `levels${position}`;
 
-/** Numeric columns first, then level columns, in the order of the request. */
+/** Numeric columns first, then columns of levels and of labels, in the order of the request. */
 function scanColumns(
   relation: Relation,
   request: TableRequest,
   permitted: readonly (readonly string[])[],
 ): ScanColumn[] {
-  const columnOf = (name: string) => {
-    const column = relation.columns.get(name);
-    if (column === undefined) throw new Error(`the relation has no column ${name}`);
-    return column;
-  };
   return [
     ...request.numeric.map(
-      (name): ScanColumn => ({ name, kind: 'numeric', sql: numericSql(columnOf(name)) }),
+      (name): ScanColumn => ({ name, kind: 'numeric', sql: numericSql(columnOf(relation, name)) }),
     ),
     ...request.levels.map(
       ({ column }, position): ScanColumn => ({
         name: column,
         kind: 'levels',
-        sql: levelsSql(columnOf(column), permitted[position], enumName(position)),
+        sql: levelsSql(columnOf(relation, column), permitted[position], enumName(position)),
+      }),
+    ),
+    ...(request.labels ?? []).map(
+      (name, position): ScanColumn => ({
+        name,
+        kind: 'levels',
+        sql: labelCodeSql(columnOf(relation, name), labelEnumName(position)),
       }),
     ),
   ];
 }
 
-function tableOf(scan: Scan, request: TableRequest, permitted: readonly (readonly string[])[]): Table {
+function tableOf(
+  scan: Scan,
+  request: TableRequest,
+  permitted: readonly (readonly string[])[],
+  labelled: readonly (readonly string[])[],
+): Table {
   const numeric = new Map<string, Float64Array>();
   const levels = new Map<string, LevelColumn>();
+  const labels = new Map<string, LevelColumn>();
   scan.values.forEach((values, position) => {
     if (values instanceof Float64Array) numeric.set(request.numeric[position], values);
     else {
       const place = position - request.numeric.length;
-      levels.set(request.levels[place].column, { levels: permitted[place], codes: values });
+      const beyond = place - request.levels.length;
+      if (beyond < 0) levels.set(request.levels[place].column, { levels: permitted[place], codes: values });
+      else labels.set(request.labels?.[beyond] ?? '', { levels: labelled[beyond], codes: values });
     }
   });
   return {
@@ -166,5 +223,6 @@ function tableOf(scan: Scan, request: TableRequest, permitted: readonly (readonl
     ...(scan.rowNumbers === null ? {} : { rowNumbers: scan.rowNumbers }),
     numeric,
     levels,
+    ...(labels.size === 0 ? {} : { labels }),
   };
 }

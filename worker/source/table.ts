@@ -11,6 +11,8 @@ export interface Table {
   readonly numeric: ReadonlyMap<string, Float64Array>;
   /** Columns with levels, by column name: `codes[row]` indexes `levels`. */
   readonly levels: ReadonlyMap<string, LevelColumn>;
+  /** Columns of labels, by column name: every value there is, in no order that counts. Absent: none were asked for. */
+  readonly labels?: ReadonlyMap<string, LevelColumn>;
 }
 
 export interface LevelColumn {
@@ -22,6 +24,8 @@ export interface LevelColumn {
 export interface TableRequest {
   readonly numeric: readonly string[];
   readonly levels: readonly LevelsRequest[];
+  /** Columns whose values only tell rows apart: any text or number, numbers by value. Absent: none. */
+  readonly labels?: readonly string[];
   readonly missing: 'refuse' | 'drop';
   /** This worker's share of the rows: row number modulo `of` equals `index − 1`. */
   readonly shard: { readonly index: number; readonly of: number };
