@@ -23,10 +23,43 @@ const LANCZOS = [
   12.507343278686905, -0.13857109526572012, 9.9843695780195716e-6, 1.5056327351493116e-7,
 ];
 
+/** From here on ln Γ is taken by Stirling's series, so that large values need not cancel. */
+const LARGE = 10;
+
+/** ln Γ(x) − ((x − ½) ln x − x + ½ ln 2π), x ≥ 10 (Stirling's series: Abramowitz and Stegun 1964, 6.1.41). */
+function stirlingRest(x: number): number {
+  const square = 1 / (x * x);
+  const series = [1 / 12, -1 / 360, 1 / 1260, -1 / 1680, 1 / 1188, -691 / 360360, 1 / 156];
+  return series.reduceRight((sum, term) => sum * square + term, 0) / x;
+}
+
+/** ln B(a, b), without the cancellation of large ln Γ (Didonato and Morris 1992). */
+function logBeta(a: number, b: number): number {
+  const big = Math.max(a, b);
+  const small = Math.min(a, b);
+  if (big < LARGE) return logGamma(a) + logGamma(b) - logGamma(a + b);
+  const rest = stirlingRest(big) - stirlingRest(big + small);
+  if (small < LARGE)
+    return (
+      logGamma(small) - (big - 0.5) * Math.log1p(small / big) - small * Math.log(big + small) + small + rest
+    );
+  return (
+    0.5 * Math.log((2 * Math.PI) / small) -
+    (big - 0.5) * Math.log1p(small / big) -
+    small * Math.log1p(big / small) +
+    stirlingRest(small) +
+    rest
+  );
+}
+
 /** Lower and upper regularised incomplete gamma functions P(a, x) and Q(a, x); a > 0, x ≥ 0. */
 export function incompleteGamma(a: number, x: number): { readonly lower: number; readonly upper: number } {
   if (x === 0) return { lower: 0, upper: 1 };
-  const front = Math.exp(a * Math.log(x) - x - logGamma(a));
+  const front = Math.exp(
+    a < LARGE
+      ? a * Math.log(x) - x - logGamma(a)
+      : a * (Math.log1p((x - a) / a) - (x - a) / a) + 0.5 * Math.log(a / (2 * Math.PI)) - stirlingRest(a),
+  );
   if (x < a + 1) {
     let term = 1 / a;
     let sum = term;
@@ -51,9 +84,7 @@ export function incompleteBeta(a: number, b: number, x: number, rest = 1 - x): n
   if (rest <= 0) return 1;
   // the fraction converges fast on this side of the mean only
   if (x > (a + 1) / (a + b + 2)) return 1 - incompleteBeta(b, a, rest, x);
-  const front = Math.exp(
-    logGamma(a + b) - logGamma(a) - logGamma(b) + a * Math.log(x) + b * Math.log(rest) - Math.log(a),
-  );
+  const front = Math.exp(a * Math.log(x) + b * Math.log(rest) - logBeta(a, b) - Math.log(a));
   const numerator = (k: number): number => {
     if (k === 0) return 1;
     const m = Math.floor(k / 2);

@@ -38,6 +38,9 @@ export function proximalOperator(g: Penalty, j: number, a: number, b: number): n
   return Math.min(Math.max(shrunk / (a + g.l2[j]), g.lower[j]), g.upper[j]);
 }
 
+/** True where the bounds leave a coefficient one value. */
+export const isFixed = (g: Penalty, j: number): boolean => g.lower[j] === g.upper[j];
+
 /** z clipped to the bounds. */
 export function clipToBounds(g: Penalty, z: Float64Array): Float64Array {
   return z.map((value, j) => Math.min(Math.max(value, g.lower[j]), g.upper[j]));
@@ -49,6 +52,7 @@ export function clipToBounds(g: Penalty, z: Float64Array): Float64Array {
  */
 export function leastSubgradient(g: Penalty, z: Float64Array, gradient: Float64Array): Float64Array {
   return gradient.map((slope, j) => {
+    if (isFixed(g, j)) return 0;
     const smooth = slope + g.l2[j] * z[j];
     const kinked =
       z[j] !== 0

@@ -1,46 +1,19 @@
-import type { Penalty } from '../../numerics/penalty.js';
+import { dependentColumns, runawayColumns } from '../../numerics/determined.js';
+import { isFixed, type Penalty } from '../../numerics/penalty.js';
 import { maxAbs } from '../../numerics/vector.js';
 import type { Certificate } from './method.js';
 import type { ConsensusProblem } from './problem.js';
 
-/** A pivot this small, relative to its column, is rounding: the column is a combination of those before it. */
-const PIVOT_LEAST = 1e-11;
-/** A step that still moves a coefficient (of a column with unit spread) by this much, where curvature has all but gone. */
-const STEP_LEAST = 0.02;
-const CURVATURE_SHARE = 0.01;
 /** A relative gap this small is the optimum itself, to rounding. */
 const EXACT = 1e-12;
 
-/**
- * Columns without a penalty that are linear combinations of earlier ones without a penalty, by the pivots of a
- * Cholesky factorisation of the curvature (row-major p × p) in the scale of its diagonal: without them the optimum is
- * not unique.
- */
-export function aliasedColumns(curvature: Float64Array, g: Penalty): number[] {
-  const p = g.l1.length;
-  const aliased: number[] = [];
-  const rows: { readonly column: number; readonly entries: number[] }[] = [];
-  for (let j = 0; j < p; j++) {
-    if (g.l1[j] > 0 || g.l2[j] > 0) continue;
-    const size = curvature[j * p + j];
-    const entries: number[] = [];
-    let pivot = size;
-    for (const [k, row] of rows.entries()) {
-      let sum = curvature[j * p + row.column];
-      for (let m = 0; m < k; m++) sum -= entries[m] * row.entries[m];
-      const entry = sum / row.entries[k];
-      entries.push(entry);
-      pivot -= entry * entry;
-    }
-    if (!(pivot > PIVOT_LEAST * size)) {
-      aliased.push(j);
-      continue;
-    }
-    entries.push(Math.sqrt(pivot));
-    rows.push({ column: j, entries });
-  }
-  return aliased;
-}
+/** Columns without a penalty that are linear combinations of earlier ones without a penalty: the optimum is not unique. */
+export const aliasedColumns = (curvature: Float64Array, g: Penalty): number[] =>
+  dependentColumns(
+    curvature,
+    g.l1.length,
+    [...g.l1.keys()].filter((j) => g.l1[j] === 0 && g.l2[j] === 0 && !isFixed(g, j)),
+  );
 
 /** Why there is no optimum, or no unique one, and the columns it lies with. */
 export interface Flaw {
@@ -97,18 +70,4 @@ export function separatedColumns(
   );
   const longest = maxAbs(z);
   return free ? moved.filter((j) => Math.abs(z[j]) >= 0.5 * longest) : [];
-}
-
-/**
- * Columns along which a smooth loss has no minimiser: at a point whose gap is certified small, the Newton step is still
- * large, and `bend` = ΔᵀHΔ, the curvature along it, a small share of what it was at the start (separable classes, a
- * level without events: Albert and Anderson 1984). Empty where the optimum exists.
- */
-export function runawayColumns(step: Float64Array, bend: number, startDiagonal: Float64Array): number[] {
-  const longest = maxAbs(step);
-  if (longest < STEP_LEAST) return [];
-  let before = 0;
-  for (let j = 0; j < step.length; j++) before += startDiagonal[j] * step[j] * step[j];
-  if (bend > CURVATURE_SHARE * before) return [];
-  return [...step.keys()].filter((j) => Math.abs(step[j]) >= 0.5 * longest);
 }

@@ -1,6 +1,6 @@
+import { runawayColumns } from '../../numerics/determined.js';
 import { measuredFactor } from './certificate.js';
 import { curvatureRung } from './curvature-rung.js';
-import { runawayColumns } from './existence.js';
 import { withAllSites } from './late-all-sites.js';
 import { searched } from './late-curvature-rung.js';
 import { LateDesk } from './late-desk.js';

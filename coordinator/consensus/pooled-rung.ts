@@ -1,5 +1,5 @@
 import { packSymmetric } from '../../numerics/packed.js';
-import { isSmooth, type Penalty, penaltyValue } from '../../numerics/penalty.js';
+import { isFixed, isSmooth, type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import { mergeFactors, triangularFactor } from '../../numerics/triangular-factor.js';
 import { maxOf } from '../../numerics/vector.js';
 import { zStepFull } from '../../numerics/z-step.js';
@@ -111,8 +111,8 @@ function positive(gram: Float64Array, p: number): Float64Array {
   return out;
 }
 
-/** f(z) = ½‖R z − q‖² + ½ρ² from the packed upper factor of [X, y]. */
-class FactoredModel {
+/** f(z) = ½‖R z − q‖² + ½ρ² from the packed upper factor of [X, y], order p + 1. */
+export class FactoredModel {
   constructor(
     private readonly factor: Float64Array,
     private readonly p: number,
@@ -172,7 +172,9 @@ class FactoredModel {
 
   /** Columns without a penalty that are combinations of earlier ones without a penalty. */
   aliased(g: Penalty): number[] {
-    const free = Array.from({ length: this.p }, (_, j) => j).filter((j) => g.l1[j] === 0 && g.l2[j] === 0);
+    const free = Array.from({ length: this.p }, (_, j) => j).filter(
+      (j) => g.l1[j] === 0 && g.l2[j] === 0 && !isFixed(g, j),
+    );
     const m = free.length;
     if (m === 0) return [];
     const rows = new Float64Array(this.p * m);

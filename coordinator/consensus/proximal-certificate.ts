@@ -1,6 +1,7 @@
+import { runawayColumns } from '../../numerics/determined.js';
 import { leastSubgradient, type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import { estimatedCertificate } from './certificate.js';
-import { runawayColumns, separatedColumns } from './existence.js';
+import { separatedColumns } from './existence.js';
 import type { Certificate, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
 import { evaluate, type PooledEvaluation, required, siteGradients } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';

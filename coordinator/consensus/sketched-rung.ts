@@ -1,8 +1,8 @@
+import { runawayColumns } from '../../numerics/determined.js';
 import { penaltyValue } from '../../numerics/penalty.js';
 import { seededRandom } from '../../numerics/random.js';
 import { type ModelStep, modelStep, relativeTo, sketchedCertificate } from './certificate.js';
 import { Damping, FAILURES_MOST } from './damping.js';
-import { runawayColumns } from './existence.js';
 import type { Certificate, Method, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
 import { plusDiagonal } from './metric.js';
 import { evaluate, type PooledEvaluation, required } from './pooled.js';

@@ -8,6 +8,13 @@ import { isRefusal, type Reply } from '../panel/panel-state.js';
 
 const count = z.int().min(0);
 
+/** A list and no map: CBOR has its own order of a map's keys, and a result follows the order of the design. */
+export const startFromSchema = z.strictObject({
+  run: z.string(),
+  coefficients: z.array(z.tuple([z.string(), z.number()]).readonly()).readonly(),
+  redefined: z.array(z.string()).readonly(),
+});
+
 const opened = z.strictObject({
   record: z.literal('opened'),
   format: z.literal(1),
@@ -22,6 +29,8 @@ const opened = z.strictObject({
       kernel: z.string(),
     }),
   ),
+  /** The coefficients of an earlier run that this one starts from; null: none. */
+  startFrom: startFromSchema.nullable().default(null),
   software: z.string(),
   node: z.string(),
 });

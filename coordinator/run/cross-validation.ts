@@ -1,5 +1,13 @@
 import type { CrossValidationDocument } from './result-parts.js';
 
+/** Losses of folds and their means; NaN where a fit did not end solved. */
+export interface PooledFolds {
+  readonly folds: CrossValidationDocument['folds'];
+  readonly foldLoss: readonly (readonly number[])[];
+  readonly mean: readonly number[];
+  readonly standardError: readonly number[];
+}
+
 /** A loss per row this close to the least, relative to it, is a tie. */
 const TIE = 1e-12;
 
@@ -10,8 +18,8 @@ const TIE = 1e-12;
  */
 export function pooledFolds(
   folds: CrossValidationDocument['folds'],
-  foldLoss: CrossValidationDocument['foldLoss'],
-): CrossValidationDocument {
+  foldLoss: readonly (readonly number[])[],
+): PooledFolds {
   const rows = folds.reduce((sum, fold) => sum + fold.rows, 0);
   const weighted = (of: (fold: number) => number): number =>
     folds.reduce((sum, fold, f) => sum + fold.rows * of(f), 0) / rows;
@@ -39,7 +47,7 @@ export function leastOf(losses: readonly number[], lambdas: readonly number[]): 
 
 /** The largest λ whose mean loss is within one standard error of the least (Breiman et al. 1984). */
 export function oneStandardErrorOf(
-  { mean, standardError }: Pick<CrossValidationDocument, 'mean' | 'standardError'>,
+  { mean, standardError }: Pick<PooledFolds, 'mean' | 'standardError'>,
   lambdas: readonly number[],
   minimum: number,
 ): number {

@@ -1,5 +1,6 @@
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { ResultDocument } from './result.js';
+import type { Before } from './rounds.js';
 import {
   type Batch,
   type Member,
@@ -9,7 +10,6 @@ import {
   type RunEnd,
   type Shown,
 } from './run.js';
-import type { Before } from './solve.js';
 import { Spending, type Spent } from './spending.js';
 
 export type Without = ResultDocument['without'];

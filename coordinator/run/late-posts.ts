@@ -39,7 +39,7 @@ export class LatePosts {
     switch (post.kind) {
       case 'evaluate': {
         const points = [{ point: post.point, want: post.want }];
-        return { work: 'evaluate', problem, points, ownFit: null, sketch: null };
+        return { work: 'evaluate', problem, part: null, points, ownFit: null, sketch: null };
       }
       case 'joint': {
         const { start, curvature, linear } = post;
@@ -50,7 +50,16 @@ export class LatePosts {
         const { center, scale, diagonal, start } = post;
         if (known.diagonal?.vector !== diagonal) known.diagonal = { vector: diagonal, ask };
         const startAsk = known.point?.vector === start ? known.point.ask : ask;
-        const one = { problem, center, scale, diagonal, diagonalAsk: known.diagonal.ask, start, startAsk };
+        const one = {
+          problem,
+          part: null,
+          center,
+          scale,
+          diagonal,
+          diagonalAsk: known.diagonal.ask,
+          start,
+          startAsk,
+        };
         return { work: 'proximal', problems: [one] };
       }
     }

@@ -1,5 +1,5 @@
 import type { Rung } from '../consensus/method.js';
-import type { RunOutcome } from './run.js';
+import type { AfterSurvey, RunOutcome } from './run.js';
 
 /** The round log, as JSON lines for programs; a terminal shows the same events as sentences. `at`: ISO 8601, UTC. */
 export type LogEvent =
@@ -10,6 +10,8 @@ export type LogEvent =
       readonly digest: string;
       /** Sites named in the specification, or how many at least. */
       readonly sites: readonly string[] | { readonly least: number };
+      /** The run whose coefficients it starts from, where it does. */
+      readonly startFrom?: string;
       readonly at: string;
     }
   | { readonly event: 'waiting'; readonly sites: readonly string[]; readonly at: string }
@@ -75,6 +77,8 @@ export type LogEvent =
 
 export interface RoundEvent {
   readonly event: 'round';
+  /** `solve`, the choice between the fits, or what the report asks about the one chosen. */
+  readonly stage: AfterSurvey;
   readonly round: number;
   readonly roundsMost: number;
   readonly rung: Rung;

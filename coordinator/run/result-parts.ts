@@ -12,16 +12,16 @@ export interface ChoiceDocument {
   readonly nonzero: readonly number[];
   readonly crossValidation: CrossValidationDocument | null;
   /** Value of the criterion per λ; null with folds. */
-  readonly criterion: readonly number[] | null;
+  readonly criterion: readonly (number | null)[] | null;
 }
 
 export interface CrossValidationDocument {
   readonly folds: readonly { readonly fold: string; readonly rows: number }[];
-  /** Mean loss per row (unit deviance) of each fold (outer) at each λ (inner), on the rows held out. */
-  readonly foldLoss: readonly (readonly number[])[];
+  /** Mean loss per row (unit deviance) of each fold (outer) at each λ (inner), on the rows held out; null: not solved. */
+  readonly foldLoss: readonly (readonly (number | null)[])[];
   /** Mean over folds, weighted by their rows, and its standard error, per λ. */
-  readonly mean: readonly number[];
-  readonly standardError: readonly number[];
+  readonly mean: readonly (number | null)[];
+  readonly standardError: readonly (number | null)[];
 }
 
 export interface Interval {
@@ -97,7 +97,7 @@ export interface SiteComparison {
   /** The site's own fit, by coefficient name. */
   readonly own: Readonly<Record<string, Interval>> | null;
   /** Deviance of the site's rows under the common fit and under its own. */
-  readonly devianceCommon: number;
+  readonly devianceCommon: number | null;
   readonly devianceOwn: number | null;
   /** Share of the information on each coefficient that comes from this site. */
   readonly informationShare: Readonly<Record<string, number>>;
@@ -141,8 +141,8 @@ export interface ComparisonDocument {
 
 export interface FitQualityDocument {
   readonly deviance: number;
-  readonly nullDeviance: number;
-  readonly devianceExplained: number;
+  readonly nullDeviance: number | null;
+  readonly devianceExplained: number | null;
   /** Deviance per row on held-out rows at the chosen fit; null without folds. */
   readonly crossValidatedDeviance: number | null;
   /** Rows binned by prediction; cells under the least number of rows are left out and counted in `rowsSuppressed`. */
@@ -178,6 +178,32 @@ export interface FitQualityDocument {
   readonly zeros: { readonly observed: number; readonly expected: number } | null;
   readonly words: readonly string[];
 }
+
+/** The name of a shared intercept among coefficients. */
+export const INTERCEPT_NAME = '(intercept)';
+
+/** The coefficients of an earlier run that this one started from. */
+export interface StartedFromDocument {
+  readonly run: string;
+  /** Original scale; the intercept as `(intercept)`. */
+  readonly coefficients: Readonly<Record<string, number>>;
+  /** False where the method had no use for them, as a note says. */
+  readonly used: boolean;
+}
+
+/** How the chosen or only fit differs from the one it was started from, by name of the coefficients that both have. */
+export type MovedDocument = Readonly<
+  Record<
+    string,
+    {
+      readonly before: number;
+      readonly after: number;
+      readonly change: number;
+      /** In standard errors of the new fit; null where there are none. */
+      readonly changeInStandardErrors: number | null;
+    }
+  >
+>;
 
 /** A part of the report that is not there, and why. */
 export interface OmittedPart {

@@ -1,4 +1,13 @@
 import type { Certificate, Rung } from '../consensus/method.js';
+import type {
+  ChoiceDocument,
+  ComparisonDocument,
+  FitQualityDocument,
+  InferenceDocument,
+  MovedDocument,
+  OmittedPart,
+  StartedFromDocument,
+} from './result-parts.js';
 import type { RunOutcome } from './run.js';
 
 /**
@@ -26,6 +35,18 @@ export interface ResultDocument {
   readonly rungReason: string | null;
   readonly tolerance: number;
   readonly fits: readonly FitDocument[];
+  /** Index into `fits` of the fit that the run stands by: the only one, or the one chosen; null: none of several. */
+  readonly chosen: number | null;
+  readonly choice: ChoiceDocument | null;
+  readonly inference: InferenceDocument | null;
+  readonly comparison: ComparisonDocument | null;
+  readonly fitQuality: FitQualityDocument | null;
+  /** Parts that were asked for and are not there, and why. */
+  readonly omitted: readonly OmittedPart[];
+  /** The earlier run whose coefficients were given to start from; null: none were, or no fit was made. */
+  readonly startedFrom: StartedFromDocument | null;
+  /** What moved since then; null where no fit was chosen either. */
+  readonly moved: MovedDocument | null;
   readonly notes: readonly string[];
   /** Rounds of the solve stage: set-up and certificate included, the survey not. */
   readonly rounds: number;

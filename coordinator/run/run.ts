@@ -20,7 +20,8 @@ export interface Member {
 export const memberName = (member: Pick<Member, 'site' | 'shard'>): string =>
   member.shard.of === 1 ? member.site : `${member.site}#${member.shard.index}`;
 
-export type Stage = 'survey' | 'solve' | 'certify';
+export type AfterSurvey = Exclude<Stage, 'survey'>;
+export type Stage = 'survey' | 'solve' | 'choose' | 'describe';
 
 export interface RunAsk {
   readonly stage: Stage;
@@ -94,7 +95,8 @@ export type Shown =
     }
   | {
       readonly kind: 'round';
-      /** 1-based, over the solve stage. */
+      readonly stage: AfterSurvey;
+      /** 1-based, over the stages after the survey. */
       readonly round: number;
       readonly progress: Progress;
       readonly tolerance: number;

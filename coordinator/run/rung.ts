@@ -38,7 +38,9 @@ export function chooseRung(
     : 'every site lets curvature leave';
   const why = p > CURVATURE_COLUMNS_MOST ? `${p} columns are too many for curvature matrices` : policy;
   const squared = specification.loss.kind === 'squared';
-  if (squared && budget >= 1 && (limit === 'highest' || limit === 'pooled'))
+  // folds of a factor do not add up where each would have its own intercept
+  const mergeable = specification.intercept !== 'per-site' || survey.folds.length === 0;
+  if (squared && mergeable && budget >= 1 && (limit === 'highest' || limit === 'pooled'))
     return { ...unsketched(budget), rung: 'pooled', reason: `squared loss, and ${policy}` };
   if (budget === Number.POSITIVE_INFINITY && limit !== 'proximal' && limit !== 'sketched')
     return { ...unsketched(budget), rung: 'curvature', reason: why };

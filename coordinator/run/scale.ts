@@ -1,7 +1,8 @@
-import { noPenalty, type Penalty } from '../../numerics/penalty.js';
+import { noPenalty, type Penalty as SolverPenalty } from '../../numerics/penalty.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import { perTermMultipliers } from '../../protocol/specification/design-columns.js';
-import type { DesignColumn, FitSpecification } from '../../protocol/specification/types.js';
+import type { DesignColumn, FitSpecification, Penalty } from '../../protocol/specification/types.js';
+import type { Moments } from './moments.js';
 import type { PooledSurvey } from './survey.js';
 
 /** A standard deviation this small beside the mean is rounding: the column has no spread. */
@@ -49,49 +50,62 @@ export function scale(
 
 /** How many fits the specification asks for: one for each λ. */
 export const fitCount = ({ penalties }: FitSpecification): number =>
-  Math.max(1, ...penalties.map((penalty) => penalty.lambda.length));
+  Math.max(1, ...penalties.map(({ path, lambda }) => path?.count ?? lambda.length));
 
-/** The λ of fit number `fit`: one number, one for each penalty where there are several, null without a penalty. */
-export function lambdaOf({ penalties }: FitSpecification, fit: number): number | number[] | null {
-  const lambdas = penalties.map(({ lambda }) => lambda[Math.min(fit, lambda.length - 1)]);
-  return lambdas.length === 0 ? null : lambdas.length === 1 ? lambdas[0] : lambdas;
-}
+/** The λ of every penalty at fit number `fit`: of a path, the λ given for it. */
+export const lambdasOf = (
+  { penalties }: FitSpecification,
+  fit: number,
+  path: readonly number[] | null,
+): number[] =>
+  penalties.map((penalty) => {
+    const list = penalty.path === null ? penalty.lambda : (path ?? []);
+    return list[Math.min(fit, list.length - 1)];
+  });
 
-/**
- * The penalty of fit number `fit` on solver columns. On the original scale it weighs b_j · sd_j (scaled) or b_j, and
- * θ_j = b_j · scale_j, so a column's factor is sd_j / scale_j or 1 / scale_j.
- */
-export function penaltyOn(specification: FitSpecification, frame: Frame, fit: number): Penalty {
+/** Factor by which a penalty weighs solver column j: θ_j = b_j · scale_j, and it weighs b_j · sd_j (scaled) or b_j. */
+export const columnFactor = (
+  { scaled }: Pick<Penalty, 'scaled'>,
+  { scaling }: Frame,
+  sd: Float64Array,
+  j: number,
+): number => (scaled ? sd[j] : 1) / scaling.scale[j];
+
+/** Penalties with these λ on solver columns, `sd` the standard deviations over the rows that the problem is about. */
+export function penaltyOf(
+  penalties: readonly Penalty[],
+  lambdas: readonly number[],
+  { terms }: Pick<FitSpecification, 'terms'>,
+  frame: Frame,
+  sd: Float64Array,
+): SolverPenalty {
   const out = noPenalty(frame.p);
   const first = frame.intercept ? 1 : 0;
-  for (const penalty of specification.penalties) {
-    const lambda = penalty.lambda[Math.min(fit, penalty.lambda.length - 1)];
-    const multipliers = perTermMultipliers(penalty, specification.terms, frame.kept);
-    multipliers.forEach((multiplier, j) => {
-      const factor = (penalty.scaled ? frame.sd[j] : 1) / frame.scaling.scale[j];
-      out.l1[first + j] += lambda * penalty.l1 * multiplier * factor;
-      out.l2[first + j] += lambda * (1 - penalty.l1) * multiplier * factor * factor;
+  for (const [at, penalty] of penalties.entries()) {
+    perTermMultipliers(penalty, terms, frame.kept).forEach((multiplier, j) => {
+      const factor = columnFactor(penalty, frame, sd, j);
+      out.l1[first + j] += lambdas[at] * penalty.l1 * multiplier * factor;
+      out.l2[first + j] += lambdas[at] * (1 - penalty.l1) * multiplier * factor * factor;
     });
   }
   return out;
 }
 
-/** The intercept-only fit on solver columns: where every method starts. */
-export function interceptOnly(
-  specification: FitSpecification,
+/** The intercept-only fit of some rows, on solver columns: where every method starts. */
+export function startOn(
+  { loss }: Pick<FitSpecification, 'loss'>,
   frame: Frame,
-  survey: PooledSurvey,
+  { weightSum, weightedSum, exposureSum }: Moments['response'],
 ): Float64Array {
   const start = new Float64Array(frame.p);
   if (!frame.intercept) return start;
-  const { weightSum, weightedSum, exposureSum } = survey.response;
   const mean = weightedSum / weightSum;
   start[0] = {
     squared: mean,
     huber: mean,
     logistic: Math.log(mean / (1 - mean)),
     poisson: Math.log(weightedSum / exposureSum),
-  }[specification.loss.kind];
+  }[loss.kind];
   return start;
 }
 

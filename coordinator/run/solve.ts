@@ -1,145 +1,160 @@
-import type { WorkAnswer } from '../../protocol/messages/round.js';
-import { packedLength } from '../../protocol/messages/vector.js';
-import { numbersOfAnswer } from '../../protocol/numbers.js';
-import type { FitSpecification } from '../../protocol/specification/types.js';
-import { curvatureRung } from '../consensus/curvature-rung.js';
-import type { Method, MethodEnd, Progress } from '../consensus/method.js';
-import { pooledRung } from '../consensus/pooled-rung.js';
-import type { ConsensusProblem } from '../consensus/problem.js';
-import { proximalRung } from '../consensus/proximal-rung.js';
-import { sketchedRung } from '../consensus/sketched-rung.js';
-import { Lockstep } from './lockstep.js';
-import { refusalsOf } from './refusals.js';
-import { askAll, type Batch, type Member, type RunAsk, type Shown } from './run.js';
-import type { RungChoice } from './rung.js';
-import { type Frame, fitCount, interceptOnly, penaltyOn } from './scale.js';
-import type { PooledSurvey, Stop } from './survey.js';
-import { numbersDown } from './traffic.js';
+import type { MethodAsk, MethodEnd, Progress, SiteAnswers } from '../consensus/method.js';
+import { lambdaPath } from './lambda-path.js';
+import { Lockstep, type LockstepProblem } from './lockstep.js';
+import { type PartFrame, perRowOf, trainingFrames, wholeFrame } from './part-frames.js';
+import { consensusProblem, type Grounds, methodOn } from './problems.js';
+import { isStop, type Rounds } from './rounds.js';
+import type { AfterSurvey, Batch, RunAsk, Shown } from './run.js';
+import { fitCount, lambdasOf } from './scale.js';
+import { startGradient } from './start-answers.js';
+import type { Stop } from './survey.js';
+
+/** What the solve stage leaves. */
+export interface Solved {
+  /** Per fit: the λ of each penalty. */
+  readonly lambdas: readonly (readonly number[])[];
+  /** Per fit, on all rows. */
+  readonly ends: readonly MethodEnd[];
+  /** Per fold and fit, on the rows outside the fold. */
+  readonly folds: readonly { readonly rows: PartFrame; readonly ends: readonly MethodEnd[] }[];
+  /** The answers of all sites to the first ask about all rows, where they were kept. */
+  readonly first: SiteAnswers | null;
+}
 
 /**
- * Numbers in one curvature matrix up to which it is asked at every trial point: above it (400 kB, some 315 columns) the
- * bytes cost more than the round they may save. By size, not by the measured speed of the links: the weather of a
- * network must not change a bit of the result.
+ * Stage three: the consensus method on the rung chosen, one problem per fit and, with a cross-validation, per fit and
+ * fold, all in lock-step.
  */
-const TRIAL_NUMBERS_MOST = 50_000;
-
-/** What the solve stage leaves: one end per fit, the rounds it took and the numbers that moved. */
-export interface Solved {
-  readonly ends: readonly MethodEnd[];
-  readonly rounds: number;
-  readonly shown: Shown;
-  readonly up: readonly number[];
-  readonly down: readonly number[];
-}
-
-/** What a run had asked before this stage began: asks, the survey's among them, and rounds of a solve stage. */
-export interface Before {
-  readonly asks: number;
-  readonly rounds: number;
-}
-
-/** Stage three: the consensus method on the rung chosen, one problem per fit, all in lock-step. */
-export function* solve(
-  specification: FitSpecification,
-  roster: readonly Member[],
-  survey: PooledSurvey,
-  frame: Frame,
-  choice: RungChoice,
-  surveyed: Shown,
-  before: Before,
-): Generator<RunAsk, Solved | Stop, Batch> {
+export function* solve(grounds: Grounds, rounds: Rounds): Generator<RunAsk, Solved | Stop, Batch> {
+  const { specification, frame, survey, choice } = grounds;
+  const whole = wholeFrame(specification, frame, survey);
+  const parts = [whole, ...trainingFrames(specification, frame, survey)];
+  const hasPath = specification.penalties.some(({ path }) => path !== null);
   const fits = fitCount(specification);
-  const methods = Array.from({ length: fits }, (_, fit) =>
-    methodOn(choice.rung, consensusProblem(specification, survey, frame, choice, fit)),
+
+  let first: readonly SiteAnswers[] | null = null;
+  let path: readonly number[] | null = null;
+  if (hasPath || parts.length > 1 || choice.rung === 'pooled') {
+    const started = yield* startAll(grounds, rounds, parts);
+    if (isStop(started)) return started;
+    first = started;
+    if (hasPath) path = lambdaPath(specification, frame, startGradient(first[0], whole, frame.p));
+    if (hasPath && path === null)
+      return {
+        outcome: 'refused',
+        reason: 'every slope is zero whatever λ: there is no path to choose from.',
+      };
+  }
+
+  const lambdas = Array.from({ length: fits }, (_, fit) => lambdasOf(specification, fit, path));
+  const problems = parts.flatMap((rows, at) =>
+    lambdas.map((own, fit): LockstepProblem => {
+      const method = methodOn(choice.rung, consensusProblem(grounds, rows, own, at * fits + fit));
+      return {
+        method: first === null ? method : continued(method, first[at]),
+        part: rows.part,
+        sites: [...grounds.roster.keys()],
+      };
+    }),
   );
-  const lockstep = new Lockstep(methods, roster.length);
-  const up = roster.map(() => 0);
-  const down = roster.map(() => 0);
-  let shown = surveyed;
-  let round = 0;
+  const ends = yield* advance(grounds, rounds, problems, 'solve', rounds.newProblems(problems.length));
+  if (isStop(ends)) return ends;
+  const of = (at: number): MethodEnd[] =>
+    ends.slice(at * fits, (at + 1) * fits).map((end) => perRowOf(end, parts[at]));
+  const folds = parts.slice(1).map((rows, k) => ({ rows, ends: of(k + 1) }));
+  return { lambdas, ends: of(0), folds, first: first?.[0] ?? null };
+}
+
+/** Advances problems in lock-step to their ends, in the order given. */
+export function* advance<E extends object>(
+  { survey, specification, choice }: Grounds,
+  rounds: Rounds,
+  problems: readonly LockstepProblem<E>[],
+  stage: AfterSurvey,
+  firstNumber = 0,
+): Generator<RunAsk, E[] | Stop, Batch> {
+  const { tolerance } = specification.rounds;
+  const folds = choice.rung === 'pooled' ? survey.folds.map(({ fold }) => fold) : [];
+  const lockstep = new Lockstep(problems, rounds.roster.length, folds, firstNumber);
   while (lockstep.asks.length > 0) {
-    const askNumber = before.asks + round + 1;
-    const works = lockstep.works(askNumber);
-    const { answers } = yield* askAll({ stage: 'solve', works, scaling: frame.scaling, shown });
-    const refused = refusalsOf(answers, roster);
-    if (refused !== null) return refused;
-    const given = answers as readonly (readonly WorkAnswer[])[];
-    round++;
-    given.forEach((own, i) => {
-      up[i] += own.reduce((sum, answer) => sum + numbersOfAnswer(answer), 0);
-      down[i] += works[i].reduce((sum, work) => sum + numbersDown(work, askNumber), 0);
-    });
+    const ask = rounds.nextAsk;
+    const answers = yield* rounds.ask(stage, lockstep.works(ask));
+    if (isStop(answers)) return answers;
     const asked = lockstep.asks.map(({ progress }) => progress);
-    lockstep.receive(given, askNumber);
-    shown = {
-      kind: 'round',
-      round: before.rounds + round,
-      // what this round was for, and what its answers have shown
-      progress: {
-        ...shownProgress(lockstep, specification.rounds.tolerance),
-        purpose: asked.reduce(farthest).purpose,
-      },
-      tolerance: specification.rounds.tolerance,
-      fitsOpen: asked.length,
-      fitsTotal: fits,
-      standIns: [],
-    };
+    lockstep.receive(answers, ask);
+    rounds.shown = shownRound(rounds, stage, lockstep, asked, problems.length, tolerance);
   }
-  return { ends: lockstep.ends, rounds: round, shown, up, down };
+  return lockstep.ends;
 }
 
-export function consensusProblem(
-  specification: FitSpecification,
-  survey: PooledSurvey,
-  frame: Frame,
-  choice: RungChoice,
-  fit: number,
-): ConsensusProblem {
+/** The first ask of every part's method, which does not depend on the penalty, asked once for all fits. */
+function* startAll(
+  grounds: Grounds,
+  rounds: Rounds,
+  parts: readonly PartFrame[],
+): Generator<RunAsk, SiteAnswers[] | Stop, Batch> {
+  const sites = [...grounds.roster.keys()];
+  const none = grounds.specification.penalties.map(() => 0);
+  return yield* advance(
+    grounds,
+    rounds,
+    parts.map((rows) => ({
+      method: firstAnswers(methodOn(grounds.choice.rung, consensusProblem(grounds, rows, none, 0))),
+      part: rows.part,
+      sites,
+    })),
+    'solve',
+  );
+}
+
+function* firstAnswers(
+  method: Generator<MethodAsk, MethodEnd, SiteAnswers>,
+): Generator<MethodAsk, SiteAnswers, SiteAnswers> {
+  const { done, value } = method.next();
+  if (done) throw new TypeError('a method ended before it asked anything');
+  return yield value;
+}
+
+/** A method whose first ask has been answered. */
+function* continued(
+  method: Generator<MethodAsk, MethodEnd, SiteAnswers>,
+  first: SiteAnswers,
+): Generator<MethodAsk, MethodEnd, SiteAnswers> {
+  method.next();
+  for (let step = method.next(first); ; ) {
+    if (step.done) return step.value;
+    step = method.next(yield step.value);
+  }
+}
+
+function shownRound<E extends object>(
+  rounds: Rounds,
+  stage: AfterSurvey,
+  lockstep: Lockstep<E>,
+  asked: readonly Progress[],
+  total: number,
+  tolerance: number,
+): Shown {
+  const open = lockstep.asks.map(({ progress }) => progress);
+  const ended = lockstep.ends.filter((end): end is E & MethodEnd => end !== undefined && 'rung' in end);
+  const shown = [...open, ...(open.length > 0 ? [] : ended.map((end) => progressAtEnd(end, tolerance)))];
+  // what this round was for, and what its answers have shown
+  const progress = shown.length > 0 ? shown.reduce(farthest) : asked.reduce(farthest);
   return {
-    p: frame.p,
-    siteWeights: survey.sites.map(({ rowsUsed }) => rowsUsed / survey.rowsTotal),
-    penalty: penaltyOn(specification, frame, fit),
-    start: interceptOnly(specification, frame, survey),
-    tolerance: specification.rounds.tolerance,
-    roundsMost: specification.rounds.most,
-    quadratic: specification.loss.kind === 'squared',
-    separatedBelow: separatedBelow(specification, survey),
-    curvatureMayVanish: specification.loss.kind === 'huber',
-    curvatureMost: choice.curvatureMost,
-    trialMatrices: packedLength(frame.p) <= TRIAL_NUMBERS_MOST ? 'all' : 'first',
-    sketch: choice.sketch,
-    seed: fit,
+    kind: 'round',
+    stage,
+    round: rounds.round,
+    progress: { ...progress, purpose: asked.reduce(farthest).purpose },
+    tolerance,
+    fitsOpen: asked.length,
+    fitsTotal: total,
+    standIns: [],
   };
-}
-
-/** See `ConsensusProblem`: rows of a 0/1 response, each counted once. */
-function separatedBelow({ loss, weights, offset }: FitSpecification, survey: PooledSurvey): number | null {
-  return loss.kind === 'logistic' && weights === null && offset === null ? Math.LN2 / survey.rowsTotal : null;
-}
-
-function methodOn(rung: RungChoice['rung'], problem: ConsensusProblem): Method {
-  switch (rung) {
-    case 'pooled':
-      return pooledRung(problem);
-    case 'curvature':
-      return curvatureRung(problem);
-    case 'sketched':
-      return sketchedRung(problem);
-    case 'proximal':
-      return proximalRung(problem);
-  }
 }
 
 /** Of two fits, the one farther from its optimum. */
 const farthest = (a: Progress, b: Progress): Progress =>
   (b.relativeGap ?? Number.POSITIVE_INFINITY) > (a.relativeGap ?? Number.POSITIVE_INFINITY) ? b : a;
-
-/** Of the fits still open, the one farthest from the tolerance; once all have ended, the worst certificate. */
-function shownProgress(lockstep: Lockstep, tolerance: number): Progress {
-  const open = lockstep.asks.map(({ progress }) => progress);
-  if (open.length > 0) return open.reduce(farthest);
-  return lockstep.ends.map((end) => progressAtEnd(end, tolerance)).reduce(farthest);
-}
 
 /** What the last round of a fit has shown. */
 export const progressAtEnd = (end: MethodEnd, tolerance: number): Progress => ({

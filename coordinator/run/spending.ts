@@ -9,20 +9,14 @@ import type { PooledSurvey } from './survey.js';
  * the run, whatever became of the answers. An ask without an answer counts too, as the answer may have left.
  */
 export class Spending {
-  private all = 0;
-  private readonly byProblem = new Map<number, number>();
+  private matrices = 0;
   private numbers = 0;
 
   add(works: readonly Work[], reply: MemberReply | null): void {
     for (const work of works) {
-      const matrices = curvatureMatricesOf(work);
-      if (work.work !== 'evaluate' && work.work !== 'joint') {
-        this.all += matrices;
-        continue;
-      }
+      this.matrices += curvatureMatricesOf(work);
       // p sketched columns tell as much as a matrix
-      const sketched = work.work === 'evaluate' ? sketchColumnsOf(work) / work.points[0].point.length : 0;
-      this.byProblem.set(work.problem, (this.byProblem.get(work.problem) ?? 0) + matrices + sketched);
+      if (work.work === 'evaluate') this.matrices += sketchColumnsOf(work) / work.points[0].point.length;
     }
     if (reply === null || 'code' in reply) return;
     for (const answer of reply) this.numbers += numbersOfAnswer(answer);
@@ -30,26 +24,29 @@ export class Spending {
 
   /** As it stands now. */
   spent(): Spent {
-    const matrices = Math.ceil(this.all + Math.max(0, ...this.byProblem.values()));
-    return { matrices, numbers: this.numbers };
+    return { matrices: this.matrices, numbers: this.numbers };
   }
 }
 
 export interface Spent {
-  /** Curvature matrices of the fit that used most. */
+  /** Curvature matrices of all fits together. */
   readonly matrices: number;
   readonly numbers: number;
 }
 
-/** The survey of a run that begins again, with what each member's limits still leave. */
+/**
+ * The survey of a run that begins again, with what each member's limits still leave. A limit on matrices is one for each
+ * of the run's fits, and the site counts them together.
+ */
 export function lessSpent(
   survey: PooledSurvey,
   roster: readonly Member[],
   spent: readonly Spent[],
+  fits: number,
 ): PooledSurvey {
   const notes = roster.flatMap((member, i) => {
     const most = survey.answers[i].allowance.curvatureMost;
-    const { matrices } = spent[i];
+    const matrices = Math.ceil(spent[i].matrices / fits);
     return most === null || matrices === 0
       ? []
       : [
@@ -58,18 +55,18 @@ export function lessSpent(
   });
   return {
     ...survey,
-    answers: survey.answers.map((answer, i) => leftOf(answer, spent[i])),
+    answers: survey.answers.map((answer, i) => leftOf(answer, spent[i], fits)),
     notes: [...survey.notes, ...notes],
   };
 }
 
-function leftOf(answer: SurveyAnswer, { matrices, numbers }: Spent): SurveyAnswer {
+function leftOf(answer: SurveyAnswer, { matrices, numbers }: Spent, fits: number): SurveyAnswer {
   const { curvatureMost, numbersMost } = answer.allowance;
   const left = (most: number | null, spent: number): number | null =>
     most === null ? null : Math.max(0, most - spent);
   const allowance = {
     ...answer.allowance,
-    curvatureMost: left(curvatureMost, matrices),
+    curvatureMost: left(curvatureMost, Math.ceil(matrices / fits)),
     numbersMost: left(numbersMost, numbers),
   };
   return { ...answer, allowance };

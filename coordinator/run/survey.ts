@@ -1,5 +1,7 @@
 import type { SurveyAnswer } from '../../protocol/messages/survey.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
+import { foldProblem } from './fold-problem.js';
+import { type Moments, mergeMoments, spreadOf } from './moments.js';
 import { refusalsOf } from './refusals.js';
 import { askAll, type Batch, type Member, memberName, type RunAsk, type Shown } from './run.js';
 
@@ -15,14 +17,9 @@ export interface PooledSurvey {
   readonly mean: Float64Array;
   /** 1/N standard deviation. */
   readonly sd: Float64Array;
-  readonly response: {
-    readonly weightSum: number;
-    readonly weightedSum: number;
-    readonly exposureSum: number;
-    readonly least: number;
-    readonly most: number;
-    readonly saturatedLoss: number;
-  };
+  readonly response: Moments['response'];
+  /** Folds of the cross-validation with the moments of the rows in them; empty without one. */
+  readonly folds: readonly { readonly fold: string; readonly moments: Moments }[];
   readonly answers: readonly SurveyAnswer[];
   /** How long each member took to answer. Milliseconds. */
   readonly agesMs: readonly number[];
@@ -61,47 +58,37 @@ export function* survey(
       reason: `site ${memberName(roster[odd])} built other design columns than ${memberName(roster[0])}: do both run the same version?`,
     };
   const pooled = { ...pool(surveys, roster), agesMs };
-  return responseProblem(specification, pooled) ?? pooled;
+  return responseProblem(specification, pooled) ?? foldProblem(specification, pooled) ?? pooled;
 }
 
-/** Means and centred squares merged pairwise (Chan, Golub, LeVeque 1983), in roster order. */
 function pool(surveys: readonly SurveyAnswer[], roster: readonly Member[]): Omit<PooledSurvey, 'agesMs'> {
-  const [first] = surveys;
-  const mean = Float64Array.from(first.mean);
-  const squares = Float64Array.from(first.centredSquares);
-  let rows = first.rowsUsed;
-  for (const next of surveys.slice(1)) {
-    const total = rows + next.rowsUsed;
-    for (let j = 0; j < mean.length; j++) {
-      const apart = next.mean[j] - mean[j];
-      mean[j] += (apart * next.rowsUsed) / total;
-      squares[j] += next.centredSquares[j] + (apart * apart * rows * next.rowsUsed) / total;
-    }
-    rows = total;
-  }
-  const sum = (of: (answer: SurveyAnswer) => number): number =>
-    surveys.reduce((s, answer) => s + of(answer), 0);
+  const whole = mergeMoments(surveys);
   return {
-    rowsTotal: rows,
+    rowsTotal: whole.rowsUsed,
     sites: surveys.map(({ rowsUsed, rowsDropped }, i) => ({
       site: memberName(roster[i]),
       rowsUsed,
       rowsDropped,
     })),
-    columns: first.columns,
-    mean,
-    sd: squares.map((square) => Math.sqrt(square / rows)),
-    response: {
-      weightSum: sum((answer) => answer.response.weightSum),
-      weightedSum: sum((answer) => answer.response.weightedSum),
-      exposureSum: sum((answer) => answer.response.exposureSum),
-      least: Math.min(...surveys.map((answer) => answer.response.least)),
-      most: Math.max(...surveys.map((answer) => answer.response.most)),
-      saturatedLoss: sum((answer) => answer.response.saturatedLoss),
-    },
+    columns: surveys[0].columns,
+    mean: whole.mean,
+    sd: spreadOf(whole),
+    response: whole.response,
+    folds: pooledFolds(surveys),
     answers: surveys,
     notes: surveys.flatMap((answer, i) => answer.notes.map((note) => `${memberName(roster[i])}: ${note}`)),
   };
+}
+
+/** The folds of all sites, in order of their labels. */
+function pooledFolds(surveys: readonly SurveyAnswer[]): PooledSurvey['folds'] {
+  const labels = [...new Set(surveys.flatMap(({ folds }) => folds.map(({ fold }) => fold)))].sort();
+  return labels
+    .map((fold) => ({
+      fold,
+      moments: mergeMoments(surveys.flatMap(({ folds }) => folds.filter((own) => own.fold === fold))),
+    }))
+    .filter(({ moments }) => moments.rowsUsed > 0);
 }
 
 /** Responses for which no fit with an intercept exists. */
