@@ -6,8 +6,10 @@ import { cancelCommand } from './commands/cancel.js';
 import { checkCommand } from './commands/check.js';
 import { demoCommand } from './commands/demo.js';
 import { EXIT } from './commands/exit-codes.js';
+import { healthCommand } from './commands/health.js';
 import { rehearseCommand } from './commands/rehearse.js';
 import { replayCommand } from './commands/replay.js';
+import { reportCommand } from './commands/report.js';
 import { resultCommand } from './commands/result.js';
 import { runsCommand } from './commands/runs.js';
 import { serveCommand } from './commands/serve.js';
@@ -43,8 +45,10 @@ const commands = [
   watchCommand(),
   runsCommand(),
   resultCommand(),
+  reportCommand(),
   cancelCommand(),
   replayCommand(),
+  healthCommand(),
   demoCommand(),
 ];
 for (const command of [program, ...commands]) command.exitOverride();

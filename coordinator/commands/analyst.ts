@@ -29,23 +29,27 @@ const TOKEN_FILE_DEFAULT = './commonfit-state/analyst.token';
 /** A reply that is not a stream must come within this time. Milliseconds. */
 const REPLY_DEADLINE_MS = 30_000;
 
-/** Adds the options that say where the coordinator is and who asks. */
-export function withAnalyst(command: Command): Command {
-  return command
+/** Adds the options that say where the coordinator is and whom to trust. */
+export const withCoordinator = (command: Command): Command =>
+  command
     .addOption(
       new Option('--url <url>', 'where the coordinator is').default(URL_DEFAULT).env('COMMONFIT_URL'),
-    )
-    .addOption(
-      new Option(
-        '--token-file <file>',
-        `file with the analyst's token (else COMMONFIT_TOKEN_FILE, else ${TOKEN_FILE_DEFAULT})`,
-      ),
     )
     .addOption(
       new Option(
         '--ca-file <file>',
         "certificate, PEM, of the authority to trust with https instead of the system's",
       ).env('COMMONFIT_CA_FILE'),
+    );
+
+/** The same, and those that say who asks. */
+export function withAnalyst(command: Command): Command {
+  return withCoordinator(command)
+    .addOption(
+      new Option(
+        '--token-file <file>',
+        `file with the analyst's token (else COMMONFIT_TOKEN_FILE, else ${TOKEN_FILE_DEFAULT})`,
+      ),
     )
     .addOption(
       new Option(

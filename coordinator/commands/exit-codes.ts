@@ -11,7 +11,7 @@ export const EXIT = {
   notFound: 6,
   /** Something on this machine is in the way: a port that is taken, a folder that cannot be written. */
   machine: 7,
-  /** A replay does not come out as recorded. */
+  /** A replay or a verification does not come out as recorded. */
   differs: 8,
   /** Nobody vouches for the coordinator's certificate, or not any more. */
   untrusted: 9,
@@ -54,7 +54,7 @@ const MEANINGS: readonly [number, string][] = [
   [EXIT.unauthorised, 'the token is missing or not accepted'],
   [EXIT.notFound, 'no such run or token, or the run has no result yet'],
   [EXIT.machine, 'a port, file or folder of this machine is in the way'],
-  [EXIT.differs, 'the replay does not come out as stored'],
+  [EXIT.differs, 'the replay or the verification does not come out as stored'],
   [EXIT.untrusted, 'the certificate of the coordinator is not trusted'],
   [EXIT.interrupted, 'interrupted'],
 ];

@@ -165,7 +165,16 @@ async function writeSite(
     policy: {
       columns: 'any',
       'rows-least': 1,
-      leave: ['counts', 'moments', 'proximal', 'gradients', 'curvature', 'sketches'],
+      leave: [
+        'counts',
+        'moments',
+        'proximal',
+        'gradients',
+        'curvature',
+        'site-estimates',
+        'sketches',
+        'residual-bins',
+      ],
       'curvature-most': 'any',
       'numbers-most': 'any',
       'rounds-most': 'any',

@@ -70,11 +70,12 @@ export async function writeResultFolder(
     await writeFile(join(folder, 'coefficients.csv'), coefficientsCsv(result.document));
     await writeFile(join(folder, 'rounds.csv'), roundsCsv(events));
     // those of another fit must not stay beside this result
-    for (const name of Object.values(HAND_OVER_FILES)) await rm(join(folder, name), { force: true });
+    for (const name of [...Object.values(HAND_OVER_FILES), RUN_FILES.report])
+      await rm(join(folder, name), { force: true });
     for (const [name, text] of handOver) await writeFile(join(folder, name), text);
     if (runFolder === null) return null;
     const there = await readdir(runFolder);
-    for (const name of Object.values(HAND_OVER_FILES))
+    for (const name of [...Object.values(HAND_OVER_FILES), RUN_FILES.report])
       if (there.includes(name)) await copyFile(join(runFolder, name), join(folder, name));
     for (const name of [RUN_FILES.journal, RUN_FILES.specification])
       await copyFile(join(runFolder, name), join(folder, name));

@@ -13,8 +13,10 @@ import { acting, withTail } from './action.js';
 import { type Analyst, type AnalystOptions, analystOf, ask, withAnalyst } from './analyst.js';
 import { EXIT, exitCodeOf } from './exit-codes.js';
 import { followRun } from './follow.js';
+import { fetchReport } from './report.js';
 import { fetchResult, writeResultFolder } from './result-folder.js';
 import { type Attempt, complain, done, ending, say, sayEnding, sayJson, terminalOf } from './terminal.js';
+import { verify } from './verify.js';
 
 const TABLE_KINDS = ['markdown', 'latex'] as const;
 const TABLES = { markdown: coefficientsMarkdown, latex: coefficientsLatex } as const;
@@ -24,9 +26,13 @@ export function resultCommand(): Command {
   const command = withAnalyst(
     new Command('result')
       .description('show the result of a run that has ended: coefficients, certificate, what was sent')
-      .argument('<run>', 'the id of the run')
+      .argument('<run>', 'the id of the run; with --verify, a folder too')
       .option('--json', 'result.json as one line instead of words')
-      .option('--out <folder>', 'write result.json, tables and, of one fit, model.json and model.pmml there')
+      .option('--verify', 'recompute the certificates from the stored answers, off line, and compare')
+      .option(
+        '--out <folder>',
+        'write result.json, tables, report.html and, of one fit, model.json and model.pmml there',
+      )
       .addOption(
         new Option('--table <kind>', 'the coefficients of one fit as a table instead of words').choices(
           TABLE_KINDS,
@@ -39,14 +45,25 @@ export function resultCommand(): Command {
       'commonfit result 20310504-101500-4f6c2a91',
       'commonfit result 20310504-101500-4f6c2a91 --out ./breaks-result',
       'commonfit result 20310504-101500-4f6c2a91 --table markdown --fit 3',
+      'commonfit result commonfit-state/runs/20310504-101500-4f6c2a91 --verify',
     ],
-    exits: [EXIT.unreachable, EXIT.unauthorised, EXIT.untrusted, EXIT.notFound, EXIT.machine],
+    exits: [
+      EXIT.unreachable,
+      EXIT.unauthorised,
+      EXIT.untrusted,
+      EXIT.notFound,
+      EXIT.machine,
+      EXIT.document,
+      EXIT.differs,
+    ],
     outcomes: true,
+    more: 'With --verify, the run is made again from its journal and every fit checked beside that: the answers of all sites at its certified point are summed again, and objective, gradient and gap taken from them alone. It needs the journal, as replay does, and ends with 0 or 8 whatever the outcome of the run.',
   });
 }
 
 interface ResultOptions extends AnalystOptions {
   readonly json?: true;
+  readonly verify?: true;
   readonly out?: string;
   readonly table?: (typeof TABLE_KINDS)[number];
   readonly fit?: string;
@@ -54,6 +71,7 @@ interface ResultOptions extends AnalystOptions {
 
 async function result(run: string, options: ResultOptions): Promise<number> {
   const json = options.json === true;
+  if (options.verify === true) return verify(run, options, json);
   const analyst = await analystOf(options);
   if (!analyst.ok) return sayEnding(analyst.ending, json);
   const fetched = await fetchResult(analyst.value, run);
@@ -68,14 +86,17 @@ async function result(run: string, options: ResultOptions): Promise<number> {
     if (followed.kind === 'ending') return sayEnding(followed.ending, json);
     const handOver = await handOverOf(analyst.value, run, document, fit.value);
     if (!handOver.ok) return sayEnding(handOver.ending, json);
-    const written = await writeResultFolder(options.out, fetched.value, events, null, handOver.value);
+    const report = await fetchReport(analyst.value, run);
+    if (!report.ok) return sayEnding(report.ending, json);
+    const files = [...handOver.value, ['report.html', report.value] as const];
+    const written = await writeResultFolder(options.out, fetched.value, events, null, files);
     if (!written.ok) return sayEnding(written.ending, json);
     if (handOver.value.length === 0 && !json) complain(noModel(document));
   }
   if (options.table !== undefined) {
     if (fit.value === null) return sayEnding(ending(EXIT.usage, [noFit(document)]).ending, json);
     const of = document.fits[fit.value];
-    process.stdout.write(TABLES[options.table](document.title, of, inferenceOf(of)));
+    process.stdout.write(TABLES[options.table](document.title, of, inferenceOf(document, fit.value)));
   } else if (json) sayJson(document);
   else say(resultText(document, terminalOf(process.stdout).width));
   return exitCodeOf(document.outcome, document.without);

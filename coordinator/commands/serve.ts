@@ -36,9 +36,14 @@ export function serveCommand(): Command {
       ),
     )
     .addOption(
-      new Option('--log-level <level>', 'of the operational log, JSON lines on standard error')
+      new Option('--log-level <level>', 'of the operational log on standard error')
         .choices(serviceSettings.shape.logLevel.unwrap().options)
         .default('info'),
+    )
+    .addOption(
+      new Option('--log <form>', 'JSON objects, or sentences for people')
+        .choices(serviceSettings.shape.log.unwrap().options)
+        .default('json'),
     )
     .action(acting(serve));
   return withTail(command, {
@@ -62,6 +67,7 @@ interface ServeOptions {
   readonly linksMost: number;
   readonly connectionsPerAddressMost: number;
   readonly logLevel: ServiceOptions['logLevel'];
+  readonly log: ServiceOptions['log'];
 }
 
 async function serve(options: ServeOptions): Promise<number> {
@@ -87,6 +93,7 @@ async function serve(options: ServeOptions): Promise<number> {
     linksMost: options.linksMost,
     connectionsPerAddressMost: options.connectionsPerAddressMost,
     logLevel: options.logLevel,
+    log: options.log,
   });
   if (!started.ok) return sayEnding(ending(EXIT.machine, [started.failure]).ending, false);
   process.stdout.write(`The coordinator is at ${started.value.address}, its state in ${options.state}\n`);

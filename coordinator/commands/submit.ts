@@ -14,11 +14,15 @@ export function submitCommand(): Command {
     new Command('submit')
       .description('check a fit specification and hand it to the coordinator as a new run')
       .argument('<specification>', 'the fit specification, NAME.fit.yaml')
+      .option('--start-from <run>', 'begin the rounds at the coefficients of a run that has ended')
       .option('--watch', 'stay and show the round log until the run has ended')
       .option('--json', 'JSON lines instead of words'),
   ).action(acting(submit));
   return withTail(command, {
-    examples: ['commonfit submit breaks.fit.yaml --watch'],
+    examples: [
+      'commonfit submit breaks.fit.yaml --watch',
+      'commonfit submit breaks.fit.yaml --start-from 20310504-101500-4f6c2a91',
+    ],
     exits: [
       EXIT.document,
       EXIT.unreachable,
@@ -28,11 +32,12 @@ export function submitCommand(): Command {
       EXIT.interrupted,
     ],
     outcomes: true,
-    more: 'Codes from 10 on, and 130, come only with --watch.',
+    more: 'Codes from 10 on, and 130, come only with --watch. With --start-from, coefficients are taken over by name (new ones begin at 0): where rows were added or a term changed, the fit takes fewer rounds, and its result says what moved. The optimum does not depend on it; its last digits may.',
   });
 }
 
 interface SubmitOptions extends AnalystOptions {
+  readonly startFrom?: string;
   readonly watch?: true;
   readonly json?: true;
 }
@@ -43,7 +48,7 @@ async function submit(file: string, options: SubmitOptions): Promise<number> {
   if (!read.ok) return sayEnding(read.ending, json);
   const analyst = await analystOf(options);
   if (!analyst.ok) return sayEnding(analyst.ending, json);
-  const submitted = await submitDocument(analyst.value, read.value);
+  const submitted = await submitDocument(analyst.value, read.value, options.startFrom);
   if (!submitted.ok) return sayEnding(submitted.ending, json);
   const { run, digest } = submitted.value;
   if (options.watch === true) return await watchRun(analyst.value, run, json);
@@ -55,12 +60,14 @@ async function submit(file: string, options: SubmitOptions): Promise<number> {
   return EXIT.ok;
 }
 
-/** Hands a checked document to the coordinator. */
+/** Hands a checked document to the coordinator; `startFrom`: a run whose coefficients it starts from. */
 export const submitDocument = (
   analyst: Analyst,
   document: Document,
+  startFrom?: string,
 ): Promise<Attempt<{ run: string; digest: string }>> =>
   ask(analyst, 'POST', '/v1/runs', z.object({ run: z.string(), digest: z.string() }), {
     specification: document.text,
     file: basename(document.file),
+    ...(startFrom === undefined ? {} : { startFrom }),
   });

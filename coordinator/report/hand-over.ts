@@ -25,7 +25,7 @@ export function handOverFiles(
   const model = modelDocument(specification, result, fit);
   const pmml = pmmlOf(model);
   const { title, fits } = result;
-  const inference = inferenceOf(fits[fit]);
+  const inference = inferenceOf(result, fit);
   return [
     [HAND_OVER_FILES.model, modelText(model)],
     ...(pmml.ok ? [[HAND_OVER_FILES.pmml, pmml.value] as const] : []),

@@ -2,20 +2,17 @@ import { INVERSE_LINKS, type ModelDocument } from '../../protocol/model/model-do
 import { designColumns } from '../../protocol/specification/design-columns.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { FitDocument, ResultDocument } from '../run/result.js';
-import type { ChoiceDocument, InferenceDocument } from '../run/result-parts.js';
+import type { InferenceDocument } from '../run/result-parts.js';
 
-/** What a fit says of the uncertainty of its coefficients; null where the run measured none. */
-export function inferenceOf(fit: FitDocument): InferenceDocument | null {
-  const full: FitDocument & { readonly inference?: InferenceDocument | null } = fit;
-  return full.inference ?? null;
-}
+/** What the run says of the uncertainty of a fit's coefficients; null of a fit that it does not stand by. */
+export const inferenceOf = (
+  { chosen, inference }: Pick<ResultDocument, 'chosen' | 'inference'>,
+  fit: number,
+): InferenceDocument | null => (fit === chosen ? inference : null);
 
 /** The fit to hand over: the one chosen, or the only one; null where several stand side by side or none has coefficients. */
-export function fitToHandOver(result: ResultDocument): number | null {
-  const full: ResultDocument & { readonly choice?: ChoiceDocument | null } = result;
-  const fit = full.choice?.chosen ?? (result.fits.length === 1 ? 0 : null);
-  return fit !== null && isUsable(result.fits[fit]) ? fit : null;
-}
+export const fitToHandOver = ({ chosen, fits }: Pick<ResultDocument, 'chosen' | 'fits'>): number | null =>
+  chosen !== null && isUsable(fits[chosen]) ? chosen : null;
 
 /** Whether a fit ended with coefficients, all of them finite. */
 export const isUsable = (fit: FitDocument | undefined): boolean =>
@@ -34,8 +31,8 @@ export function modelDocument(
   fit: number,
 ): ModelDocument {
   const { lambda, outcome, certificate, intercept, coefficients, dropped } = result.fits[fit];
-  const covariance = covarianceOf(result.fits[fit]);
-  const without = new Set((result.without ?? []).map(({ site }) => site));
+  const covariance = covarianceOf(inferenceOf(result, fit));
+  const without = new Set(result.without.map(({ site }) => site));
   return {
     commonfitModel: 1,
     title: specification.title,
@@ -65,8 +62,7 @@ export function modelDocument(
   };
 }
 
-function covarianceOf(fit: FitDocument): NonNullable<ModelDocument['covariance']> | null {
-  const inference = inferenceOf(fit);
+function covarianceOf(inference: InferenceDocument | null): NonNullable<ModelDocument['covariance']> | null {
   const used = inference?.covariances.find(({ kind }) => kind === inference.used);
   return used === undefined ? null : { kind: used.kind, order: used.order, matrix: used.covariance };
 }

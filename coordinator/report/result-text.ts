@@ -1,4 +1,5 @@
 import type { FitDocument, ResultDocument } from '../run/result.js';
+import { movedText } from './moved-text.js';
 import { certificateText, OUTCOME_HEAD } from './outcome-text.js';
 import { counted, grouped, listed, roughly, sentence, shortened, wrapped } from './phrases.js';
 import { rowsText } from './stand-in-text.js';
@@ -25,6 +26,7 @@ export function resultText(result: ResultDocument, width: number): string[] {
       room,
     ),
     ...fitsText(result, room),
+    ...movedText(result, room),
     '',
     ...sitesText(result, room),
     '',

@@ -51,9 +51,9 @@ function* wordings(round: RoundEvent, leftMs: number | null, width: number): Gen
 
 /** `Round 12 is about 2.4e-4 off`: how far the run stands from the optimum, or what the round was for. */
 function standing(round: RoundEvent, length: 'long' | 'middle' | 'short'): string {
-  const head = `Round ${round.round}`;
+  const head = `Round ${round.round}${round.stage === 'describe' ? ', for the report,' : ''}`;
   const gap = round.relativeGap;
-  if (gap === null) return `${head} gathered ${round.purpose}`;
+  if (gap === null) return `Round ${round.round} gathered ${round.purpose}`;
   const size = `${round.gapMeasured ? '' : 'about '}${roughly(gap)}`;
   const off = length === 'short' ? 'off' : 'off the optimum';
   return length === 'long' ? `${head} (${round.purpose}) is ${size} ${off}` : `${head} is ${size} ${off}`;

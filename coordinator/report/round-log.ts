@@ -125,6 +125,9 @@ function acceptedLines(event: Extract<LogEvent, { event: 'accepted' }>, width: n
   return [
     ...wrapped(`“${shortened(event.title, width - 3)}”`, width),
     ...wrapped(`Run ${event.run} is accepted, over ${sites}.`, width, 2),
+    ...(event.startFrom === undefined
+      ? []
+      : wrapped(`It starts from the coefficients of run ${event.startFrom}.`, width, 2)),
     `Specification ${event.digest.slice(0, Math.min(event.digest.length, width - 14, 16))}`,
   ];
 }

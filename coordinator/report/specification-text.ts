@@ -6,6 +6,7 @@ import type {
   Term,
   Transform,
 } from '../../protocol/specification/types.js';
+import { chooseText, interceptText, lambdaText, reportText } from './analysis-text.js';
 import { counted, duration, listed, wrapped } from './phrases.js';
 
 /** Design columns named one by one before the rest is only counted. */
@@ -39,7 +40,7 @@ export function specificationText(
     ...paragraph(sitesText(spec)),
     '',
     ...paragraph(
-      `${counted(columns.length, 'coefficient')} from ${counted(spec.terms.length, 'term')}${spec.intercept === 'shared' ? ', and a shared intercept' : ', without an intercept'}:`,
+      `${counted(columns.length, 'coefficient')} from ${counted(spec.terms.length, 'term')}${interceptText(spec.intercept)}:`,
     ),
     ...columns.slice(0, COLUMNS_MOST).flatMap((column) => wrapped(columnText(spec, column), width, 4, 2)),
     ...(columns.length > COLUMNS_MOST ? [`  and ${columns.length - COLUMNS_MOST} more`] : []),
@@ -47,6 +48,8 @@ export function specificationText(
     ...(spec.penalties.length === 0
       ? ['No penalty.']
       : spec.penalties.flatMap((penalty) => paragraph(penaltyText(penalty)))),
+    ...(spec.choose === null ? [] : paragraph(chooseText(spec.choose))),
+    ...reportText(spec.report).flatMap(paragraph),
     ...paragraph(roundsText(spec)),
     ...paragraph(barrierText(spec)),
     '',
@@ -55,7 +58,7 @@ export function specificationText(
   ];
 }
 
-function modelText(spec: FitSpecification): string {
+export function modelText(spec: FitSpecification): string {
   const { column, positive } = spec.response;
   const response = positive === null ? column : `${column} being ${positive}`;
   const offset =
@@ -68,7 +71,7 @@ function modelText(spec: FitSpecification): string {
   return `Models ${lossText(spec.loss, response)}${offset}${weights}.`;
 }
 
-function sitesText(spec: FitSpecification): string {
+export function sitesText(spec: FitSpecification): string {
   const missing =
     spec.missing === 'refuse'
       ? 'A site that has a missing value in a used column refuses.'
@@ -80,7 +83,7 @@ function sitesText(spec: FitSpecification): string {
   return `${sites} ${missing}`;
 }
 
-function columnText(spec: FitSpecification, column: DesignColumn): string {
+export function columnText(spec: FitSpecification, column: DesignColumn): string {
   const term = spec.terms[column.term];
   const factors = column.factors.map((factor) =>
     factor.kind === 'level'
@@ -104,12 +107,7 @@ function transformed(column: string, transform: Transform): string {
   return `${column} to the power ${transform.power}`;
 }
 
-function penaltyText(penalty: Penalty): string {
-  const lambdas = penalty.lambda;
-  const lambda =
-    lambdas.length === 1
-      ? `λ = ${lambdas[0]}`
-      : `λ = ${listed(lambdas.map(String), 6)}, ${lambdas.length} fits`;
+export function penaltyText(penalty: Penalty): string {
   const share = penalty.kind === 'elastic-net' ? `, ${penalty.l1} of it on absolute values` : '';
   const scale = penalty.scaled
     ? 'coefficients times the standard deviation of their column'
@@ -117,16 +115,16 @@ function penaltyText(penalty: Penalty): string {
   const factors = Object.entries(penalty.perTerm).map(([name, factor]) =>
     factor === 0 ? `${name} left out` : `${name} times ${factor}`,
   );
-  return `Penalty ${penalty.kind}, ${lambda}${share}, on ${scale}${factors.length === 0 ? '' : `; ${listed(factors)}`}.`;
+  return `Penalty ${penalty.kind}, ${lambdaText(penalty)}${share}, on ${scale}${factors.length === 0 ? '' : `; ${listed(factors)}`}.`;
 }
 
-function roundsText(spec: FitSpecification): string {
+export function roundsText(spec: FitSpecification): string {
   const { tolerance, most, rung } = spec.rounds;
   const ladder = rung === 'highest' ? '' : `, on no rung above ${rung}`;
   return `Stops at a relative distance of ${tolerance} to the optimum, or after ${counted(most, 'round')}${ladder}.`;
 }
 
-function barrierText(spec: FitSpecification): string {
+export function barrierText(spec: FitSpecification): string {
   const { quorum, oldest, deadlineMs, patienceMs, missing } = spec.barrier;
   const who = quorum === 'all' ? 'every site' : counted(quorum, 'site');
   const older =

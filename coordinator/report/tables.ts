@@ -10,7 +10,7 @@ import { inferenceOf } from './model-document.js';
  * follow, empty in a fit that has none. Numbers are the shortest decimals that read back to the same double.
  */
 export function coefficientsCsv(result: ResultDocument): string {
-  const inferences = result.fits.map(inferenceOf);
+  const inferences = result.fits.map((_, fit) => inferenceOf(result, fit));
   const withTests = inferences.some((inference) => inference !== null);
   const rows = result.fits.flatMap((fit, at) =>
     coefficientsOf(fit).map(([term, value]) => [

@@ -27,13 +27,15 @@ export class AskDesk {
   /** Per member: its newest ask. */
   private readonly newest: (OwedAsk | null)[];
   private numbersDown = 0;
+  /** By member: its newest ask, and when that was first sent. */
+  private readonly sent = new Map<number, { readonly ask: number; readonly atMs: number }>();
   private stopTimer: () => void = () => {};
   private readonly queue: PanelEvent[] = [];
   private draining = false;
   private stopped = false;
 
   constructor(
-    private readonly parts: Pick<HostParts, 'accepted' | 'time' | 'notice'>,
+    private readonly parts: Pick<HostParts, 'accepted' | 'time' | 'notice' | 'answered'>,
     private readonly roster: readonly Member[],
     private readonly reports: DeskReports,
   ) {
@@ -99,6 +101,7 @@ export class AskDesk {
     const link = this.links.get(index);
     if (link?.linked !== linked) return;
     if (message.kind === 'answer' && !this.fits(link, index, message)) return;
+    this.tellAnswered(index, message);
     this.take({
       kind: 'reply',
       member: index,
@@ -106,6 +109,13 @@ export class AskDesk {
       reply: message.kind === 'answer' ? message.work : message,
       atMs: this.parts.time.steadyMs(),
     });
+  }
+
+  private tellAnswered(index: number, { kind, ask }: Answer | Refusal): void {
+    const sent = this.sent.get(index);
+    if (kind !== 'answer' || sent?.ask !== ask) return;
+    this.sent.delete(index);
+    this.parts.answered?.(this.roster[index].site, this.parts.time.steadyMs() - sent.atMs);
   }
 
   /** Asks nothing more; with an outcome, tells the members. */
@@ -181,6 +191,7 @@ export class AskDesk {
     // a newer one is in the line, and goes out in its turn
     if (newest?.ask !== ask) return;
     this.numbersDown += this.links.get(member)?.ask(ask, newest.works, newest.scaling, lacks) ?? 0;
+    if (this.sent.get(member)?.ask !== ask) this.sent.set(member, { ask, atMs: this.parts.time.steadyMs() });
   }
 
   /** For a member that is gone the run is over. */

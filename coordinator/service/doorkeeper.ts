@@ -18,6 +18,9 @@ export interface DoorkeeperParts {
   readonly notice: (notice: Notice) => void;
 }
 
+/** What is looked at of a request. */
+export type Asking = Pick<IncomingMessage, 'headers' | 'method' | 'socket'>;
+
 export type Let<T> =
   | { readonly ok: true; readonly value: T }
   | { readonly ok: false; readonly problem: Problem };
@@ -60,7 +63,7 @@ export class Doorkeeper {
   }
 
   /** The analyst who sends a request. */
-  analyst(request: IncomingMessage): Let<string> {
+  analyst(request: Asking): Let<string> {
     const analyst = this.holderOf(request, 'analyst');
     if (!analyst.ok) return this.refuse(request, analyst.failure);
     const { name, may } = analyst.value;
@@ -77,7 +80,7 @@ export class Doorkeeper {
   }
 
   /** A request to nowhere, or another that is refused before anyone asks who sent it. */
-  refuse(request: IncomingMessage, failure: Failure): Let<never> {
+  refuse(request: Asking, failure: Failure): Let<never> {
     const { time, notice } = this.parts;
     const address = peerKey(request.socket.remoteAddress);
     const waitMs = this.refusals.take(address, time.steadyMs());
@@ -93,7 +96,7 @@ export class Doorkeeper {
   }
 
   private holderOf<K extends Admitted['kind']>(
-    request: IncomingMessage,
+    request: Asking,
     kind: K,
   ):
     | { readonly ok: true; readonly value: Extract<Admitted, { kind: K }> }
@@ -109,7 +112,7 @@ export class Doorkeeper {
     return named === null ? { ok: true, value: found } : { ok: false, failure: named };
   }
 
-  private certificateProblem(request: IncomingMessage, name: string | null): Failure | null {
+  private certificateProblem(request: Asking, name: string | null): Failure | null {
     const { settings, time } = this.parts;
     if (settings.clientCaFile === undefined) return null;
     return certificateProblem(request.socket, name, time.wallMs());

@@ -4,6 +4,7 @@ import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { Journal } from '../journal/journal.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { Member, Run, RunEnd } from '../run/run.js';
+import type { StartFrom } from '../run/start-from.js';
 
 /** A run as it was accepted: what is fitted, and the bytes its digest is of. */
 export interface AcceptedRun {
@@ -11,6 +12,7 @@ export interface AcceptedRun {
   readonly specification: FitSpecification;
   readonly canonical: string;
   readonly digest: string;
+  readonly startFrom: StartFrom | null;
 }
 
 /** A member's present connection. The object is the connection's identity. */
@@ -35,15 +37,24 @@ export interface Notice {
   readonly level: 'debug' | 'info' | 'warn' | 'error';
   readonly message: string;
   readonly code?: FailureCode;
+  readonly run?: string;
   readonly site?: string;
   readonly detail?: unknown;
+}
+
+/** Told of what happens in a run, for the metrics and the operational log. It changes nothing. */
+export interface Onlooker {
+  /** An event of the round log, once. */
+  event(run: string, event: LogEvent): void;
+  /** A member answered its newest ask, so long after it was sent. Milliseconds. */
+  answered(site: string, tookMs: number): void;
 }
 
 /** Everything a run host is given; the service gives sockets and files, the simulator virtual time and memory. */
 export interface HostParts {
   readonly accepted: AcceptedRun;
-  /** The run's generator for a roster. */
-  start(roster: readonly Member[]): Run;
+  /** The run's generator for a roster and what the journal holds to start from. */
+  start(roster: readonly Member[], startFrom: StartFrom | null): Run;
   readonly journal: Journal;
   readonly time: HostTime;
   /** All connections there are now, in any order. */
@@ -52,6 +63,7 @@ export interface HostParts {
   mayStart(): boolean;
   log(event: LogEvent): void;
   notice(notice: Notice): void;
+  readonly answered?: Onlooker['answered'];
   /** Writes the result folder, durably; returns its path. */
   keepResult(end: RunEnd): Promise<Checked<string>>;
   readonly logged: Logged;

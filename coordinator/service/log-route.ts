@@ -38,7 +38,7 @@ export function addLogRoute(
         );
         if (how === 'too-slow') {
           const message = `Analyst ${analyst} does not read the round log that was asked for; the stream was ended.`;
-          notice({ level: 'warn', code: 'too-slow', message, detail: { run: entry.run } });
+          notice({ level: 'warn', code: 'too-slow', message, run: entry.run });
         }
       } catch (error) {
         request.log.error({ err: error }, 'A round log could not be streamed.');

@@ -27,6 +27,10 @@ export class MeteredLink implements Link<ToWorker, ToCoordinator> {
     return this.link.bytesReceived;
   }
 
+  get bytesWaiting(): number {
+    return this.link.bytesWaiting;
+  }
+
   send(message: ToWorker): boolean {
     const sent = this.link.send(message);
     if (sent && message.kind === 'ask') this.repliesLeft += 1;

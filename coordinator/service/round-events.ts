@@ -1,5 +1,6 @@
 import { SOFTWARE } from '../../protocol/version.js';
 import type { Measured } from '../journal/records.js';
+import { NOT_DESCRIBED } from '../run/documents.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { ResultDocument } from '../run/result.js';
 import { type Member, memberName, type RunEnd, type Shown } from '../run/run.js';
@@ -25,6 +26,7 @@ export function eventOfShown(
   const { progress } = shown;
   return {
     event: 'round',
+    stage: shown.stage,
     round: shown.round,
     roundsMost,
     rung: progress.rung,
@@ -99,6 +101,11 @@ export function forcedEnd(
     rungReason: survey?.rungReason ?? null,
     tolerance: specification.rounds.tolerance,
     fits: [],
+    chosen: null,
+    choice: null,
+    ...NOT_DESCRIBED,
+    startedFrom: null,
+    moved: null,
     notes: survey?.notes ?? [],
     rounds: drive?.round ?? 0,
     numbersSent: present.map(({ index, site }) => ({ site, ...numbers[index] })),

@@ -3,11 +3,12 @@ import type { IncomingMessage } from 'node:http';
 import { join } from 'node:path';
 import type { FastifyInstance, FastifyReply } from 'fastify';
 import { z } from 'zod';
-import { type Failure, fail } from '../../protocol/failure.js';
+import { type Failure, type FailureCode, fail } from '../../protocol/failure.js';
 import { LIMITS } from '../../protocol/limits.js';
 import type { Doorkeeper } from './doorkeeper.js';
 import type { Notice } from './host-parts.js';
 import { addLogRoute } from './log-route.js';
+import type { Metrics } from './metrics.js';
 import { type Problem, problemOf, sendProblem } from './problem.js';
 import { describe, json, type RunRoute, runParams, withRun } from './route-parts.js';
 import type { RunBook } from './run-book.js';
@@ -20,6 +21,7 @@ export interface RouteParts {
   readonly hub: SiteHub;
   readonly doorkeeper: Doorkeeper;
   readonly settings: Pick<ServiceSettings, 'streamsMost' | 'streamsPerAnalystMost' | 'readDeadlineMs'>;
+  readonly metrics: Pick<Metrics, 'text' | 'contentType'>;
   readonly notice: (notice: Notice) => void;
 }
 
@@ -38,6 +40,8 @@ const submission = z.strictObject({
   specification: z.string().max(LIMITS.textMost),
   /** Named in error messages. */
   file: z.string().min(1).max(1000),
+  /** A run that has ended, whose coefficients the new one starts from. */
+  startFrom: z.string().min(1).max(64).optional(),
 });
 const siteList = z.object({
   sites: z.array(
@@ -70,6 +74,11 @@ export function addRoutes(app: FastifyInstance, parts: RouteParts): void {
     guarded.get('/v1/sites', { schema: describe('Sites seen so far', { 200: siteList }) }, async () => ({
       sites: parts.hub.sites(),
     }));
+    guarded.get(
+      '/metrics',
+      { schema: describe('Counts for a monitoring system, in the Prometheus text format', {}) },
+      async (_, reply) => reply.type(parts.metrics.contentType).send(await parts.metrics.text()),
+    );
     addRunRoutes(guarded, parts);
     addLogRoute(guarded, parts, senders);
   });
@@ -81,8 +90,8 @@ function addRunRoutes(app: FastifyInstance, { book }: RouteParts): void {
     '/v1/runs',
     { schema: { ...describe('Submit a fit specification', { 201: submitted }), body: json(submission) } },
     async (request, reply) => {
-      const { specification, file } = request.body;
-      const accepted = await book.submit(specification, file);
+      const { specification, file, startFrom } = request.body;
+      const accepted = await book.submit(specification, file, startFrom ?? null);
       if (!accepted.ok) return sendProblem(reply, problemOfSubmission(accepted.failures));
       return reply.code(201).send({ run: accepted.run, digest: accepted.digest });
     },
@@ -138,12 +147,16 @@ async function sendResult(entry: RunEntry, reply: FastifyReply): Promise<unknown
   });
 }
 
+/** What is the matter with more than the document: the coordinator has no room, or there is no such run to start from. */
+const NOT_OF_THE_DOCUMENT: readonly FailureCode[] = ['coordinator-full', 'state-unwritable', 'not-found'];
+
 /** Everything wrong with the document in one answer; only a document is the sender's to mend. */
 function problemOfSubmission(failures: readonly Failure[]): Problem {
   const [first] = failures;
-  if (failures.length === 1 && (first.code === 'coordinator-full' || first.code === 'state-unwritable')) {
+  if (failures.length === 1 && NOT_OF_THE_DOCUMENT.includes(first.code)) {
     return problemOf(first);
   }
   const detail = failures.length === 1 ? first.message : `${failures.length} things are wrong with it.`;
-  return { status: 422, title: 'The fit specification is refused', detail, code: first.code, failures };
+  const what = first.where?.field === 'startFrom' ? 'start' : 'fit specification';
+  return { status: 422, title: `The ${what} is refused`, detail, code: first.code, failures };
 }

@@ -9,9 +9,11 @@ import type { FitSpecification } from '../../protocol/specification/types.js';
 import { fileStore } from '../journal/file-store.js';
 import { openJournal } from '../journal/journal.js';
 import type { LogEvent } from '../run/log-event.js';
-import type { Member, Run } from '../run/run.js';
+import type { Member, Run, RunEnd } from '../run/run.js';
+import type { StartFrom } from '../run/start-from.js';
 import { makeFolder, syncFolder, unwritableIfFails, writeWhole } from './files.js';
-import type { HostTime, LinkedMember, Notice } from './host-parts.js';
+import type { HostTime, LinkedMember, Notice, Onlooker } from './host-parts.js';
+import { keepReport } from './keep-report.js';
 import {
   isCancelled,
   keepCancellation,
@@ -24,6 +26,7 @@ import {
 } from './run-entry.js';
 import { RunHost } from './run-host.js';
 import { RunLog, readLog } from './run-log.js';
+import { keepStart, readStart, startFromEntry } from './run-start.js';
 
 export interface BookParts {
   readonly state: string;
@@ -31,9 +34,24 @@ export interface BookParts {
   readonly waitingMost: number;
   readonly time: HostTime;
   readonly node: string;
-  fit(specification: FitSpecification, digest: string, roster: readonly Member[]): Run;
+  fit(
+    specification: FitSpecification,
+    digest: string,
+    roster: readonly Member[],
+    startFrom: StartFrom | null,
+  ): Run;
   connected(): readonly LinkedMember[];
   notice(notice: Notice): void;
+  readonly onlooker: Onlooker;
+}
+
+/** A specification as it was submitted, with its text. */
+interface Submission {
+  readonly text: string;
+  readonly specification: FitSpecification;
+  readonly digest: string;
+  readonly startFrom: StartFrom | null;
+  readonly submittedAt: string;
 }
 
 export type Submitted =
@@ -57,7 +75,7 @@ export class RunBook {
     if (!names.ok) return names;
     for (const name of names.value.sort()) {
       const taken = await this.recoverRun(name);
-      if (!taken.ok) this.parts.notice({ level: 'error', ...taken.failure, detail: { run: name } });
+      if (!taken.ok) this.parts.notice({ level: 'error', ...taken.failure, run: name });
     }
     return succeed(null);
   }
@@ -70,8 +88,11 @@ export class RunBook {
     return this.entries.get(run) ?? null;
   }
 
-  /** Accepts a specification; once this gives a run, the run survives a crash. */
-  async submit(text: string, file: string): Promise<Submitted> {
+  /**
+   * Accepts a specification, to start from the coefficients of the run `from` where one is named; once this gives a run,
+   * the run survives a crash.
+   */
+  async submit(text: string, file: string, from: string | null = null): Promise<Submitted> {
     const parsed = parseFitSpecification(text, file);
     if (!parsed.ok) return parsed;
     if (this.count('waiting') + this.accepting >= this.parts.waitingMost) {
@@ -80,11 +101,15 @@ export class RunBook {
       });
       return { ok: false, failures: [failure] };
     }
+    const start = from === null ? null : await startFromEntry(this.find(from), from, parsed.value);
+    if (start !== null && !start.ok) return { ok: false, failures: [start.failure] };
+    const startFrom = start?.value ?? null;
     const digest = digestOf(canonicalText(parsed.value));
     const submittedAt = new Date(this.parts.time.wallMs()).toISOString();
     const run = newRunId(submittedAt);
     this.accepting += 1;
-    const accepted = await this.accept(run, text, parsed.value, digest, submittedAt).finally(() => {
+    const submission = { text, specification: parsed.value, digest, startFrom, submittedAt };
+    const accepted = await this.accept(run, submission).finally(() => {
       this.accepting -= 1;
     });
     return accepted.ok ? { ok: true, run, digest } : { ok: false, failures: [accepted.failure] };
@@ -139,15 +164,9 @@ export class RunBook {
     return resolve(this.parts.state, 'runs');
   }
 
-  private async accept(
-    run: string,
-    text: string,
-    specification: FitSpecification,
-    digest: string,
-    submittedAt: string,
-  ): Promise<Checked<null>> {
+  private async accept(run: string, submission: Submission): Promise<Checked<null>> {
     const folder = join(this.runsFolder, run);
-    const opened = await this.openNew(run, folder, text, specification, digest, submittedAt);
+    const opened = await this.openNew(run, folder, submission);
     // What the analyst is told was not accepted must not be taken up at the next start.
     if (!opened.ok) await rm(folder, { recursive: true, force: true });
     return opened;
@@ -156,10 +175,7 @@ export class RunBook {
   private async openNew(
     run: string,
     folder: string,
-    text: string,
-    specification: FitSpecification,
-    digest: string,
-    submittedAt: string,
+    { text, specification, digest, startFrom, submittedAt }: Submission,
   ): Promise<Checked<null>> {
     const { title, sites } = specification;
     const made = await makeFolder(folder);
@@ -168,12 +184,18 @@ export class RunBook {
     if (!named.ok) return named;
     const kept = await writeWhole(join(folder, RUN_FILES.specification), text);
     if (!kept.ok) return kept;
+    const start = await keepStart(folder, startFrom);
+    if (!start.ok) return start;
     const log = await RunLog.open(join(folder, RUN_FILES.log));
     if (!log.ok) return log;
-    const accepted = { event: 'accepted', run, title, digest, sites, at: submittedAt } as const;
+    const from = startFrom === null ? {} : { startFrom: startFrom.run };
+    const accepted = { event: 'accepted', run, title, digest, sites, ...from, at: submittedAt } as const;
     const entry = { run, title, digest, submittedAt, folder, open: null, ended: null };
     const logged = log.value.append(accepted);
-    const opened = logged.ok ? await this.openRun(entry, specification, log.value, [accepted]) : logged;
+    if (logged.ok) this.parts.onlooker.event(run, accepted);
+    const opened = logged.ok
+      ? await this.openRun(entry, { specification, startFrom }, log.value, [accepted])
+      : logged;
     if (!opened.ok) log.value.close();
     return opened;
   }
@@ -203,9 +225,12 @@ export class RunBook {
     if (!text.ok) return text;
     const cancelled = await isCancelled(folder);
     if (!cancelled.ok) return cancelled;
+    const start = await readStart(folder);
+    if (!start.ok) return start;
     const parsed = parseFitSpecification(text.value, file);
     if (parsed.ok) {
-      const opened = await this.openRun(entry, parsed.value, log.value, events.value);
+      const submission = { specification: parsed.value, startFrom: start.value };
+      const opened = await this.openRun(entry, submission, log.value, events.value);
       if (opened.ok && cancelled.value) entry.open?.host.cancel();
       return opened;
     }
@@ -218,7 +243,7 @@ export class RunBook {
 
   private async openRun(
     entry: RunEntry,
-    specification: FitSpecification,
+    { specification, startFrom }: Pick<Submission, 'specification' | 'startFrom'>,
     log: RunLog,
     events: readonly LogEvent[],
   ): Promise<Checked<null>> {
@@ -229,15 +254,16 @@ export class RunBook {
     const digest = digestOf(canonical);
     const host = new RunHost(
       {
-        accepted: { run: entry.run, specification, canonical, digest },
-        start: (roster) => parts.fit(specification, digest, roster),
+        accepted: { run: entry.run, specification, canonical, digest, startFrom },
+        start: (roster, from) => parts.fit(specification, digest, roster, from),
         journal: openJournal(store.value),
         time: parts.time,
         connected: () => parts.connected(),
         mayStart: () => this.count('running') < parts.runningMost,
         log: (event) => this.log(entry, log, event),
-        notice: (notice) => parts.notice({ ...notice, detail: { run: entry.run, about: notice.detail } }),
-        keepResult: (end) => keepResult(entry.folder, end, specification),
+        notice: (notice) => parts.notice({ ...notice, run: entry.run }),
+        answered: parts.onlooker.answered,
+        keepResult: (end) => this.keep(entry, end, specification),
         logged: loggedIn(events),
         node: parts.node,
       },
@@ -249,10 +275,25 @@ export class RunBook {
     return succeed(null);
   }
 
+  /** Writes the result, then the report of it. */
+  private async keep(
+    entry: RunEntry,
+    end: RunEnd,
+    specification: FitSpecification,
+  ): Promise<Checked<string>> {
+    const kept = await keepResult(entry.folder, end, specification);
+    if (!kept.ok) return kept;
+    const { time, node, notice } = this.parts;
+    const endedAt = new Date(time.wallMs()).toISOString();
+    const report = await keepReport({ entry, specification, result: end.result, endedAt, node, notice });
+    return report.ok ? kept : report;
+  }
+
   /** A log with gaps would leave the tables of the result with gaps: the run stops, and says again what is missing. */
   private log(entry: RunEntry, log: RunLog, event: LogEvent): void {
     const kept = log.append(event);
-    if (!kept.ok) entry.open?.host.halt(kept.failure);
+    if (kept.ok) this.parts.onlooker.event(entry.run, event);
+    else entry.open?.host.halt(kept.failure);
   }
 
   /** Lets go of a run that has ended and gives its place to those that wait, first come first served. */

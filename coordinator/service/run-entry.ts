@@ -40,12 +40,14 @@ export interface RunEntry {
 
 export const RUN_FILES = {
   specification: 'specification.yaml',
+  start: 'start.json',
   journal: 'journal',
   log: 'log.jsonl',
   cancelled: 'cancelled',
   result: 'result.json',
   coefficients: 'coefficients.csv',
   rounds: 'rounds.csv',
+  report: 'report.html',
 } as const;
 
 export function summaryOf(entry: RunEntry): RunSummary {

@@ -47,7 +47,7 @@ export class RunHost {
       const replayed = await replay(journal, accepted.run, (opened) => this.openDrive(opened));
       if (journal.tornBytes > 0) {
         const message = `The last record of the journal was cut off; ${journal.tornBytes} bytes of it were removed.`;
-        this.parts.notice({ level: 'warn', message, detail: { run: accepted.run } });
+        this.parts.notice({ level: 'warn', message });
       }
       if (!replayed.ok) return this.stopOnBrokenJournal(replayed.failure);
       return this.resume(replayed.value);
@@ -134,7 +134,7 @@ export class RunHost {
 
   private async begin(roster: readonly Member[]): Promise<void> {
     const { accepted, journal, node } = this.parts;
-    const { run, canonical, digest } = accepted;
+    const { run, canonical, digest, startFrom } = accepted;
     const opened: OpenedRecord = {
       record: 'opened',
       format: 1,
@@ -142,6 +142,7 @@ export class RunHost {
       specification: canonical,
       digest,
       roster: roster.map((member) => ({ ...member })),
+      startFrom,
       software: SOFTWARE,
       node,
     };
@@ -152,7 +153,7 @@ export class RunHost {
     return this.run(drive.value, drive.value.begin());
   }
 
-  private openDrive({ run, digest, roster }: OpenedRecord): Checked<Drive> {
+  private openDrive({ run, digest, roster, startFrom }: OpenedRecord): Checked<Drive> {
     const { accepted } = this.parts;
     if (run !== accepted.run || digest !== accepted.digest) {
       return fail('journal-broken', `The journal is of run ${run} with specification ${digest}.`);
@@ -160,7 +161,7 @@ export class RunHost {
     this.drive = new Drive(
       run,
       roster,
-      (members) => this.parts.start(members),
+      (members) => this.parts.start(members, startFrom),
       (shown, measured) => this.tell.shown(shown, measured, roster),
     );
     return succeed(this.drive);

@@ -1,6 +1,6 @@
 import { join } from 'node:path';
 import type { FastifyInstance } from 'fastify';
-import { type Logger, pino } from 'pino';
+import type { Logger } from 'pino';
 import { z } from 'zod';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Pulse } from '../../protocol/link/websocket-link.js';
@@ -9,7 +9,10 @@ import { openApp } from './app.js';
 import { Connections } from './connections.js';
 import { Doorkeeper } from './doorkeeper.js';
 import { makeFolder, writeWhole } from './files.js';
-import type { HostTime, Notice } from './host-parts.js';
+import type { HostTime } from './host-parts.js';
+import { Metrics } from './metrics.js';
+import { noticeTo, openLog, runLines } from './operational-log.js';
+import { addPages } from './pages.js';
 import { addRoutes } from './routes.js';
 import { type BookParts, RunBook } from './run-book.js';
 import { type ServiceOptions, type ServiceSettings, serviceSettings } from './settings.js';
@@ -59,12 +62,12 @@ export async function startService(
   if (!settings.ok) return settings;
   const tls = await readTls(settings.value);
   if (!tls.ok) return tls;
-  const { state, logLevel } = settings.value;
+  const { state } = settings.value;
   const folder = await makeFolder(state);
   if (!folder.ok) return folder;
   const unlock = await lockState(state, process.pid);
   if (!unlock.ok) return unlock;
-  const logger = pino({ level: logLevel }, logDestination());
+  const logger = openLog(settings.value);
   const started = await run(settings.value, tls.value, logger, parts, unlock.value);
   if (!started.ok) await unlock.value();
   return started;
@@ -91,6 +94,12 @@ async function run(
     notice,
   });
   const { state, runningMost, waitingMost } = settings;
+  const metrics: Metrics = new Metrics({
+    runs: () => book.list(),
+    halted: () => book.halted(),
+    traffic: () => hub.traffic(),
+  });
+  const tell = runLines(notice);
   const book: RunBook = new RunBook({
     state,
     runningMost,
@@ -100,6 +109,13 @@ async function run(
     fit: parts.fit,
     connected: () => hub.connected(),
     notice,
+    onlooker: {
+      event: (run, event) => {
+        metrics.event(run, event);
+        tell(run, event);
+      },
+      answered: metrics.answered,
+    },
   });
   const recovered = await book.recover();
   if (!recovered.ok) return recovered;
@@ -110,7 +126,8 @@ async function run(
   const { pulse } = parts;
   const upgrade = upgradeHandler({ hub, doorkeeper, connections, settings, pulse });
   app.server.on('upgrade', upgrade.handle);
-  addRoutes(app, { book, hub, doorkeeper, settings, notice });
+  addPages(app, { book, doorkeeper, nowMs: steadyTime.steadyMs, isSecure: tls !== null });
+  addRoutes(app, { book, hub, doorkeeper, settings, metrics, notice });
   const recheck = setInterval(upgrade.recheck, TOKENS_RECHECKED_MS);
   const close = async (): Promise<void> => {
     clearInterval(recheck);
@@ -181,14 +198,4 @@ async function listen(app: FastifyInstance, { host, port }: ServiceSettings): Pr
       remedy: 'Give an address of this machine, and a port that this user may take, with --listen.',
     });
   }
-}
-
-/** Standard error. Where it cannot be written (a pipe that ended, a full disk), lines are lost and runs go on. */
-function logDestination(): pino.DestinationStream {
-  return pino.destination({ dest: 2, sync: true }).on('error', () => undefined);
-}
-
-/** The operational log: one JSON object a line on standard error. Tokens and numbers of sites never come here. */
-function noticeTo(logger: Logger): (notice: Notice) => void {
-  return ({ level, message, ...rest }) => logger[level](rest, message);
 }

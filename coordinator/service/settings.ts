@@ -48,6 +48,8 @@ export const serviceSettings = z.strictObject({
   readDeadlineMs: milliseconds.default(60_000),
   /** Level of the operational log on standard error. */
   logLevel: z.enum(['debug', 'info', 'warn', 'error', 'silent']).default('info'),
+  /** Its form: JSON objects, or sentences for people. */
+  log: z.enum(['json', 'plain']).default('json'),
 });
 
 export type ServiceOptions = z.input<typeof serviceSettings>;

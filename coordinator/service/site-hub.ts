@@ -24,6 +24,13 @@ export interface SiteSummary {
   readonly kernel: string;
 }
 
+export interface SiteTraffic {
+  readonly sent: number;
+  readonly received: number;
+  readonly waiting: number;
+  readonly links: number;
+}
+
 /** Shards a site may split its rows into. */
 const SHARDS_MOST = 1000;
 
@@ -38,6 +45,9 @@ export class SiteHub {
   /** How many links were opened before a member's. */
   private readonly places = new WeakMap<LinkedMember, number>();
   private opened = 0;
+  /** Of links that were closed, by the site of their token. */
+  private readonly carried = new Map<string, { sent: number; received: number }>();
+  private readonly siteOf = new WeakMap<Link<ToWorker, ToCoordinator>, string>();
 
   constructor(
     private readonly time: Pick<HostTime, 'after'>,
@@ -47,6 +57,23 @@ export class SiteHub {
   /** Links there are, greeted or not. */
   get linkCount(): number {
     return this.links.size;
+  }
+
+  /** By site: payload bytes of all its links since the start, those that wait to be sent, and its links now. */
+  traffic(): Map<string, SiteTraffic> {
+    const all = new Map<string, SiteTraffic>();
+    for (const [site, bytes] of this.carried) all.set(site, { ...bytes, waiting: 0, links: 0 });
+    for (const link of this.links) {
+      const site = this.siteOf.get(link) ?? '';
+      const before = all.get(site) ?? { sent: 0, received: 0, waiting: 0, links: 0 };
+      all.set(site, {
+        sent: before.sent + link.bytesSent,
+        received: before.received + link.bytesReceived,
+        waiting: before.waiting + link.bytesWaiting,
+        links: before.links + 1,
+      });
+    }
+    return all;
   }
 
   connected(): readonly LinkedMember[] {
@@ -65,12 +92,14 @@ export class SiteHub {
     let linked: LinkedMember | null = null;
     const place = this.opened++;
     this.links.add(link);
+    this.siteOf.set(link, site);
     const stopTimer = this.time.after(LIMITS.helloDeadlineMs, () =>
       link.close(CLOSE_CODES.helloLate, `no hello within ${LIMITS.helloDeadlineMs} ms`),
     );
     link.onClose((code, reason) => {
       stopTimer();
       this.links.delete(link);
+      this.carry(link, site);
       if (linked !== null) this.remove(linked);
       const level = code === CLOSE_CODES.normal || code === CLOSE_CODES.goingAway ? 'info' : 'warn';
       this.reports.notice({
@@ -149,6 +178,12 @@ export class SiteHub {
     this.places.set(linked, place);
     this.present.set(name, linked);
     return true;
+  }
+
+  private carry(link: Link<ToWorker, ToCoordinator>, site: string): void {
+    const before = this.carried.get(site) ?? { sent: 0, received: 0 };
+    const { bytesSent, bytesReceived } = link;
+    this.carried.set(site, { sent: before.sent + bytesSent, received: before.received + bytesReceived });
   }
 
   private remove(linked: LinkedMember): void {
