@@ -25,6 +25,7 @@ const COORDINATOR_ORDER = [
   'panel',
   'report',
   'run',
+  'inference',
   'consensus',
 ];
 const WORKER_ORDER = [
@@ -43,6 +44,7 @@ const PURE = [
   'numerics',
   'protocol',
   'coordinator/run',
+  'coordinator/inference',
   'coordinator/consensus',
   'coordinator/panel',
   'coordinator/report',

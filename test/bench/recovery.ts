@@ -87,7 +87,10 @@ async function measure(one: Case, folder: string): Promise<Measured> {
   const journal = await openedJournal(path);
   const started = cpuMs();
   let [sitesMs, slowestMs, journalMs, numbersUp] = [0, 0, 0, 0];
-  const lockstep = new Lockstep([one.method(posed)], sites.length);
+  const lockstep = new Lockstep(
+    [{ method: one.method(posed), part: null, sites: [...sites.keys()] }],
+    sites.length,
+  );
   for (let ask = 1; lockstep.asks.length > 0; ask++) {
     const works = lockstep.works(ask);
     const tookMs: number[] = [];
@@ -152,7 +155,7 @@ async function replayFrom(
   const started = cpuMs();
   const store = must(await fileStore(path));
   const journal = openJournal(store);
-  const lockstep = new Lockstep([method], siteCount);
+  const lockstep = new Lockstep([{ method, part: null, sites: [...Array(siteCount).keys()] }], siteCount);
   for (let record = must(await journal.next()); record !== null; record = must(await journal.next())) {
     if (record.record !== 'answered') throw new Error(`a record of ${record.record}`);
     const { ask, asked, replies } = record;

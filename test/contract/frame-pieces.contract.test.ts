@@ -17,7 +17,7 @@ import { answer, hello, refusal } from '../support/messages.js';
 /** A frame of 16 bits of length, and one of 64 bits. */
 const larger = (numbers: number): Answer => ({
   ...answer,
-  work: [{ work: 'factor', factor: Float64Array.from({ length: numbers }, (_, i) => 1 / (i + 1)) }],
+  work: [{ work: 'factor', factors: [Float64Array.from({ length: numbers }, (_, i) => 1 / (i + 1))] }],
 });
 const SMALL: readonly ToCoordinator[] = [hello, answer, refusal];
 const LARGE = larger(20_000);

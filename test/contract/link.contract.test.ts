@@ -117,7 +117,12 @@ describe.each([
     const { coordinator, worker } = await opened();
     const atWorker = listen(worker);
     const point = Float64Array.from([1, 2]);
-    const work = { work: 'evaluate' as const, problem: 0, points: [{ point, want: 'value' as const }] };
+    const work = {
+      work: 'evaluate' as const,
+      problem: 0,
+      part: null,
+      points: [{ point, want: 'value' as const }],
+    };
     coordinator.send({ ...ask, work: [{ ...work, ownFit: null, sketch: null }] });
     point.fill(9);
     await atWorker.until(1);
@@ -181,7 +186,11 @@ describe.each([
     ['an unknown kind', { kind: 'shutdown' }, CLOSE_CODES.messageUnexpected],
     ['a kind of the other direction', ask, CLOSE_CODES.messageUnexpected],
     ['a field missing', { kind: 'answer' }, CLOSE_CODES.frameMalformed],
-    ['NaN in a vector', { ...answer, work: [{ work: 'factor', factor: nan }] }, CLOSE_CODES.frameMalformed],
+    [
+      'NaN in a vector',
+      { ...answer, work: [{ work: 'factor', factors: [nan] }] },
+      CLOSE_CODES.frameMalformed,
+    ],
   ])('%s closes the link with the code that says why', async (_name, message, code) => {
     const { coordinator, worker } = await opened();
     const atWorker = listen(worker);
@@ -200,7 +209,12 @@ describe.each([
     const atWorker = listen(worker);
     listen(coordinator);
     const point = new Float64Array(2 ** 17);
-    const work = { work: 'evaluate' as const, problem: 0, points: [{ point, want: 'value' as const }] };
+    const work = {
+      work: 'evaluate' as const,
+      problem: 0,
+      part: null,
+      points: [{ point, want: 'value' as const }],
+    };
     expect(coordinator.send({ ...ask, work: [{ ...work, ownFit: null, sketch: null }] })).toBe(false);
     await atWorker.closed;
     expect(atWorker.closings).toMatchObject([{ code: CLOSE_CODES.frameTooLarge }]);
@@ -210,7 +224,12 @@ describe.each([
   test('send says no when the peer does not read and the buffer is full', async () => {
     const { coordinator, worker } = await opened();
     const point = new Float64Array(2 ** 16);
-    const work = { work: 'evaluate' as const, problem: 0, points: [{ point, want: 'value' as const }] };
+    const work = {
+      work: 'evaluate' as const,
+      problem: 0,
+      part: null,
+      points: [{ point, want: 'value' as const }],
+    };
     const large: ToWorker = { ...ask, work: [{ ...work, ownFit: null, sketch: null }] };
     let sent = 0;
     while (sent < 200 && coordinator.send(large)) sent++;

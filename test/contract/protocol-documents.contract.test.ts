@@ -5,8 +5,12 @@ import { CLOSE_CODES } from '../../protocol/close-codes.js';
 import { decodeToCoordinator, encodeMessage } from '../../protocol/codec.js';
 import { FAILURE_CODES } from '../../protocol/failure.js';
 import { LIMITS } from '../../protocol/limits.js';
+import { work } from '../../protocol/messages/round.js';
 import { toCoordinator } from '../../protocol/messages/to-coordinator.js';
 import { toWorker } from '../../protocol/messages/to-worker.js';
+import { canonicalText, readCanonical } from '../../protocol/specification/canonical.js';
+import { designColumns } from '../../protocol/specification/design-columns.js';
+import { parseFitSpecification } from '../../protocol/specification/parse.js';
 import { PROTOCOL_VERSION, SUBPROTOCOL } from '../../protocol/version.js';
 import { cddlRules, formOfCddl, formOfSchema } from '../support/cddl.js';
 
@@ -90,8 +94,42 @@ describe('README.md', () => {
   test('every kind of message and of work is explained', () => {
     for (const kind of [...kindsOf(toWorker), ...kindsOf(toCoordinator)])
       expect(readme).toContain(`\`${kind}\``);
-    for (const work of ['survey', 'proximal', 'evaluate', 'joint', 'factor'])
-      expect(readme).toContain(`**\`${work}\`**`);
+    for (const { shape } of work.options) expect(readme).toContain(`**\`${shape.work.value}\`**`);
+  });
+
+  test('the specification shown is a canonical one, with the columns named below it', () => {
+    const text = /```json\n(\{.*\})\n```/.exec(readme)?.[1] ?? '';
+    const read = readCanonical(text);
+    expect(read).toMatchObject({ ok: true });
+    if (!read.ok) return;
+    const named = /has the design columns (.*)\./.exec(readme)?.[1].match(/`[^`]+`/g) ?? [];
+    expect(named.map((name) => name.slice(1, -1))).toEqual(designColumns(read.value).map(({ name }) => name));
+  });
+
+  test('every member of a canonical specification is explained', () => {
+    // one that has every member there can be: exposure and offset exclude each other
+    const full = (role: string): string[] => {
+      const parsed = parseFitSpecification(
+        `commonfit: 1
+title: All there is
+sites: [harrowmere, castlefen]
+response: {column: breaks}
+loss: poisson
+${role}: {column: size}
+weights: {column: counted}
+terms: [{column: age}]
+penalty: [{kind: ridge, lambda: [0.1, 0.2]}]
+choose: {folds: 5, seed: 7, rule: minimum}
+report: [covariance]
+`,
+        'all.fit.yaml',
+      );
+      return parsed.ok ? Object.keys(JSON.parse(canonicalText(parsed.value))) : [];
+    };
+    const members = [...new Set([...full('exposure'), ...full('offset')])];
+    expect(members).toContain('choose');
+    const explained = tableUnder('The specification').flatMap(([cell]) => cell.split(', '));
+    expect(explained.sort()).toEqual(members.sort());
   });
 
   test('the worked message is one, and is what we would send', () => {

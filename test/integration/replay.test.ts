@@ -106,6 +106,29 @@ describe('a rehearsed run', () => {
   });
 });
 
+describe('result --verify', () => {
+  test('says what each certificate was recomputed from, and ends with 0', async () => {
+    const { code, stdout, stderr } = await stage.commonfit('result', 'rehearsed', '--verify');
+    expect({ code, stderr }).toEqual({ code: 0, stderr: '' });
+    expect(stdout.replace(/\s+/g, ' ')).toMatch(
+      /^Verified: result\.json is what the stored answers give, certificates included\. The gap of the fit at λ = 0\.002 is at most \S+ of the objective \(measured\): recomputed from the answers of 3 sites to ask \d+\./,
+    );
+  });
+
+  test('a changed certificate ends with 8; a folder that is not there with 3', async () => {
+    const text = await readFile(changed('result.json'), 'utf8');
+    await writeFile(changed('result.json'), text.replace(/("gap": )[-\d.e]+/, '$11e-15'));
+    const { code, stdout } = await stage.commonfit('result', 'changed', '--verify', '--json');
+    expect(code).toBe(8);
+    expect(JSON.parse(stdout)).toMatchObject({
+      event: 'verified',
+      verifies: false,
+      fits: [{ differences: [expect.stringContaining('certificate.gap is 1e-15')] }],
+    });
+    expect((await stage.commonfit('result', './nowhere', '--verify')).code).toBe(3);
+  });
+});
+
 describe('what was changed is told', () => {
   test('one number in an answer: at the next ask', async () => {
     const all = await records(changed('journal'));

@@ -121,7 +121,7 @@ test('a member that answers wrongly is cut off each time, and asked again where 
     [
       (ask) => ({
         ...answerOf(ask, new Float64Array(10)),
-        work: [{ work: 'factor', factor: new Float64Array(66) }],
+        work: [{ work: 'factor', factors: [new Float64Array(66)] }],
       }),
       CLOSE_CODES.messageUnexpected,
     ],

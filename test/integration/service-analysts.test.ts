@@ -1,7 +1,16 @@
 import { mkdir, readdir, readFile } from 'node:fs/promises';
 import { join } from 'node:path';
 import { describe, expect, test } from 'vitest';
-import { bench, call, connectBoth, follow, siteToken, start, submit } from '../support/service-bench.js';
+import {
+  bench,
+  call,
+  connectBoth,
+  follow,
+  SPECIFICATION,
+  siteToken,
+  start,
+  submit,
+} from '../support/service-bench.js';
 import { TOY_ROUNDS } from '../support/toy-run.js';
 
 describe('analysts', () => {
@@ -49,6 +58,33 @@ describe('analysts', () => {
     const problem = (await response.json()) as { code: string; failures: { where: { file: string } }[] };
     expect(problem.failures.length).toBeGreaterThan(1);
     expect(problem.failures[0].where.file).toBe('bad.fit.yaml');
+  });
+
+  test('a start from a run that is not there, has not ended or has no coefficients is refused', async () => {
+    const address = await start();
+    const run = await submit();
+    const startFrom = (from: unknown) =>
+      call('/v1/runs', {
+        method: 'POST',
+        headers: { 'content-type': 'application/json' },
+        body: JSON.stringify({ specification: SPECIFICATION, file: 'pressure.fit.yaml', startFrom: from }),
+      });
+    for (const from of ['none', '../../x', run]) {
+      const response = await startFrom(from);
+      expect(response.status).toBe(404);
+      expect(await response.json()).toMatchObject({ code: 'not-found' });
+    }
+    expect((await startFrom({})).status).toBe(400);
+    await connectBoth(address);
+    await follow(run);
+    const refused = await startFrom(run);
+    expect(refused.status).toBe(422);
+    expect(await refused.json()).toMatchObject({
+      title: 'The start is refused',
+      code: 'field-value',
+      detail: `Run ${run} has no coefficients to start from.`,
+    });
+    expect(((await (await call('/v1/runs')).json()) as { runs: unknown[] }).runs).toHaveLength(1);
   });
 
   test('cancel ends a run', async () => {

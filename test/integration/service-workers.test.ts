@@ -53,7 +53,7 @@ describe('workers that do not keep to the protocol', () => {
           kind: 'answer',
           run: 'r',
           ask: 1,
-          work: [{ work: 'factor', factor: Float64Array.of(1) }],
+          work: [{ work: 'factor', factors: [Float64Array.of(1)] }],
         }),
       CLOSE_CODES.messageUnexpected,
     ],
@@ -115,7 +115,7 @@ describe('workers that do not keep to the protocol', () => {
     ['NaN', spoil(() => Float64Array.of(Number.NaN)), CLOSE_CODES.frameMalformed],
     [
       'another kind of answer',
-      (ask) => ({ ...toyAnswer(ask, 0), work: [{ work: 'factor', factor: Float64Array.of(1) }] }),
+      (ask) => ({ ...toyAnswer(ask, 0), work: [{ work: 'factor', factors: [Float64Array.of(1)] }] }),
       CLOSE_CODES.messageUnexpected,
     ],
   ])('%s closes the link; the run waits for an honest answer', async (_, reply, code) => {
@@ -138,7 +138,8 @@ describe('workers that do not keep to the protocol', () => {
   test('answers nobody asked for are dropped and the link stays', async () => {
     const address = await start();
     const [harrowmere] = await connectBoth(address);
-    const unasked = { kind: 'answer', work: [{ work: 'factor', factor: Float64Array.of(1) }] } as const;
+    const work = [{ work: 'factor' as const, factors: [Float64Array.of(1)] }];
+    const unasked = { kind: 'answer' as const, work };
     harrowmere.send({ ...unasked, work: [...unasked.work], run: 'none', ask: 1 });
     const run = await submit();
     harrowmere.send({ ...unasked, work: [...unasked.work], run, ask: 99 });

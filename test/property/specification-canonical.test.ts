@@ -17,8 +17,51 @@ const rounds = fc.record(
   { requiredKeys: [] },
 );
 
+const penalty = (lambda: fc.Arbitrary<unknown>) =>
+  fc.record({
+    kind: fc.constantFrom('ridge', 'lasso'),
+    lambda,
+    scaled: fc.boolean(),
+    'per-term': fc.dictionary(
+      fc.constantFrom('x', 'm', 'm=b', 'x:m'),
+      fc.double({ min: 0, max: 9, noNaN: true }),
+      { noNullPrototype: true },
+    ),
+  });
+const one = fc.double({ min: 0, max: 1e6, noNaN: true });
+const path = fc.record(
+  {
+    count: fc.integer({ min: 2, max: 30 }),
+    ratio: fc.double({ min: 1e-9, max: 0.9, noNaN: true }),
+  },
+  { requiredKeys: [] },
+);
+
+const choose = fc.oneof(
+  fc.record(
+    {
+      folds: fc.integer({ min: 2, max: 100 }),
+      seed: fc.integer({ min: 0, max: 2 ** 32 - 1 }),
+      rule: fc.constantFrom('minimum', 'one-standard-error'),
+    },
+    { requiredKeys: ['folds'] },
+  ),
+  fc.record({ folds: fc.record({ column: name }) }),
+  fc.record({ criterion: fc.constantFrom('aic', 'bic', 'extended-bic') }),
+);
+
+const report = fc
+  .tuple(
+    fc.subarray(['covariance', 'term-tests', 'margins', 'compare-sites', 'fit-quality']),
+    fc.option(fc.oneof(fc.constant('sandwich'), fc.record({ sandwich: fc.record({ cluster: name }) }))),
+    fc.option(
+      fc.record({ profile: fc.uniqueArray(fc.constantFrom('x', 'm', 'm=b', 'x:m=c'), { minLength: 1 }) }),
+    ),
+  )
+  .map(([plain, ...others]) => [...plain, ...others.filter((part) => part !== null)]);
+
 /** Documents with columns x0…, a levels column and any of the optional fields. */
-const documents: fc.Arbitrary<Document> = fc.record(
+const plainDocuments: fc.Arbitrary<Document> = fc.record(
   {
     commonfit: fc.constant(1),
     title: fc.string({ maxLength: 30 }),
@@ -38,23 +81,21 @@ const documents: fc.Arbitrary<Document> = fc.record(
       { column: 'm', levels: ['a', 'b', 'c'] },
       { product: ['x', 'm'] },
     ]),
-    penalty: fc.array(
-      fc.record({
-        kind: fc.constantFrom('ridge', 'lasso'),
-        lambda: fc.double({ min: 0, max: 1e6, noNaN: true }),
-        scaled: fc.boolean(),
-        'per-term': fc.dictionary(
-          fc.constantFrom('x', 'm', 'm=b', 'x:m'),
-          fc.double({ min: 0, max: 9, noNaN: true }),
-          { noNullPrototype: true },
-        ),
-      }),
-      { maxLength: 3 },
-    ),
+    penalty: fc.array(penalty(one), { maxLength: 3 }),
+    intercept: fc.constantFrom('shared', 'per-site', 'none'),
+    report,
     rounds,
     barrier,
   },
   { requiredKeys: ['commonfit', 'sites', 'response', 'loss', 'terms'], noNullPrototype: true },
+);
+
+/** The same with several λ and a choice among their fits. */
+const documents: fc.Arbitrary<Document> = fc.oneof(
+  plainDocuments,
+  fc
+    .tuple(plainDocuments, penalty(fc.oneof(path, fc.array(one, { minLength: 2, maxLength: 30 }))), choose)
+    .map(([document, several, chosen]) => ({ ...document, penalty: [several], choose: chosen })),
 );
 
 const parse = (text: string) => parsedValue(parseFitSpecification(text, 'x.fit.yaml'));

@@ -182,6 +182,10 @@ class SimEnd<Outgoing extends Message, Incoming extends Message> implements Link
     return this.inner.bytesReceived;
   }
 
+  get bytesWaiting(): number {
+    return this.inner.bytesWaiting;
+  }
+
   send(message: Outgoing): boolean {
     return this.sendAltered(message);
   }

@@ -51,7 +51,7 @@ export class SimCoordinator {
     const weather = this.cluster.weatherOf('coordinator', () => this.cluster.crashCoordinator());
     const host: RunHost = new RunHost(
       {
-        accepted: { run, specification, canonical, digest },
+        accepted: { run, specification, canonical, digest, startFrom: null },
         start: (roster) => fitRun(specification, digest, roster),
         journal: openJournal(journalStoreOn(stored.journal, this.process, weather)),
         time: this.process,

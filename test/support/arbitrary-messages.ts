@@ -25,14 +25,24 @@ const want = fc.constantFrom(
   'curvature' as const,
 );
 
+const label = fc.string({ minLength: 1, maxLength: 30 });
+const part = orNull(
+  fc.record({ fold: label, side: fc.constantFrom('training' as const, 'held-out' as const) }),
+);
+const setting = fc.oneof(
+  fc.record({ set: fc.constant('level' as const), column: text, level: text }),
+  fc.record({ set: fc.constant('slope' as const), column: text }),
+);
+
 const work: fc.Arbitrary<Work> = fc.oneof(
   fc.constant({ work: 'survey' as const }),
-  fc.constant({ work: 'factor' as const }),
+  fc.record({ work: fc.constant('factor' as const), folds: fc.array(label, { maxLength: 3 }) }),
   fc.record({
     work: fc.constant('proximal' as const),
     problems: some(
       fc.record({
         problem: count,
+        part,
         center: vector,
         scale: positive,
         diagonal: orNull(vector),
@@ -45,6 +55,7 @@ const work: fc.Arbitrary<Work> = fc.oneof(
   fc.record({
     work: fc.constant('evaluate' as const),
     problem: count,
+    part,
     points: some(fc.record({ point: vector, want })),
     ownFit: orNull(fc.record({ at: count, hold: positive })),
     sketch: orNull(fc.record({ at: count, directions: vector, columns: askNumber })),
@@ -58,13 +69,32 @@ const work: fc.Arbitrary<Work> = fc.oneof(
     l1: vector,
     l2: vector,
   }),
+  fc.record({
+    work: fc.constant('scores' as const),
+    problem: count,
+    point: vector,
+    meat: fc.boolean(),
+    clustered: fc.boolean(),
+  }),
+  fc.record({ work: fc.constant('site-fit' as const), problem: count, start: vector }),
+  fc.record({
+    work: fc.constant('margins' as const),
+    problem: count,
+    point: vector,
+    settings: some(setting),
+  }),
+  fc.record({
+    work: fc.constant('quality' as const),
+    problem: count,
+    point: vector,
+    edges: vector,
+    inverse: orNull(vector),
+    leverageHigh: number,
+  }),
 );
 
-const surveyAnswer = fc.record({
-  work: fc.constant('survey' as const),
+const moments = {
   rowsUsed: count,
-  rowsDropped: count,
-  columns: fc.array(text, { maxLength: 5 }),
   mean: vector,
   centredSquares: vector,
   response: fc.record({
@@ -75,6 +105,14 @@ const surveyAnswer = fc.record({
     most: number,
     saturatedLoss: number,
   }),
+};
+
+const surveyAnswer = fc.record({
+  work: fc.constant('survey' as const),
+  ...moments,
+  rowsDropped: count,
+  columns: fc.array(text, { maxLength: 5 }),
+  folds: fc.array(fc.record({ fold: label, ...moments }), { maxLength: 3 }),
   allowance: fc.record({
     leave,
     curvatureMost: orNull(count),
@@ -88,7 +126,7 @@ const quadratic = fc.record({ value: number, gradient: vector, curvature: vector
 
 const workAnswer: fc.Arbitrary<WorkAnswer> = fc.oneof(
   surveyAnswer,
-  fc.record({ work: fc.constant('factor' as const), factor: vector }),
+  fc.record({ work: fc.constant('factor' as const), factors: some(vector) }),
   fc.record({
     work: fc.constant('proximal' as const),
     problems: some(fc.record({ problem: count, point: vector, newtonSteps: count })),
@@ -114,6 +152,48 @@ const workAnswer: fc.Arbitrary<WorkAnswer> = fc.oneof(
     point: vector,
     end: quadratic,
     newtonSteps: count,
+  }),
+  fc.record({
+    work: fc.constant('scores' as const),
+    problem: count,
+    gradient: vector,
+    meat: orNull(vector),
+    clustered: orNull(vector),
+    clusterCount: count,
+    pearson: number,
+  }),
+  fc.record({
+    work: fc.constant('site-fit' as const),
+    problem: count,
+    fit: orNull(
+      fc.record({
+        point: vector,
+        value: number,
+        curvature: vector,
+        undetermined: fc.array(count, { maxLength: 3 }),
+        pearson: number,
+      }),
+    ),
+    reason: orNull(text),
+  }),
+  fc.record({
+    work: fc.constant('margins' as const),
+    problem: count,
+    rows: count,
+    settings: some(fc.record({ sum: number, gradient: vector })),
+  }),
+  fc.record({
+    work: fc.constant('quality' as const),
+    problem: count,
+    rows: count,
+    binRows: vector,
+    binPredicted: vector,
+    binObserved: vector,
+    rowsSuppressed: count,
+    pearsonSum: number,
+    pearsonSquares: number,
+    leverage: orNull(fc.record({ sum: number, most: number, rowsHigh: count })),
+    zeros: orNull(fc.record({ observed: count, expected: number })),
   }),
 );
 

@@ -23,7 +23,7 @@ export function cddlRules(text: string): Map<string, string> {
 }
 
 /** These stay names: what they stand for is checked by other tests. */
-const PRIMITIVES = new Set(['vector', 'number', 'positive', 'count', 'positive-count', 'tstr']);
+const PRIMITIVES = new Set(['vector', 'number', 'positive', 'count', 'positive-count', 'tstr', 'bool']);
 
 /** The common form of a CDDL type. Choices and map keys are sorted, since their order does not matter. */
 export function formOfCddl(type: string, rules: ReadonlyMap<string, string>): string {
@@ -66,6 +66,7 @@ export function formOfSchema(schema: z.core.$ZodType): string {
     return choiceForm([...schema.values].map((value) => JSON.stringify(value)));
   if (schema instanceof z.ZodArray) return arrayFormOf(schema);
   if (schema instanceof z.ZodString) return 'tstr';
+  if (schema instanceof z.ZodBoolean) return 'bool';
   if (schema instanceof z.ZodNumber) return numberForm(schema);
   if (schema instanceof z.ZodCustom) return 'vector';
   throw new Error(`a schema that CDDL has no form for: ${schema._zod.def.type}`);

@@ -5,6 +5,7 @@ import type {
   Transform,
 } from '../../protocol/specification/types.js';
 import type { LevelColumn, Table } from '../../worker/source/table.js';
+import { NO_REPORT } from './specifications.js';
 
 /** A specification that is sound by itself; tests change what they are about. */
 export const specification = (partial: Partial<FitSpecification>): FitSpecification => ({
@@ -18,6 +19,8 @@ export const specification = (partial: Partial<FitSpecification>): FitSpecificat
   intercept: 'shared',
   terms: [],
   penalties: [],
+  choose: null,
+  report: NO_REPORT,
   rounds: { tolerance: 1e-8, most: 300, rung: 'highest' },
   barrier: { deadlineMs: 1000, quorum: 'all', oldest: 0, patienceMs: 1000, missing: 'stop' },
   ...partial,

@@ -4,59 +4,100 @@ import { join } from 'node:path';
 import { fit as runOf } from '../../coordinator/run/fit.js';
 import type { ResultDocument } from '../../coordinator/run/result.js';
 import type { Batch, Member, RunAsk } from '../../coordinator/run/run.js';
-import type { WorkAnswer } from '../../protocol/messages/round.js';
+import type { StartFrom } from '../../coordinator/run/start-from.js';
+import type { Work, WorkAnswer } from '../../protocol/messages/round.js';
 import type { Allowance } from '../../protocol/messages/survey.js';
 import { canonicalText, digestOf } from '../../protocol/specification/canonical.js';
 import { parseFitSpecification } from '../../protocol/specification/parse.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
+import type { FilledWork } from '../../worker/custody/content.js';
 import { buildRawShard } from '../../worker/design/build.js';
 import { tableRequest } from '../../worker/design/request.js';
-import { scaleShard } from '../../worker/design/scale.js';
 import type { RawShard } from '../../worker/design/shard.js';
-import { surveyOf } from '../../worker/design/survey.js';
-import { type LocalSolver, localSolver } from '../../worker/local/local-solver.js';
+import { lastOf } from '../../worker/local/local-solver.js';
+import { type SiteSolvers, siteSolvers } from '../../worker/local/site-solvers.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { answerSteps } from '../../worker/service/compute.js';
 import { readTable } from '../../worker/source/read-table.js';
 import { splitTable } from '../../worker/source/split.js';
-import { answerLocally, must } from './method-driver.js';
+import { must } from './method-driver.js';
 import { parsedValue } from './specifications.js';
 
 const SHARD = { index: 1, of: 1 };
 
-/** A whole run over a table split by its column `site`, in this process: no link, no panel. `curvatureMost` null: no limit. */
+/** The sites of a run in this process, their rows a table split by its column `site`: no link, no panel. */
+export interface SitesInProcess {
+  readonly spec: FitSpecification;
+  readonly roster: readonly Member[];
+  answer(asked: RunAsk): Batch;
+}
+
+/** A whole run in this process. `curvatureMost` null: no limit. */
 export async function fitInProcess(
   text: string,
   table: string,
   curvatureMost: number | null,
+  startFrom: StartFrom | null = null,
 ): Promise<ResultDocument> {
+  return fitOn(await sitesInProcess(text, table, curvatureMost), startFrom);
+}
+
+/** A whole run among these sites, which may have more than one. */
+export function fitOn({ spec, roster, answer }: SitesInProcess, startFrom: StartFrom | null): ResultDocument {
+  const run = runOf(spec, digestOf(canonicalText(spec)), roster, startFrom);
+  for (let step = run.next(); ; ) {
+    if (step.done) return step.value.result;
+    step = run.next(answer(step.value));
+  }
+}
+
+export async function sitesInProcess(
+  text: string,
+  table: string,
+  curvatureMost: number | null,
+): Promise<SitesInProcess> {
   const spec = parsedValue(parseFitSpecification(text, 'case.fit.yaml'));
   if ('least' in spec.sites) throw new Error('name the sites');
   const loss = lossOf(spec.loss);
   const allowance: Allowance = {
-    leave: ['counts', 'moments', 'proximal', 'gradients', 'curvature', 'sketches'],
+    leave: [
+      'counts',
+      'moments',
+      'proximal',
+      'gradients',
+      'curvature',
+      'site-estimates',
+      'sketches',
+      'residual-bins',
+    ],
     curvatureMost,
     numbersMost: null,
     roundsMost: null,
   };
   const raws = await rawShards(text, table, spec.sites);
   const roster: Member[] = spec.sites.map((site) => ({ site, shard: SHARD, kernel: 'here' }));
-  let solvers: LocalSolver[] | null = null;
+  let solvers: SiteSolvers[] | null = null;
   const answer = ({ works, scaling }: RunAsk): Batch => {
-    if (scaling !== null)
-      solvers ??= raws.map((raw) => localSolver(scaleShard(raw, scaling, spec.intercept === 'shared'), loss));
+    if (scaling !== null) solvers ??= raws.map((raw) => siteSolvers(spec, raw, scaling));
     const replies = works.map((own, i) =>
       (own ?? []).map((work): WorkAnswer => {
-        if (work.work === 'survey') return { work: 'survey', ...surveyOf(raws[i], loss), allowance };
-        if (solvers === null) throw new Error('asked before the scaling was known');
-        return answerLocally(work, solvers[i]);
+        const means = { raw: raws[i], loss, solvers: solvers?.[i] ?? null, allowance };
+        return must(lastOf(answerSteps(filled(work), means)));
       }),
     );
     return { replies, agesMs: works.map(() => 0), gone: [] };
   };
-  const run = runOf(spec, digestOf(canonicalText(spec)), roster);
-  for (let step = run.next(); ; ) {
-    if (step.done) return step.value.result;
-    step = run.next(answer(step.value));
-  }
+  return { spec, roster, answer };
+}
+
+/** An ask in this process leaves nothing out. */
+function filled(work: Work): FilledWork {
+  if (work.work !== 'proximal') return work;
+  const problems = work.problems.map(({ problem, part, center, scale, diagonal, start }) => {
+    if (diagonal === null || start === null) throw new Error('a full ask leaves nothing out');
+    return { problem, part, center, scale, diagonal, start };
+  });
+  return { work: 'proximal', problems };
 }
 
 async function rawShards(text: string, table: string, sites: readonly string[]): Promise<RawShard[]> {

@@ -16,9 +16,13 @@ export interface Traffic {
 export function answerLocally(work: Work, site: LocalSolver): WorkAnswer {
   switch (work.work) {
     case 'survey':
-      throw new Error('a method does not survey');
+    case 'scores':
+    case 'site-fit':
+    case 'margins':
+    case 'quality':
+      throw new Error(`a method does not ask for ${work.work}`);
     case 'factor':
-      return { work: 'factor', factor: must(site.factor()) };
+      return { work: 'factor', factors: [must(site.factor())] };
     case 'evaluate':
       return {
         work: 'evaluate',
@@ -55,7 +59,9 @@ export function driveMethods(
   methods: readonly Method[],
   sites: readonly LocalSolver[],
 ): { readonly ends: readonly MethodEnd[]; readonly rounds: number; readonly traffic: Traffic } {
-  const lockstep = new Lockstep(methods, sites.length);
+  const everyone = [...sites.keys()];
+  const problems = methods.map((method) => ({ method, part: null, sites: everyone }));
+  const lockstep = new Lockstep(problems, sites.length);
   let up = 0;
   let down = 0;
   let rounds = 0;

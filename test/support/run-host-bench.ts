@@ -13,7 +13,7 @@ import { VirtualTime } from './virtual-time.js';
 
 export const MEANS: Record<string, number> = { harrowmere: 3.1, 'lindell-bay': 0.7, castlefen: -2.2 };
 export const SITES = Object.keys(MEANS);
-const ACCEPTED = { run: 'r1', canonical: '{}', digest: 'd'.repeat(64) };
+const ACCEPTED = { run: 'r1', canonical: '{}', digest: 'd'.repeat(64), startFrom: null };
 
 export type Replies = (ask: Ask, site: string) => readonly (Answer | Refusal)[];
 export const honest: Replies = (ask, site) => [toyAnswer(ask, MEANS[site])];

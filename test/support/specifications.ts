@@ -1,5 +1,6 @@
 import { expect } from 'vitest';
 import type { Failure } from '../../protocol/failure.js';
+import type { ReportParts } from '../../protocol/specification/types.js';
 import type { Parsed } from '../../protocol/specification/yaml-document.js';
 
 /** Line by line, so that tests can say on which line something stands. */
@@ -28,6 +29,18 @@ export function breaksWith(
 ): string {
   return [...BREAKS.map((line, index) => replaced[index + 1] ?? line), ...added].join('\n');
 }
+
+/** A report that asks for nothing. */
+export const NO_REPORT: ReportParts = {
+  covariance: false,
+  sandwich: null,
+  termTests: false,
+  profile: [],
+  debiased: false,
+  margins: false,
+  compareSites: false,
+  fitQuality: false,
+};
 
 export function parsedValue<T>(parsed: Parsed<T>): T {
   if (!parsed.ok) expect.unreachable(JSON.stringify(parsed.failures, null, 1));

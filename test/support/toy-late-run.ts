@@ -67,6 +67,7 @@ function* attempt(
             {
               work: 'evaluate',
               problem: 0,
+              part: null,
               points: [{ point: Float64Array.of(z), want: 'gradient' }],
               ownFit: null,
               sketch: null,
@@ -119,6 +120,7 @@ function shownRound(
 ): Shown {
   return {
     kind: 'round',
+    stage: 'solve',
     round,
     tolerance: 1e-8,
     fitsOpen: 1,
@@ -165,6 +167,14 @@ function endOf(
     rungReason: null,
     tolerance: 1e-8,
     fits: [],
+    chosen: null,
+    choice: null,
+    inference: null,
+    comparison: null,
+    fitQuality: null,
+    omitted: [],
+    startedFrom: null,
+    moved: null,
     notes: way.map((numbers) => numbers.join(' ')),
     rounds,
     numbersSent: [],

@@ -3,6 +3,7 @@ import { memberName } from '../../coordinator/run/run.js';
 import type { Answer, Ask } from '../../protocol/messages/round.js';
 import type { SurveyAnswer } from '../../protocol/messages/survey.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
+import { NO_REPORT } from './specifications.js';
 
 /** The mean of one number per site by gradient steps: a run small enough to be checked by hand. */
 export const TOY_ROUNDS = 3;
@@ -18,6 +19,8 @@ export const toySpecification = (sites: FitSpecification['sites']): FitSpecifica
   intercept: 'shared',
   terms: [],
   penalties: [],
+  choose: null,
+  report: NO_REPORT,
   rounds: { tolerance: 1e-8, most: 300, rung: 'highest' },
   barrier: { deadlineMs: 1000, quorum: 'all', oldest: 0, patienceMs: 5000, missing: 'stop' },
 });
@@ -39,6 +42,7 @@ export function* toyRun(specification: FitSpecification, digest: string, roster:
         {
           work: 'evaluate',
           problem: 0,
+          part: null,
           points: [{ point: Float64Array.of(z), want: 'gradient' }],
           ownFit: null,
           sketch: null,
@@ -82,6 +86,14 @@ export function* toyRun(specification: FitSpecification, digest: string, roster:
       rungReason: null,
       tolerance: 1e-8,
       fits: [],
+      chosen: null,
+      choice: null,
+      inference: null,
+      comparison: null,
+      fitQuality: null,
+      omitted: [],
+      startedFrom: null,
+      moved: null,
       notes: [String(z)],
       rounds: TOY_ROUNDS,
       numbersSent: [],
@@ -92,6 +104,7 @@ export function* toyRun(specification: FitSpecification, digest: string, roster:
 function shownRound(round: number, objective: number): Shown {
   return {
     kind: 'round',
+    stage: 'solve',
     round,
     tolerance: 1e-8,
     fitsOpen: 1,
@@ -117,6 +130,7 @@ const toySurvey: SurveyAnswer = {
   mean: new Float64Array(),
   centredSquares: new Float64Array(),
   response: { weightSum: 10, weightedSum: 5, exposureSum: 10, least: 0, most: 1, saturatedLoss: 0 },
+  folds: [],
   allowance: { leave: [], curvatureMost: null, numbersMost: null, roundsMost: null },
   notes: [],
 };

@@ -1,4 +1,5 @@
 import { describe, expect, test } from 'vitest';
+import { checkAnswer } from '../../protocol/check-answer.js';
 import { fail, succeed } from '../../protocol/failure.js';
 import type { ProximalProblem } from '../../protocol/messages/proximal.js';
 import type { Answer, Ask, Work } from '../../protocol/messages/round.js';
@@ -23,6 +24,7 @@ const vector = (...values: number[]): Float64Array => Float64Array.from(values);
 
 const fullProblem = (more: Partial<ProximalProblem> = {}): ProximalProblem => ({
   problem: 0,
+  part: null,
   center: vector(-1, 0.1, 0),
   scale: 0.3,
   diagonal: vector(1, 2, 0.5),
@@ -36,6 +38,7 @@ const proximal = (...problems: ProximalProblem[]): Work => ({ work: 'proximal', 
 const gradient: Work = {
   work: 'evaluate',
   problem: 0,
+  part: null,
   points: [{ point: vector(-1, 0, 0), want: 'gradient' }],
   ownFit: null,
   sketch: null,
@@ -407,3 +410,71 @@ describe('refusals', () => {
     expect(codeOf(await reply)).toBe('run-cancelled');
   });
 });
+
+describe('work at the point found', () => {
+  const spec = specification(['report: [sandwich, margins, compare-sites, fit-quality]']);
+  const policy = {
+    ...OPEN_POLICY,
+    leave: [...OPEN_POLICY.leave, 'site-estimates', 'residual-bins'] as const,
+  };
+  const point = vector(-1, 0.1, 0.05);
+  const works: Work[] = [
+    { work: 'scores', problem: 0, point, meat: true, clustered: false },
+    { work: 'site-fit', problem: 0, start: point },
+    { work: 'margins', problem: 0, point, settings: [{ set: 'slope', column: 'age_years' }] },
+    { work: 'quality', problem: 0, point, edges: vector(-1, 0), inverse: null, leverageHigh: 0.1 },
+  ];
+
+  test('is answered in order and goes into the ledger by its kinds', async () => {
+    const { answerer, file } = await siteInMemory({ policy: { ...policy, leave: [...policy.leave] } });
+    answerer.prepare(prepareOf('r1', spec));
+    const reply = answered(await answerer.answer(askOf('r1', 1, ...works)));
+    expect(reply.work.map(({ work }) => work)).toEqual(['scores', 'site-fit', 'margins', 'quality']);
+    expect(checkAnswer(askOf('r1', 1, ...works), reply, 3)).toBeNull();
+    const [line] = readLines(file.text);
+    expect([...line.kinds].sort()).toEqual(['curvature', 'gradients', 'residual-bins', 'site-estimates']);
+  });
+
+  test('is refused where the policy lets no such kind leave', async () => {
+    const { answerer } = await siteInMemory();
+    answerer.prepare(prepareOf('r1', spec));
+    expect(codeOf(await answerer.answer(askOf('r1', 1, works[1])))).toBe('policy-kind');
+    expect(codeOf(await answerer.answer(askOf('r1', 2, works[3])))).toBe('policy-kind');
+  });
+
+  test('margins are refused where the specification asks for none', async () => {
+    const { answerer } = await siteInMemory();
+    answerer.prepare(prepareOf('r1'));
+    expect(codeOf(await answerer.answer(askOf('r1', 1, works[2])))).toBe('not-supported');
+  });
+
+  test('an intercept of its own needs the whole site', async () => {
+    const { answerer } = await siteInMemory({ shard: { index: 1, of: 2 } });
+    answerer.prepare(prepareOf('r1', specification(['intercept: per-site'])));
+    expect(codeOf(await answerer.answer(askOf('r1', 1, { work: 'survey' })))).toBe('not-supported');
+  });
+
+  test('a part is asked by its fold, and its answers add up to those of all rows', async () => {
+    const folds = ['choose: {folds: 3, seed: 7}', 'penalty: [{kind: lasso, lambda: [0.1, 0.2]}]'];
+    const { answerer } = await siteInMemory();
+    answerer.prepare(prepareOf('r1', specification(folds)));
+    const parts = [null, '1', '2', '3'].map(
+      (fold): Work => ({ ...gradient, part: fold === null ? null : { fold, side: 'held-out' } }),
+    );
+    const values = answered(await answerer.answer(askOf('r1', 1, ...parts))).work.map((item) =>
+      item.work === 'evaluate' ? item.points[0].value : Number.NaN,
+    );
+    expect(values[1] + values[2] + values[3]).toBeCloseTo(values[0], 12);
+    const training = answered(
+      await answerer.answer(askOf('r1', 2, { ...gradient, part: { fold: '2', side: 'training' } })),
+    ).work[0];
+    if (training.work !== 'evaluate') expect.unreachable();
+    expect(training.points[0].value).toBeCloseTo(values[1] + values[3], 12);
+  });
+});
+
+const readLines = (text: string) => {
+  const read = readLedger(text, 'castlefen.ledger');
+  if (!read.ok) expect.unreachable(read.failure.message);
+  return read.value.records;
+};

@@ -120,7 +120,14 @@ describe('limits', () => {
     const asking = (points: number): ToWorker => ({
       ...ask,
       work: [
-        { work: 'evaluate', problem: 0, points: new Array(points).fill(point), ownFit: null, sketch: null },
+        {
+          work: 'evaluate',
+          problem: 0,
+          part: null,
+          points: new Array(points).fill(point),
+          ownFit: null,
+          sketch: null,
+        },
       ],
     });
     expect(decodeToWorker(encodeMessage(asking(LIMITS.batchMost))).ok).toBe(true);

@@ -35,7 +35,16 @@ describe('reference frames', () => {
 describe('vectors', () => {
   const evaluateAt = (point: Float64Array): ToWorker => ({
     ...ask,
-    work: [{ work: 'evaluate', problem: 0, points: [{ point, want: 'value' }], ownFit: null, sketch: null }],
+    work: [
+      {
+        work: 'evaluate',
+        problem: 0,
+        part: null,
+        points: [{ point, want: 'value' }],
+        ownFit: null,
+        sketch: null,
+      },
+    ],
   });
 
   test('a view into a larger array is sent as the view alone', () => {
@@ -90,6 +99,7 @@ describe('vectors', () => {
           {
             work: 'evaluate',
             problem: 0,
+            part: null,
             points: [{ point: new Float64Array(1), want: 'value' }],
             ownFit: { at: 0, hold: value },
             sketch: null,
@@ -140,8 +150,8 @@ describe('messages that do not belong', () => {
     ['a field too many', { ...hello, colour: 'blue' }],
     ['a field missing', { kind: 'hello', version: 1 }],
     ['a version as text', { ...hello, version: '1' }],
-    ['an array where a vector belongs', { ...answer, work: [{ work: 'factor', factor: [1, 2, 3] }] }],
-    ['null where a vector belongs', { ...answer, work: [{ work: 'factor', factor: null }] }],
+    ['an array where a vector belongs', { ...answer, work: [{ work: 'factor', factors: [[1, 2, 3]] }] }],
+    ['null where a vector belongs', { ...answer, work: [{ work: 'factor', factors: [null] }] }],
     ['unknown work', { ...answer, work: [{ work: 'guess' }] }],
     ['no work', { ...answer, work: [] }],
     ['an ask number of zero', { ...answer, ask: 0 }],

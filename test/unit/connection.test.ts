@@ -20,6 +20,7 @@ const gradientAsk = (ask: number) =>
   askOf('r1', ask, {
     work: 'evaluate',
     problem: 0,
+    part: null,
     points: [{ point: Float64Array.of(-1, 0, 0), want: 'gradient' }],
     ownFit: null,
     sketch: null,

@@ -28,6 +28,7 @@ describe('what is read', () => {
     expect(tableRequest(spec, { index: 2, of: 3 })).toEqual({
       numeric: ['y', 'km', 'w', 'age'],
       levels: [{ column: 'material', levels: ['pvc', 'steel'] }],
+      labels: [],
       missing: 'drop',
       shard: { index: 2, of: 3 },
     });

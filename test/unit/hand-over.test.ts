@@ -53,6 +53,14 @@ const result = (...fits: FitDocument[]): ResultDocument => ({
   rungReason: null,
   tolerance: 1e-8,
   fits,
+  chosen: fits.length === 1 ? 0 : null,
+  choice: null,
+  inference: null,
+  comparison: null,
+  fitQuality: null,
+  omitted: [],
+  startedFrom: null,
+  moved: null,
   notes: [],
   rounds: 6,
   numbersSent: [],
@@ -94,7 +102,7 @@ const inference: InferenceDocument = {
   marginalEffects: [],
   cautions: ['Penalised: the intervals are too short.'],
 };
-const withInference = (): FitDocument & { inference: InferenceDocument } => ({ ...fitted(), inference });
+const inferred = (): ResultDocument => ({ ...result(fitted()), inference });
 
 describe('model.json of a run', () => {
   test('holds what scoring needs, in the order of the design, and reads back', () => {
@@ -115,7 +123,7 @@ describe('model.json of a run', () => {
   });
 
   test('holds the covariance that the intervals use, where there is one', () => {
-    const model = modelDocument(spec, result(withInference()), 0);
+    const model = modelDocument(spec, inferred(), 0);
     expect(model.covariance).toEqual({
       kind: 'model',
       order: ['(intercept)', 'age_years'],
@@ -132,8 +140,7 @@ describe('model.json of a run', () => {
     expect(fitToHandOver(result(fitted(), fitted()))).toBeNull();
     expect(fitToHandOver(result())).toBeNull();
     expect(fitToHandOver(result(fitted({ intercept: null, coefficients: {} })))).toBeNull();
-    const choice = { chosen: 1 };
-    expect(fitToHandOver({ ...result(fitted(), fitted()), choice } as ResultDocument)).toBe(1);
+    expect(fitToHandOver({ ...result(fitted(), fitted()), chosen: 1 })).toBe(1);
   });
 
   test('comes with PMML and tables', () => {
@@ -187,7 +194,7 @@ describe('coefficients as a table', () => {
   });
 
   test('CSV has standard errors and intervals where a fit has them', () => {
-    const [head, first] = coefficientsCsv(result(withInference())).split('\r\n');
+    const [head, first] = coefficientsCsv(inferred()).split('\r\n');
     expect(head).toBe('fit,lambda,term,coefficient,standard_error,lower,upper,p_value');
     expect(first).toBe('1,0.01,intercept,-3.25,0.5,-4.23,-2.27,0.0004');
     expect(coefficientsCsv(result(fitted()))).toContain('fit,lambda,term,coefficient\r\n');

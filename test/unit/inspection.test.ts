@@ -1,6 +1,7 @@
 import { describe, expect, test } from 'vitest';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
-import { inspectionOf, type PossibleDeparture } from '../../worker/commands/inspection.js';
+import type { PossibleDeparture } from '../../worker/commands/departures.js';
+import { type Inspection, inspectionOf } from '../../worker/commands/inspection.js';
 import type { Policy, SiteFile } from '../../worker/custody/site-file.js';
 import { buildRawShard } from '../../worker/design/build.js';
 import { scaleShard } from '../../worker/design/scale.js';
@@ -14,8 +15,12 @@ const raw = (() => {
   return built.value;
 })();
 
-function departures(quorum: number | 'all', policy: Policy = OPEN_POLICY): readonly PossibleDeparture[] {
-  const plain = specification();
+function inspected(
+  quorum: number | 'all',
+  policy: Policy = OPEN_POLICY,
+  lines: readonly string[] = [],
+): Inspection {
+  const plain = specification(lines);
   const spec = { ...plain, barrier: { ...plain.barrier, quorum } };
   const site: SiteFile = {
     site: SITE,
@@ -26,8 +31,11 @@ function departures(quorum: number | 'all', policy: Policy = OPEN_POLICY): reado
     file: 'castlefen.site.yaml',
   };
   const file = { file: 'breaks.fit.yaml', specification: spec, digest: 'a'.repeat(64) };
-  return inspectionOf(site, file, new Set(), raw).departures;
+  return inspectionOf(site, file, new Set(), raw);
 }
+
+const departures = (...of: Parameters<typeof inspected>) => inspected(...of).departures;
+const reads = (lines: readonly string[]) => inspected('all', OPEN_POLICY, lines).reads;
 
 const late = (rows: readonly PossibleDeparture[]): PossibleDeparture[] =>
   rows.filter(({ times }) => times === 'where this site is late');
@@ -50,5 +58,54 @@ describe('what could leave a site that is late', () => {
     const kept = (curvatureMost: number): (string | null)[] =>
       late(departures(1, { ...OPEN_POLICY, curvatureMost })).map((row) => row.kept);
     expect([kept(1), kept(2)]).toEqual([['policy.curvature-most is 1'], [null]]);
+  });
+});
+
+describe('what a report makes leave', () => {
+  const reported = (lines: readonly string[], policy = OPEN_POLICY) =>
+    departures('all', policy, lines).filter(({ rung }) => rung === 'report');
+
+  test('is listed part by part, with the kinds that the policy must name', () => {
+    expect(reported([])).toEqual([]);
+    const all = 'report: [sandwich: {cluster: zone}, margins, compare-sites, fit-quality]';
+    expect(reported([all]).map(({ kinds, kept }) => [kinds, kept])).toEqual([
+      [['gradients', 'curvature'], null],
+      [['gradients'], null],
+      [['site-estimates'], 'policy.leave has no site-estimates'],
+      [['residual-bins'], 'policy.leave has no residual-bins'],
+    ]);
+  });
+
+  test('has the numbers that the answer has', () => {
+    const vector = (length: number) => new Float64Array(length);
+    const scores = {
+      ...{ work: 'scores' as const, problem: 0, gradient: vector(3), clusterCount: 2, pearson: 1 },
+      ...{ meat: vector(6), clustered: vector(6) },
+    };
+    const fit = { point: vector(3), value: 1, curvature: vector(6), undetermined: [], pearson: 1 };
+    const [clustered, own] = reported(['report: [sandwich: {cluster: zone}, compare-sites]']);
+    const [plain] = reported(['report: [sandwich]']);
+    expect(clustered?.numbers).toBe(numbersOfAnswer(scores));
+    expect(plain?.numbers).toBe(numbersOfAnswer({ ...scores, clustered: null }));
+    expect(own?.numbers).toBe(numbersOfAnswer({ work: 'site-fit', problem: 0, fit, reason: null }));
+  });
+
+  test('without a matrix where none may leave', () => {
+    const kept = reported(['report: [sandwich]'], { ...OPEN_POLICY, curvatureMost: 0 }).map(
+      (row) => row.kept,
+    );
+    expect(kept).toEqual(['policy.curvature-most is 0']);
+  });
+
+  test('reads the columns that folds and clusters go by, as labels', () => {
+    const lines = [
+      'penalty: [{kind: lasso, lambda: [1, 0.1]}]',
+      'choose: {folds: {column: year}}',
+      'report: [sandwich: {cluster: zone}]',
+    ];
+    expect(reads(lines).slice(-2)).toEqual([
+      { column: 'year', role: 'fold', type: 'any value, as a label', allowed: true },
+      { column: 'zone', role: 'cluster', type: 'any value, as a label', allowed: true },
+    ]);
   });
 });

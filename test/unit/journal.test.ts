@@ -30,6 +30,7 @@ const RECORDS: JournalRecord[] = [
     specification: '{}',
     digest: 'd',
     roster: [{ site: 'harrowmere', shard: { index: 1, of: 1 }, kernel: 'k' }],
+    startFrom: null,
     software: 's',
     node: 'v20',
   },
@@ -141,7 +142,7 @@ describe('replies in the journal', () => {
   });
 
   test('a reply to another ask is refused', () => {
-    const bytes = encodeReply('r', 4, [{ work: 'factor', factor: Float64Array.of(1) }]);
+    const bytes = encodeReply('r', 4, [{ work: 'factor', factors: [Float64Array.of(1)] }]);
     expect(decodeReply('r', 5, bytes)).toMatchObject({ ok: false, failure: { code: 'journal-broken' } });
     expect(decodeReply('q', 4, bytes)).toMatchObject({ ok: false, failure: { code: 'journal-broken' } });
   });
@@ -153,6 +154,7 @@ describe('replies in the journal', () => {
           {
             work: 'evaluate',
             problem: 0,
+            part: null,
             points: [{ point: Float64Array.of(value), want: 'value' }],
             ownFit: null,
             sketch: null,

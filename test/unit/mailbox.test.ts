@@ -18,6 +18,7 @@ import {
 const gradientAt = (...point: number[]): Work => ({
   work: 'evaluate',
   problem: 0,
+  part: null,
   points: [{ point: Float64Array.from(point), want: 'gradient' }],
   ownFit: null,
   sketch: null,

@@ -122,6 +122,7 @@ describe('slim asks', () => {
       problems: [
         {
           problem: 3,
+          part: null,
           center: Float64Array.of(1),
           scale: 2,
           diagonal: Float64Array.of(5),

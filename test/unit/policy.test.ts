@@ -10,7 +10,6 @@ import {
   checkWorks,
   curvatureOfWorks,
   type Departed,
-  fitCount,
   NOTHING_DEPARTED,
 } from '../../worker/custody/policy.js';
 import type { Policy } from '../../worker/custody/site-file.js';
@@ -22,12 +21,13 @@ const P = 10;
 const policyWith = (more: Partial<Policy>): Policy => ({ ...OPEN_POLICY, ...more });
 
 const survey: Work = { work: 'survey' };
-const factor: Work = { work: 'factor' };
+const factor: Work = { work: 'factor', folds: [] };
 const proximal: Work = {
   work: 'proximal',
   problems: [
     {
       problem: 0,
+      part: null,
       center: Float64Array.of(0),
       scale: 1,
       diagonal: Float64Array.of(1),
@@ -40,6 +40,7 @@ const proximal: Work = {
 const evaluate = (want: Want, more: Partial<EvaluateWork> = {}): Work => ({
   work: 'evaluate',
   problem: 0,
+  part: null,
   points: [{ point: Float64Array.of(0), want }],
   ownFit: null,
   sketch: null,
@@ -49,6 +50,30 @@ const evaluate = (want: Want, more: Partial<EvaluateWork> = {}): Work => ({
 const joint = (problem = 0): Work => {
   const one = Float64Array.of(1);
   return { work: 'joint', problem, start: one, curvature: one, linear: one, l1: one, l2: one };
+};
+
+const POINT = Float64Array.of(0);
+const scores = (meat: boolean, clustered: boolean): Work => ({
+  work: 'scores',
+  problem: 0,
+  point: POINT,
+  meat,
+  clustered,
+});
+const siteFit: Work = { work: 'site-fit', problem: 0, start: POINT };
+const margins: Work = {
+  work: 'margins',
+  problem: 0,
+  point: POINT,
+  settings: [{ set: 'slope', column: 'age_years' }],
+};
+const quality: Work = {
+  work: 'quality',
+  problem: 0,
+  point: POINT,
+  edges: POINT,
+  inverse: null,
+  leverageHigh: 1,
 };
 
 const sketch = (columns: number, problem = 0): Work =>
@@ -116,6 +141,12 @@ describe('kinds of answer', () => {
     ['a sketch', sketch(3), ['gradients', 'sketches']],
     ['a joint step', joint(), ['proximal', 'gradients', 'curvature']],
     ['a factor', factor, ['curvature']],
+    ['scores', scores(false, false), ['gradients']],
+    ['score products', scores(true, false), ['gradients', 'curvature']],
+    ['score products by cluster', scores(false, true), ['gradients', 'curvature']],
+    ['the site’s own fit', siteFit, ['site-estimates']],
+    ['margins', margins, ['gradients']],
+    ['binned responses', quality, ['residual-bins']],
   ])('%s leaves with its kinds and with none of them missing', (_name, work, kinds) => {
     expect(codeFor(policyWith({ leave: kinds }), NOTHING_DEPARTED, [work])).toBeNull();
     for (const kind of kinds) {
@@ -159,9 +190,11 @@ describe('curvature matrices', () => {
     expect(codeFor(policyWith({ curvatureMost: 0 }), NOTHING_DEPARTED, [factor])).toBe('policy-curvature');
   });
 
-  test('each fit of a path has its own allowance', () => {
+  test('every fit of a run adds an allowance, whichever problem number its matrices go by', () => {
     const other = [evaluate('curvature', { problem: 1 })];
     expect(codeFor(three, departedAfter(one, one, one), other, 2)).toBeNull();
+    expect(codeFor(three, departedAfter(one, one, one, one, one), one, 2)).toBeNull();
+    expect(codeFor(three, departedAfter(one, one, one, one, one, one), one, 2)).toBe('policy-curvature');
     expect(codeFor(three, departedAfter(one, one, one, other, other, other), other, 2)).toBe(
       'policy-curvature',
     );
@@ -172,8 +205,21 @@ describe('curvature matrices', () => {
     expect(codeFor(three, departedAfter(one, one, one), other, 1)).toBe('policy-curvature');
   });
 
-  test('the factor serves every fit and counts for each', () => {
-    expect(codeFor(three, departedAfter([factor], one, one), one, 5)).toBe('policy-curvature');
+  test('a factor counts as one, and one for each fold', () => {
+    expect(codeFor(three, departedAfter([factor], one), one)).toBeNull();
+    expect(codeFor(three, departedAfter([factor], one, one), one)).toBe('policy-curvature');
+    const folds: Work = { work: 'factor', folds: ['1', '2', '3', '4'] };
+    expect(codeFor(three, NOTHING_DEPARTED, [folds])).toBe('policy-curvature');
+    expect(codeFor(three, NOTHING_DEPARTED, [folds], 2)).toBeNull();
+  });
+
+  test('score products and the site’s own fit count', () => {
+    const open = policyWith({ curvatureMost: 3, leave: [...OPEN_POLICY.leave, 'site-estimates'] });
+    expect(codeFor(open, departedAfter(one), [scores(true, true)])).toBeNull();
+    expect(codeFor(open, departedAfter(one, one), [scores(true, true)])).toBe('policy-curvature');
+    expect(codeFor(open, departedAfter(one, one), [scores(true, false)])).toBeNull();
+    expect(codeFor(open, departedAfter(one, one, one), [scores(false, false), margins])).toBeNull();
+    expect(codeFor(open, departedAfter(one, one, one), [siteFit])).toBe('policy-curvature');
   });
 });
 
@@ -232,11 +278,4 @@ test('the allowance tells the coordinator the limits, null where there is none',
     numbersMost: null,
     roundsMost: 7,
   });
-});
-
-test('a run holds one fit for each λ', () => {
-  expect(fitCount(specification())).toBe(1);
-  expect(fitCount(specification(['penalty: [{kind: lasso, lambda: [1, 0.1, 0.01]}]']))).toBe(3);
-  const both = ['penalty: [{kind: lasso, lambda: [1, 0.1, 0.01]}, {kind: ridge, lambda: 2}]'];
-  expect(fitCount(specification(both))).toBe(3);
 });

@@ -216,3 +216,56 @@ describe('a two-class response of which one class is named', () => {
     expect(table.levels.get('failed')?.levels).toEqual(['yes']);
   });
 });
+
+describe('labels', () => {
+  const labelsOf = async (source: TableSource, partial: Partial<TableRequest> = {}) => {
+    const table = soundValue(
+      await readTable(source, request({ numeric: ['y'], labels: ['crew'], ...partial })),
+    );
+    const { levels, codes } = table.labels?.get('crew') ?? { levels: [], codes: [] };
+    return Array.from(codes, (code) => levels[code]);
+  };
+
+  test('are every text there is, numbers by value', async () => {
+    const text = 'crew,y\n1,1\n1.0,2\n01,3\nb,4\n 7,5\n-0,6\n1e2,7\n1_0,8\ninf,9\n9007199254740993,10\n';
+    expect(await labelsOf(csv(text))).toEqual([
+      '1',
+      '1',
+      '1',
+      'b',
+      '7',
+      '0',
+      '100',
+      '1_0',
+      'inf',
+      '9007199254740993',
+    ]);
+  });
+
+  test('of whole numbers that doubles do not tell apart stay apart', async () => {
+    const query = 'select * from (values (9007199254740993, 1), (9007199254740992, 2), (10, 3)) t(crew, y)';
+    const read = await labelsOf({ kind: 'query', query, folder: newFolder() });
+    expect(read).toEqual(['9007199254740993', '9007199254740992', '10']);
+  });
+
+  test('missing ones are missing values, and a column can be term and label', async () => {
+    const text = 'crew,y\n1,1\n,2\n2,3\n';
+    expect(await labelsOf(csv(text), { missing: 'drop', numeric: ['y', 'crew'] })).toEqual(['1', '2']);
+    const refused = await readTable(csv(text), request({ numeric: ['y'], labels: ['crew'] }));
+    expect(refused).toMatchObject({
+      ok: false,
+      failure: { code: 'value-missing', where: { row: 2, column: 'crew' } },
+    });
+  });
+
+  test('of a table without rows, or without any', async () => {
+    const empty = await readTable(csv('crew,y\n'), request({ numeric: ['y'], labels: ['crew'] }));
+    expect(empty).toMatchObject({ ok: false, failure: { code: 'table-empty' } });
+    expect(await labelsOf(csv('crew,y\n,1\n'), { missing: 'drop' })).toEqual([]);
+    const absent = await readTable(csv('y\n1\n'), request({ numeric: ['y'], labels: ['crew'] }));
+    expect(absent).toMatchObject({
+      ok: false,
+      failure: { code: 'column-missing', where: { column: 'crew' } },
+    });
+  });
+});

@@ -9,7 +9,7 @@ const member = (site: string, index = 1, of = 1): Member => ({
   kernel: 'typescript',
 });
 const roster = [member('harrowmere'), member('castlefen'), member('oakhythe', 2, 3)];
-const answer: readonly WorkAnswer[] = [{ work: 'factor', factor: new Float64Array(1) }];
+const answer: readonly WorkAnswer[] = [{ work: 'factor', factors: [new Float64Array(1)] }];
 const refusal = (message: string, remedy: string | null): Refusal => ({
   ...{ kind: 'refusal', run: 'r1', ask: 3, code: 'policy-rows', message, remedy },
 });

@@ -7,6 +7,7 @@ import type { LogEvent, RoundEvent } from '../../coordinator/run/log-event.js';
 const at = '2031-05-04T10:00:00.000Z';
 const round = (number: number, more: Partial<RoundEvent> = {}): RoundEvent => ({
   event: 'round',
+  stage: 'solve',
   round: number,
   roundsMost: 300,
   rung: 'proximal',

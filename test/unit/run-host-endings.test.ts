@@ -109,7 +109,8 @@ describe('taking a run up from its journal', () => {
     const other = new Bench(memoryStore(first.store.bytes()), honest, {
       *run(specification, digest, roster) {
         const { value } = toyRun(specification, digest, roster).next();
-        if ('works' in value) yield { ...value, works: value.works.map(() => [{ work: 'factor' as const }]) };
+        if ('works' in value)
+          yield { ...value, works: value.works.map(() => [{ work: 'factor' as const, folds: [] }]) };
         throw new Error('not reached');
       },
     });

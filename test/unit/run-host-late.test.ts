@@ -80,7 +80,7 @@ describe('a run with a quorum', () => {
       if (site === 'castlefen' && ask.ask === 2 && wrong && reply.kind === 'answer') {
         wrong = false;
         bench.time.after(200, () => bench.connect(site, DELAY_MS[site]));
-        return [{ ...reply, work: [{ work: 'factor', factor: Float64Array.of(1) }] }];
+        return [{ ...reply, work: [{ work: 'factor', factors: [Float64Array.of(1)] }] }];
       }
       return [reply];
     });

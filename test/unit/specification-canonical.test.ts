@@ -56,6 +56,37 @@ describe('the canonical form', () => {
     expect(canonical(text)).not.toBe(base);
   });
 
+  const path = (lambda: string, more: readonly string[] = []) =>
+    canonical(breaksWith({ 13: `  - {kind: lasso, lambda: ${lambda}}` }, more));
+
+  test('writes a path, a choice and a report with every default, and parts in one order', () => {
+    const text = path('{count: 20}', ['choose: {folds: 3}', 'report: [fit-quality, sandwich]']);
+    expect(text).toContain('"lambda":{"count":20,"ratio":0.001}');
+    expect(text).toContain('"choose":{"folds":3,"rule":"one-standard-error","seed":1}');
+    expect(text).toContain('"report":["covariance","sandwich","fit-quality"]');
+    expect(path('{}')).toBe(path('{ratio: 0.001, count: 30}'));
+    const choice = (written: string) => path('[1, 2]', [`choose: {${written}}`]);
+    expect(choice('folds: 5')).toBe(choice('rule: one-standard-error, seed: 1, folds: 5'));
+    expect(choice('folds: 5, seed: 2')).not.toBe(choice('folds: 5'));
+    expect(choice('folds: {column: "5"}')).not.toBe(choice('folds: 5'));
+  });
+
+  test('is the same for reports that mean the same', () => {
+    const report = (written: string) => canonical(breaksWith({}, [`report: [${written}]`]));
+    expect(report('term-tests')).toBe(report('covariance, term-tests'));
+    expect(report('margins, covariance')).toBe(report('covariance, margins'));
+    expect(report('profile: [age_years, diameter_mm]')).toBe(report('profile: [diameter_mm, age_years]'));
+    expect(report('profile: [material]')).toBe(
+      report('profile: [material=steel, material=cast-iron, material=ductile-iron]'),
+    );
+    expect(report('sandwich: {cluster: zone}')).not.toBe(report('sandwich'));
+  });
+
+  test('of a specification without these parts has not changed', () => {
+    expect(digestOf(base)).toBe('5666fab72cb24130a54b7629fde0b41969f9a00285e5d5187916f8a91ace77c1');
+    expect(base).not.toMatch(/choose|report|path/);
+  });
+
   test('has a SHA-256 digest', () => {
     // FIPS 180-4, the example "abc".
     expect(digestOf('abc')).toBe('ba7816bf8f01cfea414140de5dae2223b00361a396177a9cb410ff61f20015ad');
@@ -79,6 +110,27 @@ describe('reading the canonical form', () => {
         },
         ['weights: {column: w}', 'missing: drop'],
       ).replace('terms:', 'terms:\n  - {column: "10"}\n  - {column: "9"}'),
+    ],
+    [
+      'a path, a choice by folds of a hash and a report',
+      breaksWith(
+        { 13: '  - {kind: lasso, lambda: {count: 30, ratio: 1e-3}}\n  - {kind: ridge, lambda: 0.1}' },
+        [
+          'choose: {folds: 5}',
+          'intercept: per-site',
+          'report: [fit-quality, {profile: [material]}, {sandwich: {cluster: zone}}, debiased, margins]',
+        ],
+      ),
+    ],
+    [
+      'a choice by folds of a column',
+      breaksWith({ 13: '  - {kind: lasso, lambda: [1, 0.1]}' }, [
+        'choose: {folds: {column: year}, rule: minimum}',
+      ]),
+    ],
+    [
+      'a choice by a criterion',
+      breaksWith({ 13: '  - {kind: lasso, lambda: [1, 0.1]}' }, ['choose: {criterion: extended-bic}']),
     ],
     ['a loss with a threshold', breaksWith({ 5: 'loss: {threshold: 1.50, kind: huber}' })],
   ])('gives back %s', (_, text) => {

@@ -121,6 +121,19 @@ test('used columns are given once for each role', () => {
   ]);
 });
 
+test('columns that folds or clusters go by are used, beside any other role they have', () => {
+  const text = breaksWith({ 13: '  - {kind: lasso, lambda: [1, 0.1]}' }, [
+    'choose: {folds: {column: age_years}}',
+    'report: [sandwich: {cluster: zone}]',
+  ]);
+  const used = usedColumns(parse(text));
+  expect(used.slice(-2)).toEqual([
+    { column: 'age_years', role: 'fold' },
+    { column: 'zone', role: 'cluster' },
+  ]);
+  expect(used).toContainEqual({ column: 'age_years', role: 'term' });
+});
+
 test('a multiplier of a coefficient goes before that of its term; without either it is 1', () => {
   const specification = withTerms('{column: x}', '{column: m, levels: [a, b, c]}', '{column: constructor}');
   const columns = designColumns(specification);

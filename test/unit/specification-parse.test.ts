@@ -20,7 +20,7 @@ describe('a fit specification', () => {
       barrier: { deadlineMs: 30_000, quorum: 'all', oldest: 0, patienceMs: 1_800_000, missing: 'stop' },
     });
     expect(parsed.penalties).toEqual([
-      { kind: 'elastic-net', lambda: [0.01], l1: 0.5, scaled: true, perTerm: { age_years: 0 } },
+      { kind: 'elastic-net', lambda: [0.01], path: null, l1: 0.5, scaled: true, perTerm: { age_years: 0 } },
     ]);
     expect(parsed.terms.map((term) => term.name)).toEqual([
       'age_years',
@@ -103,8 +103,8 @@ describe('a fit specification', () => {
       ),
     );
     expect(parsed.penalties).toEqual([
-      { kind: 'lasso', lambda: [1, 0.1], l1: 1, scaled: true, perTerm: {} },
-      { kind: 'ridge', lambda: [0], l1: 0, scaled: false, perTerm: {} },
+      { kind: 'lasso', lambda: [1, 0.1], path: null, l1: 1, scaled: true, perTerm: {} },
+      { kind: 'ridge', lambda: [0], path: null, l1: 0, scaled: false, perTerm: {} },
     ]);
   });
 

@@ -6,30 +6,31 @@ import type { Work } from '../../protocol/messages/round.js';
 const evaluate = (want: 'gradient' | 'curvature', problem = 0): Work => ({
   work: 'evaluate',
   problem,
+  part: null,
   points: [{ point: new Float64Array(4), want }],
   ownFit: null,
   sketch: null,
 });
 
 describe('what a member has spent before a fit begins again', () => {
-  test('matrices count by fit, the fit with most of them; those of the whole run for each', () => {
+  test('matrices count over all fits together, whichever problem an ask names', () => {
     const spending = new Spending();
     spending.add([evaluate('curvature'), evaluate('curvature', 1), evaluate('gradient')], null);
     spending.add([evaluate('curvature', 1)], null);
-    expect(spending.spent()).toEqual({ matrices: 2, numbers: 0 });
-    spending.add([{ work: 'factor' }], [{ work: 'factor', factor: new Float64Array(15) }]);
-    expect(spending.spent()).toEqual({ matrices: 3, numbers: 15 });
+    expect(spending.spent()).toEqual({ matrices: 3, numbers: 0 });
+    spending.add([{ work: 'factor', folds: [] }], [{ work: 'factor', factors: [new Float64Array(15)] }]);
+    expect(spending.spent()).toEqual({ matrices: 4, numbers: 15 });
   });
 
-  test('as many sketched columns as the point is long count as a matrix, begun ones too', () => {
+  test('as many sketched columns as the point is long count as a matrix', () => {
     const spending = new Spending();
     const sketch = { at: 0, columns: 3, directions: new Float64Array(12) };
     const [work] = [evaluate('gradient')];
     if (work.work !== 'evaluate') throw new Error('not reached');
     spending.add([{ ...work, sketch }], null);
-    expect(spending.spent().matrices).toBe(1);
+    expect(spending.spent().matrices).toBe(0.75);
     spending.add([{ ...work, sketch }], null);
-    expect(spending.spent().matrices).toBe(2);
+    expect(spending.spent().matrices).toBe(1.5);
   });
 
   test('is taken from what the site allows, never below nothing, and said; without a limit nothing changes', () => {
@@ -45,11 +46,12 @@ describe('what a member has spent before a fit begins again', () => {
       shard: { index: 1, of: 1 },
       kernel: 'k',
     }));
-    const left = lessSpent(survey, roster, [
-      { matrices: 2, numbers: 30 },
-      { matrices: 2, numbers: 130 },
-      { matrices: 2, numbers: 0 },
-    ]);
+    const spent = [
+      { matrices: 3.5, numbers: 30 },
+      { matrices: 4, numbers: 130 },
+      { matrices: 4, numbers: 0 },
+    ];
+    const left = lessSpent(survey, roster, spent, 2);
     expect(left.answers.map(({ allowance }) => [allowance.curvatureMost, allowance.numbersMost])).toEqual([
       [1, 70],
       [0, 0],

@@ -39,6 +39,14 @@ const result = (more: Partial<ResultDocument> = {}): ResultDocument => ({
   rungReason: 'every site lets curvature leave',
   tolerance: 1e-8,
   fits: [fitted()],
+  chosen: null,
+  choice: null,
+  inference: null,
+  comparison: null,
+  fitQuality: null,
+  omitted: [],
+  startedFrom: null,
+  moved: null,
   notes: ['material=lead has no rows'],
   rounds: 6,
   numbersSent: [
@@ -129,6 +137,7 @@ describe('rounds.csv', () => {
   const at = '2031-05-04T10:00:00.000Z';
   const round: LogEvent = {
     event: 'round',
+    stage: 'solve',
     round: 1,
     roundsMost: 300,
     rung: 'proximal',
