@@ -30,8 +30,7 @@ terms:
   - {column: soil, levels: [${SOILS.join(', ')}], baseline: sand}
   - {column: depth_m, unit: m}
   - {product: [age_years, material]}
-penalty:
-  - {kind: elastic-net, lambda: 0.002, l1: 0.5, scaled: true}
+report: [covariance, sandwich, term-tests, margins, compare-sites, fit-quality]
 rounds: {tolerance: 1e-8, most: 300}
 barrier: {deadline: 30s, patience: 5m}
 `;
@@ -52,7 +51,7 @@ table: {${table.kind}: ./${table.file}}
 policy:
   columns: [${COLUMNS.join(', ')}]
   rows-least: 50
-  leave: [counts, moments, proximal, gradients, curvature]
+  leave: [counts, moments, proximal, gradients, curvature, site-estimates, residual-bins]
   curvature-most: ${curvatureMost}
   numbers-most: 1000000
   rounds-most: 2000
