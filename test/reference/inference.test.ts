@@ -84,6 +84,24 @@ describe('covariances and intervals', () => {
     });
   }
 
+  const wages = referenceCase('o23_sandwich_cps');
+  test.skipIf(wages === null)('clusters by a column that is the site are the sites (o23)', async () => {
+    if (wages === null) throw new Error('skipped');
+    const expected = expectedOf(wages);
+    const { inference } = await described(wages, 'report: [{sandwich: {cluster: site}}]');
+    const of = (kind: CovarianceKind) => inference?.covariances.find((one) => one.kind === kind);
+    for (const [term, error] of Object.entries(expected.cov_cluster?.standard_errors ?? {}))
+      near(of('cluster')?.standardErrors[nameOf(term)], error, 1e-9, term);
+    for (const [term, error] of Object.entries(expected.cov_cluster_g1?.standard_errors ?? {}))
+      near(of('cluster-g1')?.standardErrors[nameOf(term)], error, 1e-9, term);
+    expect(of('cluster')?.clusters).toBe(6);
+    expect(inference?.used).toBe('cluster-g1');
+    // HC1 = HC0 · N / (N − p)
+    for (const [term, error] of Object.entries(of('hc0')?.standardErrors ?? {}))
+      near(of('hc1')?.standardErrors[term], error * Math.sqrt(534 / 530), 1e-12, term);
+    expect(inference?.cautions.join(' ')).toContain('clustered over 6 clusters are not sound');
+  });
+
   for (const name of [
     'o01_ols_longley',
     'o03_wls_states',
