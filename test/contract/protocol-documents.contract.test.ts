@@ -98,7 +98,7 @@ describe('README.md', () => {
   });
 
   test('the specification shown is a canonical one, with the columns named below it', () => {
-    const text = /```json\n(\{.*\})\n```/.exec(readme)?.[1] ?? '';
+    const text = /```text\n(\{.*\})\n```/.exec(readme)?.[1] ?? '';
     const read = readCanonical(text);
     expect(read).toMatchObject({ ok: true });
     if (!read.ok) return;

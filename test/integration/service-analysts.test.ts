@@ -40,6 +40,7 @@ describe('analysts', () => {
       'coefficients.csv',
       'journal',
       'log.jsonl',
+      'report.html',
       'result.json',
       'rounds.csv',
       'specification.yaml',
@@ -148,6 +149,7 @@ describe('analysts', () => {
     expect(Object.keys(document.paths).sort()).toEqual([
       '/health/live',
       '/health/ready',
+      '/metrics',
       '/v1/runs',
       '/v1/runs/{run}',
       '/v1/runs/{run}/cancel',
