@@ -6,7 +6,7 @@ import { SMALL_SITES, setSmallScenario } from '../support/small-scenario.js';
 import { roundsOf, Stage } from '../support/stage.js';
 
 /** Kills of each kind: a handful here, 50 with COMMONFIT_KILLS=50; COMMONFIT_KILLS_SEED draws other instants. */
-const KILLS = Number(process.env.COMMONFIT_KILLS ?? 5);
+const KILLS = Number(process.env.COMMONFIT_KILLS ?? 2);
 const SEED = Number(process.env.COMMONFIT_KILLS_SEED ?? 1);
 const BOUND = { timeout: 150_000 + KILLS * 30_000 } as const;
 const random = seededRandom(SEED);
