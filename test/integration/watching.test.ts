@@ -79,22 +79,8 @@ describe('watching a coordinator', PATIENT, () => {
     expect((await stage.commonfit('health', '--url', 'http://127.0.0.1:9')).code).toBe(4);
   });
 
-  test('a worker writes a sign of life, and takes it away when it ends', async () => {
-    const file = join(stage.folder, 'heartbeat');
-    const health = (): Promise<{ code: number | null }> => stage.worker('health', '--heartbeat', file);
-    expect((await health()).code).toBe(7);
-    await stage.workerOf('castlefen').kill();
-    const worker = stage.start(programs.worker, 'join', 'castlefen.site.yaml', '--heartbeat', file);
-    await worker.says('Connected');
-    expect((await health()).code).toBe(0);
-    await stage.write('heartbeat', `${Date.now() - 61_000}\n`);
-    expect((await health()).code).toBe(7);
-    worker.signal('SIGTERM');
-    expect((await worker.end()).code).toBe(0);
-    expect((await health()).code).toBe(7);
-  });
-
   test('serve --log plain: sentences of runs and sites on standard error', async () => {
+    await stage.workerOf('castlefen').kill();
     await stage.killCoordinator();
     const port = new URL(stage.address).port;
     const args = ['serve', '--listen', `127.0.0.1:${port}`, '--state', stage.state, '--log', 'plain'];
