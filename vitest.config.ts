@@ -3,6 +3,8 @@ import { defineConfig } from 'vitest/config';
 export default defineConfig({
   test: {
     include: ['test/**/*.test.ts'],
+    // they need an engine, or packages of Python: npm run test:containers, npm run test:interop
+    exclude: ['test/containers/**', 'test/interop/**', 'node_modules/**'],
     setupFiles: ['test/support/setup.ts'],
     // processes and sockets of one test file do not wait for those of another on two cores
     maxWorkers: 2,

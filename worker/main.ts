@@ -1,7 +1,7 @@
 #!/usr/bin/env node
 import { realpathSync } from 'node:fs';
 import { pathToFileURL } from 'node:url';
-import { Command } from 'commander';
+import { Command, Option } from 'commander';
 import { SOFTWARE } from '../protocol/version.js';
 import { EXIT, type ExitCode, exitCodeTable } from './commands/exit-codes.js';
 
@@ -17,7 +17,14 @@ export function program(): Command {
     .exitOverride((error) => {
       process.exit(error.exitCode === 0 ? EXIT.ok : EXIT.usage);
     });
-  for (const command of [joinCommand(), inspectCommand(), approveCommand(), splitCommand(), scoreCommand()])
+  for (const command of [
+    joinCommand(),
+    inspectCommand(),
+    approveCommand(),
+    splitCommand(),
+    scoreCommand(),
+    healthCommand(),
+  ])
     main.addCommand(command.copyInheritedSettings(main));
   return main;
 }
@@ -31,6 +38,7 @@ function joinCommand(): Command {
     .option('--once', 'leave after the first run that ends', false)
     .option('--plain-text', 'allow a ws:// address that is not this machine', false)
     .option('--json', 'log as JSON lines', false)
+    .addOption(heartbeatOption('a file to write a sign of life into, for `commonfit-worker health`'))
     .action(
       acting(async (site: string, options) => {
         const { joinAndLeave } = await import('./commands/join.js');
@@ -132,6 +140,36 @@ function scoreCommand(): Command {
     example: 'commonfit-worker score result/model.json pipes.parquet --out predicted.parquet',
     more: 'Adds "prediction" (the expected response) and "linear_predictor" to each row, in the order of the table.\nWithout --flag-rows the first row that cannot be scored ends the work, and nothing is written.\nA prediction is an estimate; decisions belong to licensed practice and local codes.',
     exits: [EXIT.document, EXIT.table, EXIT.machine, EXIT.flagged, EXIT.interrupted],
+  });
+}
+
+const heartbeatOption = (description: string): Option =>
+  new Option('--heartbeat <file>', description).env('COMMONFIT_HEARTBEAT_FILE');
+
+function healthCommand(): Command {
+  const command = new Command('health')
+    .summary('say whether a worker here is alive')
+    .description(
+      'say whether the worker that writes its sign of life into a file is alive; for service managers',
+    )
+    .addOption(heartbeatOption('the file that `join --heartbeat` names').makeOptionMandatory())
+    .action(
+      acting(async ({ heartbeat }: { heartbeat: string }) => {
+        const { isAlive } = await import('./service/heartbeat.js');
+        const { giveUp, say } = await import('./commands/terminal.js');
+        const alive = await isAlive(heartbeat);
+        if (!alive.ok) {
+          giveUp([alive.failure]);
+          return EXIT.machine;
+        }
+        say(['Alive.']);
+        return EXIT.ok;
+      }),
+    );
+  return withTail(command, {
+    example: 'commonfit-worker health --heartbeat /tmp/heartbeat',
+    more: 'A worker that waits for its coordinator is alive; one that has not written for a minute is not.',
+    exits: [EXIT.machine],
   });
 }
 

@@ -7,6 +7,7 @@ import type { SiteFile } from '../custody/site-file.js';
 import { type Answerer, createAnswerer } from '../service/answerer.js';
 import { keepConnected, type Timers } from '../service/connection.js';
 import type { WorkerEvent } from '../service/events.js';
+import { beat } from '../service/heartbeat.js';
 import { besideSiteFile, checkLedgerWritable, ledgerOnDisk, readApprovals } from '../service/site-folder.js';
 import { readTable } from '../source/read-table.js';
 import { readSiteFile } from './documents.js';
@@ -20,6 +21,8 @@ export interface JoinOptions {
   readonly once: boolean;
   readonly plainText: boolean;
   readonly json: boolean;
+  /** File for a sign of life, for service managers. */
+  readonly heartbeat?: string;
 }
 
 /** How long an answer in the making may take when the worker is told to stop. */
@@ -30,9 +33,23 @@ export async function join(siteFile: string, options: JoinOptions): Promise<Exit
   const site = await readSiteFile(siteFile);
   if (!site.ok) return giveUp(site.failures);
   const onEvent = await eventLog(options.json);
-  const failure = await joinAs(site.value, options, onEvent);
+  const failure = await whileBeating(options.heartbeat, () => joinAs(site.value, options, onEvent));
   onEvent({ event: 'stopped', failure });
   return failure === null ? EXIT.ok : exitCodeOf(failure);
+}
+
+async function whileBeating(
+  file: string | undefined,
+  work: () => Promise<Failure | null>,
+): Promise<Failure | null> {
+  if (file === undefined) return work();
+  const beating = await beat(file);
+  if (!beating.ok) return beating.failure;
+  try {
+    return await work();
+  } finally {
+    await beating.value();
+  }
 }
 
 /** Ends the process even where an answer that outlasted the grace time is still being computed. */
