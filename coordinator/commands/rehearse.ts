@@ -4,6 +4,7 @@ import { basename, extname, join, resolve } from 'node:path';
 import { Command } from 'commander';
 import { stringify } from 'yaml';
 import { z } from 'zod';
+import { LEAVE_KINDS } from '../../protocol/messages/survey.js';
 import { listed } from '../report/phrases.js';
 import { makePath } from '../service/files.js';
 import { acting, withTail } from './action.js';
@@ -165,16 +166,7 @@ async function writeSite(
     policy: {
       columns: 'any',
       'rows-least': 1,
-      leave: [
-        'counts',
-        'moments',
-        'proximal',
-        'gradients',
-        'curvature',
-        'site-estimates',
-        'sketches',
-        'residual-bins',
-      ],
+      leave: LEAVE_KINDS,
       'curvature-most': 'any',
       'numbers-most': 'any',
       'rounds-most': 'any',

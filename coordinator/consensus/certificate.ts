@@ -72,6 +72,10 @@ export function modelStep(
 export const relativeTo = (objective: number, start = 1): number =>
   Math.max(Math.abs(objective), OBJECTIVE_LEAST * Math.abs(start), Number.MIN_VALUE);
 
+/** What a step's decrement says of the relative gap; null where there is no step. */
+export const gapOf = (here: { readonly objective: number } | null, step: ModelStep | null): number | null =>
+  here === null || step === null ? null : step.decrement / relativeTo(here.objective);
+
 /** Certificate from a decrement under the curvature measured at z itself. */
 export function measuredCertificate(
   problem: Pick<ConsensusProblem, 'penalty' | 'curvatureMayVanish'>,

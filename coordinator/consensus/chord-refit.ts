@@ -1,12 +1,13 @@
-import { clipToBounds, penaltyValue } from '../../numerics/penalty.js';
+import { clipToBounds } from '../../numerics/penalty.js';
 import { dot, subtract } from '../../numerics/vector.js';
 import { modelStep, relativeTo } from './certificate.js';
+import { endAt, progressAt } from './endings.js';
 import { symmetricTimes } from './matrix.js';
 import type { Certificate, Method, MethodEnd, Progress } from './method.js';
 import { definiteMetric, diagonalOf, flooredDiagonal } from './metric.js';
 import { evaluate, required } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
-import { bestTrial, linePoints, type Standing, trialPoints } from './trial-points.js';
+import { bestTrial, linePoints, type Standing, standingAt, trialPoints } from './trial-points.js';
 
 /** Safety factor on a decrement under a curvature that was learned, not measured. */
 const LEARNED_FACTOR = 10;
@@ -74,15 +75,6 @@ export function* chordRefit(problem: ConsensusProblem, curvature: Float64Array):
   }
 }
 
-function standingAt(
-  { penalty }: ConsensusProblem,
-  z: Float64Array,
-  loss: number,
-  gradient: Float64Array,
-): Standing {
-  return { z, loss, objective: loss + penaltyValue(penalty, z), gradient };
-}
-
 /** The damped BFGS update by the secant from `here` to `there`; null where they are one point. */
 function withSecant(model: Float64Array, here: Standing, there: Standing): Float64Array | null {
   const p = here.z.length;
@@ -102,34 +94,15 @@ function withSecant(model: Float64Array, here: Standing, there: Standing): Float
   return out;
 }
 
-function ending(
+const ending = (
   problem: ConsensusProblem,
   here: Standing,
   certificate: Certificate | null,
   rounds: number,
   outcome: MethodEnd['outcome'],
   reason: string | null,
-): MethodEnd {
-  return {
-    outcome,
-    reason,
-    columnsAtFault: [],
-    z: here.z,
-    loss: here.loss,
-    penalty: penaltyValue(problem.penalty, here.z),
-    certificate,
-    curvature: null,
-    rounds,
-    rung: 'proximal',
-  };
-}
+): MethodEnd =>
+  endAt(problem, here, { outcome, reason, certificate, curvature: null, rounds, rung: 'proximal' });
 
-const progressOf = (here: Standing | null, certificate: Certificate | null): Progress => ({
-  rung: 'proximal',
-  purpose: 'refits',
-  primalResidual: null,
-  dualResidual: null,
-  relativeGap: certificate?.relativeGap ?? null,
-  gapMeasured: false,
-  objective: here?.objective ?? null,
-});
+const progressOf = (here: Standing | null, certificate: Certificate | null): Progress =>
+  progressAt('proximal', here, certificate?.relativeGap ?? null, false, 'refits');

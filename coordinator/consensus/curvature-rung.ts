@@ -1,15 +1,22 @@
 import { packSymmetric } from '../../numerics/packed.js';
-import { penaltyValue } from '../../numerics/penalty.js';
 import { dot, maxOf } from '../../numerics/vector.js';
 import { zStepFull } from '../../numerics/z-step.js';
-import { type ModelStep, measuredCertificate, modelStep, relativeTo } from './certificate.js';
+import { gapOf, type ModelStep, measuredCertificate, modelStep } from './certificate.js';
 import { DAMPING_LEAST, Damping, FAILURES_MOST } from './damping.js';
+import { endAt, progressAt } from './endings.js';
 import { type Flaw, flawFromTheStart, separatedColumns, verdict } from './existence.js';
 import type { Certificate, Method, MethodEnd, Progress } from './method.js';
 import { definiteMetric, diagonalOf, flooredDiagonal, plusDiagonal, RIDGE } from './metric.js';
 import { evaluate, type PooledEvaluation, required } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
-import { bestLinePoint, bestTrial, type Iterate, linePoints, trialPoints } from './trial-points.js';
+import {
+  bestLinePoint,
+  bestTrial,
+  type Iterate,
+  linePoints,
+  standingAt,
+  trialPoints,
+} from './trial-points.js';
 
 /** Weight of the proximal term that holds each site's own fit near z₀, in the site's own diagonal curvature. */
 const OWN_FIT_HOLD = 0.3;
@@ -125,10 +132,7 @@ function iterateFrom(
   const point = answers.points[k];
   const curvature = required(point.curvature, 'curvature');
   return {
-    z,
-    loss: point.value,
-    objective: point.value + penaltyValue(problem.penalty, z),
-    gradient: required(point.gradient, 'gradient'),
+    ...standingAt(problem, z, point.value, required(point.gradient, 'gradient')),
     curvature,
     diagonal: flooredDiagonal(diagonalOf(curvature, problem.p)),
   };
@@ -164,10 +168,7 @@ function quadraticEnd(
   const loss = here.loss + 0.5 * (dot(here.gradient, step.direction) + dot(gradient, step.direction));
   const there: Iterate = {
     ...here,
-    z: step.z,
-    loss,
-    objective: loss + penaltyValue(problem.penalty, step.z),
-    gradient,
+    ...standingAt(problem, step.z, loss, gradient),
   };
   if (next === null) return ending(problem, there, null, rounds, 'stalled', UNFACTORED);
   const certificate = measuredCertificate(problem, step.z, gradient, next.decrement, there.objective);
@@ -208,28 +209,17 @@ export function ending(
   reason: string | null,
   columnsAtFault: readonly number[] = [],
 ): MethodEnd {
-  return {
+  const curvature = packSymmetric(here.curvature, problem.p);
+  return endAt(problem, here, {
     outcome,
     reason,
     columnsAtFault,
-    z: here.z,
-    loss: here.loss,
-    penalty: penaltyValue(problem.penalty, here.z),
     certificate,
-    curvature: packSymmetric(here.curvature, problem.p),
+    curvature,
     rounds,
     rung: 'curvature',
-  };
+  });
 }
 
-function progressOf(here: Iterate | null, step: ModelStep | null, purpose: string): Progress {
-  return {
-    rung: 'curvature',
-    purpose,
-    primalResidual: null,
-    dualResidual: null,
-    relativeGap: here === null || step === null ? null : step.decrement / relativeTo(here.objective),
-    gapMeasured: here !== null,
-    objective: here?.objective ?? null,
-  };
-}
+const progressOf = (here: Iterate | null, step: ModelStep | null, purpose: string): Progress =>
+  progressAt('curvature', here, gapOf(here, step), here !== null, purpose);

@@ -37,10 +37,6 @@ export function modelValue({ point, value, gradient, curvature }: SiteModel, z: 
   return value + dot(gradient, d) + 0.5 * dot(d, symmetricTimes(curvature, d));
 }
 
-/** ∇q(z) = ∇φ + Hd. */
-export const modelGradient = ({ point, gradient, curvature }: SiteModel, z: Float64Array): Float64Array =>
-  plusScaled(gradient, 1, symmetricTimes(curvature, subtract(z, point)));
-
 /**
  * The last quadratic of every site, and their sum
  *

@@ -7,7 +7,7 @@ import type { MethodAsk, MethodEnd, SiteAnswers } from './method.js';
 import { flooredDiagonal } from './metric.js';
 import { diagonalCurvatures, evaluate, required, siteGradients } from './pooled.js';
 import type { ConsensusProblem } from './problem.js';
-import { certify, lastCertificate, progressOf, type Standing, TRIGGERS } from './proximal-certificate.js';
+import { certify, lastCertificate, progressOf, type Standing, standingFrom } from './proximal-certificate.js';
 import { normalisedResiduals } from './residuals.js';
 import { SiteMetric } from './site-metric.js';
 import { SiteModels } from './site-models.js';
@@ -127,24 +127,3 @@ function* setUp(
     : null;
   return { standing: standingFrom(problem, startDiagonal, objective, learned), gradients };
 }
-
-export const standingFrom = (
-  { curvatureMost }: ConsensusProblem,
-  startDiagonal: Float64Array,
-  objective: number,
-  models: SiteModels | null,
-): Standing => ({
-  startDiagonal,
-  startObjective: objective,
-  rounds: 0,
-  trigger: curvatureMost > 0 ? TRIGGERS.finish : TRIGGERS.estimate,
-  matricesLeft: curvatureMost,
-  curvatureSeen: false,
-  residuals: null,
-  gapGuess: null,
-  objective,
-  bestObjective: objective,
-  best: null,
-  certificate: null,
-  models,
-});

@@ -1,6 +1,7 @@
 import { runawayColumns } from '../../numerics/determined.js';
 import { leastSubgradient, type Penalty, penaltyValue } from '../../numerics/penalty.js';
 import { estimatedCertificate } from './certificate.js';
+import { endAt } from './endings.js';
 import { separatedColumns } from './existence.js';
 import type { Certificate, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
 import { evaluate, type PooledEvaluation, required, siteGradients } from './pooled.js';
@@ -41,6 +42,28 @@ export interface Standing {
   /** Models of the sites, learned from their proximal points; null where they would be too large to keep. */
   models: SiteModels | null;
 }
+
+/** Where a method begins, before its first round: F(z₀) and D are known, nothing else. */
+export const standingFrom = (
+  { curvatureMost }: ConsensusProblem,
+  startDiagonal: Float64Array,
+  objective: number,
+  models: SiteModels | null,
+): Standing => ({
+  startDiagonal,
+  startObjective: objective,
+  rounds: 0,
+  trigger: curvatureMost > 0 ? TRIGGERS.finish : TRIGGERS.estimate,
+  matricesLeft: curvatureMost,
+  curvatureSeen: false,
+  residuals: null,
+  gapGuess: null,
+  objective,
+  bestObjective: objective,
+  best: null,
+  certificate: null,
+  models,
+});
 
 /**
  * A certificate round at z, or the second-order finish from z while curvature is left to spend. Returns the end, or,
@@ -207,18 +230,9 @@ export function ending(
   loss: number,
   curvature: Float64Array | null,
 ): MethodEnd {
-  return {
-    outcome,
-    reason: null,
-    columnsAtFault: [],
-    z,
-    loss,
-    penalty: penaltyValue(problem.penalty, z),
-    certificate: standing.certificate,
-    curvature,
-    rounds: standing.rounds,
-    rung: 'proximal',
-  };
+  const { certificate, rounds } = standing;
+  const end = { outcome, reason: null, certificate, curvature, rounds, rung: 'proximal' } as const;
+  return endAt(problem, { z, loss }, end);
 }
 
 /** For the round log. Near an optimum the gap is quadratic in the residual: a guess where no model gives a better one. */

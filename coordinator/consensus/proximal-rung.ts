@@ -15,6 +15,7 @@ import {
   look,
   progressOf,
   type Standing,
+  standingFrom,
   TRIGGERS,
 } from './proximal-certificate.js';
 import { balancingFactor, normalisedResiduals } from './residuals.js';
@@ -128,19 +129,11 @@ function* setUp(
   const objective = pooled.value + penaltyValue(g, start);
   const startDiagonal = flooredDiagonal(required(pooled.diagonal, 'diagonal'));
   const standing: Standing = {
-    startDiagonal,
-    startObjective: objective,
+    ...standingFrom(problem, startDiagonal, objective, null),
     rounds: 1,
     trigger: TRIGGERS.led,
     matricesLeft: problem.curvatureMost - (modelled ? 1 : 0),
     curvatureSeen: modelled,
-    residuals: null,
-    gapGuess: null,
-    objective,
-    bestObjective: objective,
-    best: null,
-    certificate: null,
-    models: null,
   };
   const points = siteWeights.map(() => start);
   if (!modelled) {

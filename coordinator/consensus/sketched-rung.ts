@@ -1,8 +1,8 @@
 import { runawayColumns } from '../../numerics/determined.js';
-import { penaltyValue } from '../../numerics/penalty.js';
 import { seededRandom } from '../../numerics/random.js';
-import { type ModelStep, modelStep, relativeTo, sketchedCertificate } from './certificate.js';
+import { gapOf, type ModelStep, modelStep, relativeTo, sketchedCertificate } from './certificate.js';
 import { Damping, FAILURES_MOST } from './damping.js';
+import { endAt, progressAt } from './endings.js';
 import type { Certificate, Method, MethodAsk, MethodEnd, Progress, SiteAnswers } from './method.js';
 import { plusDiagonal } from './metric.js';
 import { evaluate, type PooledEvaluation, required } from './pooled.js';
@@ -15,6 +15,7 @@ import {
   isNoRise,
   linePoints,
   type Standing,
+  standingAt,
   trialPoints,
 } from './trial-points.js';
 
@@ -90,7 +91,7 @@ function* started(problem: ConsensusProblem): Generator<MethodAsk, State, SiteAn
   const startDiagonal = curvature.diagonal;
   curvature.learnSketch(sketch, productsOf(answers, sketch.length));
   directions.keep(sketch, curvature.diagonal);
-  const here = standingAt(problem, problem.start, answers, 0);
+  const here = standingOf(problem, problem.start, answers, 0);
   return { problem, directions, curvature, startDiagonal, here, fresh: true, rounds: 1 };
 }
 
@@ -123,7 +124,7 @@ function* tryPoints(
     sketchAsk(sketch),
   );
   state.rounds++;
-  const tried = trials.map((point, k) => standingAt(problem, point, answers, k));
+  const tried = trials.map((point, k) => standingOf(problem, point, answers, k));
   // the nearest to the model's own step is learned last: later updates are exact
   for (const there of [...tried].reverse())
     curvature.learnSecant(here, there, metric, isNoRise(here, there.objective));
@@ -161,7 +162,7 @@ function* moveTo(
     progressOf(here, step, 'a shorter step'),
   );
   state.rounds++;
-  state.here = standingAt(problem, point, answers, 0);
+  state.here = standingOf(problem, point, answers, 0);
   curvature.learnSecant(here, state.here, null, false);
   state.fresh = false;
 }
@@ -181,50 +182,32 @@ function certified(state: State, certificate: Certificate, step: ModelStep): Met
     : ending(state, certificate, 'solved', null);
 }
 
-function standingAt(
+const standingOf = (
   problem: ConsensusProblem,
   z: Float64Array,
   answers: PooledEvaluation,
   k: number,
-): Standing {
+): Standing => {
   const { value, gradient } = answers.points[k];
-  return {
-    z,
-    loss: value,
-    objective: value + penaltyValue(problem.penalty, z),
-    gradient: required(gradient, 'gradient'),
-  };
-}
+  return standingAt(problem, z, value, required(gradient, 'gradient'));
+};
 
-function ending(
+const ending = (
   { problem, here, rounds }: State,
   certificate: Certificate | null,
   outcome: MethodEnd['outcome'],
   reason: string | null,
   columnsAtFault: readonly number[] = [],
-): MethodEnd {
-  return {
+): MethodEnd =>
+  endAt(problem, here, {
     outcome,
     reason,
     columnsAtFault,
-    z: here.z,
-    loss: here.loss,
-    penalty: penaltyValue(problem.penalty, here.z),
     certificate,
     curvature: null,
     rounds,
     rung: 'sketched',
-  };
-}
+  });
 
-function progressOf(here: Standing | null, step: ModelStep | null, purpose: string): Progress {
-  return {
-    rung: 'sketched',
-    purpose,
-    primalResidual: null,
-    dualResidual: null,
-    relativeGap: here === null || step === null ? null : step.decrement / relativeTo(here.objective),
-    gapMeasured: false,
-    objective: here?.objective ?? null,
-  };
-}
+const progressOf = (here: Standing | null, step: ModelStep | null, purpose: string): Progress =>
+  progressAt('sketched', here, gapOf(here, step), false, purpose);

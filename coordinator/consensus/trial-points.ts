@@ -22,6 +22,13 @@ export interface Iterate extends Standing {
   readonly diagonal: Float64Array;
 }
 
+export const standingAt = (
+  { penalty }: { readonly penalty: Penalty },
+  z: Float64Array,
+  loss: number,
+  gradient: Float64Array,
+): Standing => ({ z, loss, objective: loss + penaltyValue(penalty, z), gradient });
+
 /** z + tΔ for each trial length, clipped to the bounds. */
 export const trialPoints = (g: Penalty, z: Float64Array, direction: Float64Array): Float64Array[] =>
   TRIALS.map((t) => clipToBounds(g, plusScaled(z, t, direction)));

@@ -34,11 +34,3 @@ export function covarianceOnOriginal(columns: Columns, covariance: Float64Array)
   for (let i = 0; i < p; i++) out.set(coefficientsOf(columns, half.slice(i * p, (i + 1) * p)), i * p);
   return out.map((value, at) => 0.5 * (value + out[(at % p) * p + Math.floor(at / p)]));
 }
-
-/** Tᵀ g for a gradient by the original coefficients: how much of a solver-scale gradient θ carries; length p. */
-export function onSolver({ intercept, center, scale }: Columns, g: Float64Array): Float64Array {
-  if (!intercept) return g.map((value, j) => value / scale[j]);
-  const out = Float64Array.from(g);
-  for (let j = 0; j < scale.length; j++) out[j + 1] = (g[j + 1] - center[j] * g[0]) / scale[j];
-  return out;
-}

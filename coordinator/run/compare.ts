@@ -7,6 +7,7 @@ import { coefficientsOf, covarianceOnOriginal } from '../inference/original-scal
 import { interval, reachOf } from '../inference/tests.js';
 import { comparisonWords } from './compare-words.js';
 import type { Description } from './description.js';
+import { hasLikelihood, modelCovariance } from './model-covariance.js';
 import type { Grounds } from './problems.js';
 import { refitAll } from './refits.js';
 import type {
@@ -57,12 +58,16 @@ export function* comparisonOf(
       leftOut: without === null ? null : leftOut(description, without[i], errors),
     }),
   );
-  if (specification.penalties.length > 0)
-    omit('test of one common model', 'the fit is penalised: the likelihood ratio has no known distribution');
+  const byLikelihood = hasLikelihood(grounds);
+  if (!byLikelihood) {
+    const why =
+      specification.penalties.length > 0 ? 'the fit is penalised' : 'a Huber loss has no likelihood';
+    omit('test of one common model', `${why}: the likelihood ratio has no known distribution`);
+  }
   const comparison = {
     sites,
     heterogeneity: heterogeneities(description, own),
-    commonModel: specification.penalties.length > 0 ? null : commonModelTest(grounds, description),
+    commonModel: byLikelihood ? commonModelTest(grounds, description) : null,
   };
   return { ...comparison, words: comparisonWords(comparison, description.columns.names) };
 }
@@ -78,6 +83,8 @@ function ownFit(grounds: Grounds, description: Description, member: number): Own
   if (answer === null) return { fit: null, reason: 'its policy does not let its own fit leave' };
   if (answer.fit === null) return { fit: null, reason: answer.reason };
   const { survey, specification, frame } = grounds;
+  if (specification.loss.kind === 'huber')
+    return { fit: null, reason: 'the curvature of a Huber loss does not tell how sure an own fit is' };
   const { p } = frame;
   const { point, value, curvature, undetermined } = answer.fit;
   const known = [...point.keys()].filter((j) => !undetermined.includes(j));
@@ -113,23 +120,13 @@ function subMatrix(matrix: Float64Array, p: number, indices: readonly number[]):
   });
 }
 
-/** Standard errors of the common fit, by name; null where its curvature is not known or the fit is penalised. */
-function commonErrors(
-  { survey, specification, frame }: Grounds,
-  description: Description,
-): Map<string, number> | null {
-  const { curvature, columns, end } = description;
-  if (curvature === null || specification.penalties.length > 0) return null;
-  const inverse = inverseOf(curvature, frame.p);
-  if (inverse === null) return null;
-  const n = survey.rowsTotal;
-  const isSquared = specification.loss.kind === 'squared';
-  const dispersion = isSquared ? (2 * n * end.loss) / (n - frame.p) : 1;
-  const original = covarianceOnOriginal(
-    columns,
-    inverse.map((value) => (value * dispersion) / n),
-  );
-  return new Map(columns.names.map((name, j) => [name, Math.sqrt(original[j * frame.p + j])]));
+/** Standard errors of the common fit, by name; null where its curvature is not known, or says nothing of them. */
+function commonErrors(grounds: Grounds, description: Description): Map<string, number> | null {
+  const covariance = hasLikelihood(grounds) ? modelCovariance(grounds, description) : null;
+  if (covariance === null) return null;
+  const { columns } = description;
+  const original = covarianceOnOriginal(columns, covariance);
+  return new Map(columns.names.map((name, j) => [name, Math.sqrt(original[j * grounds.frame.p + j])]));
 }
 
 /** Per member, its share of the diagonal of the pooled information, by coefficient. */

@@ -1,4 +1,5 @@
 import { noPenalty } from '../../numerics/penalty.js';
+import { sumOf } from '../../numerics/vector.js';
 import { zStepFull } from '../../numerics/z-step.js';
 import { interval, reachOf, twoSided } from '../inference/tests.js';
 import { type Description, pooledMeat } from './description.js';
@@ -22,8 +23,7 @@ export function debiasedIntervals(
   if (curvature === null || gradients === undefined) return [];
   const { p } = frame;
   const n = survey.rowsTotal;
-  const gradient = new Float64Array(p);
-  for (const own of gradients) for (let j = 0; j < p; j++) gradient[j] += own[j];
+  const gradient = sumOf(gradients);
   const meat = pooledMeat(scores, 'meat') ?? curvature.map((value) => value * dispersion.value);
   const reach = reachOf(level, degreesOfFreedom);
   const first = columns.intercept ? 1 : 0;

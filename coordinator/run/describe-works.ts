@@ -2,6 +2,7 @@ import { packSymmetric, unpackSymmetric } from '../../numerics/packed.js';
 import { mergeFactors } from '../../numerics/triangular-factor.js';
 import type { MarginsWork } from '../../protocol/messages/margins.js';
 import type { Work } from '../../protocol/messages/round.js';
+import type { LeaveKind } from '../../protocol/messages/survey.js';
 import type { MethodEnd } from '../consensus/method.js';
 import { FactoredModel } from '../consensus/pooled-rung.js';
 import { inverseOf } from '../inference/covariance.js';
@@ -40,51 +41,18 @@ export function planOf(grounds: Grounds, problem: number, solved: Solved, end: M
   const { specification, survey, frame } = grounds;
   const { report } = specification;
   const omitted: OmittedPart[] = [];
-  const omit = (part: string, reason: string): void => void omitted.push({ part, reason });
   const fromFactors = solved.first?.kind === 'factor' ? factorModels(grounds, solved.first.factors) : null;
-  // a problem of its own, so that the limit per fit holds for it afresh
-  let left = grounds.choice.curvatureMost;
-  const take = (matrices: number): boolean => {
-    const taken = left >= matrices;
-    if (taken) left -= matrices;
-    return taken;
-  };
-  const wantsCurvature = report.covariance || report.compareSites || report.fitQuality;
-  const budget = `${closest(grounds)} lets no further curvature matrix leave; its custodian can raise \`curvature-most\``;
-  const clustered = report.sandwich !== null && report.sandwich.cluster !== null;
-  // with a matrix measured on the way, the meat is what is still unknown
-  const meatFirst = report.sandwich !== null && end.curvature !== null;
-  const meat = meatFirst && take(clustered ? 2 : 1);
-  const quadratics = fromFactors === null && wantsCurvature && take(1);
-  const lateMeat = report.sandwich !== null && !meat && quadratics && take(clustered ? 2 : 1);
-  if (report.sandwich !== null && !meat && !lateMeat) omit('sandwich', budget);
-  if (wantsCurvature && fromFactors === null && !quadratics && end.curvature === null)
-    omit('covariance', budget);
-  const hasMeat = meat || lateMeat;
-  const sends = (kind: string): readonly boolean[] =>
-    survey.answers.map(({ allowance }) => allowance.leave.some((one) => one === kind));
-  const closed = (kind: string): string[] =>
-    sends(kind).flatMap((leaves, i) => (leaves ? [] : [memberName(grounds.roster[i])]));
-  const canScore = closed('gradients').length === 0;
-  if (!canScore && (report.covariance || report.margins))
-    omit('margins and dispersion', `${closed('gradients').join(', ')} lets no gradients leave`);
-  const bins = closed('residual-bins');
-  if (report.fitQuality && bins.length > 0)
-    omit('fit quality', `${bins.join(', ')} does not let \`residual-bins\` leave`);
-  const ownFits = report.compareSites ? sends('site-estimates') : survey.answers.map(() => false);
-  if (report.compareSites && ownFits.some((leaves) => !leaves))
-    omit(
-      `own fit of ${closed('site-estimates').join(', ')}`,
-      'its policy does not let `site-estimates` leave',
-    );
-  const settings =
-    report.margins && canScore
-      ? marginSettings(specification).map((one) =>
-          one.set === 'slope' ? { set: one.set, column: one.column } : { ...one },
-        )
-      : [];
-  const pooled = end.curvature === null ? null : unpackSymmetric(end.curvature);
-  const inverse = pooled === null ? null : inverseOf(pooled, frame.p);
+  const { quadratics, meat } = spendMatrices(grounds, end, fromFactors !== null, omitted);
+  const canScore = allLet(grounds, 'gradients', report.covariance || report.margins, omitted, {
+    part: 'margins and dispersion',
+    reason: 'no gradients leave',
+  });
+  const canBin = allLet(grounds, 'residual-bins', report.fitQuality, omitted, {
+    part: 'fit quality',
+    reason: 'no `residual-bins` leave',
+  });
+  const clustered = meat && isClustered(grounds);
+  const settings = report.margins && canScore ? marginSettings(specification) : [];
   return {
     problem,
     end,
@@ -92,18 +60,88 @@ export function planOf(grounds: Grounds, problem: number, solved: Solved, end: M
     quadratics,
     nullPoint:
       report.fitQuality && hasNullFit(specification) ? startOn(specification, frame, survey.response) : null,
-    scores: canScore && report.covariance ? { meat: hasMeat, clustered: hasMeat && clustered } : null,
-    siteFits: ownFits,
-    margins: settings.length > 0 ? settings : null,
+    scores: canScore && report.covariance ? { meat, clustered } : null,
+    siteFits: ownFitsAsked(grounds, omitted),
+    margins:
+      settings.length > 0
+        ? settings.map((one) => (one.set === 'slope' ? { set: one.set, column: one.column } : { ...one }))
+        : null,
     quality:
-      report.fitQuality && bins.length === 0
-        ? {
-            edges: binEdges(grounds, end.z),
-            inverse: inverse === null ? null : packSymmetric(inverse, frame.p),
-          }
+      report.fitQuality && canBin
+        ? { edges: binEdges(grounds, end.z), inverse: inverseAt(grounds, end) }
         : null,
     omitted,
   };
+}
+
+const isClustered = ({ specification }: Grounds): boolean =>
+  (specification.report.sandwich?.cluster ?? null) !== null;
+
+/**
+ * What the limit on curvature matrices is spent on: the meat first where a matrix was measured on the way, since the meat
+ * is what is still unknown; else the curvature at the fit first. The report is a problem of its own, so that the limit
+ * per fit holds for it afresh.
+ */
+function spendMatrices(
+  grounds: Grounds,
+  end: MethodEnd,
+  factored: boolean,
+  omitted: OmittedPart[],
+): { readonly quadratics: boolean; readonly meat: boolean } {
+  const { covariance, compareSites, fitQuality, sandwich } = grounds.specification.report;
+  let left = grounds.choice.curvatureMost;
+  const take = (matrices: number): boolean => {
+    const taken = left >= matrices;
+    if (taken) left -= matrices;
+    return taken;
+  };
+  const meats = isClustered(grounds) ? 2 : 1;
+  const wantsCurvature = !factored && (covariance || compareSites || fitQuality);
+  const meatFirst = sandwich !== null && end.curvature !== null && take(meats);
+  const quadratics = wantsCurvature && take(1);
+  const meat = meatFirst || (sandwich !== null && quadratics && take(meats));
+  const reason = `${closest(grounds)} lets no further curvature matrix leave; its custodian can raise \`curvature-most\``;
+  if (sandwich !== null && !meat) omitted.push({ part: 'sandwich', reason });
+  if (wantsCurvature && !quadratics && end.curvature === null) omitted.push({ part: 'covariance', reason });
+  return { quadratics, meat };
+}
+
+/** Members whose policy lets a kind of answer leave. */
+const letting = ({ survey }: Grounds, kind: LeaveKind): boolean[] =>
+  survey.answers.map(({ allowance }) => allowance.leave.includes(kind));
+
+/** Whether every member lets a kind leave; where it is wanted and one does not, the part is omitted, naming who. */
+function allLet(
+  grounds: Grounds,
+  kind: LeaveKind,
+  wanted: boolean,
+  omitted: OmittedPart[],
+  { part, reason }: OmittedPart,
+): boolean {
+  const closed = letting(grounds, kind).flatMap((leaves, i) =>
+    leaves ? [] : [memberName(grounds.roster[i])],
+  );
+  if (closed.length > 0 && wanted) omitted.push({ part, reason: `${closed.join(', ')}: ${reason}` });
+  return closed.length === 0;
+}
+
+function ownFitsAsked(grounds: Grounds, omitted: OmittedPart[]): boolean[] {
+  const { roster, specification } = grounds;
+  if (!specification.report.compareSites) return roster.map(() => false);
+  const leaves = letting(grounds, 'site-estimates');
+  const closed = roster.filter((_, i) => !leaves[i]).map(memberName);
+  if (closed.length > 0)
+    omitted.push({
+      part: `own fit of ${closed.join(', ')}`,
+      reason: 'its policy does not let `site-estimates` leave',
+    });
+  return leaves;
+}
+
+/** Packed inverse of the curvature measured on the way; null where there is none. */
+function inverseAt({ frame }: Grounds, { curvature }: MethodEnd): Float64Array | null {
+  const inverse = curvature === null ? null : inverseOf(unpackSymmetric(curvature), frame.p);
+  return inverse === null ? null : packSymmetric(inverse, frame.p);
 }
 
 /** One ask to every member, as planned. */

@@ -1,4 +1,5 @@
 import { unpackSymmetric } from '../../numerics/packed.js';
+import { sumOf } from '../../numerics/vector.js';
 import type { MarginsAnswer } from '../../protocol/messages/margins.js';
 import type { QualityAnswer } from '../../protocol/messages/quality.js';
 import type { ScoresAnswer } from '../../protocol/messages/scores.js';
@@ -51,10 +52,7 @@ export const pooledCurvature = (
   end: MethodEnd,
 ): Float64Array | null => {
   if (members === null) return end.curvature === null ? null : unpackSymmetric(end.curvature);
-  const [first, ...others] = members;
-  const sum = Float64Array.from(first.curvature);
-  for (const { curvature } of others) for (let at = 0; at < sum.length; at++) sum[at] += curvature[at];
-  return sum;
+  return sumOf(members.map(({ curvature }) => curvature));
 };
 
 /** Σ of the members' meats, row-major p × p; null where they were not all asked. */
@@ -64,7 +62,5 @@ export function pooledMeat(
 ): Float64Array | null {
   const packed = (scores ?? []).map((own) => own[which]).filter((one) => one !== null);
   if (scores === null || packed.length === 0 || packed.length < scores.length) return null;
-  const sum = new Float64Array(packed[0].length);
-  for (const one of packed) for (let at = 0; at < sum.length; at++) sum[at] += one[at];
-  return unpackSymmetric(sum);
+  return unpackSymmetric(sumOf(packed));
 }

@@ -28,31 +28,61 @@ export type Described = Pick<ResultDocument, 'inference' | 'comparison' | 'fitQu
 
 export const NOT_DESCRIBED: Described = { inference: null, comparison: null, fitQuality: null, omitted: [] };
 
+/** What a result says of its fits. */
+type Fitted = Described & Pick<ResultDocument, 'fits' | 'chosen' | 'choice' | 'startedFrom' | 'moved'>;
+
+export const NO_FITS: Fitted = {
+  fits: [],
+  chosen: null,
+  choice: null,
+  ...NOT_DESCRIBED,
+  startedFrom: null,
+  moved: null,
+};
+
+type Known = Pick<
+  ResultDocument,
+  'sites' | 'without' | 'rowsTotal' | 'rung' | 'rungReason' | 'notes' | 'rounds' | 'numbersSent'
+>;
+
+/** `result.json`: its fields in their order, from what is known of the sites and of the fits. */
+export const resultOf = (
+  { specification, digest }: Pick<About, 'specification' | 'digest'>,
+  { outcome, reason }: Pick<ResultDocument, 'outcome' | 'reason'>,
+  { sites, without, rowsTotal, rung, rungReason, notes, rounds, numbersSent }: Known,
+  fitted: Fitted = NO_FITS,
+): ResultDocument => ({
+  format: 1,
+  outcome,
+  reason,
+  title: specification.title,
+  specification: digest,
+  software: SOFTWARE,
+  sites,
+  without,
+  rowsTotal,
+  rung,
+  rungReason,
+  tolerance: specification.rounds.tolerance,
+  ...fitted,
+  notes,
+  rounds,
+  numbersSent,
+});
+
 /** A run that ended before any fit was made. */
 export function stopped(
-  { specification, digest, roster, without }: About,
+  about: About,
   stop: Omit<Stop, 'outcome'> & { readonly outcome: RunOutcome },
   surveyed: PooledSurvey | null = null,
 ): RunEnd {
-  const result: ResultDocument = {
-    format: 1,
-    outcome: stop.outcome,
-    reason: stop.reason,
-    title: specification.title,
-    specification: digest,
-    software: SOFTWARE,
+  const { roster, without } = about;
+  const result = resultOf(about, stop, {
     sites: siteRows(roster, surveyed),
     without,
     rowsTotal: surveyed?.rowsTotal ?? null,
     rung: null,
     rungReason: null,
-    tolerance: specification.rounds.tolerance,
-    fits: [],
-    chosen: null,
-    choice: null,
-    ...NOT_DESCRIBED,
-    startedFrom: null,
-    moved: null,
     notes: surveyed?.notes ?? [],
     rounds: 0,
     numbersSent: roster.map((member, i) => ({
@@ -60,7 +90,7 @@ export function stopped(
       up: surveyed === null ? 0 : numbersOfAnswer(surveyed.answers[i]),
       down: 0,
     })),
-  };
+  });
   return { outcome: stop.outcome, reason: stop.reason, shown: null, result };
 }
 
@@ -73,41 +103,18 @@ export function ended(
   chosen: Chosen,
   described: Described,
 ): RunEnd {
-  const { specification, digest, roster, without, startFrom } = about;
-  const { survey, choice, warm } = grounds;
+  const { roster, without } = about;
+  const { survey, choice } = grounds;
   const fits = solved.ends.map((end, fit) => fitDocument(grounds, end, solved.lambdas[fit]));
   const unsolved = fits.find((one) => one.outcome !== 'solved');
   const outcome = unsolved?.outcome ?? 'solved';
   const reason = unsolved?.reason ?? null;
-  const result: ResultDocument = {
-    format: 1,
-    outcome,
-    reason,
-    title: specification.title,
-    specification: digest,
-    software: SOFTWARE,
+  const known = {
     sites: siteRows(roster, survey),
     without,
     rowsTotal: survey.rowsTotal,
     rung: choice.rung,
     rungReason: choice.reason,
-    tolerance: specification.rounds.tolerance,
-    fits,
-    chosen: chosen.fit,
-    choice: chosen.document,
-    ...described,
-    startedFrom:
-      startFrom === null
-        ? null
-        : {
-            run: startFrom.run,
-            coefficients: Object.fromEntries(startFrom.coefficients),
-            used: warm !== null && warm.point !== null,
-          },
-    moved:
-      startFrom === null || chosen.fit === null
-        ? null
-        : movedOf(startFrom, fits[chosen.fit], described.inference),
     notes: [...notesOf(grounds), ...chosen.notes],
     rounds: rounds.count,
     numbersSent: roster.map((member, i) => ({
@@ -116,7 +123,26 @@ export function ended(
       down: rounds.down[i],
     })),
   };
+  const fitted = { fits, chosen: chosen.fit, choice: chosen.document, ...described };
+  const start = startOf(about, grounds, chosen.fit === null ? null : fits[chosen.fit], described);
+  const result = resultOf(about, { outcome, reason }, known, { ...fitted, ...start });
   return { outcome, reason, shown: rounds.shown, result };
+}
+
+/** What the run was given to start from, and how far the fit that it stands by has moved since. */
+function startOf(
+  { startFrom }: About,
+  { warm }: Grounds,
+  fit: FitDocument | null,
+  { inference }: Described,
+): Pick<ResultDocument, 'startedFrom' | 'moved'> {
+  if (startFrom === null) return { startedFrom: null, moved: null };
+  const { run, coefficients } = startFrom;
+  const used = warm !== null && warm.point !== null;
+  return {
+    startedFrom: { run, coefficients: Object.fromEntries(coefficients), used },
+    moved: fit === null ? null : movedOf(startFrom, fit, inference),
+  };
 }
 
 export function notesOf({ survey: surveyed, frame, warm }: Grounds): string[] {

@@ -63,6 +63,8 @@ class Group {
     [];
   private readonly points: { readonly point: Float64Array; want: Want }[] = [];
   private readonly places = new Map<string, number>();
+  /** Points that have a place in `places`: a problem that stays alone needs none. */
+  private keyed = 0;
   private ownFit: { readonly at: number; readonly hold: number } | null = null;
   private sketch: EvaluateAsk['sketch'] = null;
 
@@ -79,7 +81,7 @@ class Group {
       return false;
     if (this.points.length + ask.points.length > LIMITS.batchMost) return false;
     if (ask.ownFit === null || this.ownFit === null) return true;
-    const place = this.places.get(keyOf(ask.points[ask.ownFit.at].point));
+    const place = this.placeOf(ask.points[ask.ownFit.at].point);
     return place === this.ownFit.at && ask.ownFit.hold === this.ownFit.hold;
   }
 
@@ -97,15 +99,20 @@ class Group {
   }
 
   private place(point: Float64Array, want: Want): number {
-    const key = keyOf(point);
-    const found = this.places.get(key);
-    if (found === undefined) {
-      this.places.set(key, this.points.length);
-      return this.points.push({ point, want }) - 1;
-    }
+    const found = this.takers.length === 0 ? undefined : this.placeOf(point);
+    if (found === undefined) return this.points.push({ point, want }) - 1;
     const known = this.points[found];
     if (WANTS.indexOf(want) > WANTS.indexOf(known.want)) known.want = want;
     return found;
+  }
+
+  /** Where an equal point stands. Keys are long where there are many columns, and are made when they are asked for. */
+  private placeOf(point: Float64Array): number | undefined {
+    for (; this.keyed < this.points.length; this.keyed++) {
+      const key = keyOf(this.points[this.keyed].point);
+      if (!this.places.has(key)) this.places.set(key, this.keyed);
+    }
+    return this.places.get(keyOf(point));
   }
 }
 

@@ -1,9 +1,11 @@
+import { scaled, sumOf } from '../../numerics/vector.js';
 import { inverseOf, outerSum, sandwiched } from '../inference/covariance.js';
 import { coefficientsOf, covarianceOnOriginal } from '../inference/original-scale.js';
 import { benjaminiHochberg, holm, interval, reachOf, twoSided } from '../inference/tests.js';
 import { debiasedIntervals } from './debiased.js';
 import { type Description, pooledMeat } from './description.js';
 import { marginsOf } from './margins.js';
+import { dispersionOf, hasLikelihood, modelCovariance, residualDegrees } from './model-covariance.js';
 import type { Grounds } from './problems.js';
 import { profileIntervals } from './profile.js';
 import type {
@@ -51,27 +53,30 @@ export function* inferenceOf(
   if (inverse === null)
     return omit('covariance', 'the curvature at the fit is singular: coefficients are aliased');
   const isPenalised = specification.penalties.length > 0;
-  if (specification.loss.kind === 'huber' && pooledMeat(description.scores, 'meat') === null)
+  const all = solverCovariances(grounds, description, inverse);
+  const basis = basisOf(grounds, description, all);
+  if (basis === null)
     return omit('covariance', 'a Huber loss has no likelihood: ask for `sandwich` in the report');
-  const basis = basisOf(grounds, description, inverse);
-  const covariances = isPenalised ? [] : covariancesOf(grounds, description, inverse, basis);
+  const covariances = isPenalised ? [] : all.map((one) => covarianceDocument(description, one));
   const main = covariances.find(({ kind }) => kind === basis.used);
-  const tests = isPenalised || main === undefined ? [] : coefficientTests(description, main, basis);
+  const tests = main === undefined ? [] : coefficientTests(description, main, basis);
   if (isPenalised && !report.debiased)
     omit(
       'intervals',
       'a penalty shrinks the coefficients, so that Wald intervals would not cover; ask for `debiased` in `report`',
     );
-  const terms = report.termTests && !isPenalised ? yield* termTests(grounds, rounds, description, basis) : [];
+  const byLikelihood = hasLikelihood(grounds);
+  const why = isPenalised ? 'the fit is penalised' : 'a Huber loss has no likelihood';
+  if (report.termTests && !byLikelihood)
+    omit('tests of terms', `${why}: the ratio has no known distribution`);
+  if (report.profile.length > 0 && !byLikelihood) omit('profile intervals', `${why}: there is no profile`);
+  const terms = report.termTests && byLikelihood ? yield* termTests(grounds, rounds, description, basis) : [];
   if (isStop(terms)) return terms;
-  if (report.termTests && isPenalised) omit('term tests', 'a penalised fit has no likelihood-ratio test');
   const profile =
-    report.profile.length > 0 && !isPenalised
+    report.profile.length > 0 && byLikelihood
       ? yield* profileIntervals(grounds, rounds, description, basis)
       : [];
   if (isStop(profile)) return profile;
-  if (report.profile.length > 0 && isPenalised)
-    omit('profile intervals', 'a penalised fit has no profile likelihood');
   return {
     level: LEVEL,
     degreesOfFreedom: basis.degreesOfFreedom,
@@ -89,26 +94,21 @@ export function* inferenceOf(
 
 const NO_MARGINS = { marginalMeans: [], marginalEffects: [] } as const;
 
-/** Rows less what the model spends: solver columns, and an intercept per site that stays there. */
-const residualDegrees = ({ specification, survey, frame, roster }: Grounds): number =>
-  survey.rowsTotal - frame.p - (specification.intercept === 'per-site' ? roster.length : 0);
+/** What tests and intervals use: the first of these that the answers allow. */
+const USED: readonly CovarianceKind[] = ['cluster-g1', 'hc1', 'model'];
 
-function basisOf(grounds: Grounds, description: Description, inverse: Float64Array): Basis {
-  const { specification, survey } = grounds;
-  const isSquared = specification.loss.kind === 'squared';
-  const degrees = residualDegrees(grounds);
-  const value = isSquared ? (2 * survey.rowsTotal * description.end.loss) / degrees : 1;
-  const dispersion = { kind: isSquared ? ('residual' as const) : ('fixed' as const), value };
-  const hasMeat = description.scores?.every(({ meat }) => meat !== null) ?? false;
-  const isClustered = description.scores?.every(({ clustered }) => clustered !== null) ?? false;
-  const used: CovarianceKind = isClustered ? 'cluster-g1' : hasMeat ? 'hc1' : 'model';
-  const base = { degreesOfFreedom: isSquared ? degrees : null, dispersion, level: LEVEL };
-  const model = inverse.map((entry) => (entry * value) / survey.rowsTotal);
-  if (used === 'model') return { used, covariance: model, ...base };
-  const { covariance } = solverCovariances(grounds, description, inverse, model).find(
-    ({ kind }) => kind === used,
-  ) ?? { covariance: model };
-  return { used, covariance, ...base };
+function basisOf(
+  grounds: Grounds,
+  description: Description,
+  covariances: readonly SolverCovariance[],
+): Basis | null {
+  const main = USED.map((used) => covariances.find(({ kind }) => kind === used)).find(
+    (one) => one !== undefined,
+  );
+  if (main === undefined) return null;
+  const dispersion = dispersionOf(grounds, description);
+  const degreesOfFreedom = dispersion.kind === 'residual' ? residualDegrees(grounds) : null;
+  return { used: main.kind, covariance: main.covariance, degreesOfFreedom, dispersion, level: LEVEL };
 }
 
 interface SolverCovariance {
@@ -123,15 +123,16 @@ interface SolverCovariance {
  */
 function solverCovariances(
   grounds: Grounds,
-  { scores, members }: Description,
+  description: Description,
   inverse: Float64Array,
-  model: Float64Array,
 ): SolverCovariance[] {
+  const { scores, members } = description;
   const { frame, survey, roster, specification } = grounds;
   const { p } = frame;
   const n = survey.rowsTotal;
+  const model = specification.loss.kind === 'huber' ? null : modelCovariance(grounds, description);
   const out: SolverCovariance[] =
-    specification.loss.kind === 'huber' ? [] : [{ kind: 'model', covariance: model, clusters: null }];
+    model === null ? [] : [{ kind: 'model', covariance: model, clusters: null }];
   if (specification.report.sandwich === null) return out;
   const over = (meat: Float64Array, factor: number): Float64Array =>
     sandwiched(inverse, meat, p).map((value) => (value * factor) / n);
@@ -151,12 +152,9 @@ function solverCovariances(
   const gradients = scores?.map(({ gradient }) => gradient) ?? members?.map(({ gradient }) => gradient);
   const sites = [...new Set(roster.map(({ site }) => site))];
   if (gradients !== undefined && sites.length > 1) {
-    const own = sites.map((site) => {
-      const sum = new Float64Array(p);
-      for (const [i, gradient] of gradients.entries())
-        if (roster[i].site === site) for (let j = 0; j < p; j++) sum[j] += gradient[j] * Math.sqrt(n);
-      return sum;
-    });
+    const own = sites.map((site) =>
+      scaled(Math.sqrt(n), sumOf(gradients.filter((_, i) => roster[i].site === site))),
+    );
     const bySite = outerSum(own, p);
     out.push({ kind: 'site', covariance: over(bySite, 1), clusters: sites.length });
     const factor = sites.length / (sites.length - 1);
@@ -165,27 +163,19 @@ function solverCovariances(
   return out;
 }
 
-function covariancesOf(
-  grounds: Grounds,
-  description: Description,
-  inverse: Float64Array,
-  basis: Basis,
-): CovarianceDocument[] {
-  const { columns } = description;
+function covarianceDocument({ columns }: Description, one: SolverCovariance): CovarianceDocument {
+  const { kind, clusters } = one;
   const p = columns.names.length;
-  const model = inverse.map((entry) => (entry * basis.dispersion.value) / grounds.survey.rowsTotal);
-  return solverCovariances(grounds, description, inverse, model).map(({ kind, covariance, clusters }) => {
-    const original = covarianceOnOriginal(columns, covariance);
-    return {
-      kind,
-      order: columns.names,
-      covariance: columns.names.map((_, i) => [...original.slice(i * p, (i + 1) * p)]),
-      standardErrors: Object.fromEntries(
-        columns.names.map((name, i) => [name, Math.sqrt(Math.max(0, original[i * p + i]))]),
-      ),
-      clusters,
-    };
-  });
+  const original = covarianceOnOriginal(columns, one.covariance);
+  return {
+    kind,
+    order: columns.names,
+    covariance: columns.names.map((_, i) => [...original.slice(i * p, (i + 1) * p)]),
+    standardErrors: Object.fromEntries(
+      columns.names.map((name, i) => [name, Math.sqrt(Math.max(0, original[i * p + i]))]),
+    ),
+    clusters,
+  };
 }
 
 function coefficientTests(

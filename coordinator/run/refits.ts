@@ -1,4 +1,5 @@
 import { mergeFactors } from '../../numerics/triangular-factor.js';
+import { sumOf } from '../../numerics/vector.js';
 import { chordRefit } from '../consensus/chord-refit.js';
 import { curvatureRung } from '../consensus/curvature-rung.js';
 import type { MethodEnd } from '../consensus/method.js';
@@ -52,12 +53,8 @@ export function* refitAll(
 
 /** Curvature of the members that take part, at the fit. */
 function curvatureOf({ members, curvature }: Description, refit: Refit): Float64Array {
-  if (members !== null && refit.members.length < members.length) {
-    const sum = new Float64Array(members[0].curvature.length);
-    for (const i of refit.members)
-      for (let at = 0; at < sum.length; at++) sum[at] += members[i].curvature[at];
-    return sum;
-  }
+  if (members !== null && refit.members.length < members.length)
+    return sumOf(refit.members.map((i) => members[i].curvature));
   if (curvature === null) throw new TypeError('a refit without any curvature');
   return curvature;
 }

@@ -1,4 +1,5 @@
-import { randomBytes } from 'node:crypto';
+import { createHash, randomBytes } from 'node:crypto';
+import { createReadStream } from 'node:fs';
 import { mkdir, open, rename, rm, stat, unlink } from 'node:fs/promises';
 import { dirname, resolve } from 'node:path';
 import { setTimeout as delay } from 'node:timers/promises';
@@ -118,4 +119,11 @@ export function unwritable(path: string, error: unknown): Checked<never> {
     remedy: 'Check the space and the rights of the folder given with --state.',
     where: { file: path },
   });
+}
+
+/** SHA-256 of a file, hex. Rejects where it cannot be read. */
+export async function sha256Of(file: string): Promise<string> {
+  const hash = createHash('sha256');
+  for await (const piece of createReadStream(file)) hash.update(piece);
+  return hash.digest('hex');
 }

@@ -1,10 +1,8 @@
-import { createHash } from 'node:crypto';
-import { createReadStream } from 'node:fs';
 import { join } from 'node:path';
 import { type Checked, describeFailure } from '../../protocol/failure.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { ResultDocument } from '../run/result.js';
-import { writeWhole } from './files.js';
+import { sha256Of, writeWhole } from './files.js';
 import type { Notice } from './host-parts.js';
 import { RUN_FILES, type RunEntry } from './run-entry.js';
 import { readLog } from './run-log.js';
@@ -31,7 +29,7 @@ export async function keepReport(parts: ReportParts): Promise<Checked<null>> {
   try {
     // Loaded here: the plotting library takes a second, and a coordinator must be up before that.
     const { reportPage } = await import('../report/page/report-page.js');
-    const journal = { file: RUN_FILES.journal, sha256: await digestOf(join(folder, RUN_FILES.journal)) };
+    const journal = { file: RUN_FILES.journal, sha256: await sha256Of(join(folder, RUN_FILES.journal)) };
     page = reportPage({
       specification,
       result,
@@ -49,10 +47,4 @@ export async function keepReport(parts: ReportParts): Promise<Checked<null>> {
   const kept = await writeWhole(join(folder, RUN_FILES.report), page);
   if (!kept.ok) notice({ level: 'error', code: kept.failure.code, message: describeFailure(kept.failure) });
   return kept;
-}
-
-async function digestOf(file: string): Promise<string> {
-  const hash = createHash('sha256');
-  for await (const piece of createReadStream(file)) hash.update(piece);
-  return hash.digest('hex');
 }

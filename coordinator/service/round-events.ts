@@ -1,8 +1,6 @@
-import { SOFTWARE } from '../../protocol/version.js';
 import type { Measured } from '../journal/records.js';
-import { NOT_DESCRIBED } from '../run/documents.js';
+import { resultOf } from '../run/documents.js';
 import type { LogEvent } from '../run/log-event.js';
-import type { ResultDocument } from '../run/result.js';
 import { type Member, memberName, type RunEnd, type Shown } from '../run/run.js';
 import type { Drive } from './drive.js';
 import type { AcceptedRun } from './host-parts.js';
@@ -82,13 +80,7 @@ export function forcedEnd(
   const survey = drive?.survey ?? null;
   const rowsOf = (name: string) => survey?.sites.find(({ site }) => site === name);
   const numbers = drive?.tally.numbers() ?? [];
-  const result: ResultDocument = {
-    format: 1,
-    outcome: ending.outcome,
-    reason: ending.reason,
-    title: specification.title,
-    specification: digest,
-    software: SOFTWARE,
+  const result = resultOf({ specification, digest }, ending, {
     sites: present.map(({ site, kernel }) => ({
       site,
       rowsUsed: rowsOf(site)?.rowsUsed ?? null,
@@ -99,16 +91,9 @@ export function forcedEnd(
     rowsTotal: survey?.rowsTotal ?? null,
     rung: survey?.rung ?? null,
     rungReason: survey?.rungReason ?? null,
-    tolerance: specification.rounds.tolerance,
-    fits: [],
-    chosen: null,
-    choice: null,
-    ...NOT_DESCRIBED,
-    startedFrom: null,
-    moved: null,
     notes: survey?.notes ?? [],
     rounds: drive?.round ?? 0,
     numbersSent: present.map(({ index, site }) => ({ site, ...numbers[index] })),
-  };
+  });
   return { outcome: ending.outcome, reason: ending.reason, shown: null, result };
 }

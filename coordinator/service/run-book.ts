@@ -1,5 +1,5 @@
 import { randomBytes } from 'node:crypto';
-import { readdir, readFile, rm } from 'node:fs/promises';
+import { readdir } from 'node:fs/promises';
 import { join, resolve } from 'node:path';
 import { type Checked, type Failure, fail, succeed } from '../../protocol/failure.js';
 import type { Answer, Refusal } from '../../protocol/messages/round.js';
@@ -11,11 +11,10 @@ import { openJournal } from '../journal/journal.js';
 import type { LogEvent } from '../run/log-event.js';
 import type { Member, Run, RunEnd } from '../run/run.js';
 import type { StartFrom } from '../run/start-from.js';
-import { makeFolder, syncFolder, unwritableIfFails, writeWhole } from './files.js';
+import { makeFolder, unwritableIfFails } from './files.js';
 import type { HostTime, LinkedMember, Notice, Onlooker } from './host-parts.js';
 import { keepReport } from './keep-report.js';
 import {
-  isCancelled,
   keepCancellation,
   keepResult,
   loggedIn,
@@ -25,8 +24,9 @@ import {
   summaryOf,
 } from './run-entry.js';
 import { RunHost } from './run-host.js';
-import { RunLog, readLog } from './run-log.js';
-import { keepStart, readStart, startFromEntry } from './run-start.js';
+import { dropRun, type Intake, readRun, type Submission, writeNewRun } from './run-intake.js';
+import type { RunLog } from './run-log.js';
+import { startFromEntry } from './run-start.js';
 
 export interface BookParts {
   readonly state: string;
@@ -43,15 +43,6 @@ export interface BookParts {
   connected(): readonly LinkedMember[];
   notice(notice: Notice): void;
   readonly onlooker: Onlooker;
-}
-
-/** A specification as it was submitted, with its text. */
-interface Submission {
-  readonly text: string;
-  readonly specification: FitSpecification;
-  readonly digest: string;
-  readonly startFrom: StartFrom | null;
-  readonly submittedAt: string;
 }
 
 export type Submitted =
@@ -165,88 +156,32 @@ export class RunBook {
   }
 
   private async accept(run: string, submission: Submission): Promise<Checked<null>> {
-    const folder = join(this.runsFolder, run);
-    const opened = await this.openNew(run, folder, submission);
-    // What the analyst is told was not accepted must not be taken up at the next start.
-    if (!opened.ok) await rm(folder, { recursive: true, force: true });
-    return opened;
-  }
-
-  private async openNew(
-    run: string,
-    folder: string,
-    { text, specification, digest, startFrom, submittedAt }: Submission,
-  ): Promise<Checked<null>> {
-    const { title, sites } = specification;
-    const made = await makeFolder(folder);
-    if (!made.ok) return made;
-    const named = await unwritableIfFails(this.runsFolder, () => syncFolder(this.runsFolder));
-    if (!named.ok) return named;
-    const kept = await writeWhole(join(folder, RUN_FILES.specification), text);
-    if (!kept.ok) return kept;
-    const start = await keepStart(folder, startFrom);
-    if (!start.ok) return start;
-    const log = await RunLog.open(join(folder, RUN_FILES.log));
-    if (!log.ok) return log;
-    const from = startFrom === null ? {} : { startFrom: startFrom.run };
-    const accepted = { event: 'accepted', run, title, digest, sites, ...from, at: submittedAt } as const;
-    const entry = { run, title, digest, submittedAt, folder, open: null, ended: null };
-    const logged = log.value.append(accepted);
-    if (logged.ok) this.parts.onlooker.event(run, accepted);
-    const opened = logged.ok
-      ? await this.openRun(entry, { specification, startFrom }, log.value, [accepted])
-      : logged;
-    if (!opened.ok) log.value.close();
+    const written = await writeNewRun(this.runsFolder, run, submission);
+    if (!written.ok) return written;
+    const { entry, log, events } = written.value;
+    for (const event of events) this.parts.onlooker.event(run, event);
+    const opened = await this.openRun(written.value);
+    if (!opened.ok) {
+      log.close();
+      await dropRun(entry.folder);
+    }
     return opened;
   }
 
   private async recoverRun(run: string): Promise<Checked<null>> {
-    const folder = join(this.runsFolder, run);
-    const log = await RunLog.open(join(folder, RUN_FILES.log));
-    if (!log.ok) return log;
-    const events = await readLog(log.value.path);
-    if (!events.ok) return events;
-    const accepted = events.value.find((event) => event.event === 'accepted');
-    if (accepted === undefined) {
-      log.value.close();
-      return fail('not-found', `Folder ${folder} is not of an accepted run and was left alone.`);
-    }
-    const { title, digest, at } = accepted;
-    const entry: RunEntry = { run, title, digest, submittedAt: at, folder, open: null, ended: null };
-    const outcome = events.value.find((event) => event.event === 'outcome');
-    if (outcome !== undefined) {
-      log.value.close();
-      entry.ended = { outcome: outcome.outcome, reason: outcome.reason, round: outcome.rounds };
-      this.entries.set(run, entry);
-      return succeed(null);
-    }
-    const file = join(folder, RUN_FILES.specification);
-    const text = await unwritableIfFails(file, () => readFile(file, 'utf8'));
-    if (!text.ok) return text;
-    const cancelled = await isCancelled(folder);
-    if (!cancelled.ok) return cancelled;
-    const start = await readStart(folder);
-    if (!start.ok) return start;
-    const parsed = parseFitSpecification(text.value, file);
-    if (parsed.ok) {
-      const submission = { specification: parsed.value, startFrom: start.value };
-      const opened = await this.openRun(entry, submission, log.value, events.value);
-      if (opened.ok && cancelled.value) entry.open?.host.cancel();
+    const found = await readRun(this.runsFolder, run);
+    if (!found.ok) return found;
+    if (found.value.kind === 'open') {
+      const { intake, cancelled } = found.value;
+      const opened = await this.openRun(intake);
+      if (opened.ok && cancelled) intake.entry.open?.host.cancel();
       return opened;
     }
-    log.value.close();
-    const [failure] = parsed.failures;
-    entry.ended = { outcome: null, reason: `It cannot be taken up: ${failure.message}`, round: 0 };
-    this.entries.set(run, entry);
-    return { ok: false, failure };
+    this.entries.set(run, found.value.entry);
+    return found.value.kind === 'ended' ? succeed(null) : { ok: false, failure: found.value.failure };
   }
 
-  private async openRun(
-    entry: RunEntry,
-    { specification, startFrom }: Pick<Submission, 'specification' | 'startFrom'>,
-    log: RunLog,
-    events: readonly LogEvent[],
-  ): Promise<Checked<null>> {
+  private async openRun({ entry, specification, startFrom, log, events }: Intake): Promise<Checked<null>> {
     const store = await fileStore(join(entry.folder, RUN_FILES.journal));
     if (!store.ok) return store;
     const { parts } = this;

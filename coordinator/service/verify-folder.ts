@@ -1,5 +1,3 @@
-import { createHash } from 'node:crypto';
-import { createReadStream } from 'node:fs';
 import { join } from 'node:path';
 import { z } from 'zod';
 import { type Failure, fail } from '../../protocol/failure.js';
@@ -8,6 +6,7 @@ import { AnswerBook } from '../run/answer-book.js';
 import type { ResultDocument } from '../run/result.js';
 import { memberName } from '../run/run.js';
 import { verifyFits } from '../run/verify.js';
+import { sha256Of } from './files.js';
 import { recompute } from './recompute.js';
 import { RUN_FILES } from './run-entry.js';
 import { readStoredRun } from './run-folder.js';
@@ -90,10 +89,4 @@ function readResult(
     if (!(error instanceof SyntaxError)) throw error;
     return { failure: fail('file-unreadable', `It is no JSON: ${error.message}.`, { where }).failure };
   }
-}
-
-async function sha256Of(file: string): Promise<string> {
-  const hash = createHash('sha256');
-  for await (const piece of createReadStream(file)) hash.update(piece);
-  return hash.digest('hex');
 }

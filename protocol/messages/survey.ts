@@ -5,20 +5,22 @@ import { count, finite, vector } from './vector.js';
 /** Asks what a site would bring: rows, pooled moments of every design column, the response, and what may leave. */
 export const surveyWork = z.strictObject({ work: z.literal('survey') });
 
+/** Kinds of answer that a custodian may let leave. */
+export const LEAVE_KINDS = [
+  'counts',
+  'moments',
+  'proximal',
+  'gradients',
+  'curvature',
+  'site-estimates',
+  'sketches',
+  'residual-bins',
+] as const;
+export type LeaveKind = (typeof LEAVE_KINDS)[number];
+
 /** What a site's policy lets leave, so that the coordinator can choose the rung. `null` means no limit. */
 export const allowance = z.strictObject({
-  leave: z.array(
-    z.enum([
-      'counts',
-      'moments',
-      'proximal',
-      'gradients',
-      'curvature',
-      'site-estimates',
-      'sketches',
-      'residual-bins',
-    ]),
-  ),
+  leave: z.array(z.enum(LEAVE_KINDS)),
   curvatureMost: count.nullable(),
   numbersMost: count.nullable(),
   roundsMost: count.nullable(),

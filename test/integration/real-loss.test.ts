@@ -5,6 +5,8 @@ import { PATIENT, roundsOf, Stage } from '../support/stage.js';
 
 /** Real packets, lost by the kernel: what the delaying proxy of the other tests only models. */
 const LOSS_SHARE = 0.01;
+/** A fit is some hundred packets, of which by chance none may be lost: so many fits at most until one is. */
+const FITS_MOST = 6;
 const namespace = LossyNamespace.open(LOSS_SHARE);
 const stages: Stage[] = [];
 afterAll(async () => {
@@ -29,7 +31,8 @@ describe.skipIf(typeof namespace === 'string')(`one packet of a hundred is lost$
     if (typeof namespace === 'string') throw new Error(namespace);
     const undisturbed = await fitWith([]);
     expect(undisturbed.code).toBe(0);
-    expect(await fitWith(namespace.launcher)).toEqual(undisturbed);
+    for (let fit = 0; fit < FITS_MOST && namespace.retransmitted() === 0; fit++)
+      expect(await fitWith(namespace.launcher)).toEqual(undisturbed);
     expect(namespace.retransmitted()).toBeGreaterThan(0);
   });
 });

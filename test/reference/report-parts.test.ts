@@ -134,3 +134,19 @@ describe.skipIf(occupations === null)('wages by occupation (o24), least squares'
       expect(comparison?.words.join(' ')).toContain('The sites do not share one model');
     });
 });
+
+const phones = referenceCase('o13_huber_phones');
+test.skipIf(phones === null)(
+  'a Huber loss has no likelihood: nothing that needs one is said (o13)',
+  async () => {
+    const { inference, comparison, omitted } = await fitOf(
+      phones as NonNullable<typeof phones>,
+      'sandwich, term-tests, compare-sites',
+    );
+    expect(inference?.covariances.map(({ kind }) => kind)).toEqual(['hc0', 'hc1', 'site', 'site-g1']);
+    expect([inference?.used, inference?.terms]).toEqual(['hc1', []]);
+    expect(comparison?.commonModel).toBeNull();
+    expect(comparison?.sites.every(({ own }) => own === null)).toBe(true);
+    expect(omitted.map(({ part }) => part)).toEqual(['tests of terms', 'test of one common model']);
+  },
+);

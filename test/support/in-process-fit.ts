@@ -6,7 +6,7 @@ import type { ResultDocument } from '../../coordinator/run/result.js';
 import type { Batch, Member, RunAsk } from '../../coordinator/run/run.js';
 import type { StartFrom } from '../../coordinator/run/start-from.js';
 import type { Work, WorkAnswer } from '../../protocol/messages/round.js';
-import type { Allowance } from '../../protocol/messages/survey.js';
+import { type Allowance, LEAVE_KINDS } from '../../protocol/messages/survey.js';
 import { canonicalText, digestOf } from '../../protocol/specification/canonical.js';
 import { parseFitSpecification } from '../../protocol/specification/parse.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
@@ -60,16 +60,7 @@ export async function sitesInProcess(
   if ('least' in spec.sites) throw new Error('name the sites');
   const loss = lossOf(spec.loss);
   const allowance: Allowance = {
-    leave: [
-      'counts',
-      'moments',
-      'proximal',
-      'gradients',
-      'curvature',
-      'site-estimates',
-      'sketches',
-      'residual-bins',
-    ],
+    leave: [...LEAVE_KINDS],
     curvatureMost,
     numbersMost: null,
     roundsMost: null,

@@ -1,4 +1,5 @@
 import type { ReportInput } from '../../coordinator/report/page/input.js';
+import { NO_FITS } from '../../coordinator/run/documents.js';
 import type { LogEvent, RoundEvent } from '../../coordinator/run/log-event.js';
 import type { FitDocument, ResultDocument } from '../../coordinator/run/result.js';
 import type {
@@ -309,15 +310,8 @@ function resultOf(specification: FitSpecification, parts: Partial<ResultDocument
     rung: 'curvature',
     rungReason: 'every site lets curvature leave, and three matrices are enough',
     tolerance: 1e-8,
-    fits: [],
+    ...NO_FITS,
     chosen: 0,
-    choice: null,
-    inference: null,
-    comparison: null,
-    fitQuality: null,
-    omitted: [],
-    startedFrom: null,
-    moved: null,
     notes: [
       'oakhythe has no rows with material=steel: its rows say nothing about that coefficient',
       'diameter_mm reaches from 32 to 1200 at castlefen and from 50 to 400 elsewhere',

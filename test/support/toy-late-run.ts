@@ -1,3 +1,4 @@
+import { NO_FITS } from '../../coordinator/run/documents.js';
 import { type AttemptBefore, goingOnWithout, type Without } from '../../coordinator/run/going-on-without.js';
 import type { ResultDocument } from '../../coordinator/run/result.js';
 import {
@@ -166,15 +167,7 @@ function endOf(
     rung: 'proximal',
     rungReason: null,
     tolerance: 1e-8,
-    fits: [],
-    chosen: null,
-    choice: null,
-    inference: null,
-    comparison: null,
-    fitQuality: null,
-    omitted: [],
-    startedFrom: null,
-    moved: null,
+    ...NO_FITS,
     notes: way.map((numbers) => numbers.join(' ')),
     rounds,
     numbersSent: [],

@@ -1,3 +1,4 @@
+import { NO_FITS } from '../../coordinator/run/documents.js';
 import type { Member, Run, RunAsk, Shown } from '../../coordinator/run/run.js';
 import { memberName } from '../../coordinator/run/run.js';
 import type { Answer, Ask } from '../../protocol/messages/round.js';
@@ -85,15 +86,7 @@ export function* toyRun(specification: FitSpecification, digest: string, roster:
       rung: 'pooled',
       rungReason: null,
       tolerance: 1e-8,
-      fits: [],
-      chosen: null,
-      choice: null,
-      inference: null,
-      comparison: null,
-      fitQuality: null,
-      omitted: [],
-      startedFrom: null,
-      moved: null,
+      ...NO_FITS,
       notes: [String(z)],
       rounds: TOY_ROUNDS,
       numbersSent: [],

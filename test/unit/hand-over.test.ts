@@ -3,6 +3,7 @@ import { coefficientsLatex, coefficientsMarkdown } from '../../coordinator/repor
 import { handOverFiles } from '../../coordinator/report/hand-over.js';
 import { fitToHandOver, modelDocument } from '../../coordinator/report/model-document.js';
 import { coefficientsCsv } from '../../coordinator/report/tables.js';
+import { NO_FITS } from '../../coordinator/run/documents.js';
 import type { FitDocument, ResultDocument } from '../../coordinator/run/result.js';
 import type { InferenceDocument } from '../../coordinator/run/result-parts.js';
 import { modelText } from '../../protocol/model/model-document.js';
@@ -52,15 +53,9 @@ const result = (...fits: FitDocument[]): ResultDocument => ({
   rung: 'curvature',
   rungReason: null,
   tolerance: 1e-8,
+  ...NO_FITS,
   fits,
   chosen: fits.length === 1 ? 0 : null,
-  choice: null,
-  inference: null,
-  comparison: null,
-  fitQuality: null,
-  omitted: [],
-  startedFrom: null,
-  moved: null,
   notes: [],
   rounds: 6,
   numbersSent: [],

@@ -3,6 +3,7 @@ import { describe, expect, test } from 'vitest';
 import { comparisonText, largestDifference } from '../../coordinator/report/comparison-text.js';
 import { CAUTIONS, resultText } from '../../coordinator/report/result-text.js';
 import { coefficientsCsv, roundsCsv } from '../../coordinator/report/tables.js';
+import { NO_FITS } from '../../coordinator/run/documents.js';
 import type { LogEvent } from '../../coordinator/run/log-event.js';
 import type { FitDocument, ResultDocument } from '../../coordinator/run/result.js';
 
@@ -38,15 +39,8 @@ const result = (more: Partial<ResultDocument> = {}): ResultDocument => ({
   rung: 'curvature',
   rungReason: 'every site lets curvature leave',
   tolerance: 1e-8,
+  ...NO_FITS,
   fits: [fitted()],
-  chosen: null,
-  choice: null,
-  inference: null,
-  comparison: null,
-  fitQuality: null,
-  omitted: [],
-  startedFrom: null,
-  moved: null,
   notes: ['material=lead has no rows'],
   rounds: 6,
   numbersSent: [

@@ -1,7 +1,8 @@
+import type { LeaveKind } from '../../protocol/messages/survey.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import { fitCount } from '../../protocol/specification/fit-count.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
-import { allowanceOf, type LeaveKind } from '../custody/policy.js';
+import { allowanceOf } from '../custody/policy.js';
 import type { Policy } from '../custody/site-file.js';
 import type { surveyOf } from '../design/survey.js';
 

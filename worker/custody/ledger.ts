@@ -1,13 +1,8 @@
 import { createHash } from 'node:crypto';
 import { z } from 'zod';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
-import {
-  addCurvature,
-  type CurvatureCount,
-  type Departed,
-  type LeaveKind,
-  NOTHING_DEPARTED,
-} from './policy.js';
+import type { LeaveKind } from '../../protocol/messages/survey.js';
+import { addCurvature, type CurvatureCount, type Departed, NOTHING_DEPARTED } from './policy.js';
 
 /**
  * The site's own record of everything that left: JSON lines, only ever appended to, each line holding the hash of the

@@ -1,6 +1,6 @@
 import { type Failure, type FailureCode, fail } from '../../protocol/failure.js';
 import type { Work } from '../../protocol/messages/round.js';
-import type { Allowance } from '../../protocol/messages/survey.js';
+import type { Allowance, LeaveKind } from '../../protocol/messages/survey.js';
 import { curvatureMatricesOf, sketchColumnsOf } from '../../protocol/numbers.js';
 import { usedColumns } from '../../protocol/specification/design-columns.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
@@ -10,8 +10,6 @@ import type { Policy } from './site-file.js';
  * What a custodian lets leave, checked where the rows are. Pure: each check takes the policy and what has left so far,
  * and says why not, or null.
  */
-
-export type LeaveKind = Allowance['leave'][number];
 
 /** What has left in one run so far. */
 export interface Departed {

@@ -1,6 +1,6 @@
 import { dirname, resolve } from 'node:path';
 import type { z } from 'zod';
-import type { Allowance } from '../../protocol/messages/survey.js';
+import type { LeaveKind } from '../../protocol/messages/survey.js';
 import { checkDocument } from '../../protocol/specification/issues.js';
 import { type Parsed, readYaml } from '../../protocol/specification/yaml-document.js';
 import type { TableSource } from '../source/table.js';
@@ -24,8 +24,6 @@ export interface SiteFile {
   readonly policy: Policy;
   readonly file: string;
 }
-
-export type LeaveKind = Allowance['leave'][number];
 
 export interface Policy {
   /** Columns a specification may use, response and weights among them. */

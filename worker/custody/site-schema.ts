@@ -1,4 +1,5 @@
 import { z } from 'zod';
+import { LEAVE_KINDS } from '../../protocol/messages/survey.js';
 import {
   chosen,
   columnName,
@@ -79,16 +80,7 @@ const shard = mapping({
   context.addIssue({ code: 'custom', path: ['index'], message, params: { ...note } });
 });
 
-const leaveKind = words(
-  'counts',
-  'moments',
-  'proximal',
-  'gradients',
-  'curvature',
-  'site-estimates',
-  'sketches',
-  'residual-bins',
-);
+const leaveKind = words(...LEAVE_KINDS);
 
 const policy = mapping({
   /** No default: the custodian says which columns a fit may use, or `any`. */
