@@ -152,7 +152,7 @@ function reflectColumns(
 }
 
 /** A copy whose rows are turned so that the diagonal is not negative. */
-function withPositiveDiagonal(triangle: Float64Array, columns: number): Float64Array {
+export function withPositiveDiagonal(triangle: Float64Array, columns: number): Float64Array {
   const out = Float64Array.from(triangle);
   for (let i = 0; i < columns; i++) {
     if (!(triangle[(i * (i + 1)) / 2 + i] < 0)) continue;

@@ -2,6 +2,7 @@
 import { realpathSync } from 'node:fs';
 import { pathToFileURL } from 'node:url';
 import { Command, Option } from 'commander';
+import { KERNEL_NAMES } from '../numerics/kernels/kernel.js';
 import { SOFTWARE } from '../protocol/version.js';
 import { EXIT, type ExitCode, exitCodeTable } from './commands/exit-codes.js';
 
@@ -38,6 +39,12 @@ function joinCommand(): Command {
     .option('--once', 'leave after the first run that ends', false)
     .option('--plain-text', 'allow a ws:// address that is not this machine', false)
     .option('--json', 'log as JSON lines', false)
+    .addOption(
+      new Option(
+        '--kernel <kernel>',
+        'what computes over the rows (default: the fastest that this Node takes as it is)',
+      ).choices(KERNEL_NAMES),
+    )
     .addOption(heartbeatOption('a file to write a sign of life into, for `commonfit-worker health`'))
     .action(
       acting(async (site: string, options) => {

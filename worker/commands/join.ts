@@ -1,4 +1,5 @@
 import { setTimeout as delay } from 'node:timers/promises';
+import type { KernelName, KernelVariant } from '../../numerics/kernels/kernel.js';
 import { type Failure, fail, succeed } from '../../protocol/failure.js';
 import { connectLink } from '../../protocol/link/websocket.js';
 import { PROTOCOL_VERSION, SOFTWARE } from '../../protocol/version.js';
@@ -8,6 +9,7 @@ import { type Answerer, createAnswerer } from '../service/answerer.js';
 import { keepConnected, type Timers } from '../service/connection.js';
 import type { WorkerEvent } from '../service/events.js';
 import { beat } from '../service/heartbeat.js';
+import { kernelVariant } from '../service/kernel-file.js';
 import { besideSiteFile, checkLedgerWritable, ledgerOnDisk, readApprovals } from '../service/site-folder.js';
 import { readTable } from '../source/read-table.js';
 import { readSiteFile } from './documents.js';
@@ -21,6 +23,8 @@ export interface JoinOptions {
   readonly once: boolean;
   readonly plainText: boolean;
   readonly json: boolean;
+  /** Absent: the fastest one that this Node takes without an experimental flag. */
+  readonly kernel?: KernelName;
   /** File for a sign of life, for service managers. */
   readonly heartbeat?: string;
 }
@@ -74,7 +78,11 @@ async function joinAs(
   if (!opened.ok) return opened.failure;
   const { ledger, warning } = opened.value;
   if (warning !== null) onEvent({ event: 'warning', message: warning });
-  const answerer = answererOf(site, options, ledger, onEvent);
+  const kernel = await kernelVariant(options.kernel ?? null, (message) =>
+    onEvent({ event: 'warning', message }),
+  );
+  if (!kernel.ok) return kernel.failure;
+  const answerer = answererOf(site, options, ledger, kernel.value, onEvent);
   return keepConnected({
     url,
     hello: {
@@ -83,7 +91,7 @@ async function joinAs(
       site: site.site,
       shard: site.shard,
       software: SOFTWARE,
-      kernel: `typescript, Node ${process.versions.node}`,
+      kernel: `${kernel.value.name}, ${process.arch}, Node ${process.versions.node}`,
     },
     connect: () => connectLink({ url, ...secrets.value }),
     answerer,
@@ -100,6 +108,7 @@ function answererOf(
   site: SiteFile,
   options: JoinOptions,
   ledger: Ledger,
+  kernel: KernelVariant,
   onEvent: (event: WorkerEvent) => void,
 ): Answerer {
   const approvalsFile = options.approvals ?? besideSiteFile(site.file, 'approvals');
@@ -112,6 +121,7 @@ function answererOf(
       const approvals = await readApprovals(approvalsFile);
       return approvals.ok ? succeed(new Set(approvals.value.map(({ digest }) => digest))) : approvals;
     },
+    kernel,
     readTable: (request) => readTable(site.table, request),
     ledger,
     nowMs: () => performance.now(),

@@ -1,3 +1,5 @@
+import type { Kernel, KernelVariant } from '../../numerics/kernels/kernel.js';
+import { plainVariant } from '../../numerics/kernels/plain.js';
 import type { Part } from '../../protocol/messages/part.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import type { RawShard, Shard } from './shard.js';
@@ -12,13 +14,18 @@ export const scaleShard = (raw: RawShard, scaling: Scaling, intercept: boolean):
 /**
  * The solver columns of every part of the shard. Rows stand fold after fold and, but for the last fold, a second time
  * after it: so the rows in a fold and those outside it are each one stretch of the same memory, and no part is copied.
- * Outside a fold that has no row here are all rows.
+ * Outside a fold that has no row here are all rows. They lie in the memory of a kernel opened for them.
  */
-export function scaleParts(raw: RawShard, scaling: Scaling, intercept: boolean): (part: Part) => Shard {
+export function scaleParts(
+  raw: RawShard,
+  scaling: Scaling,
+  intercept: boolean,
+  variant: KernelVariant = plainVariant,
+): (part: Part) => Shard {
   const { rowCount, folds } = raw;
   const rows = folds === null ? rowCount : rowCount + folds.starts[folds.labels.length - 1];
-  const ring = scaledRows(raw, scaling, intercept, rows);
-  const { p } = ring;
+  const ring = scaledRows(raw, scaling, intercept, rows, variant);
+  const { p, kernel } = ring;
   const stretch = (from: number, to: number): Shard => ({
     rowCount: to - from,
     p,
@@ -27,6 +34,7 @@ export function scaleParts(raw: RawShard, scaling: Scaling, intercept: boolean):
     weights: ring.weights?.subarray(from, to) ?? null,
     offset: ring.offset?.subarray(from, to) ?? null,
     rowCountTotal: scaling.rowCountTotal,
+    kernel,
   });
   return (part) => {
     const k = part === null ? -1 : (folds?.labels.indexOf(part.fold) ?? -1);
@@ -50,12 +58,19 @@ export function aboutSiteMeans({ x, columns, weights, rowCount }: RawShard, scal
   return { ...scaling, center: total > 0 ? sums.map((sum) => sum / total) : scaling.center };
 }
 
-function scaledRows(raw: RawShard, scaling: Scaling, intercept: boolean, rows: number): Shard {
+function scaledRows(
+  raw: RawShard,
+  scaling: Scaling,
+  intercept: boolean,
+  rows: number,
+  variant: KernelVariant,
+): Shard {
   const { kept, center, scale } = scaling;
   const lead = intercept ? 1 : 0;
   const p = lead + kept.length;
   const width = raw.columns.length;
-  const x = new Float64Array(rows * p);
+  const kernel = variant.open({ columns: p, numbers: wholeLines(rows * p) + 3 * wholeLines(rows) });
+  const x = kernel.numbers(rows * p);
   for (let row = 0; row < raw.rowCount; row++) {
     const from = row * width;
     const to = row * p;
@@ -67,16 +82,19 @@ function scaledRows(raw: RawShard, scaling: Scaling, intercept: boolean, rows: n
     rowCount: rows,
     p,
     x,
-    y: ringOf(raw.y, rows),
-    weights: raw.weights === null ? null : ringOf(raw.weights, rows),
-    offset: raw.offset === null ? null : ringOf(raw.offset, rows),
+    y: ringOf(raw.y, rows, kernel),
+    weights: raw.weights === null ? null : ringOf(raw.weights, rows, kernel),
+    offset: raw.offset === null ? null : ringOf(raw.offset, rows, kernel),
     rowCountTotal: scaling.rowCountTotal,
+    kernel,
   };
 }
 
-function ringOf(values: Float64Array, rows: number): Float64Array {
-  if (rows === values.length) return values;
-  const out = new Float64Array(rows);
+/** Numbers as `Kernel.numbers` takes them up. */
+const wholeLines = (count: number): number => 8 * Math.ceil(count / 8);
+
+function ringOf(values: Float64Array, rows: number, kernel: Kernel): Float64Array {
+  const out = kernel.numbers(rows);
   out.set(values);
   out.copyWithin(values.length, 0, rows - values.length);
   return out;

@@ -1,3 +1,4 @@
+import type { Kernel } from '../../numerics/kernels/kernel.js';
 import type { DesignColumn } from '../../protocol/specification/types.js';
 import type { LevelColumn } from '../source/table.js';
 
@@ -17,6 +18,8 @@ export interface Shard {
   readonly offset: Float64Array | null;
   /** N, over all sites. */
   readonly rowCountTotal: number;
+  /** What passes over the rows are computed with; the plain one where none is named. */
+  readonly kernel?: Kernel;
 }
 
 /** The shard before the pooled scaling is known: design columns as the specification defines them, row-major, no intercept. */

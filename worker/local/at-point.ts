@@ -1,3 +1,4 @@
+import type { RowState } from '../../numerics/kernels/kernel.js';
 import { allFinite } from '../../numerics/vector.js';
 import type { Checked } from '../../protocol/failure.js';
 import { succeed } from '../../protocol/failure.js';
@@ -6,7 +7,7 @@ import type { Loss } from '../losses/loss.js';
 import { notFinite } from './failures.js';
 import { aboutMeans, alongIntercept, atBestIntercept, curvatureMeans } from './intercept.js';
 import type { PartSolvers } from './part-solvers.js';
-import { type RowState, rowPass, rowState } from './row-pass.js';
+import { rowPass, rowState } from './row-pass.js';
 
 /** All rows of a site at a point: predictors and slopes, the intercept of its own included where it has one. */
 export interface AtPoint {

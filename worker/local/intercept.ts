@@ -1,7 +1,6 @@
-import { addWeightedRows, rowProducts } from '../../numerics/rows.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
-import { rowCurvatures } from './row-pass.js';
+import { kernelOf, rowCurvatures } from './row-pass.js';
 
 /**
  * The intercept of a site's own. The shard has the ones of the intercept as its first column, and one more column than
@@ -22,7 +21,7 @@ export function atBestIntercept(shard: Shard, loss: Loss, theta: Float64Array): 
   const point = new Float64Array(p);
   point.set(theta, 1);
   const eta = new Float64Array(rowCount);
-  rowProducts(x, p, 0, rowCount, point, eta);
+  kernelOf(shard).rowProducts(x, p, 0, rowCount, point, eta);
   if (offset !== null) for (let r = 0; r < rowCount; r++) eta[r] += offset[r];
   point[0] = isInformative(shard, loss) ? bestShift(shard, loss, eta) : limitOf(shard, loss);
   return point;
@@ -106,7 +105,7 @@ function slopeAt(
 export function curvatureMeans(shard: Shard, loss: Loss, eta: Float64Array): Float64Array {
   const { p, rowCount, x } = shard;
   const means = new Float64Array(p);
-  addWeightedRows(x, p, 0, rowCount, rowCurvatures(shard, loss, eta), means);
+  kernelOf(shard).addWeightedRows(x, p, 0, rowCount, rowCurvatures(shard, loss, eta), means);
   const total = means[0];
   for (let j = 0; j < p; j++) means[j] = total > 0 ? means[j] / total : 0;
   return means;

@@ -1,8 +1,6 @@
-import { cholesky } from '../../numerics/cholesky.js';
-import { weightedGram } from '../../numerics/gram.js';
+import type { Kernel, RowState } from '../../numerics/kernels/kernel.js';
 import { unpackSymmetric } from '../../numerics/packed.js';
 import { noPenalty, type Penalty, penaltyValue } from '../../numerics/penalty.js';
-import { rowProducts } from '../../numerics/rows.js';
 import { addScaled, allFinite, dot, maxAbs, plusScaled, subtract } from '../../numerics/vector.js';
 import { zStepFull } from '../../numerics/z-step.js';
 import { type Checked, succeed } from '../../protocol/failure.js';
@@ -11,7 +9,7 @@ import type { Loss } from '../losses/loss.js';
 import { evaluate } from './evaluate.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
 import type { Quadratic } from './quadratic.js';
-import { type RowState, rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { kernelOf, rowCurvatures, rowPass, rowState } from './row-pass.js';
 
 /** The other sites: ½ xᵀBx − cᵀx, B packed. */
 export interface Others {
@@ -130,7 +128,7 @@ function takeStep(place: Workplace, from: Iterate, curvature: Float64Array): Che
   const model = modelAt(place, from, curvature);
   let definite = false;
   for (const share of RIDGES) {
-    const point = minimiserOf(place.penalty, model, share * model.largest, from.x);
+    const point = minimiserOf(kernelOf(place.shard), place.penalty, model, share * model.largest, from.x);
     if (point === null) continue;
     definite = true;
     const step = subtract(point, from.x);
@@ -159,7 +157,9 @@ function quadraticAt({ shard, loss, squares }: JointProblem, x: Float64Array): C
 /** ∇²φ in full at the point of the last pass. */
 function curvatureAt({ shard, loss, squares, rows }: Workplace): Float64Array {
   const { x, rowCount, p } = shard;
-  return squares?.gram() ?? weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
+  return (
+    squares?.gram() ?? kernelOf(shard).weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1)
+  );
 }
 
 /** ½ zᵀ(B + H)z − rightᵀz: the others and the second-order model of φ at x, without constants. */
@@ -170,10 +170,14 @@ interface Model {
   readonly largest: number;
 }
 
-function modelAt({ full, others, squares }: Workplace, { x, own }: Iterate, curvature: Float64Array): Model {
+function modelAt(
+  { shard, full, others, squares }: Workplace,
+  { x, own }: Iterate,
+  curvature: Float64Array,
+): Model {
   const p = x.length;
   const matrix = plusScaled(full, 1, curvature);
-  const pull = squares === null ? subtract(times(curvature, x), own) : squares.linear();
+  const pull = squares === null ? subtract(times(shard, curvature, x), own) : squares.linear();
   let largest = 0;
   for (let j = 0; j < p; j++) largest = Math.max(largest, matrix[j * p + j]);
   return { matrix, right: plusScaled(pull, 1, others.linear), largest };
@@ -181,6 +185,7 @@ function modelAt({ full, others, squares }: Workplace, { x, own }: Iterate, curv
 
 /** argmin of model, penalty and ½ · ridge · ‖z − x‖²; null where that is not convex or not found. */
 function minimiserOf(
+  kernel: Kernel,
   g: Penalty,
   { matrix, right }: Model,
   ridge: number,
@@ -188,13 +193,8 @@ function minimiserOf(
 ): Float64Array | null {
   const p = x.length;
   const metric = withDiagonal(matrix, p, () => ridge);
-  if (
-    cholesky(
-      withDiagonal(metric, p, (j) => g.l2[j]),
-      p,
-    ) === null
-  )
-    return null;
+  const held = withDiagonal(metric, p, (j) => g.l2[j]);
+  if (kernel.factorise(held, p) === null) return null;
   const point = zStepFull(g, metric, plusScaled(right, ridge, x), x);
   return point !== null && allFinite(point) ? point : null;
 }
@@ -232,7 +232,7 @@ function iterateAt(place: Workplace, x: Float64Array): Iterate {
   const { shard, loss, rows, full, others, penalty } = place;
   const own = new Float64Array(shard.p);
   const pass = rowPass(shard, loss, x, rows, own);
-  const product = times(full, x);
+  const product = times(shard, full, x);
   const bowl = 0.5 * dot(x, product);
   const slope = dot(others.linear, x);
   const held = penaltyValue(penalty, x);
@@ -248,8 +248,8 @@ function iterateAt(place: Workplace, x: Float64Array): Iterate {
 }
 
 /** A x, A symmetric, row-major. */
-function times(matrix: Float64Array, x: Float64Array): Float64Array {
+function times(shard: Shard, matrix: Float64Array, x: Float64Array): Float64Array {
   const out = new Float64Array(x.length);
-  rowProducts(matrix, x.length, 0, x.length, x, out);
+  kernelOf(shard).rowProducts(matrix, x.length, 0, x.length, x, out);
   return out;
 }

@@ -1,18 +1,16 @@
-import { weightedGram } from '../../numerics/gram.js';
 import { packSymmetric } from '../../numerics/packed.js';
-import { addWeightedRows, rowProducts } from '../../numerics/rows.js';
-import { FACTOR_BLOCK_ROWS, factorAccumulator } from '../../numerics/triangular-factor.js';
+import { FACTOR_BLOCK_ROWS } from '../../numerics/triangular-factor.js';
 import { allFinite, maxOf } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Want } from '../../protocol/messages/evaluate.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
-import { type Evaluation, evaluate } from './evaluate.js';
+import { type AskedPoint, type Evaluation, evaluate, evaluateSteps } from './evaluate.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
 import { type JointEnd, jointSteps, type Others } from './joint.js';
 import { type NewtonEnd, type NewtonLimits, newtonProximal } from './newton.js';
 import { type Quadratic, quadratic, targetOf, weightOf } from './quadratic.js';
-import { rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { kernelOf, rowCurvatures, rowPass, rowState } from './row-pass.js';
 
 /**
  * What a worker computes on its rows. p is the number of solver columns; every vector has p numbers unless stated. The
@@ -31,6 +29,8 @@ export interface LocalSolver {
   ): Checked<{ point: Float64Array; newtonSteps: number }>;
   /** φ and, as far as wanted, ∇φ, diag ∇²φ and ∇²φ (packed lower triangle) at the point. */
   evaluate(point: Float64Array, want: Want): Checked<Evaluation>;
+  /** The same at several points, which share one read of the rows; yields before each matrix. */
+  evaluateSteps(asked: readonly AskedPoint[]): Generator<void, Checked<Evaluation[]>>;
   /**
    * The quadratic at this shard's own fit x = argmin φ(x) + ½ · hold · ‖x − point‖²_D, D the floored diagonal curvature
    * at the point: packed ∇²φ(x), and ∇²φ(x) x − ∇φ(x). x is near enough to the minimiser after at most 20 steps; the
@@ -79,6 +79,7 @@ export function localSolver(shard: Shard, loss: Loss): LocalSolver {
       return finished(newtonProximal({ shard, loss, center, metric, start }, PROXIMAL_LIMITS));
     },
     evaluate: (point, want) => evaluate(shard, loss, squares, point, want),
+    evaluateSteps: (asked) => evaluateSteps(shard, loss, squares, asked),
     ownFit: (point, hold) =>
       squares === null ? ownFit(shard, loss, point, hold) : quadraticOwnFit(shard, squares),
     sketch: (point, directions, columns) => sketch(shard, loss, point, directions, columns),
@@ -124,7 +125,7 @@ function ownFit(
   const rows = rowState(rowCount);
   const linear = new Float64Array(p);
   rowPass(shard, loss, fit.value.point, rows, linear);
-  const full = weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
+  const full = kernelOf(shard).weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
   for (let j = 0; j < p; j++) {
     let sum = 0;
     for (let k = 0; k < p; k++) sum += full[j * p + k] * fit.value.point[k];
@@ -148,13 +149,14 @@ export function sketch(
   const rows = rowState(rowCount);
   rowPass(shard, loss, point, rows, null);
   const weights = rowCurvatures(shard, loss, rows.eta);
+  const kernel = kernelOf(shard);
   for (let from = 0; from < rowCount; from += SKETCH_BLOCK_ROWS) {
     const to = Math.min(from + SKETCH_BLOCK_ROWS, rowCount);
     const along = new Float64Array(to - from);
     for (let k = 0; k < columns; k++) {
-      rowProducts(x, p, from, to, directions.subarray(k * p, (k + 1) * p), along);
+      kernel.rowProducts(x, p, from, to, directions.subarray(k * p, (k + 1) * p), along);
       for (let r = from; r < to; r++) along[r - from] *= weights[r];
-      addWeightedRows(x, p, from, to, along, products.subarray(k * p, (k + 1) * p));
+      kernel.addWeightedRows(x, p, from, to, along, products.subarray(k * p, (k + 1) * p));
     }
   }
   return allFinite(products) ? succeed(products) : notFinite('The sketch of the curvature');
@@ -175,7 +177,7 @@ function quadraticOwnFit(
 export function factor(shard: Shard): Checked<Float64Array> {
   const { p, rowCount, x } = shard;
   const columns = p + 1;
-  const accumulator = factorAccumulator(columns);
+  const accumulator = kernelOf(shard).factorAccumulator(columns);
   const block = new Float64Array(FACTOR_BLOCK_ROWS * columns);
   for (let from = 0; from < rowCount; from += FACTOR_BLOCK_ROWS) {
     const to = Math.min(from + FACTOR_BLOCK_ROWS, rowCount);

@@ -1,4 +1,3 @@
-import { addWeightedRows, rowProducts } from '../../numerics/rows.js';
 import { addScaled, allFinite } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { MarginsAnswer, MarginsWork } from '../../protocol/messages/margins.js';
@@ -10,6 +9,7 @@ import type { Table } from '../source/table.js';
 import { type AtPoint, atPoint, byCoefficients } from './at-point.js';
 import { notFinite } from './failures.js';
 import type { PartSolvers } from './part-solvers.js';
+import { kernelOf } from './row-pass.js';
 
 type Setting = MarginsWork['settings'][number];
 type Sum = MarginsAnswer['settings'][number];
@@ -90,6 +90,7 @@ function levelSum(
   { column, level }: Extract<Setting, { set: 'level' }>,
 ): Sum {
   const { p, rowCount } = shard;
+  const kernel = kernelOf(shard);
   const gradient = new Float64Array(p);
   let sum = 0;
   const code = made.levels.get(column)?.levels.indexOf(level) ?? -1;
@@ -105,13 +106,13 @@ function levelSum(
       for (let r = 0; r < rows; r++) x[r * p + place] = (design[r * columns.length + k] - center) / scale;
     });
     const eta = new Float64Array(rows);
-    rowProducts(x, p, 0, rows, point, eta);
+    kernel.rowProducts(x, p, 0, rows, point, eta);
     for (let r = 0; r < rows; r++) {
       if (shard.offset !== null) eta[r] += shard.offset[from + r];
       sum += loss.mean(eta[r]);
       eta[r] = loss.meanSlope(eta[r]);
     }
-    addWeightedRows(x, p, 0, rows, eta, gradient);
+    kernel.addWeightedRows(x, p, 0, rows, eta, gradient);
   }
   return { sum, gradient };
 }
@@ -144,7 +145,7 @@ function slopeSum(
       sum += meanSlope * along;
       bends[r - from] = loss.meanBend(eta[r]) * along;
     }
-    addWeightedRows(x, p, from, to, bends, gradient);
+    kernelOf(shard).addWeightedRows(x, p, from, to, bends, gradient);
     addScaled(gradient, 1, direct);
   }
   return { sum, gradient };

@@ -1,9 +1,7 @@
-import { cholesky, choleskySolve } from '../../numerics/cholesky.js';
-import { weightedGram } from '../../numerics/gram.js';
-import { addWeightedRows, rowProducts } from '../../numerics/rows.js';
+import type { CholeskyFactor, RowState } from '../../numerics/kernels/kernel.js';
 import { maxOf } from '../../numerics/vector.js';
 import type { Shard } from '../design/shard.js';
-import type { RowState } from './row-pass.js';
+import { kernelOf } from './row-pass.js';
 import { inRowSpace, pointFromRows, rowFactor, rowKernel } from './row-space.js';
 
 /** Where the next Newton step starts from. */
@@ -33,26 +31,27 @@ const LIFT = 1e-12;
 
 function denseSystem(shard: Shard, metric: Float64Array): NewtonSystem {
   const { rowCount, p, x } = shard;
-  let factor: Float64Array = new Float64Array(0);
+  const kernel = kernelOf(shard);
+  let factor: CholeskyFactor | null = null;
   return {
     passesPerRefresh: p / 4 + (p * p) / (6 * rowCount),
     refresh(curvatures) {
-      const a = weightedGram(x, rowCount, p, curvatures, 1);
+      const a = kernel.weightedGram(x, rowCount, p, curvatures, 1);
       const diagonal = new Float64Array(p);
       for (let j = 0; j < p; j++) {
         a[j * p + j] += metric[j];
         diagonal[j] = a[j * p + j];
       }
-      let made = cholesky(a, p);
+      let made = kernel.factorise(a, p);
       if (made === null) {
         const lift = LIFT * maxOf(diagonal);
         for (let j = 0; j < p; j++) a[j * p + j] += lift;
-        made = cholesky(a, p);
+        made = kernel.factorise(a, p);
       }
       if (made !== null) factor = made;
       return made !== null;
     },
-    step: ({ gradient }) => choleskySolve(factor, p, gradient).map((value) => -value),
+    step: ({ gradient }) => solved(factor, gradient).map((value) => -value),
   };
 }
 
@@ -64,39 +63,46 @@ function denseSystem(shard: Shard, metric: Float64Array): NewtonSystem {
  */
 function rowSpaceSystem(shard: Shard, metric: Float64Array, center: Float64Array): NewtonSystem {
   const { rowCount, p, x, offset } = shard;
-  const kernel = rowKernel(shard, metric);
+  const kernel = kernelOf(shard);
+  const products = rowKernel(shard, metric);
   const atCenter = new Float64Array(rowCount);
-  rowProducts(x, p, 0, rowCount, center, atCenter);
+  kernel.rowProducts(x, p, 0, rowCount, center, atCenter);
   const shifted = new Float64Array(rowCount);
   const right = new Float64Array(rowCount);
   let roots: Float64Array = new Float64Array(rowCount);
-  let factor: Float64Array = new Float64Array(0);
+  let factor: CholeskyFactor | null = null;
   return {
     passesPerRefresh: (rowCount * rowCount) / (6 * p),
     refresh(curvatures) {
       roots = curvatures.map(Math.sqrt);
-      const made = rowFactor(kernel, roots);
+      const made = rowFactor(shard, products, roots);
       if (made !== null) factor = made;
       return made !== null;
     },
     step({ x: at, rows }) {
       for (let r = 0; r < rowCount; r++) {
-        const steep = roots[r] * roots[r] * kernel[r * rowCount + r] >= 1;
+        const steep = roots[r] * roots[r] * products[r * rowCount + r] >= 1;
         shifted[r] = steep ? 0 : rows.slopes[r];
       }
-      rowProducts(kernel, rowCount, 0, rowCount, shifted, right);
+      kernel.rowProducts(products, rowCount, 0, rowCount, shifted, right);
       for (let r = 0; r < rowCount; r++) {
         const moved = rows.eta[r] - (offset === null ? 0 : offset[r]) - atCenter[r];
         const rest = shifted[r] - rows.slopes[r];
         right[r] = roots[r] * (moved + right[r]) + (rest === 0 ? 0 : rest / roots[r]);
       }
-      const alpha = choleskySolve(factor, rowCount, right);
+      const alpha = solved(factor, right);
       for (let r = 0; r < rowCount; r++) alpha[r] = roots[r] * alpha[r] - shifted[r];
       const pulled = new Float64Array(p);
-      addWeightedRows(x, p, 0, rowCount, alpha, pulled);
+      kernel.addWeightedRows(x, p, 0, rowCount, alpha, pulled);
       const target = pointFromRows(shard, metric, center, pulled);
       for (let j = 0; j < p; j++) target[j] -= at[j];
       return target;
     },
   };
+}
+
+/** Steps are taken after a refresh that held; one before is a defect. */
+function solved(factor: CholeskyFactor | null, b: Float64Array): Float64Array {
+  if (factor === null) throw new Error('a step before a factor');
+  return factor.solve(b);
 }

@@ -1,10 +1,11 @@
+import type { RowState } from '../../numerics/kernels/kernel.js';
 import { dot, maxAbs, plusScaled, subtract } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
 import { type NewtonSystem, newtonSystem } from './newton-system.js';
-import { type RowState, rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { rowCurvatures, rowPass, rowState } from './row-pass.js';
 
 /** minimise φ(x) + ½ (x − center)ᵀ diag(metric) (x − center), beginning at `start`. */
 export interface ProximalProblem {

@@ -4,7 +4,7 @@ import { type Checked, succeed } from '../../protocol/failure.js';
 import type { Want } from '../../protocol/messages/evaluate.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
-import { type Evaluation, evaluate } from './evaluate.js';
+import { type AskedPoint, type Evaluation, evaluate, evaluateSteps } from './evaluate.js';
 import { notPositiveDefinite } from './failures.js';
 import { aboutMeans, atBestIntercept, curvatureMeans, isInformative } from './intercept.js';
 import { type JointEnd, type JointQuadratic, jointSteps, type Others } from './joint.js';
@@ -35,6 +35,7 @@ export function ownInterceptSolver(full: Shard, loss: Loss): LocalSolver {
   return {
     proximal: (center, scale, diagonal, start) => solver.proximal(center, scale, diagonal, start),
     evaluate: (point, want) => solver.evaluate(point, want),
+    evaluateSteps: (asked) => solver.evaluateSteps(asked),
     ownFit: (point, hold) => solver.ownFit(point, hold),
     sketch: (point, directions, columns) => solver.sketch(point, directions, columns),
     joint: (...problem) => lastOf(solver.jointSteps(...problem)),
@@ -57,7 +58,7 @@ export function heldOutValue(
 
 const NOTHING: Evaluation = { value: 0, gradient: null, diagonal: null, curvature: null };
 
-const withoutRows = ({ p, rowCountTotal }: Shard): Shard => ({
+const withoutRows = ({ p, rowCountTotal, kernel }: Shard): Shard => ({
   rowCount: 0,
   p: p - 1,
   x: new Float64Array(0),
@@ -65,6 +66,7 @@ const withoutRows = ({ p, rowCountTotal }: Shard): Shard => ({
   weights: null,
   offset: null,
   rowCountTotal,
+  kernel,
 });
 
 const afterZero = (values: Float64Array): Float64Array => {
@@ -113,15 +115,27 @@ class ProfileSolver {
     const { full, loss, squares } = this;
     const point = atBestIntercept(full, loss, theta);
     const at = evaluate(full, loss, squares, point, want);
+    return at.ok ? succeed(this.profiled(point, at.value)) : at;
+  }
+
+  *evaluateSteps(asked: readonly AskedPoint[]): Generator<void, Checked<Evaluation[]>> {
+    const { full, loss, squares } = this;
+    const whole = asked.map(({ point, want }) => ({ point: atBestIntercept(full, loss, point), want }));
+    const at = yield* evaluateSteps(full, loss, squares, whole);
     if (!at.ok) return at;
-    const { value, gradient, diagonal, curvature } = at.value;
+    return succeed(at.value.map((evaluation, k) => this.profiled(whole[k].point, evaluation)));
+  }
+
+  /** An evaluation by all columns as one by θ, the intercept moving along. */
+  private profiled(point: Float64Array, at: Evaluation): Evaluation {
+    const { value, gradient, diagonal, curvature } = at;
     const means = diagonal === null ? null : this.meansAt(point);
-    return succeed({
+    return {
       value,
       gradient: gradient?.slice(1) ?? null,
       diagonal: diagonal === null || means === null ? null : diagonalAbout(diagonal, means),
       curvature: curvature === null || means === null ? null : aboutMeans(curvature, means),
-    });
+    };
   }
 
   private meansAt(point: Float64Array): Float64Array {

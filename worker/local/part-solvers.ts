@@ -64,8 +64,20 @@ function heldOutSolver(training: Shard, heldOut: Shard, loss: Loss): LocalSolver
     'With an intercept of its own a site tells of rows held out nothing but what they lose.',
     { remedy: 'Ask for values alone.' },
   );
+  const evaluate: LocalSolver['evaluate'] = (point, want) =>
+    want === 'value' ? heldOutValue(training, heldOut, loss, point) : valueOnly;
   return {
-    evaluate: (point, want) => (want === 'value' ? heldOutValue(training, heldOut, loss, point) : valueOnly),
+    evaluate,
+    *evaluateSteps(asked) {
+      const evaluations = [];
+      for (const { point, want } of asked) {
+        if (evaluations.length > 0) yield;
+        const evaluated = evaluate(point, want);
+        if (!evaluated.ok) return evaluated;
+        evaluations.push(evaluated.value);
+      }
+      return succeed(evaluations);
+    },
     proximal: () => valueOnly,
     ownFit: () => valueOnly,
     sketch: () => valueOnly,

@@ -1,11 +1,10 @@
-import { cholesky, choleskySolve } from '../../numerics/cholesky.js';
-import { weightedGram } from '../../numerics/gram.js';
-import { addWeightedRows, rowProducts } from '../../numerics/rows.js';
+import type { CholeskyFactor } from '../../numerics/kernels/kernel.js';
 import { allFinite } from '../../numerics/vector.js';
 import { type Checked, succeed } from '../../protocol/failure.js';
 import type { Shard } from '../design/shard.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
 import { metricCache } from './metric-cache.js';
+import { kernelOf } from './row-pass.js';
 import { inRowSpace, pointFromRows, rowFactor, rowKernel } from './row-space.js';
 
 /** Squared loss on one shard: φ(θ) = ½ θᵀGθ − cᵀθ + constant, G and c computed once. */
@@ -22,7 +21,8 @@ export function quadratic(shard: Shard): Quadratic {
   let gramKept: Float64Array | null = null;
   let linearKept: Float64Array | null = null;
   const gram = (): Float64Array => {
-    gramKept ??= weightedGram(shard.x, shard.rowCount, shard.p, shard.weights, 1 / shard.rowCountTotal);
+    const { x, rowCount, p, weights, rowCountTotal } = shard;
+    gramKept ??= kernelOf(shard).weightedGram(x, rowCount, p, weights, 1 / rowCountTotal);
     return gramKept;
   };
   const linear = (): Float64Array => {
@@ -45,17 +45,17 @@ type Solve = (center: Float64Array, metric: Float64Array) => Float64Array | null
 /** x = (G + M)⁻¹ (c + M center). */
 function denseSolve(shard: Shard, gram: () => Float64Array, linear: () => Float64Array): Solve {
   const { p } = shard;
-  const factors = metricCache<Float64Array | null>(8 * p * p);
+  const factors = metricCache<CholeskyFactor | null>(8 * p * p);
   return (center, metric) => {
     const factor = factors(metric, () => {
       const a = Float64Array.from(gram());
       for (let j = 0; j < p; j++) a[j * p + j] += metric[j];
-      return cholesky(a, p);
+      return kernelOf(shard).factorise(a, p);
     });
     if (factor === null) return null;
     const right = Float64Array.from(linear());
     for (let j = 0; j < p; j++) right[j] += metric[j] * center[j];
-    return choleskySolve(factor, p, right);
+    return factor.solve(right);
   };
 }
 
@@ -63,17 +63,17 @@ function denseSolve(shard: Shard, gram: () => Float64Array, linear: () => Float6
 function rowSpaceSolve(shard: Shard): Solve {
   const { rowCount, p, x } = shard;
   const roots = Float64Array.from({ length: rowCount }, (_, r) => Math.sqrt(weightOf(shard, r)));
-  const factors = metricCache<Float64Array | null>(8 * rowCount * rowCount);
+  const factors = metricCache<CholeskyFactor | null>(8 * rowCount * rowCount);
   return (center, metric) => {
-    const factor = factors(metric, () => rowFactor(rowKernel(shard, metric), roots));
+    const factor = factors(metric, () => rowFactor(shard, rowKernel(shard, metric), roots));
     if (factor === null) return null;
     const right = new Float64Array(rowCount);
-    rowProducts(x, p, 0, rowCount, center, right);
+    kernelOf(shard).rowProducts(x, p, 0, rowCount, center, right);
     for (let r = 0; r < rowCount; r++) right[r] = roots[r] * (targetOf(shard, r) - right[r]);
-    const alpha = choleskySolve(factor, rowCount, right);
+    const alpha = factor.solve(right);
     for (let r = 0; r < rowCount; r++) alpha[r] *= roots[r];
     const pulled = new Float64Array(p);
-    addWeightedRows(x, p, 0, rowCount, alpha, pulled);
+    kernelOf(shard).addWeightedRows(x, p, 0, rowCount, alpha, pulled);
     return pointFromRows(shard, metric, center, pulled);
   };
 }
@@ -84,7 +84,7 @@ function linearPart(shard: Shard): Float64Array {
     (_, r) => weightOf(shard, r) * targetOf(shard, r),
   );
   const out = new Float64Array(shard.p);
-  addWeightedRows(shard.x, shard.p, 0, shard.rowCount, weighted, out);
+  kernelOf(shard).addWeightedRows(shard.x, shard.p, 0, shard.rowCount, weighted, out);
   return out;
 }
 

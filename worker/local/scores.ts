@@ -1,4 +1,3 @@
-import { weightedGram } from '../../numerics/gram.js';
 import { packSymmetric } from '../../numerics/packed.js';
 import { allFinite } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
@@ -7,6 +6,7 @@ import type { Clusters } from '../design/shard.js';
 import { type AtPoint, atPoint, byCoefficients, pearsonSum, productsByCoefficients } from './at-point.js';
 import { notFinite } from './failures.js';
 import type { PartSolvers } from './part-solvers.js';
+import { kernelOf } from './row-pass.js';
 
 /**
  * Sums of the rows' scores s = w · loss′ · x and of their products, row by row (White 1980) and summed within clusters
@@ -40,7 +40,10 @@ export function scores(
 function meatOf(at: AtPoint): Float64Array {
   const { x, rowCount, p, rowCountTotal } = at.shard;
   const squares = at.rows.slopes.map((slope) => slope * slope);
-  return productsByCoefficients(at, packSymmetric(weightedGram(x, rowCount, p, squares, rowCountTotal), p));
+  return productsByCoefficients(
+    at,
+    packSymmetric(kernelOf(at.shard).weightedGram(x, rowCount, p, squares, rowCountTotal), p),
+  );
 }
 
 function clusteredMeat(at: AtPoint, { count, ofRow }: Clusters): Float64Array {
@@ -52,5 +55,6 @@ function clusteredMeat(at: AtPoint, { count, ofRow }: Clusters): Float64Array {
     const slope = at.rows.slopes[r];
     for (let j = 0; j < p; j++) sums[to + j] += slope * x[from + j];
   }
-  return productsByCoefficients(at, packSymmetric(weightedGram(sums, count, p, null, rowCountTotal), p));
+  const gram = kernelOf(at.shard).weightedGram(sums, count, p, null, rowCountTotal);
+  return productsByCoefficients(at, packSymmetric(gram, p));
 }

@@ -1,6 +1,4 @@
 import { dependentColumns, runawayColumns } from '../../numerics/determined.js';
-import { weightedGram } from '../../numerics/gram.js';
-import { addWeightedSquares } from '../../numerics/rows.js';
 import { dot } from '../../numerics/vector.js';
 import { type Checked, type Failure, succeed } from '../../protocol/failure.js';
 import type { SiteFitAnswer, SiteFitWork } from '../../protocol/messages/site-fit.js';
@@ -10,7 +8,7 @@ import { pearsonSum } from './at-point.js';
 import { atBestIntercept, isInformative } from './intercept.js';
 import { type NewtonEnd, type NewtonLimits, newtonProximal } from './newton.js';
 import type { PartSolvers } from './part-solvers.js';
-import { rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { kernelOf, rowCurvatures, rowPass, rowState } from './row-pass.js';
 
 const LIMITS: NewtonLimits = { stepsMost: 100, accuracy: 1e-14 };
 
@@ -63,8 +61,9 @@ export function siteFit(parts: PartSolvers, { problem, start }: SiteFitWork): Ch
 }
 
 /** Columns that the rows with weight do not tell from earlier ones; the intercept comes first. */
-function dependentOf({ x, rowCount, p, weights }: Shard): number[] {
-  const gram = weightedGram(x, rowCount, p, weights, 1);
+function dependentOf(shard: Shard): number[] {
+  const { x, rowCount, p, weights } = shard;
+  const gram = kernelOf(shard).weightedGram(x, rowCount, p, weights, 1);
   return dependentColumns(gram, p, [...Array(p).keys()]);
 }
 
@@ -100,10 +99,11 @@ function runsOff(shard: Shard, loss: Loss, start: Float64Array, { point, lastSte
   const { x, p, rowCount } = shard;
   const rows = rowState(rowCount);
   const before = new Float64Array(p);
+  const kernel = kernelOf(shard);
   rowPass(shard, loss, start, rows, null);
-  addWeightedSquares(x, p, 0, rowCount, rowCurvatures(shard, loss, rows.eta), before);
+  kernel.addWeightedSquares(x, p, 0, rowCount, rowCurvatures(shard, loss, rows.eta), before);
   rowPass(shard, loss, point, rows, null);
-  const gram = weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
+  const gram = kernel.weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
   const product = new Float64Array(p);
   for (let i = 0; i < p; i++) product[i] = dot(gram.subarray(i * p, (i + 1) * p), lastStep);
   return runawayColumns(lastStep, dot(lastStep, product), before).length > 0;

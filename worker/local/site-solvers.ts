@@ -1,3 +1,5 @@
+import type { KernelVariant } from '../../numerics/kernels/kernel.js';
+import { plainVariant } from '../../numerics/kernels/plain.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
 import { aboutSiteMeans, scaleParts } from '../design/scale.js';
@@ -16,9 +18,10 @@ export function siteSolvers(
   spec: Pick<FitSpecification, 'intercept' | 'loss'>,
   raw: RawShard,
   pooled: Scaling,
+  variant: KernelVariant = plainVariant,
 ): SiteSolvers {
   const ownIntercept = spec.intercept === 'per-site';
   const scaling = ownIntercept ? aboutSiteMeans(raw, pooled) : pooled;
-  const shards = scaleParts(raw, scaling, spec.intercept !== 'none');
+  const shards = scaleParts(raw, scaling, spec.intercept !== 'none', variant);
   return { parts: partSolvers(shards, lossOf(spec.loss), ownIntercept), scaling };
 }

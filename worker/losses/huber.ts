@@ -6,6 +6,7 @@ import type { Loss } from './loss.js';
  */
 export const huber = (threshold: number): Loss => ({
   name: 'huber',
+  threshold,
   quadratic: false,
   value: (y, eta) => {
     const r = Math.abs(y - eta);

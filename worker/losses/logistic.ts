@@ -16,6 +16,7 @@ const spread = (eta: number): number => {
  */
 export const logistic: Loss = {
   name: 'logistic',
+  threshold: 0,
   quadratic: false,
   value: (y, eta) => Math.max(eta, 0) - y * eta + Math.log1p(Math.exp(-Math.abs(eta))),
   slope: (y, eta) => {

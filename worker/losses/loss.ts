@@ -4,6 +4,8 @@
  */
 export interface Loss {
   readonly name: string;
+  /** Of Huber's loss, in units of the response; 0 for the others. */
+  readonly threshold: number;
   /** True where the curvature does not depend on η: one factorisation serves every round. */
   readonly quadratic: boolean;
   value(y: number, eta: number): number;

@@ -12,6 +12,7 @@ const cappedExp = (eta: number): number => Math.exp(Math.min(eta, EXPONENT_MOST)
  */
 export const poisson: Loss = {
   name: 'poisson',
+  threshold: 0,
   quadratic: false,
   value: (y, eta) => cappedExp(eta) * (1 + Math.max(eta - EXPONENT_MOST, 0)) - y * eta,
   slope: (y, eta) => cappedExp(eta) - y,

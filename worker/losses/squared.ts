@@ -3,6 +3,7 @@ import type { Loss } from './loss.js';
 /** ½ (y − η)²: least squares. */
 export const squared: Loss = {
   name: 'squared',
+  threshold: 0,
   quadratic: true,
   value: (y, eta) => 0.5 * (y - eta) * (y - eta),
   slope: (y, eta) => eta - y,

@@ -1,3 +1,4 @@
+import type { KernelVariant } from '../../numerics/kernels/kernel.js';
 import { checkAsk } from '../../protocol/check-ask.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Answer, Ask } from '../../protocol/messages/round.js';
@@ -36,6 +37,8 @@ export interface AnswerMeans {
   readonly policy: Policy;
   /** Approved digests, read at every ask: an approval taken back holds from then on. */
   readonly approved: () => Promise<Checked<ReadonlySet<string>>>;
+  /** What passes over the rows are computed with; the plain one where none is named. */
+  readonly kernel?: KernelVariant;
   readonly readTable: (request: TableRequest) => Promise<Checked<Table>>;
   readonly ledger: Pick<Ledger, 'departed' | 'look' | 'append' | 'catchUp'>;
   readonly nowMs: () => number;
@@ -126,7 +129,7 @@ export class AnswerMaker {
   async #compute({ ask, live, spec, works, wanted }: Piece): Promise<Checked<Answer> | null> {
     const raw = await this.#rows(ask.run, spec);
     if (!raw.ok) return raw;
-    const solvers = solversOf(live, spec, raw.value);
+    const solvers = solversOf(live, spec, raw.value, this.#means.kernel);
     if (!solvers.ok) return solvers;
     const means = {
       raw: raw.value,

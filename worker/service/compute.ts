@@ -1,11 +1,13 @@
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { EvaluateWork } from '../../protocol/messages/evaluate.js';
 import type { JointWork } from '../../protocol/messages/joint.js';
+import type { Part } from '../../protocol/messages/part.js';
 import type { WorkAnswer } from '../../protocol/messages/round.js';
 import type { Allowance } from '../../protocol/messages/survey.js';
 import type { FilledProblem, FilledWork } from '../custody/content.js';
 import type { RawShard } from '../design/shard.js';
 import { surveyOf } from '../design/survey.js';
+import type { Evaluation } from '../local/evaluate.js';
 import { margins } from '../local/margins.js';
 import type { PartSolvers } from '../local/part-solvers.js';
 import { quality } from '../local/quality.js';
@@ -29,6 +31,9 @@ export type Breathe = () => Promise<'go-on' | 'stop'>;
 /** An answer in the making: yields between two pieces of work. */
 type Steps = Generator<void, Checked<WorkAnswer>>;
 
+/** Points that share one read of the rows; bounds what is kept beside an answer. */
+const POINTS_TOGETHER = 8;
+
 /** Answers of all work items in order, or the first failure; null where `breathe` said `stop`. */
 export async function computeWorks(
   works: readonly FilledWork[],
@@ -36,22 +41,71 @@ export async function computeWorks(
   breathe: Breathe,
 ): Promise<Checked<WorkAnswer[]> | null> {
   const answers: WorkAnswer[] = [];
-  for (const work of works) {
-    const steps = answerSteps(work, means);
-    for (;;) {
-      if ((await breathe()) === 'stop') return null;
-      const step = steps.next();
-      if (!step.done) continue;
-      if (!step.value.ok) return step.value;
-      answers.push(step.value.value);
-      break;
+  let evaluated: Evaluated = new Map();
+  for (const [at, work] of works.entries()) {
+    if (work.work === 'evaluate' && means.solvers !== null && !evaluated.has(work)) {
+      const shared = await finished(evaluateTogether(batchFrom(works, at, work), means.solvers), breathe);
+      if (shared === null || !shared.ok) return shared;
+      evaluated = shared.value;
     }
+    const answer = await finished(answerSteps(work, means, evaluated), breathe);
+    if (answer === null || !answer.ok) return answer;
+    answers.push(answer.value);
   }
   return succeed(answers);
 }
 
-/** The answer to one work item, piece by piece. */
-export function* answerSteps(work: FilledWork, { raw, loss, solvers, allowance }: Means): Steps {
+async function finished<T>(steps: Generator<void, T>, breathe: Breathe): Promise<T | null> {
+  for (;;) {
+    if ((await breathe()) === 'stop') return null;
+    const step = steps.next();
+    if (step.done) return step.value;
+  }
+}
+
+/** What was found at the points of evaluate works. */
+type Evaluated = ReadonlyMap<FilledWork, readonly Evaluation[]>;
+
+/** The work at `at` and those evaluate works after it on the same rows that share its reads of them. */
+function batchFrom(works: readonly FilledWork[], at: number, first: EvaluateWork): EvaluateWork[] {
+  const batch = [first];
+  let points = first.points.length;
+  for (const work of works.slice(at + 1)) {
+    if (work.work !== 'evaluate' || !samePart(work.part, first.part)) break;
+    points += work.points.length;
+    if (points > POINTS_TOGETHER) break;
+    batch.push(work);
+  }
+  return batch;
+}
+
+const samePart = (a: Part, b: Part): boolean => a?.fold === b?.fold && a?.side === b?.side;
+
+function* evaluateTogether(
+  batch: readonly EvaluateWork[],
+  { parts }: SiteSolvers,
+): Generator<void, Checked<Evaluated>> {
+  const made = yield* parts.solver(batch[0].part).evaluateSteps(batch.flatMap(({ points }) => points));
+  if (!made.ok) return made;
+  let from = 0;
+  return succeed(
+    new Map(
+      batch.map((work) => {
+        const to = from + work.points.length;
+        const own = made.value.slice(from, to);
+        from = to;
+        return [work, own];
+      }),
+    ),
+  );
+}
+
+/** The answer to one work item, piece by piece; `evaluated` may have its points already. */
+export function* answerSteps(
+  work: FilledWork,
+  { raw, loss, solvers, allowance }: Means,
+  evaluated: Evaluated = new Map(),
+): Steps {
   if (work.work === 'survey') return succeed({ work: 'survey', ...surveyOf(raw, loss), allowance });
   if (solvers === null) return fail('dimension-wrong', 'The scaling of the run is not known yet.');
   const { parts, scaling } = solvers;
@@ -59,7 +113,7 @@ export function* answerSteps(work: FilledWork, { raw, loss, solvers, allowance }
     case 'proximal':
       return yield* proximal(work.problems, parts);
     case 'evaluate':
-      return yield* evaluate(work, parts);
+      return yield* evaluate(work, parts, evaluated.get(work) ?? null);
     case 'joint':
       return yield* joint(work, parts);
     case 'factor': {
@@ -88,15 +142,11 @@ function* proximal(asked: readonly FilledProblem[], parts: PartSolvers): Steps {
   return succeed({ work: 'proximal', problems });
 }
 
-function* evaluate(work: EvaluateWork, parts: PartSolvers): Steps {
+function* evaluate(work: EvaluateWork, parts: PartSolvers, evaluated: readonly Evaluation[] | null): Steps {
   const solver = parts.solver(work.part);
-  const points = [];
-  for (const { point, want } of work.points) {
-    if (points.length > 0) yield;
-    const evaluated = solver.evaluate(point, want);
-    if (!evaluated.ok) return evaluated;
-    points.push(evaluated.value);
-  }
+  const made = evaluated === null ? yield* solver.evaluateSteps(work.points) : succeed(evaluated);
+  if (!made.ok) return made;
+  const points = [...made.value];
   const { problem, ownFit, sketch } = work;
   if (ownFit !== null) yield;
   const own = ownFit === null ? succeed(null) : solver.ownFit(work.points[ownFit.at].point, ownFit.hold);

@@ -1,3 +1,4 @@
+import type { KernelVariant } from '../../numerics/kernels/kernel.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Answer } from '../../protocol/messages/round.js';
 import type { Prepare, Scaling } from '../../protocol/messages/run.js';
@@ -60,12 +61,17 @@ const sameNumbers = (a: ArrayLike<number>, b: ArrayLike<number>): boolean =>
   a.length === b.length && Array.from(a).every((value, at) => Object.is(value, b[at]));
 
 /** The run's local solvers, built when first needed. */
-export function solversOf(run: LiveRun, spec: FitSpecification, raw: RawShard): Checked<SiteSolvers | null> {
+export function solversOf(
+  run: LiveRun,
+  spec: FitSpecification,
+  raw: RawShard,
+  kernel: KernelVariant | undefined,
+): Checked<SiteSolvers | null> {
   const { scaling } = run.message;
   if (run.solvers !== null || scaling === null) return succeed(run.solvers);
   const fits = checkScaling(scaling, raw.columns.length);
   if (!fits.ok) return fits;
-  run.solvers = siteSolvers(spec, raw, scaling);
+  run.solvers = siteSolvers(spec, raw, scaling, kernel);
   return succeed(run.solvers);
 }
 
