@@ -98,7 +98,7 @@ export interface Kernel {
   /** One read of the rows for all points: φ, predictors, slopes and gradients. */
   passes(rows: LossRows, loss: RowLoss, points: readonly PassPoint[]): PassValue[];
   /** (w/N) · ∂²loss/∂η² of every row at the predictors given. */
-  curvatures(rows: LossRows, loss: RowLoss, eta: Float64Array): Float64Array;
+  curvatures(rows: Omit<LossRows, 'x' | 'p'>, loss: RowLoss, eta: Float64Array): Float64Array;
   /** Null where A (row-major, p × p) is not positive definite to working precision. */
   factorise(a: Float64Array, p: number): CholeskyFactor | null;
   factorAccumulator(columns: number): FactorAccumulator;

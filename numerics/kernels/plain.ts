@@ -90,7 +90,11 @@ function blockSlopes(
 }
 
 /** See `Kernel.curvatures`. */
-export function rowCurvatures(rows: LossRows, loss: RowLoss, eta: Float64Array): Float64Array {
+export function rowCurvatures(
+  rows: Omit<LossRows, 'x' | 'p'>,
+  loss: RowLoss,
+  eta: Float64Array,
+): Float64Array {
   const { y, weights, rowCountTotal } = rows;
   const out = new Float64Array(rows.rowCount);
   for (let r = 0; r < out.length; r++) {

@@ -173,7 +173,7 @@ export class WasmKernel implements Kernel {
     }));
   }
 
-  curvatures(rows: LossRows, loss: RowLoss, eta: Float64Array): Float64Array {
+  curvatures(rows: Omit<LossRows, 'x' | 'p'>, loss: RowLoss, eta: Float64Array): Float64Array {
     const number = LOSS_NUMBERS[loss.name];
     if (number === undefined) return rowCurvatures(rows, loss, eta);
     const { place, code } = this;

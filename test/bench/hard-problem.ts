@@ -1,6 +1,7 @@
 import { noPenalty, type Penalty } from '../../numerics/penalty.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
 import type { LossKind } from '../../protocol/specification/types.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import {
   type BenchProblem,
   drawColumns,
@@ -54,7 +55,7 @@ export function makeHardProblem(name: string, hardship: Hardship): BenchProblem 
   const eta = linearPredictor(x, rows, p, truth);
   const { y, offset } = drawResponse(random, loss, eta);
   hardship.responseTo?.({ x, p, eta, y, offset }, random);
-  const pooled = { rowCount: rows, p, x, y, weights: null, offset, rowCountTotal: rows };
+  const pooled = denseShard({ rowCount: rows, p, x, y, weights: null, offset, rowCountTotal: rows });
   const parts = siteRows === undefined ? splitRows(random, split, sites, y, x, p) : consecutive(siteRows);
   return {
     name,

@@ -1,7 +1,9 @@
 import { noPenalty, type Penalty } from '../../numerics/penalty.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
 import type { LossKind } from '../../protocol/specification/types.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import type { Shard } from '../../worker/design/shard.js';
+import { entriesOf } from '../support/dense.js';
 
 /** One problem of the suite: rows already in solver columns (column 0 the intercept), split over sites. */
 export interface BenchProblem {
@@ -100,7 +102,15 @@ export function makeProblem(name: string): BenchProblem {
   const truth = drawTruth(random, shape.columns, sparse, design);
   const eta = linearPredictor(x, shape.rows, p, truth);
   const { y, offset } = drawResponse(random, loss, eta);
-  const pooled: Shard = { rowCount: shape.rows, p, x, y, weights: null, offset, rowCountTotal: shape.rows };
+  const pooled = denseShard({
+    rowCount: shape.rows,
+    p,
+    x,
+    y,
+    weights: null,
+    offset,
+    rowCountTotal: shape.rows,
+  });
   const parts = splitRows(random, split, Number(sites), y, x, p);
   return {
     name,
@@ -228,15 +238,17 @@ export function splitRows(
 
 export function takeRows(pooled: Shard, rows: Int32Array): Shard {
   const { p } = pooled;
+  const from = entriesOf(pooled);
   const x = new Float64Array(rows.length * p);
   const y = new Float64Array(rows.length);
   const offset = pooled.offset === null ? null : new Float64Array(rows.length);
   rows.forEach((row, i) => {
-    x.set(pooled.x.subarray(row * p, row * p + p), i * p);
+    x.set(from.subarray(row * p, row * p + p), i * p);
     y[i] = pooled.y[row];
     if (offset !== null && pooled.offset !== null) offset[i] = pooled.offset[row];
   });
-  return { rowCount: rows.length, p, x, y, weights: null, offset, rowCountTotal: pooled.rowCountTotal };
+  const { rowCountTotal } = pooled;
+  return denseShard({ rowCount: rows.length, p, x, y, weights: null, offset, rowCountTotal });
 }
 
 /** λ as a share of the least λ that leaves no slope (of a squared loss), as is usual; the intercept is free. */

@@ -1,7 +1,7 @@
 import { noPenalty } from '../../numerics/penalty.js';
 import { seededRandom } from '../../numerics/random.js';
 import type { LossKind } from '../../protocol/specification/types.js';
-import type { Shard } from '../../worker/design/shard.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import {
   type BenchProblem,
   drawColumns,
@@ -64,7 +64,7 @@ function drawProblem(seed: number, { losses, shrinkages }: Choice, drawsLoss: bo
   // both classes, and a count, so that the intercept-only fit exists
   y[0] = 1;
   y[1] = 0;
-  const pooled: Shard = { rowCount: rows, p, x, y, weights: null, offset, rowCountTotal: rows };
+  const pooled = denseShard({ rowCount: rows, p, x, y, weights: null, offset, rowCountTotal: rows });
   const penalty = noPenalty(p);
   const shrink = pick(shrinkages);
   const [l1, l2, width] = SHRINKAGE[shrink];

@@ -6,6 +6,7 @@ import { maxAbs } from '../../numerics/vector.js';
 import type { Shard } from '../../worker/design/shard.js';
 import type { LocalSolver } from '../../worker/local/local-solver.js';
 import type { Loss } from '../../worker/losses/loss.js';
+import { entriesOf } from '../support/dense.js';
 import { driveMethods } from '../support/method-driver.js';
 import { consensusProblem } from './measure.js';
 import type { BenchProblem } from './problems.js';
@@ -90,7 +91,9 @@ function verified(problem: BenchProblem, z: Float64Array, loss: Loss): Omit<Refe
   return { z, objective: objectiveByRows(problem, loss, z), within };
 }
 
-function gradientByRows({ x, y, p, rowCount, offset }: Shard, loss: Loss, z: Float64Array): Float64Array {
+function gradientByRows(shard: Shard, loss: Loss, z: Float64Array): Float64Array {
+  const { y, p, rowCount, offset } = shard;
+  const x = entriesOf(shard);
   const gradient = new Float64Array(p);
   for (let i = 0; i < rowCount; i++) {
     const slope = loss.slope(y[i], predictor(x, p, i, z, offset));
@@ -100,11 +103,9 @@ function gradientByRows({ x, y, p, rowCount, offset }: Shard, loss: Loss, z: Flo
 }
 
 /** F(z) row by row; infinite outside the bounds. */
-export function objectiveByRows(
-  { pooled: { x, y, p, rowCount, offset }, penalty: g }: BenchProblem,
-  loss: Loss,
-  z: Float64Array,
-): number {
+export function objectiveByRows({ pooled, penalty: g }: BenchProblem, loss: Loss, z: Float64Array): number {
+  const { y, p, rowCount, offset } = pooled;
+  const x = entriesOf(pooled);
   let sum = 0;
   for (let i = 0; i < rowCount; i++) sum += loss.value(y[i], predictor(x, p, i, z, offset));
   let penalty = 0;

@@ -13,6 +13,7 @@ import { scores } from '../../worker/local/scores.js';
 import { siteFit } from '../../worker/local/site-fit.js';
 import { siteSolvers } from '../../worker/local/site-solvers.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { entriesOf } from '../support/dense.js';
 import { levelsTerm, numericTerm, specification, table } from '../support/designs.js';
 import { NO_REPORT } from '../support/specifications.js';
 import { failureOf, soundValue } from '../support/tables.js';
@@ -128,7 +129,9 @@ function meanSum(site: Site, point: Float64Array, changed: object, codes = site.
   for (let r = 0; r < raw.rowCount; r++) {
     let eta = intercept + (raw.offset?.[r] ?? 0) + (lead === 1 ? point[0] : 0);
     for (let j = 0; j < raw.columns.length; j++)
-      eta += (point[lead + j] * (raw.x[r * raw.columns.length + j] - scaling.center[j])) / scaling.scale[j];
+      eta +=
+        (point[lead + j] * (entriesOf(raw)[r * raw.columns.length + j] - scaling.center[j])) /
+        scaling.scale[j];
     sum += loss.mean(eta);
   }
   return sum;
@@ -142,7 +145,7 @@ function ownIntercept({ spec, raw, scaling, loss }: Site, point: Float64Array): 
     for (let r = 0; r < raw.rowCount; r++) {
       let eta = shift + (raw.offset?.[r] ?? 0);
       for (let j = 0; j < point.length; j++)
-        eta += (point[j] * (raw.x[r * point.length + j] - scaling.center[j])) / scaling.scale[j];
+        eta += (point[j] * (entriesOf(raw)[r * point.length + j] - scaling.center[j])) / scaling.scale[j];
       sum += (raw.weights?.[r] ?? 1) * loss.slope(raw.y[r], eta);
     }
     return sum;
@@ -281,7 +284,7 @@ describe('scores', () => {
           const columns = Array.from({ length: width }, (_, j) =>
             j < lead
               ? 1
-              : (raw.x[r * raw.columns.length + j - lead] - site.scaling.center[j - lead]) /
+              : (entriesOf(raw)[r * raw.columns.length + j - lead] - site.scaling.center[j - lead]) /
                 site.scaling.scale[j - lead],
           );
           const eta =

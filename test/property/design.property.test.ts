@@ -5,6 +5,7 @@ import type { LevelsTerm, NumericTerm, Term, Transform } from '../../protocol/sp
 import { buildRawShard } from '../../worker/design/build.js';
 import { surveyOf } from '../../worker/design/survey.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { entriesOf } from '../support/dense.js';
 import { levelsTerm, numericTerm, specification, table } from '../support/designs.js';
 import { soundValue } from '../support/tables.js';
 
@@ -90,7 +91,7 @@ describe('the design', () => {
         const naive = all.flatMap((row) => rowOf(row, terms));
         expect(raw.columns).toEqual(designColumns(spec).map((column) => column.name));
         // 0 × −3 is −0 for the naive twin, which + 0 makes 0
-        expect(raw.x).toEqual(Float64Array.from(naive, (value) => value + 0));
+        expect(entriesOf(raw)).toEqual(Float64Array.from(naive, (value) => value + 0));
       }),
       { numRuns: 150 },
     );

@@ -6,9 +6,11 @@ import { type Random, seededRandom } from '../../numerics/random.js';
 import { maxAbs } from '../../numerics/vector.js';
 import type { Checked } from '../../protocol/failure.js';
 import type { LossForm } from '../../protocol/specification/types.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import type { Shard } from '../../worker/design/shard.js';
 import { type LocalSolver, localSolver } from '../../worker/local/local-solver.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { entriesOf } from '../support/dense.js';
 
 /** The joint step: φ of one site, a quadratic for the others, and the penalty. */
 
@@ -61,7 +63,7 @@ function shardOf(
       : random.poisson(Math.exp(Math.min(eta, 4)));
   });
   const weights = Float64Array.from({ length: rowCount }, () => random.integer(3));
-  return { rowCount, p, x, y, weights, offset, rowCountTotal: total };
+  return denseShard({ rowCount, p, x, y, weights, offset, rowCountTotal: total });
 }
 
 /** The penalty leaves the intercept alone. */
@@ -109,15 +111,16 @@ function othersAt(full: Float64Array, linear: Float64Array, x: Float64Array) {
 function naiveGradient(shard: Shard, form: LossForm, x: Float64Array) {
   const loss = lossOf(form);
   const { p, rowCount } = shard;
+  const entries = entriesOf(shard);
   const gradient = new Float64Array(p);
   const size = new Float64Array(p);
   for (let r = 0; r < rowCount; r++) {
     let eta = shard.offset?.[r] ?? 0;
-    for (let j = 0; j < p; j++) eta += shard.x[r * p + j] * x[j];
+    for (let j = 0; j < p; j++) eta += entries[r * p + j] * x[j];
     const slope = ((shard.weights?.[r] ?? 1) * loss.slope(shard.y[r], eta)) / shard.rowCountTotal;
     for (let j = 0; j < p; j++) {
-      gradient[j] += slope * shard.x[r * p + j];
-      size[j] += Math.abs(slope * shard.x[r * p + j]);
+      gradient[j] += slope * entries[r * p + j];
+      size[j] += Math.abs(slope * entries[r * p + j]);
     }
   }
   return { gradient, size: maxAbs(size) };
@@ -180,14 +183,14 @@ describe('the joint step', () => {
         const { p, rowCount } = given;
         const truth = normals(random, p, 1);
         const [one, two] = [1, 2].map(() => shardOf(given, rowCount, 2 * rowCount, truth, random));
-        const both: Shard = {
+        const both = denseShard({
           ...one,
           rowCount: 2 * rowCount,
-          x: Float64Array.of(...one.x, ...two.x),
+          x: Float64Array.of(...entriesOf(one), ...entriesOf(two)),
           y: Float64Array.of(...one.y, ...two.y),
           weights: Float64Array.of(...(one.weights ?? []), ...(two.weights ?? [])),
           offset: Float64Array.of(...(one.offset ?? []), ...(two.offset ?? [])),
-        };
+        });
         const g = penaltyOf({ ...given, ridge: Math.max(given.ridge, 0.01) });
         const zero = new Float64Array(p);
         const other = expectOk(solverOf(two, given).ownFit(zero, 1));

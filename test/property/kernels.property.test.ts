@@ -8,6 +8,7 @@ import { packSymmetric } from '../../numerics/packed.js';
 import { type Random, seededRandom } from '../../numerics/random.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import type { LossForm } from '../../protocol/specification/types.js';
+import { RawDenseRows } from '../../worker/design/dense-rows.js';
 import { scaleParts } from '../../worker/design/scale.js';
 import type { RawShard } from '../../worker/design/shard.js';
 import { localSolver } from '../../worker/local/local-solver.js';
@@ -387,7 +388,7 @@ describe.each(variants.map((variant) => [variant.name, variant] as const))(
       rowCount,
       rowsDropped: 0,
       columns: Array.from({ length: width }, (_, j) => `x${j}`),
-      x: normals(random, rowCount * width),
+      rows: new RawDenseRows(normals(random, rowCount * width), width, rowCount),
       y: Float64Array.from({ length: rowCount }, () =>
         loss.kind === 'logistic'
           ? random.integer(2)

@@ -5,10 +5,12 @@ import { type Random, seededRandom } from '../../numerics/random.js';
 import { mergeFactors, triangularFactor } from '../../numerics/triangular-factor.js';
 import type { Checked } from '../../protocol/failure.js';
 import type { LossForm } from '../../protocol/specification/types.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import type { Shard } from '../../worker/design/shard.js';
 import { localSolver } from '../../worker/local/local-solver.js';
 import { lossOf } from '../../worker/losses/index.js';
 import type { Loss } from '../../worker/losses/loss.js';
+import { entriesOf } from '../support/dense.js';
 
 const LOSSES: readonly LossForm[] = [
   { kind: 'squared' },
@@ -58,7 +60,7 @@ function shardOf(given: Case, random: Random): Shard {
       ? Number(random.uniform() < lossOf({ kind: 'logistic' }).mean(eta))
       : random.poisson(Math.exp(Math.min(eta, 4)));
   });
-  return {
+  return denseShard({
     rowCount,
     p,
     x,
@@ -66,12 +68,13 @@ function shardOf(given: Case, random: Random): Shard {
     weights: given.weighted ? weights : null,
     offset: given.shifted ? offset : null,
     rowCountTotal: rowCount * (1 + random.integer(6)),
-  };
+  });
 }
 
 /** φ, ∇φ, ∇²φ written as the formulas stand, with the sums of absolute terms that rounding is measured against. */
 function naive(shard: Shard, loss: Loss, theta: Float64Array) {
-  const { p, rowCount, x, y, rowCountTotal } = shard;
+  const { p, rowCount, y, rowCountTotal } = shard;
+  const x = entriesOf(shard);
   let value = 0;
   let valueSize = 0;
   const gradient = new Float64Array(p);
@@ -153,14 +156,14 @@ describe('proximal', () => {
         const copies = Math.ceil(given.p / given.rowCount);
         const repeat = (values: Float64Array): Float64Array =>
           Float64Array.from({ length: copies * values.length }, (_, i) => values[i % values.length]);
-        const many: Shard = {
+        const many = denseShard({
           ...few,
           rowCount: copies * few.rowCount,
-          x: repeat(few.x),
+          x: repeat(entriesOf(few)),
           y: repeat(few.y),
           offset: few.offset === null ? null : repeat(few.offset),
           weights: repeat(few.weights ?? new Float64Array(few.rowCount).fill(1)).map((w) => w / copies),
-        };
+        });
         const { center, scale, diagonal, start } = problemOf(few, random);
         const byRows = expectOk(localSolver(few, loss).proximal(center, scale, diagonal, start));
         const byColumns = expectOk(localSolver(many, loss).proximal(center, scale, diagonal, start));
@@ -236,7 +239,7 @@ describe('evaluate', () => {
   });
 
   test('a trial point far out gets a huge finite value; one beyond all numbers is named', () => {
-    const shard: Shard = {
+    const shard = denseShard({
       rowCount: 2,
       p: 1,
       x: Float64Array.of(1, 1),
@@ -244,7 +247,7 @@ describe('evaluate', () => {
       weights: null,
       offset: null,
       rowCountTotal: 2,
-    };
+    });
     const far = Float64Array.of(1e160);
     expect(expectOk(localSolver(shard, lossOf({ kind: 'squared' })).evaluate(far, 'gradient')).value).toBe(
       1e300,
@@ -254,7 +257,7 @@ describe('evaluate', () => {
     );
     expect(poisson.value).toBeGreaterThan(1e129);
     expect(poisson.curvature!.every(Number.isFinite)).toBe(true);
-    const doubled: Shard = { ...shard, x: Float64Array.of(10, -10) };
+    const doubled = denseShard({ ...shard, x: Float64Array.of(10, -10) });
     expect(
       localSolver(doubled, lossOf({ kind: 'poisson' })).evaluate(Float64Array.of(1e308), 'value'),
     ).toMatchObject({
@@ -367,7 +370,7 @@ describe('triangular factor', () => {
         const gram = new Float64Array(columns * columns);
         for (let r = 0; r < shard.rowCount; r++) {
           const row = [
-            ...shard.x.subarray(r * shard.p, (r + 1) * shard.p),
+            ...entriesOf(shard).subarray(r * shard.p, (r + 1) * shard.p),
             shard.y[r] - (shard.offset?.[r] ?? 0),
           ];
           const weight = (shard.weights?.[r] ?? 1) / shard.rowCountTotal;

@@ -7,6 +7,7 @@ import type { ConsensusProblem } from '../../coordinator/consensus/problem.js';
 import { proximalRung } from '../../coordinator/consensus/proximal-rung.js';
 import { noPenalty, penaltyValue } from '../../numerics/penalty.js';
 import type { LossKind } from '../../protocol/specification/types.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import type { Shard } from '../../worker/design/shard.js';
 import { localSolver } from '../../worker/local/local-solver.js';
 import { lossOf } from '../../worker/losses/index.js';
@@ -83,15 +84,16 @@ describe.each<[string, Make, number]>([
 });
 
 describe("curvature that vanishes under Huber's loss", () => {
-  const huberShard = (y: readonly number[], columns: readonly (readonly number[])[]): Shard => ({
-    rowCount: y.length,
-    p: columns.length,
-    x: Float64Array.from(y.flatMap((_, row) => columns.map((column) => column[row]))),
-    y: Float64Array.from(y),
-    weights: null,
-    offset: null,
-    rowCountTotal: y.length,
-  });
+  const huberShard = (y: readonly number[], columns: readonly (readonly number[])[]): Shard =>
+    denseShard({
+      rowCount: y.length,
+      p: columns.length,
+      x: Float64Array.from(y.flatMap((_, row) => columns.map((column) => column[row]))),
+      y: Float64Array.from(y),
+      weights: null,
+      offset: null,
+      rowCountTotal: y.length,
+    });
   const unpenalised = (shard: Shard, start: Float64Array, tolerance: number, make: Make) => {
     const site = localSolver(shard, lossOf({ kind: 'huber', threshold: 1 }));
     const problem = {
@@ -179,7 +181,7 @@ describe('the pooled rung', () => {
 describe('what has no optimum is named, not looped on', () => {
   const separated = (): ConsensusProblem & { sites: ReturnType<typeof localSolver>[] } => {
     const x = Float64Array.from([-2, -1.5, -1, 1, 1.5, 2].flatMap((value) => [1, value]));
-    const shard = {
+    const shard = denseShard({
       rowCount: 6,
       p: 2,
       x,
@@ -187,7 +189,7 @@ describe('what has no optimum is named, not looped on', () => {
       weights: null,
       offset: null,
       rowCountTotal: 6,
-    };
+    });
     const problem = makeRandomProblem(1);
     return {
       ...consensusProblem(problem, TOLERANCE, Number.POSITIVE_INFINITY),
@@ -223,7 +225,7 @@ describe('what has no optimum is named, not looped on', () => {
   ])('a column that repeats another without a penalty, on the rung %s', (_, make, lossName) => {
     const x = Float64Array.from([0.3, -1.1, 0.4, 1.7, -0.6, -0.7].flatMap((value) => [1, value, -2 * value]));
     const y = lossName === 'squared' ? Float64Array.of(1, 2, 0, 3, 1, 2) : Float64Array.of(1, 0, 0, 1, 1, 0);
-    const shard = { rowCount: 6, p: 3, x, y, weights: null, offset: null, rowCountTotal: 6 };
+    const shard = denseShard({ rowCount: 6, p: 3, x, y, weights: null, offset: null, rowCountTotal: 6 });
     const { sites: _sites, ...base } = separated();
     const zeros = new Float64Array(3);
     const [end] = driveMethods(

@@ -5,12 +5,14 @@ import { packSymmetric, unpackSymmetric } from '../../numerics/packed.js';
 import { seededRandom } from '../../numerics/random.js';
 import type { Part } from '../../protocol/messages/part.js';
 import type { LossForm } from '../../protocol/specification/types.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import type { Shard } from '../../worker/design/shard.js';
 import { atBestIntercept } from '../../worker/local/intercept.js';
 import { type LocalSolver, localSolver } from '../../worker/local/local-solver.js';
 import { ownInterceptSolver } from '../../worker/local/own-intercept.js';
 import { partSolvers } from '../../worker/local/part-solvers.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { entriesOf } from '../support/dense.js';
 import { failureOf, soundValue } from '../support/tables.js';
 
 const LOSSES: readonly LossForm[] = [
@@ -51,7 +53,7 @@ function sceneOf({ seed, rowCount, slopes, loss, full }: Case) {
         : random.integer(2)
       : 3 * random.normal(),
   );
-  const shard: Shard = {
+  const shard = denseShard({
     rowCount,
     p,
     x,
@@ -59,7 +61,7 @@ function sceneOf({ seed, rowCount, slopes, loss, full }: Case) {
     weights: full ? Float64Array.from({ length: rowCount }, () => 0.2 + random.uniform()) : null,
     offset: full ? numbers(rowCount) : null,
     rowCountTotal: 2 * rowCount,
-  };
+  });
   return { shard, numbers, random };
 }
 
@@ -217,14 +219,15 @@ describe('an intercept of its own', () => {
       loss: { kind: 'logistic' },
       full: true,
     });
-    const rows = (from: number, to: number): Shard => ({
-      ...shard,
-      rowCount: to - from,
-      x: shard.x.slice(from * 3, to * 3),
-      y: shard.y.slice(from, to),
-      weights: shard.weights?.slice(from, to) ?? null,
-      offset: shard.offset?.slice(from, to) ?? null,
-    });
+    const rows = (from: number, to: number): Shard =>
+      denseShard({
+        ...shard,
+        rowCount: to - from,
+        x: entriesOf(shard).slice(from * 3, to * 3),
+        y: shard.y.slice(from, to),
+        weights: shard.weights?.slice(from, to) ?? null,
+        offset: shard.offset?.slice(from, to) ?? null,
+      });
     const shardOf = (part: Part) =>
       part === null ? shard : part.side === 'training' ? rows(0, 14) : rows(14, 20);
     const loss = lossOf({ kind: 'logistic' });

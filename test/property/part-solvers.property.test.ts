@@ -4,11 +4,13 @@ import { seededRandom } from '../../numerics/random.js';
 import type { Part } from '../../protocol/messages/part.js';
 import type { Scaling } from '../../protocol/messages/run.js';
 import type { LossForm } from '../../protocol/specification/types.js';
+import { denseShard, RawDenseRows } from '../../worker/design/dense-rows.js';
 import { scaleParts } from '../../worker/design/scale.js';
 import type { RawShard, Shard } from '../../worker/design/shard.js';
 import { localSolver } from '../../worker/local/local-solver.js';
 import { partSolvers } from '../../worker/local/part-solvers.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { entriesOf } from '../support/dense.js';
 import { soundValue } from '../support/tables.js';
 
 const LOSSES: readonly LossForm[] = [
@@ -45,7 +47,7 @@ function sceneOf({ seed, sizes, columns, loss, weighted }: Case) {
     rowCount,
     rowsDropped: 0,
     columns: Array.from({ length: columns }, (_, j) => `x${j}`),
-    x: numbers(rowCount * columns),
+    rows: new RawDenseRows(numbers(rowCount * columns), columns, rowCount),
     y: Float64Array.from({ length: rowCount }, () =>
       loss.kind === 'logistic' || loss.kind === 'poisson' ? random.integer(2) : random.normal(),
     ),
@@ -73,14 +75,14 @@ function picked(shard: Shard, raw: RawShard, part: Part): Shard {
   });
   const of = (values: Float64Array | null) =>
     values === null ? null : Float64Array.from(rows, (r) => values[r]);
-  return {
+  return denseShard({
     ...shard,
     rowCount: rows.length,
-    x: Float64Array.from(rows.flatMap((r) => [...shard.x.subarray(r * shard.p, (r + 1) * shard.p)])),
+    x: Float64Array.from(rows.flatMap((r) => [...entriesOf(shard).subarray(r * shard.p, (r + 1) * shard.p)])),
     y: of(shard.y) ?? new Float64Array(0),
     weights: of(shard.weights),
     offset: of(shard.offset),
-  };
+  });
 }
 
 const close = (a: Float64Array, b: Float64Array, tolerance: number): void => {

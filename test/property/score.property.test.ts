@@ -7,6 +7,7 @@ import { buildRawShard } from '../../worker/design/build.js';
 import { Predictor } from '../../worker/design/predictor.js';
 import { lossOf } from '../../worker/losses/index.js';
 import type { Table } from '../../worker/source/table.js';
+import { entriesOf } from '../support/dense.js';
 import { specification } from '../support/designs.js';
 import { csvOf, type PipeRow, randomModel, randomRows } from '../support/random-model.js';
 import { type Predicted, parquetOf, rowsOf, scoreFile } from '../support/score-bench.js';
@@ -40,7 +41,9 @@ function expected(model: ModelDocument, rows: readonly PipeRow[]): { eta: number
   const raw = soundValue(buildRawShard(spec, table));
   expect(raw.columns).toEqual(model.coefficients.map(({ name }) => name));
   return rows.map((_, row) => {
-    const parts = model.coefficients.map(({ value }, j) => raw.x[row * raw.columns.length + j] * value);
+    const parts = model.coefficients.map(
+      ({ value }, j) => entriesOf(raw)[row * raw.columns.length + j] * value,
+    );
     const all = [...parts, model.intercept ?? 0, raw.offset?.[row] ?? 0];
     return {
       eta: all.reduce((sum, part) => sum + part, 0),

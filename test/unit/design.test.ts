@@ -4,6 +4,7 @@ import { tableRequest } from '../../worker/design/request.js';
 import { scaleShard } from '../../worker/design/scale.js';
 import { surveyOf } from '../../worker/design/survey.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { entriesOf } from '../support/dense.js';
 import { levelsTerm, numericTerm, specification, table } from '../support/designs.js';
 import { failureOf, soundValue } from '../support/tables.js';
 
@@ -61,7 +62,7 @@ describe('the design', () => {
     const data = table({ y: [1, 2], d: [4, 9], age: [-3, 5] }, materials(0, 1));
     const raw = soundValue(buildRawShard(spec, data));
     expect(raw.columns).toHaveLength(5);
-    expect(raw.x).toEqual(Float64Array.of(Math.log(4), 2, 16, 0, 0, Math.log(9), 3, 81, 1, 5));
+    expect(entriesOf(raw)).toEqual(Float64Array.of(Math.log(4), 2, 16, 0, 0, Math.log(9), 3, 81, 1, 5));
     expect(raw.y).toEqual(Float64Array.of(1, 2));
     expect(raw.weights).toBeNull();
     expect(raw.offset).toBeNull();
@@ -202,7 +203,7 @@ describe('scaling', () => {
   test('with an intercept, ones come first', () => {
     const shard = scaleShard(raw, scaling, true);
     expect(shard.p).toBe(3);
-    expect(shard.x).toEqual(Float64Array.of(1, -0.5, -1, 1, 0.5, 1));
+    expect(entriesOf(shard)).toEqual(Float64Array.of(1, -0.5, -1, 1, 0.5, 1));
     expect(shard.rowCountTotal).toBe(20);
     expect(shard.y).toEqual(raw.y);
   });
@@ -210,6 +211,6 @@ describe('scaling', () => {
   test('without one, only the columns kept', () => {
     const shard = scaleShard(raw, scaling, false);
     expect(shard.p).toBe(2);
-    expect(shard.x).toEqual(Float64Array.of(-0.5, -1, 0.5, 1));
+    expect(entriesOf(shard)).toEqual(Float64Array.of(-0.5, -1, 0.5, 1));
   });
 });

@@ -2,6 +2,7 @@ import { expect, test } from 'vitest';
 import { seededRandom } from '../../numerics/random.js';
 import type { EvaluateWork } from '../../protocol/messages/evaluate.js';
 import type { Part } from '../../protocol/messages/part.js';
+import { RawDenseRows } from '../../worker/design/dense-rows.js';
 import type { RawShard } from '../../worker/design/shard.js';
 import { siteSolvers } from '../../worker/local/site-solvers.js';
 import { lossOf } from '../../worker/losses/index.js';
@@ -17,7 +18,7 @@ const RAW: RawShard = {
   rowCount: ROWS,
   rowsDropped: 0,
   columns: ['a', 'b', 'c'],
-  x: normals(ROWS * WIDTH),
+  rows: new RawDenseRows(normals(ROWS * WIDTH), WIDTH, ROWS),
   y: Float64Array.from({ length: ROWS }, () => random.integer(2)),
   weights: null,
   offset: null,

@@ -5,6 +5,7 @@ import { buildRawShard } from '../../worker/design/build.js';
 import { rowHash } from '../../worker/design/folds.js';
 import { surveyOf } from '../../worker/design/survey.js';
 import { lossOf } from '../../worker/losses/index.js';
+import { entriesOf } from '../support/dense.js';
 import { numericTerm, specification, table } from '../support/designs.js';
 import { failureOf, soundValue } from '../support/tables.js';
 import { OPEN_POLICY } from '../support/worker-site.js';
@@ -35,7 +36,9 @@ function foldsOf(rows: readonly number[], choose: Choice, rowNumbers?: readonly 
   const spec = specification({ choose, terms: [numericTerm('a')] });
   const raw = soundValue(buildRawShard(spec, table({ y: rows, a: rows }, {}, rowNumbers)));
   const { labels, starts } = raw.folds ?? { labels: [], starts: [] };
-  return Object.fromEntries(labels.map((label, k) => [label, [...raw.x.subarray(starts[k], starts[k + 1])]]));
+  return Object.fromEntries(
+    labels.map((label, k) => [label, [...entriesOf(raw).subarray(starts[k], starts[k + 1])]]),
+  );
 }
 
 describe('folds by a seeded hash', () => {

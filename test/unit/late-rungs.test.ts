@@ -5,11 +5,13 @@ import { lateProximalRung } from '../../coordinator/consensus/late-proximal-rung
 import type { ConsensusProblem } from '../../coordinator/consensus/problem.js';
 import { noPenalty } from '../../numerics/penalty.js';
 import { seededRandom } from '../../numerics/random.js';
+import { denseShard } from '../../worker/design/dense-rows.js';
 import type { Shard } from '../../worker/design/shard.js';
 import { localSolver } from '../../worker/local/local-solver.js';
 import { type LateRun, simulateLate } from '../bench/late-simulation.js';
 import { benchLoss, consensusProblem } from '../bench/measure.js';
 import { type BenchProblem, makeProblem } from '../bench/problems.js';
+import { entriesOf } from '../support/dense.js';
 
 const SLOW = 5;
 const LATE: LateBarrier = {
@@ -105,9 +107,10 @@ describe('ends other than solved', () => {
   const unpenalised = (change: (x: Float64Array, y: Float64Array, p: number) => void): BenchProblem => {
     const made = makeProblem('logistic few ridge random 8');
     const changed = (shard: Shard): Shard => {
-      const own = { ...shard, x: Float64Array.from(shard.x), y: Float64Array.from(shard.y) };
-      change(own.x, own.y, own.p);
-      return own;
+      const x = Float64Array.from(entriesOf(shard));
+      const y = Float64Array.from(shard.y);
+      change(x, y, shard.p);
+      return denseShard({ ...shard, x, y });
     };
     return {
       ...made,

@@ -2,6 +2,7 @@ import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import { designColumns } from '../../protocol/specification/design-columns.js';
 import type { DesignColumn, FitSpecification } from '../../protocol/specification/types.js';
 import type { LevelColumn, Table } from '../source/table.js';
+import { RawDenseRows } from './dense-rows.js';
 import { type FactorsByKey, factorValues, fillDesign, levelColumn, valuesOf } from './factors.js';
 import { clustersOf, foldsOf } from './folds.js';
 import { groupedByFold } from './group-rows.js';
@@ -42,7 +43,7 @@ export function buildRawShard(spec: FitSpecification, table: Table): Checked<Raw
     rowCount: table.rowCount,
     rowsDropped: table.rowsDropped,
     columns: columns.map((column) => column.name),
-    x,
+    rows: new RawDenseRows(x, columns.length, table.rowCount),
     ...response.value,
     folds: null,
     clusters: clusters === null ? null : { count: clusters.labels.length, ofRow: clusters.ofRow },

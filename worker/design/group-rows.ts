@@ -9,11 +9,11 @@ import type { FoldRanges, RawShard } from './shard.js';
 export function groupedByFold(raw: RawShard, { labels, ofRow }: Labelled): RawShard {
   const starts = startsOf(labels.length, ofRow);
   const order = orderOf(starts, ofRow);
-  reorderRows(raw.x, raw.columns.length, order);
   const { y, weights, offset, clusters, margins } = raw;
   const folds: FoldRanges = { labels, starts };
   return {
     ...raw,
+    rows: raw.rows.reordered(order),
     y: gathered(y, order),
     weights: weights === null ? null : gathered(weights, order),
     offset: offset === null ? null : gathered(offset, order),
@@ -46,24 +46,6 @@ function orderOf(starts: readonly number[], ofRow: Int32Array): Int32Array {
   const order = new Int32Array(ofRow.length);
   for (let row = 0; row < ofRow.length; row++) order[next[ofRow[row]]++] = row;
   return order;
-}
-
-/** Rows of a row-major matrix in the order given, in place: cycle by cycle, with room for one row. */
-function reorderRows(x: Float64Array, width: number, order: Int32Array): void {
-  const placed = new Uint8Array(order.length);
-  const kept = new Float64Array(width);
-  for (let first = 0; first < order.length; first++) {
-    if (placed[first] === 1) continue;
-    kept.set(x.subarray(first * width, (first + 1) * width));
-    let to = first;
-    while (order[to] !== first) {
-      x.copyWithin(to * width, order[to] * width, (order[to] + 1) * width);
-      placed[to] = 1;
-      to = order[to];
-    }
-    x.set(kept, to * width);
-    placed[to] = 1;
-  }
 }
 
 function gathered(values: Float64Array, order: Int32Array): Float64Array {

@@ -1,33 +1,26 @@
-import type { Kernel } from '../../numerics/kernels/kernel.js';
 import type { DesignColumn } from '../../protocol/specification/types.js';
 import type { LevelColumn } from '../source/table.js';
+import type { DesignRows, RawRows, RowData } from './rows.js';
 
 /**
  * What the local solvers work on: the shard's rows as solver columns. Pure data, no names.
  *
- * x is row-major, rowCount × p; column 0 is the intercept (ones) where the model has one; the others are
- * (design column − center) / scale. φ(θ) = (1/N) Σ w · loss(y, offset + xθ) with N = rowCountTotal.
+ * Column 0 is the intercept (ones) where the model has one; the others are (design column − center) / scale.
+ * φ(θ) = (1/N) Σ w · loss(y, offset + xθ) with N = rowCountTotal.
  */
-export interface Shard {
+export interface Shard extends RowData {
   readonly rowCount: number;
   readonly p: number;
-  readonly x: Float64Array;
-  readonly y: Float64Array;
-  /** Null: every weight is 1, every offset 0. */
-  readonly weights: Float64Array | null;
-  readonly offset: Float64Array | null;
-  /** N, over all sites. */
-  readonly rowCountTotal: number;
-  /** What passes over the rows are computed with; the plain one where none is named. */
-  readonly kernel?: Kernel;
+  readonly rows: DesignRows;
 }
 
-/** The shard before the pooled scaling is known: design columns as the specification defines them, row-major, no intercept. */
+/** The shard before the pooled scaling is known. */
 export interface RawShard {
   readonly rowCount: number;
   readonly rowsDropped: number;
+  /** Names of the design columns. */
   readonly columns: readonly string[];
-  readonly x: Float64Array;
+  readonly rows: RawRows;
   readonly y: Float64Array;
   readonly weights: Float64Array | null;
   readonly offset: Float64Array | null;

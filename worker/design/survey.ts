@@ -4,60 +4,24 @@ import type { RawShard } from './shard.js';
 
 /**
  * What a site brings, over the rows used and over those in each fold: unweighted mean and centred sum of squares of each
- * design column, the sums of the response; and remarks. Two passes with the correction of Chan, Golub and LeVeque (1983, Am. Stat. 37:242), whose
- * error does not grow with the size of the mean.
+ * design column, the sums of the response; and remarks.
  */
 export function surveyOf(raw: RawShard, loss: Loss): Omit<SurveyAnswer, 'work' | 'allowance'> {
-  const { constant, ...moments } = momentsOf(raw, 0, raw.rowCount);
+  const { constant, ...moments } = raw.rows.moments(0, raw.rowCount);
   const { labels, starts } = raw.folds ?? { labels: [], starts: [] };
   return {
     ...moments,
+    rowsUsed: raw.rowCount,
     rowsDropped: raw.rowsDropped,
     columns: [...raw.columns],
     response: responseSums(raw, loss, 0, raw.rowCount),
     folds: labels.map((fold, k) => {
       const [from, to] = [starts[k], starts[k + 1]];
-      const { rowsUsed, mean, centredSquares } = momentsOf(raw, from, to);
-      return { fold, rowsUsed, mean, centredSquares, response: responseSums(raw, loss, from, to) };
+      const { mean, centredSquares } = raw.rows.moments(from, to);
+      return { fold, rowsUsed: to - from, mean, centredSquares, response: responseSums(raw, loss, from, to) };
     }),
     notes: notesOf(raw, constant),
   };
-}
-
-/** Over the rows from ≤ r < to, at least one. */
-function momentsOf(
-  raw: RawShard,
-  from: number,
-  to: number,
-): { rowsUsed: number; mean: Float64Array; centredSquares: Float64Array; constant: boolean[] } {
-  const rowCount = to - from;
-  const { columns } = raw;
-  const p = columns.length;
-  const x = raw.x.subarray(from * p, to * p);
-  const mean = new Float64Array(p);
-  for (let at = 0; at < x.length; at += p) for (let j = 0; j < p; j++) mean[j] += x[at + j];
-  for (let j = 0; j < p; j++) mean[j] /= rowCount;
-  const rest = new Float64Array(p);
-  const centredSquares = new Float64Array(p);
-  const constant = columns.map(() => true);
-  for (let at = 0; at < x.length; at += p)
-    for (let j = 0; j < p; j++) {
-      const away = x[at + j] - mean[j];
-      rest[j] += away;
-      centredSquares[j] += away * away;
-      if (x[at + j] !== x[j]) constant[j] = false;
-    }
-  for (let j = 0; j < p; j++) {
-    // a constant column has no spread at all, which rounding of the mean must not hide
-    if (constant[j]) {
-      mean[j] = x[j];
-      centredSquares[j] = 0;
-      continue;
-    }
-    centredSquares[j] = Math.max(0, centredSquares[j] - (rest[j] * rest[j]) / rowCount);
-    mean[j] += rest[j] / rowCount;
-  }
-  return { rowsUsed: rowCount, mean, centredSquares, constant };
 }
 
 function responseSums(

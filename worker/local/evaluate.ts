@@ -6,7 +6,7 @@ import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
 import { notFinite } from './failures.js';
 import type { Quadratic } from './quadratic.js';
-import { kernelOf, rowCurvatures, rowState } from './row-pass.js';
+import { rowCurvatures, rowState } from './row-pass.js';
 
 export interface Evaluation {
   readonly value: number;
@@ -67,14 +67,14 @@ function passesAt(shard: Shard, loss: Loss, asked: readonly AskedPoint[]): Passe
     state: want === 'diagonal' || want === 'curvature' ? rowState(shard.rowCount) : null,
     gradient: want === 'value' ? null : new Float64Array(shard.p),
   }));
-  const passed = kernelOf(shard).passes(shard, loss, points);
+  const passed = shard.rows.passes(shard, loss, points);
   return points.map(({ state, gradient }, k) => {
     return { want: asked[k].want, value: passed[k].value, gradient, eta: state?.eta ?? null };
   });
 }
 
 function evaluationAt(shard: Shard, loss: Loss, squares: Quadratic | null, at: Passed): Checked<Evaluation> {
-  const { p, rowCount, x } = shard;
+  const { p, rowCount, rows } = shard;
   const { want, gradient } = at;
   if (Number.isNaN(at.value) || at.value === Number.NEGATIVE_INFINITY) return notFinite('The loss');
   const value = Math.min(at.value, VALUE_MOST);
@@ -82,12 +82,10 @@ function evaluationAt(shard: Shard, loss: Loss, squares: Quadratic | null, at: P
   let diagonal: Float64Array | null = null;
   let curvature: Float64Array | null = null;
   if (at.eta !== null) {
-    const kernel = kernelOf(shard);
     const weights = rowCurvatures(shard, loss, at.eta);
     diagonal = new Float64Array(p);
-    kernel.addWeightedSquares(x, p, 0, rowCount, weights, diagonal);
-    if (want === 'curvature')
-      curvature = packSymmetric(squares?.gram() ?? kernel.weightedGram(x, rowCount, p, weights, 1), p);
+    rows.addWeightedSquares(0, rowCount, weights, diagonal);
+    if (want === 'curvature') curvature = packSymmetric(squares?.gram() ?? rows.gram(weights, 1), p);
     if (!allFinite(diagonal) || (curvature !== null && !allFinite(curvature)))
       return notFinite('The curvature');
   }

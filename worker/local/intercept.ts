@@ -1,6 +1,6 @@
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
-import { kernelOf, rowCurvatures } from './row-pass.js';
+import { rowCurvatures } from './row-pass.js';
 
 /**
  * The intercept of a site's own. The shard has the ones of the intercept as its first column, and one more column than
@@ -17,11 +17,11 @@ const REACH = 2 ** 20;
 
 /** Coefficients of the shard's columns where the intercept is best for θ; ±∞ first where no finite one is. */
 export function atBestIntercept(shard: Shard, loss: Loss, theta: Float64Array): Float64Array {
-  const { rowCount, p, x, offset } = shard;
+  const { rowCount, p, rows, offset } = shard;
   const point = new Float64Array(p);
   point.set(theta, 1);
   const eta = new Float64Array(rowCount);
-  kernelOf(shard).rowProducts(x, p, 0, rowCount, point, eta);
+  rows.products(0, rowCount, point, eta);
   if (offset !== null) for (let r = 0; r < rowCount; r++) eta[r] += offset[r];
   point[0] = isInformative(shard, loss) ? bestShift(shard, loss, eta) : limitOf(shard, loss);
   return point;
@@ -103,9 +103,9 @@ function slopeAt(
  * theorem). Zeros where no row has curvature.
  */
 export function curvatureMeans(shard: Shard, loss: Loss, eta: Float64Array): Float64Array {
-  const { p, rowCount, x } = shard;
+  const { p, rowCount, rows } = shard;
   const means = new Float64Array(p);
-  kernelOf(shard).addWeightedRows(x, p, 0, rowCount, rowCurvatures(shard, loss, eta), means);
+  rows.addWeighted(0, rowCount, rowCurvatures(shard, loss, eta), means);
   const total = means[0];
   for (let j = 0; j < p; j++) means[j] = total > 0 ? means[j] / total : 0;
   return means;

@@ -9,7 +9,7 @@ import type { Loss } from '../losses/loss.js';
 import { evaluate } from './evaluate.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
 import type { Quadratic } from './quadratic.js';
-import { kernelOf, rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { rowCurvatures, rowPass, rowState } from './row-pass.js';
 
 /** The other sites: ½ xᵀBx − cᵀx, B packed. */
 export interface Others {
@@ -128,7 +128,7 @@ function takeStep(place: Workplace, from: Iterate, curvature: Float64Array): Che
   const model = modelAt(place, from, curvature);
   let definite = false;
   for (const share of RIDGES) {
-    const point = minimiserOf(kernelOf(place.shard), place.penalty, model, share * model.largest, from.x);
+    const point = minimiserOf(place.shard.rows.kernel, place.penalty, model, share * model.largest, from.x);
     if (point === null) continue;
     definite = true;
     const step = subtract(point, from.x);
@@ -156,10 +156,7 @@ function quadraticAt({ shard, loss, squares }: JointProblem, x: Float64Array): C
 
 /** ∇²φ in full at the point of the last pass. */
 function curvatureAt({ shard, loss, squares, rows }: Workplace): Float64Array {
-  const { x, rowCount, p } = shard;
-  return (
-    squares?.gram() ?? kernelOf(shard).weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1)
-  );
+  return squares?.gram() ?? shard.rows.gram(rowCurvatures(shard, loss, rows.eta), 1);
 }
 
 /** ½ zᵀ(B + H)z − rightᵀz: the others and the second-order model of φ at x, without constants. */
@@ -250,6 +247,6 @@ function iterateAt(place: Workplace, x: Float64Array): Iterate {
 /** A x, A symmetric, row-major. */
 function times(shard: Shard, matrix: Float64Array, x: Float64Array): Float64Array {
   const out = new Float64Array(x.length);
-  kernelOf(shard).rowProducts(matrix, x.length, 0, x.length, x, out);
+  shard.rows.kernel.rowProducts(matrix, x.length, 0, x.length, x, out);
   return out;
 }

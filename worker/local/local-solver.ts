@@ -10,7 +10,7 @@ import { notFinite, notPositiveDefinite } from './failures.js';
 import { type JointEnd, jointSteps, type Others } from './joint.js';
 import { type NewtonEnd, type NewtonLimits, newtonProximal } from './newton.js';
 import { type Quadratic, quadratic, targetOf, weightOf } from './quadratic.js';
-import { kernelOf, rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { rowCurvatures, rowPass, rowState } from './row-pass.js';
 
 /**
  * What a worker computes on its rows. p is the number of solver columns; every vector has p numbers unless stated. The
@@ -112,7 +112,7 @@ function ownFit(
   point: Float64Array,
   hold: number,
 ): Checked<{ curvature: Float64Array; linear: Float64Array }> {
-  const { p, rowCount, x } = shard;
+  const { p, rowCount } = shard;
   if (rowCount === 0)
     return succeed({ curvature: new Float64Array((p * (p + 1)) / 2), linear: new Float64Array(p) });
   const there = evaluate(shard, loss, null, point, 'diagonal');
@@ -125,7 +125,7 @@ function ownFit(
   const rows = rowState(rowCount);
   const linear = new Float64Array(p);
   rowPass(shard, loss, fit.value.point, rows, linear);
-  const full = kernelOf(shard).weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
+  const full = shard.rows.gram(rowCurvatures(shard, loss, rows.eta), 1);
   for (let j = 0; j < p; j++) {
     let sum = 0;
     for (let k = 0; k < p; k++) sum += full[j * p + k] * fit.value.point[k];
@@ -144,19 +144,18 @@ export function sketch(
   directions: Float64Array,
   columns: number,
 ): Checked<Float64Array> {
-  const { p, x, rowCount } = shard;
+  const { p, rowCount } = shard;
   const products = new Float64Array(columns * p);
   const rows = rowState(rowCount);
   rowPass(shard, loss, point, rows, null);
   const weights = rowCurvatures(shard, loss, rows.eta);
-  const kernel = kernelOf(shard);
   for (let from = 0; from < rowCount; from += SKETCH_BLOCK_ROWS) {
     const to = Math.min(from + SKETCH_BLOCK_ROWS, rowCount);
     const along = new Float64Array(to - from);
     for (let k = 0; k < columns; k++) {
-      kernel.rowProducts(x, p, from, to, directions.subarray(k * p, (k + 1) * p), along);
+      shard.rows.products(from, to, directions.subarray(k * p, (k + 1) * p), along);
       for (let r = from; r < to; r++) along[r - from] *= weights[r];
-      kernel.addWeightedRows(x, p, from, to, along, products.subarray(k * p, (k + 1) * p));
+      shard.rows.addWeighted(from, to, along, products.subarray(k * p, (k + 1) * p));
     }
   }
   return allFinite(products) ? succeed(products) : notFinite('The sketch of the curvature');
@@ -175,16 +174,18 @@ function quadraticOwnFit(
 }
 
 export function factor(shard: Shard): Checked<Float64Array> {
-  const { p, rowCount, x } = shard;
+  const { p, rowCount } = shard;
   const columns = p + 1;
-  const accumulator = kernelOf(shard).factorAccumulator(columns);
+  const accumulator = shard.rows.kernel.factorAccumulator(columns);
   const block = new Float64Array(FACTOR_BLOCK_ROWS * columns);
+  const x = new Float64Array(FACTOR_BLOCK_ROWS * p);
   for (let from = 0; from < rowCount; from += FACTOR_BLOCK_ROWS) {
     const to = Math.min(from + FACTOR_BLOCK_ROWS, rowCount);
+    shard.rows.copy(from, to, x);
     for (let r = from; r < to; r++) {
       const root = Math.sqrt(weightOf(shard, r));
       const row = (r - from) * columns;
-      for (let j = 0; j < p; j++) block[row + j] = root * x[r * p + j];
+      for (let j = 0; j < p; j++) block[row + j] = root * x[(r - from) * p + j];
       block[row + p] = root * targetOf(shard, r);
     }
     accumulator.append(block, to - from);

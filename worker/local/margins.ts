@@ -9,7 +9,6 @@ import type { Table } from '../source/table.js';
 import { type AtPoint, atPoint, byCoefficients } from './at-point.js';
 import { notFinite } from './failures.js';
 import type { PartSolvers } from './part-solvers.js';
-import { kernelOf } from './row-pass.js';
 
 type Setting = MarginsWork['settings'][number];
 type Sum = MarginsAnswer['settings'][number];
@@ -90,7 +89,7 @@ function levelSum(
   { column, level }: Extract<Setting, { set: 'level' }>,
 ): Sum {
   const { p, rowCount } = shard;
-  const kernel = kernelOf(shard);
+  const { kernel } = shard.rows;
   const gradient = new Float64Array(p);
   let sum = 0;
   const code = made.levels.get(column)?.levels.indexOf(level) ?? -1;
@@ -101,7 +100,8 @@ function levelSum(
     const table = tableOf(made, from, to, { column, code });
     const design = new Float64Array(rows * columns.length);
     fillDesign(design, columns, factorValues(columns, table), rows);
-    const x = shard.x.slice(from * p, to * p);
+    const x = new Float64Array(rows * p);
+    shard.rows.copy(from, to, x);
     changed.forEach(({ place, center, scale }, k) => {
       for (let r = 0; r < rows; r++) x[r * p + place] = (design[r * columns.length + k] - center) / scale;
     });
@@ -124,7 +124,7 @@ function slopeSum(
   changed: readonly Changed[],
   column: string,
 ): Sum {
-  const { p, rowCount, x } = shard;
+  const { p, rowCount } = shard;
   const gradient = new Float64Array(p);
   let sum = 0;
   const columns = changed.map((one) => one.column);
@@ -145,7 +145,7 @@ function slopeSum(
       sum += meanSlope * along;
       bends[r - from] = loss.meanBend(eta[r]) * along;
     }
-    kernelOf(shard).addWeightedRows(x, p, from, to, bends, gradient);
+    shard.rows.addWeighted(from, to, bends, gradient);
     addScaled(gradient, 1, direct);
   }
   return { sum, gradient };

@@ -1,7 +1,6 @@
 import type { CholeskyFactor, RowState } from '../../numerics/kernels/kernel.js';
 import { maxOf } from '../../numerics/vector.js';
 import type { Shard } from '../design/shard.js';
-import { kernelOf } from './row-pass.js';
 import { inRowSpace, pointFromRows, rowFactor, rowKernel } from './row-space.js';
 
 /** Where the next Newton step starts from. */
@@ -30,13 +29,13 @@ export const newtonSystem = (shard: Shard, metric: Float64Array, center: Float64
 const LIFT = 1e-12;
 
 function denseSystem(shard: Shard, metric: Float64Array): NewtonSystem {
-  const { rowCount, p, x } = shard;
-  const kernel = kernelOf(shard);
+  const { rowCount, p } = shard;
+  const { kernel } = shard.rows;
   let factor: CholeskyFactor | null = null;
   return {
     passesPerRefresh: p / 4 + (p * p) / (6 * rowCount),
     refresh(curvatures) {
-      const a = kernel.weightedGram(x, rowCount, p, curvatures, 1);
+      const a = shard.rows.gram(curvatures, 1);
       const diagonal = new Float64Array(p);
       for (let j = 0; j < p; j++) {
         a[j * p + j] += metric[j];
@@ -62,11 +61,11 @@ function denseSystem(shard: Shard, metric: Float64Array): NewtonSystem {
  * what may vanish), τ = 0 in the others (no cancellation where slopes are huge).
  */
 function rowSpaceSystem(shard: Shard, metric: Float64Array, center: Float64Array): NewtonSystem {
-  const { rowCount, p, x, offset } = shard;
-  const kernel = kernelOf(shard);
+  const { rowCount, p, offset } = shard;
+  const { kernel } = shard.rows;
   const products = rowKernel(shard, metric);
   const atCenter = new Float64Array(rowCount);
-  kernel.rowProducts(x, p, 0, rowCount, center, atCenter);
+  shard.rows.products(0, rowCount, center, atCenter);
   const shifted = new Float64Array(rowCount);
   const right = new Float64Array(rowCount);
   let roots: Float64Array = new Float64Array(rowCount);
@@ -93,7 +92,7 @@ function rowSpaceSystem(shard: Shard, metric: Float64Array, center: Float64Array
       const alpha = solved(factor, right);
       for (let r = 0; r < rowCount; r++) alpha[r] = roots[r] * alpha[r] - shifted[r];
       const pulled = new Float64Array(p);
-      kernel.addWeightedRows(x, p, 0, rowCount, alpha, pulled);
+      shard.rows.addWeighted(0, rowCount, alpha, pulled);
       const target = pointFromRows(shard, metric, center, pulled);
       for (let j = 0; j < p; j++) target[j] -= at[j];
       return target;

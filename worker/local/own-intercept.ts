@@ -2,6 +2,7 @@ import { packSymmetric } from '../../numerics/packed.js';
 import { maxOf } from '../../numerics/vector.js';
 import { type Checked, succeed } from '../../protocol/failure.js';
 import type { Want } from '../../protocol/messages/evaluate.js';
+import { denseShard } from '../design/dense-rows.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
 import { type AskedPoint, type Evaluation, evaluate, evaluateSteps } from './evaluate.js';
@@ -58,16 +59,17 @@ export function heldOutValue(
 
 const NOTHING: Evaluation = { value: 0, gradient: null, diagonal: null, curvature: null };
 
-const withoutRows = ({ p, rowCountTotal, kernel }: Shard): Shard => ({
-  rowCount: 0,
-  p: p - 1,
-  x: new Float64Array(0),
-  y: new Float64Array(0),
-  weights: null,
-  offset: null,
-  rowCountTotal,
-  kernel,
-});
+const withoutRows = ({ p, rowCountTotal, rows: { kernel } }: Shard): Shard =>
+  denseShard({
+    rowCount: 0,
+    p: p - 1,
+    x: new Float64Array(0),
+    y: new Float64Array(0),
+    weights: null,
+    offset: null,
+    rowCountTotal,
+    kernel,
+  });
 
 const afterZero = (values: Float64Array): Float64Array => {
   const out = new Float64Array(values.length + 1);

@@ -4,7 +4,6 @@ import { type Checked, succeed } from '../../protocol/failure.js';
 import type { Shard } from '../design/shard.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
 import { metricCache } from './metric-cache.js';
-import { kernelOf } from './row-pass.js';
 import { inRowSpace, pointFromRows, rowFactor, rowKernel } from './row-space.js';
 
 /** Squared loss on one shard: φ(θ) = ½ θᵀGθ − cᵀθ + constant, G and c computed once. */
@@ -21,8 +20,8 @@ export function quadratic(shard: Shard): Quadratic {
   let gramKept: Float64Array | null = null;
   let linearKept: Float64Array | null = null;
   const gram = (): Float64Array => {
-    const { x, rowCount, p, weights, rowCountTotal } = shard;
-    gramKept ??= kernelOf(shard).weightedGram(x, rowCount, p, weights, 1 / rowCountTotal);
+    const { rows, weights, rowCountTotal } = shard;
+    gramKept ??= rows.gram(weights, 1 / rowCountTotal);
     return gramKept;
   };
   const linear = (): Float64Array => {
@@ -50,7 +49,7 @@ function denseSolve(shard: Shard, gram: () => Float64Array, linear: () => Float6
     const factor = factors(metric, () => {
       const a = Float64Array.from(gram());
       for (let j = 0; j < p; j++) a[j * p + j] += metric[j];
-      return kernelOf(shard).factorise(a, p);
+      return shard.rows.kernel.factorise(a, p);
     });
     if (factor === null) return null;
     const right = Float64Array.from(linear());
@@ -61,19 +60,19 @@ function denseSolve(shard: Shard, gram: () => Float64Array, linear: () => Float6
 
 /** x = center + M⁻¹XᵀS a with (I + SKS) a = S (y − offset − X center), S = √(W/N): nothing cancels. */
 function rowSpaceSolve(shard: Shard): Solve {
-  const { rowCount, p, x } = shard;
+  const { rowCount, p } = shard;
   const roots = Float64Array.from({ length: rowCount }, (_, r) => Math.sqrt(weightOf(shard, r)));
   const factors = metricCache<CholeskyFactor | null>(8 * rowCount * rowCount);
   return (center, metric) => {
     const factor = factors(metric, () => rowFactor(shard, rowKernel(shard, metric), roots));
     if (factor === null) return null;
     const right = new Float64Array(rowCount);
-    kernelOf(shard).rowProducts(x, p, 0, rowCount, center, right);
+    shard.rows.products(0, rowCount, center, right);
     for (let r = 0; r < rowCount; r++) right[r] = roots[r] * (targetOf(shard, r) - right[r]);
     const alpha = factor.solve(right);
     for (let r = 0; r < rowCount; r++) alpha[r] *= roots[r];
     const pulled = new Float64Array(p);
-    kernelOf(shard).addWeightedRows(x, p, 0, rowCount, alpha, pulled);
+    shard.rows.addWeighted(0, rowCount, alpha, pulled);
     return pointFromRows(shard, metric, center, pulled);
   };
 }
@@ -84,7 +83,7 @@ function linearPart(shard: Shard): Float64Array {
     (_, r) => weightOf(shard, r) * targetOf(shard, r),
   );
   const out = new Float64Array(shard.p);
-  kernelOf(shard).addWeightedRows(shard.x, shard.p, 0, shard.rowCount, weighted, out);
+  shard.rows.addWeighted(0, shard.rowCount, weighted, out);
   return out;
 }
 

@@ -2,6 +2,7 @@ import { unpackSymmetric } from '../../numerics/packed.js';
 import { dot } from '../../numerics/vector.js';
 import { type Checked, succeed } from '../../protocol/failure.js';
 import type { QualityAnswer, QualityWork } from '../../protocol/messages/quality.js';
+import { eachRow } from '../design/rows.js';
 import { type AtPoint, atPoint, pearsonResidual } from './at-point.js';
 import { notFinite } from './failures.js';
 import type { PartSolvers } from './part-solvers.js';
@@ -114,7 +115,7 @@ function leverages(
   inverse: Float64Array,
   high: number,
 ): NonNullable<QualityAnswer['leverage']> {
-  const { x, rowCount, p } = shard;
+  const { p } = shard;
   const full = unpackSymmetric(inverse);
   const width = p - (means === null ? 0 : 1);
   const curvatures = rowCurvatures(shard, loss, rows.eta);
@@ -124,8 +125,8 @@ function leverages(
   let sum = 0;
   let most = 0;
   let rowsHigh = 0;
-  for (let r = 0; r < rowCount; r++) {
-    const from = r * p + (p - width);
+  eachRow(shard.rows, (x, start, r) => {
+    const from = start + (p - width);
     for (let j = 0; j < width; j++) away[j] = x[from + j] - (means === null ? 0 : means[j + 1]);
     let square = own;
     for (let i = 0; i < width; i++) square += away[i] * dot(full.subarray(i * width, (i + 1) * width), away);
@@ -133,7 +134,7 @@ function leverages(
     sum += leverage;
     most = Math.max(most, leverage);
     if (leverage > high) rowsHigh++;
-  }
+  });
   return { sum, most, rowsHigh };
 }
 

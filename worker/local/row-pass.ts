@@ -1,5 +1,4 @@
-import type { Kernel, PassValue, RowState } from '../../numerics/kernels/kernel.js';
-import { plainKernel } from '../../numerics/kernels/plain.js';
+import type { PassValue, RowState } from '../../numerics/kernels/kernel.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
 
@@ -8,8 +7,6 @@ export const rowState = (rowCount: number): RowState => ({
   eta: new Float64Array(rowCount),
   slopes: new Float64Array(rowCount),
 });
-
-export const kernelOf = ({ kernel }: Shard): Kernel => kernel ?? plainKernel;
 
 /**
  * One pass over the rows at θ: φ(θ), the rows' predictors and, with `gradient` given (it is overwritten), the slopes and
@@ -22,9 +19,9 @@ export function rowPass(
   state: RowState,
   gradient: Float64Array | null,
 ): PassValue {
-  return kernelOf(shard).passes(shard, loss, [{ theta, state, gradient }])[0];
+  return shard.rows.passes(shard, loss, [{ theta, state, gradient }])[0];
 }
 
 /** (w/N) · ∂²loss/∂η² of every row at the predictors given. */
 export const rowCurvatures = (shard: Shard, loss: Loss, eta: Float64Array): Float64Array =>
-  kernelOf(shard).curvatures(shard, loss, eta);
+  shard.rows.kernel.curvatures(shard, loss, eta);

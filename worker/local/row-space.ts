@@ -1,7 +1,5 @@
 import type { CholeskyFactor } from '../../numerics/kernels/kernel.js';
-import { transposed } from '../../numerics/rows.js';
 import type { Shard } from '../design/shard.js';
-import { kernelOf } from './row-pass.js';
 
 /**
  * Fewer rows than half the columns: n × n systems are cheaper than p × p ones. They divide by the metric, which must hold
@@ -11,11 +9,8 @@ export const inRowSpace = (shard: Shard, metric: Float64Array): boolean =>
   2 * shard.rowCount < shard.p && metric.every((held) => held > 0);
 
 /** K = X M⁻¹ Xᵀ, n × n, M = diag(metric). */
-export function rowKernel(shard: Shard, metric: Float64Array): Float64Array {
-  const inverse = metric.map((m) => 1 / m);
-  const { x, rowCount, p } = shard;
-  return kernelOf(shard).weightedGram(transposed(x, rowCount, p), p, rowCount, inverse, 1);
-}
+export const rowKernel = (shard: Shard, metric: Float64Array): Float64Array =>
+  shard.rows.crossProducts(metric.map((m) => 1 / m));
 
 /**
  * Cholesky factor of I + S K S, S = diag(roots): the row-space form of XᵀS²X + M (Woodbury 1950; Golub and Van Loan,
@@ -28,7 +23,7 @@ export function rowFactor(shard: Shard, kernel: Float64Array, roots: Float64Arra
     for (let j = 0; j < n; j++) a[i * n + j] = roots[i] * kernel[i * n + j] * roots[j];
     a[i * n + i] += 1;
   }
-  return kernelOf(shard).factorise(a, n);
+  return shard.rows.kernel.factorise(a, n);
 }
 
 /** center + M⁻¹ pulled, with pulled = Xᵀα. */

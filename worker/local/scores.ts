@@ -2,11 +2,11 @@ import { packSymmetric } from '../../numerics/packed.js';
 import { allFinite } from '../../numerics/vector.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { ScoresAnswer, ScoresWork } from '../../protocol/messages/scores.js';
+import { eachRow } from '../design/rows.js';
 import type { Clusters } from '../design/shard.js';
 import { type AtPoint, atPoint, byCoefficients, pearsonSum, productsByCoefficients } from './at-point.js';
 import { notFinite } from './failures.js';
 import type { PartSolvers } from './part-solvers.js';
-import { kernelOf } from './row-pass.js';
 
 /**
  * Sums of the rows' scores s = w · loss′ · x and of their products, row by row (White 1980) and summed within clusters
@@ -38,23 +38,19 @@ export function scores(
 
 /** (1/N) Σ s sᵀ; the slopes of a pass hold w · loss′ / N. */
 function meatOf(at: AtPoint): Float64Array {
-  const { x, rowCount, p, rowCountTotal } = at.shard;
+  const { rows, p, rowCountTotal } = at.shard;
   const squares = at.rows.slopes.map((slope) => slope * slope);
-  return productsByCoefficients(
-    at,
-    packSymmetric(kernelOf(at.shard).weightedGram(x, rowCount, p, squares, rowCountTotal), p),
-  );
+  return productsByCoefficients(at, packSymmetric(rows.gram(squares, rowCountTotal), p));
 }
 
 function clusteredMeat(at: AtPoint, { count, ofRow }: Clusters): Float64Array {
-  const { x, rowCount, p, rowCountTotal } = at.shard;
+  const { rows, p, rowCountTotal } = at.shard;
   const sums = new Float64Array(count * p);
-  for (let r = 0; r < rowCount; r++) {
+  eachRow(rows, (x, from, r) => {
     const to = ofRow[r] * p;
-    const from = r * p;
     const slope = at.rows.slopes[r];
     for (let j = 0; j < p; j++) sums[to + j] += slope * x[from + j];
-  }
-  const gram = kernelOf(at.shard).weightedGram(sums, count, p, null, rowCountTotal);
+  });
+  const gram = rows.kernel.weightedGram(sums, count, p, null, rowCountTotal);
   return productsByCoefficients(at, packSymmetric(gram, p));
 }

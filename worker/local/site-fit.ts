@@ -8,7 +8,7 @@ import { pearsonSum } from './at-point.js';
 import { atBestIntercept, isInformative } from './intercept.js';
 import { type NewtonEnd, type NewtonLimits, newtonProximal } from './newton.js';
 import type { PartSolvers } from './part-solvers.js';
-import { kernelOf, rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { rowCurvatures, rowPass, rowState } from './row-pass.js';
 
 const LIMITS: NewtonLimits = { stepsMost: 100, accuracy: 1e-14 };
 
@@ -62,21 +62,16 @@ export function siteFit(parts: PartSolvers, { problem, start }: SiteFitWork): Ch
 
 /** Columns that the rows with weight do not tell from earlier ones; the intercept comes first. */
 function dependentOf(shard: Shard): number[] {
-  const { x, rowCount, p, weights } = shard;
-  const gram = kernelOf(shard).weightedGram(x, rowCount, p, weights, 1);
+  const { rows, p, weights } = shard;
+  const gram = rows.gram(weights, 1);
   return dependentColumns(gram, p, [...Array(p).keys()]);
 }
 
 const rowsCounted = ({ rowCount, weights }: Shard): number =>
   weights === null ? rowCount : weights.filter((weight) => weight > 0).length;
 
-function columnsOf(shard: Shard, kept: readonly number[]): Shard {
-  const { x, rowCount, p } = shard;
-  if (kept.length === p) return shard;
-  const out = new Float64Array(rowCount * kept.length);
-  for (let r = 0, at = 0; r < rowCount; r++) for (const j of kept) out[at++] = x[r * p + j];
-  return { ...shard, p: kept.length, x: out };
-}
+const columnsOf = (shard: Shard, kept: readonly number[]): Shard =>
+  kept.length === shard.p ? shard : { ...shard, p: kept.length, rows: shard.rows.columns(kept) };
 
 /** The minimiser, or why there is none. */
 function minimum(shard: Shard, loss: Loss, start: Float64Array): Float64Array | string {
@@ -96,14 +91,13 @@ const words = ({ message }: Failure): string => `Its own fit cannot be found: ${
 
 /** The last step still moves coefficients along which curvature has all but gone. */
 function runsOff(shard: Shard, loss: Loss, start: Float64Array, { point, lastStep }: NewtonEnd): boolean {
-  const { x, p, rowCount } = shard;
+  const { p, rowCount } = shard;
   const rows = rowState(rowCount);
   const before = new Float64Array(p);
-  const kernel = kernelOf(shard);
   rowPass(shard, loss, start, rows, null);
-  kernel.addWeightedSquares(x, p, 0, rowCount, rowCurvatures(shard, loss, rows.eta), before);
+  shard.rows.addWeightedSquares(0, rowCount, rowCurvatures(shard, loss, rows.eta), before);
   rowPass(shard, loss, point, rows, null);
-  const gram = kernel.weightedGram(x, rowCount, p, rowCurvatures(shard, loss, rows.eta), 1);
+  const gram = shard.rows.gram(rowCurvatures(shard, loss, rows.eta), 1);
   const product = new Float64Array(p);
   for (let i = 0; i < p; i++) product[i] = dot(gram.subarray(i * p, (i + 1) * p), lastStep);
   return runawayColumns(lastStep, dot(lastStep, product), before).length > 0;
