@@ -8,57 +8,52 @@ ARG BASE=node:20-bookworm-slim
 
 FROM ${BASE} AS build
 WORKDIR /build
-COPY package.json package-lock.json ./
-RUN npm ci --no-audit --no-fund
-COPY tsconfig.json ./
-COPY protocol protocol
-COPY numerics numerics
-COPY coordinator coordinator
-COPY worker worker
-COPY examples examples
-RUN npm run build && find dist -name "*.map" -delete && npm prune --omit=dev --no-audit --no-fund
-COPY LICENSE README.md SECURITY.md ./
-# What each image holds under /app. Tables are read by workers alone: the coordinator has no table reader.
-RUN for image in coordinator worker; do \
+COPY . .
+# What each image holds, under /images. Tables are read by workers alone: the coordinator has no table reader. One layer, so
+# that what only the build needs is not kept.
+RUN npm ci --no-audit --no-fund --cache /tmp/npm \
+  && npm run build && find dist -name "*.map" -delete && npm prune --omit=dev --no-audit --no-fund --cache /tmp/npm \
+  && for image in coordinator worker; do \
     app=/images/$image; \
     mkdir -p $app/dist $app/protocol && cp -r node_modules package.json LICENSE README.md SECURITY.md $app/ \
-    && cp protocol/README.md protocol/messages.cddl $app/protocol/ \
-    && cp -r dist/protocol dist/numerics dist/$image $app/dist/ || exit 1; \
+    && cp protocol/README.md protocol/messages.cddl $app/protocol/ && cp examples/containers/health.sh $app/ \
+    && cp -r dist/protocol dist/numerics dist/$image $app/dist/ && chmod 755 $app/dist/$image/main.js || exit 1; \
   done \
   && rm -rf /images/coordinator/node_modules/@duckdb \
   && for image in coordinator worker; do \
     node examples/containers/third-party.mjs /images/$image/node_modules > /images/$image/THIRD-PARTY || exit 1; \
-  done
+  done \
+  && rm -rf node_modules /tmp/npm
 # What every process of ours runs as. Its folders belong to it, wherever a volume is mounted over them later.
 RUN mkdir -p /owned/state /owned/site /owned/table && chown -R 10001:10001 /owned
 
 FROM ${BASE} AS coordinator
 LABEL org.opencontainers.image.title="commonfit coordinator" org.opencontainers.image.licenses="Apache-2.0"
 ENV NODE_ENV=production COMMONFIT_URL=https://localhost:7443
-RUN printf '#!/bin/sh\nexec node /app/dist/coordinator/main.js "$@"\n' > /usr/local/bin/commonfit && chmod 755 /usr/local/bin/commonfit
 COPY --from=build /images/coordinator /app
+RUN ln -s /app/dist/coordinator/main.js /usr/local/bin/commonfit
 COPY --from=build --chown=10001:10001 /owned/state /state
 USER 10001:10001
 WORKDIR /state
 VOLUME /state
 EXPOSE 7443
 STOPSIGNAL SIGTERM
-HEALTHCHECK --interval=5s --timeout=15s --start-period=10s --retries=8 CMD ["node", "/app/dist/coordinator/main.js", "health"]
+HEALTHCHECK --interval=1s --timeout=30s --start-period=20s --retries=8 CMD ["sh", "/app/health.sh", "commonfit", "health"]
 ENTRYPOINT ["node", "/app/dist/coordinator/main.js"]
 CMD ["serve", "--listen", "0.0.0.0:7443", "--state", "/state", "--log", "plain", "--tls-cert", "/run/secrets/chain.pem", "--tls-key", "/run/secrets/key.pem"]
 
 FROM ${BASE} AS worker
 LABEL org.opencontainers.image.title="commonfit worker" org.opencontainers.image.licenses="Apache-2.0"
 ENV NODE_ENV=production COMMONFIT_HEARTBEAT_FILE=/tmp/heartbeat
-RUN printf '#!/bin/sh\nexec node /app/dist/worker/main.js "$@"\n' > /usr/local/bin/commonfit-worker && chmod 755 /usr/local/bin/commonfit-worker
 COPY --from=build /images/worker /app
+RUN ln -s /app/dist/worker/main.js /usr/local/bin/commonfit-worker
 COPY --from=build --chown=10001:10001 /owned/site /site
 COPY --from=build --chown=10001:10001 /owned/table /table
 USER 10001:10001
 WORKDIR /site
 VOLUME /site
 STOPSIGNAL SIGTERM
-HEALTHCHECK --interval=15s --timeout=15s --start-period=10s --retries=5 CMD ["node", "/app/dist/worker/main.js", "health"]
+HEALTHCHECK --interval=1s --timeout=30s --start-period=20s --retries=8 CMD ["sh", "/app/health.sh", "commonfit-worker", "health"]
 ENTRYPOINT ["node", "/app/dist/worker/main.js"]
 CMD ["join", "/site/site.yaml"]
 

@@ -46,7 +46,7 @@ class Scan {
   private items = 0;
   private depth = 0;
   /** Items still to come in each open array or map, outermost first. */
-  private readonly left = new Float64Array(LIMITS.nestingMost);
+  private readonly left: number[] = [];
   private readonly view: DataView;
 
   constructor(private readonly bytes: Uint8Array) {

@@ -5,15 +5,15 @@ export const LIMITS = {
   /** Deepest nesting of maps and arrays in one frame. */
   nestingMost: 12,
   /** Most elements in one array of a frame (vectors are byte strings, not arrays). */
-  elementsMost: 200_000,
+  elementsMost: 1_250_000,
   /** Most fields of one map: no message has nearly as many, and a reader pays dearly for names it does not know. */
   fieldsMost: 64,
   /** Most data items in one frame, map keys counted too. */
-  itemsMost: 1_000_000,
+  itemsMost: 2_500_000,
   /** Longest text string, in bytes of UTF-8: a fit specification fits. */
   textMost: 1_000_000,
   /** Most coefficients of one fit: their names travel in one array. */
-  coefficientsMost: 200_000,
+  coefficientsMost: 1_250_000,
   /** Most problems in one proximal work item, most points in one evaluate work item. */
   batchMost: 4096,
   /** Most folds of a cross-validation. */

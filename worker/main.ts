@@ -1,10 +1,12 @@
 #!/usr/bin/env node
 import { realpathSync } from 'node:fs';
+import { availableParallelism } from 'node:os';
 import { pathToFileURL } from 'node:url';
-import { Command, Option } from 'commander';
+import { Command, InvalidArgumentError, Option } from 'commander';
 import { KERNEL_NAMES } from '../numerics/kernels/kernel.js';
 import { SOFTWARE } from '../protocol/version.js';
 import { EXIT, type ExitCode, exitCodeTable } from './commands/exit-codes.js';
+import { bytesOfSize } from './service/size.js';
 
 /**
  * The custodian's command line. What a command does is imported when it runs, so that `--help` and a quick command do
@@ -44,6 +46,20 @@ function joinCommand(): Command {
         '--kernel <kernel>',
         'what computes over the rows (default: the fastest that this Node takes as it is)',
       ).choices(KERNEL_NAMES),
+    )
+    .addOption(
+      new Option(
+        '--threads <count>',
+        'how many share the work on the rows; the answers are the same to the bit',
+      )
+        .default(1)
+        .argParser(threadCount),
+    )
+    .addOption(
+      new Option(
+        '--memory <size>',
+        'how much of the rows is kept in memory, such as 512MB; what is more goes to disk, beside the site file (default: all in memory)',
+      ).argParser(memorySize),
     )
     .addOption(heartbeatOption('a file to write a sign of life into, for `commonfit-worker health`'))
     .action(
@@ -148,6 +164,23 @@ function scoreCommand(): Command {
     more: 'Adds "prediction" (the expected response) and "linear_predictor" to each row, in the order of the table.\nWithout --flag-rows the first row that cannot be scored ends the work, and nothing is written.\nA prediction is an estimate; decisions belong to licensed practice and local codes.',
     exits: [EXIT.document, EXIT.table, EXIT.machine, EXIT.flagged, EXIT.interrupted],
   });
+}
+
+function threadCount(text: string): number {
+  const most = availableParallelism();
+  const count = /^[0-9]+$/.test(text) ? Number(text) : 0;
+  if (count >= 1 && count <= most) return count;
+  const allowed =
+    most === 1
+      ? 'This machine lets the worker have one core: say 1.'
+      : `Say a whole number from 1 to ${most}, the cores that this machine lets the worker have.`;
+  throw new InvalidArgumentError(`${allowed} Without --threads one does the work.`);
+}
+
+function memorySize(text: string): number {
+  const bytes = bytesOfSize(text);
+  if (bytes.ok) return bytes.value;
+  throw new InvalidArgumentError(`${bytes.failure.message} ${bytes.failure.remedy ?? ''}`);
 }
 
 const heartbeatOption = (description: string): Option =>

@@ -1,4 +1,4 @@
-import { norm } from '../../numerics/vector.js';
+import { plusScaled } from '../../numerics/vector.js';
 import type { SiteMetric } from './site-metric.js';
 
 /** Over-relaxation α (Eckstein and Bertsekas 1992). */
@@ -16,10 +16,10 @@ export interface Iteration {
   readonly x: readonly Float64Array[];
 }
 
-/** The image T = s + R of the fixed-point map and its residual R, stacked in the metric (`SiteMetric.stack`). */
+/** The image T = s + R of the fixed-point map and the step R to it, per site; the step is good until the next one. */
 export interface Application {
-  readonly image: Float64Array;
-  readonly residual: Float64Array;
+  readonly image: readonly Float64Array[];
+  readonly step: readonly Float64Array[];
 }
 
 /** Something that guesses a point nearer to the fixed point than the image is. */
@@ -46,6 +46,8 @@ export class Acceleration {
   private strikes = 0;
   private halving: { readonly since: number; readonly size: number } | null = null;
   private iterations = 0;
+  /** Where the step of an iteration is kept, per site. */
+  private step: Float64Array[] | null = null;
   /** Proposals thrown away. */
   rejections = 0;
 
@@ -62,11 +64,12 @@ export class Acceleration {
   next(iteration: Iteration): readonly Float64Array[] {
     this.iterations++;
     const { metric, s, x, z } = iteration;
-    const steps = x.map((own) => own.map((value, j) => RELAXATION * (value - z[j])));
-    const image = s.map((own, i) => own.map((value, j) => value + steps[i][j]));
-    const residual = metric.stack(steps);
-    const size = norm(residual);
-    const proposal = this.extrapolation.propose(iteration, { image: metric.stack(image), residual });
+    this.step ??= x.map((own) => new Float64Array(own.length));
+    const { step } = this;
+    for (const [i, own] of x.entries()) relaxedStep(own, z, step[i]);
+    const image = s.map((own, i) => plusScaled(own, 1, step[i]));
+    const size = metric.norm(step);
+    const proposal = this.extrapolation.propose(iteration, { image, step });
     if (
       this.proposed &&
       this.accepted !== null &&
@@ -92,4 +95,9 @@ export class Acceleration {
       this.extrapolation.clear();
     }
   }
+}
+
+/** α (x − z). */
+function relaxedStep(x: Float64Array, z: Float64Array, out: Float64Array): void {
+  for (let j = 0; j < out.length; j++) out[j] = RELAXATION * (x[j] - z[j]);
 }

@@ -1,5 +1,5 @@
 import { penaltyValue } from '../../numerics/penalty.js';
-import { plusScaled, subtract } from '../../numerics/vector.js';
+import { plusScaled } from '../../numerics/vector.js';
 import { pointOf, withAllSites } from './late-all-sites.js';
 import type { Arrival, LateDesk, Posting } from './late-desk.js';
 import type { LateAnswers, LateAsk } from './late-method.js';
@@ -84,8 +84,7 @@ function hasSettled(
   zOld: Float64Array,
   s: readonly Float64Array[],
 ): boolean {
-  const duals = s.map((own) => subtract(own, z));
-  standing.residuals = normalisedResiduals(x, z, zOld, duals, metric);
+  standing.residuals = normalisedResiduals(x, z, zOld, s, metric);
   return Math.max(standing.residuals.primal, standing.residuals.dual) <= standing.trigger;
 }
 

@@ -37,8 +37,7 @@ export function* ledByModels(
   for (let k = 0; k < ROUNDS_MOST && acceleration.rejections < REJECTIONS_MOST; k++) {
     const z = metric.consensus(g, s);
     if (zOld !== null) {
-      const u = s.map((own) => own.map((value, j) => value - z[j]));
-      standing.residuals = normalisedResiduals(x, z, zOld, u, metric);
+      standing.residuals = normalisedResiduals(x, z, zOld, s, metric);
       standing.gapGuess = models.promised / relativeTo(standing.bestObjective);
       if (isTime(problem, standing)) {
         const { end, restart } = yield* certify(problem, standing, z);

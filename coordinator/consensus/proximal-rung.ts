@@ -69,8 +69,7 @@ function* balancedIteration(
   for (let k = 0; ; k++) {
     const z = metric.consensus(g, s);
     if (zOld !== null) {
-      const u = s.map((own) => own.map((value, j) => value - z[j]));
-      const residuals = normalisedResiduals(x, z, zOld, u, metric);
+      const residuals = normalisedResiduals(x, z, zOld, s, metric);
       standing.residuals = residuals;
       if (Math.max(residuals.primal, residuals.dual) <= standing.trigger) {
         const { end, restart } = yield* certify(problem, standing, z);
@@ -88,7 +87,7 @@ function* balancedIteration(
       const factor = balancingFactor(residuals, k);
       if (factor !== 1) {
         metric = metric.times(factor);
-        s = u.map((own) => own.map((value, j) => z[j] + value / factor));
+        s = s.map((own) => dualsDivided(own, z, factor));
         acceleration.clear();
       }
     }
@@ -99,6 +98,13 @@ function* balancedIteration(
     s = acceleration.next({ metric, s, z, centers, x });
     zOld = z;
   }
+}
+
+/** The s with the duals u = s − z divided by a factor: M u stays where the metric is multiplied by it. */
+function dualsDivided(s: Float64Array, z: Float64Array, factor: number): Float64Array {
+  const out = new Float64Array(z.length);
+  for (let j = 0; j < out.length; j++) out[j] = z[j] + (s[j] - z[j]) / factor;
+  return out;
 }
 
 /** s and the sites' starting points at the best point measured; at z₀, without duals, where that is the start. */

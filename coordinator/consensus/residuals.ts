@@ -1,5 +1,4 @@
 import { dot, norm } from '../../numerics/vector.js';
-
 import type { SiteMetric } from './site-metric.js';
 
 /** The normalised residuals of consensus ADMM (Wohlberg 2017): both free of units, both zero at an optimum. */
@@ -10,28 +9,30 @@ export interface Residuals {
 
 /**
  * r_p = ‖x − z‖ / max(‖x‖, √K‖z‖) and r_d = ‖M(z − z_old)‖ / ‖M u‖, norms over all sites stacked;
- * u_i scaled duals.
+ * u_i = s_i − z scaled duals.
  */
 export function normalisedResiduals(
   x: readonly Float64Array[],
   z: Float64Array,
   zOld: Float64Array,
-  duals: readonly Float64Array[],
+  s: readonly Float64Array[],
   { scales, diagonal }: SiteMetric,
 ): Residuals {
   let apart = 0;
   let size = 0;
   let moved = 0;
   let dual = 0;
-  x.forEach((local, i) => {
+  for (const [i, local] of x.entries()) {
     size += dot(local, local);
+    const own = s[i];
+    const scale = scales[i];
     for (let j = 0; j < z.length; j++) {
       apart += (local[j] - z[j]) ** 2;
-      const m = scales[i] * diagonal[j];
+      const m = scale * diagonal[j];
       moved += (m * (z[j] - zOld[j])) ** 2;
-      dual += (m * duals[i][j]) ** 2;
+      dual += (m * (own[j] - z[j])) ** 2;
     }
-  });
+  }
   const least = 1e-300;
   return {
     primal: Math.sqrt(apart) / Math.max(Math.sqrt(size), Math.sqrt(x.length) * norm(z), least),

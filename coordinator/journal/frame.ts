@@ -10,12 +10,18 @@ export const MARKER = new TextEncoder().encode('cfj1');
 
 export function frameRecord(payload: Uint8Array): Uint8Array {
   const frame = new Uint8Array(HEADER_BYTES + payload.length);
-  const view = new DataView(frame.buffer);
+  frame.set(payload, HEADER_BYTES);
+  return withHeader(frame);
+}
+
+/** Fills in the header of a frame whose payload stands in its place already. */
+export function withHeader(frame: Uint8Array): Uint8Array {
+  const view = new DataView(frame.buffer, frame.byteOffset, frame.byteLength);
+  const payload = frame.subarray(HEADER_BYTES);
   frame.set(MARKER);
   view.setUint32(4, payload.length, true);
   view.setUint32(8, crc32(payload), true);
   view.setUint32(12, crc32(frame.subarray(0, 12)), true);
-  frame.set(payload, HEADER_BYTES);
   return frame;
 }
 

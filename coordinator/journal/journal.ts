@@ -1,6 +1,6 @@
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
-import { frameRecord, HEADER_BYTES, MARKER, matchesCheck, readHeader } from './frame.js';
-import { decodeRecord, encodeRecord, type JournalRecord } from './records.js';
+import { HEADER_BYTES, MARKER, matchesCheck, readHeader } from './frame.js';
+import { decodeRecord, frameOf, type JournalRecord } from './records.js';
 import type { JournalStore } from './store.js';
 
 /** The record of a run: first read to its end, then added to. */
@@ -44,7 +44,7 @@ export function openJournal(store: JournalStore, { mend } = { mend: true }): Jou
     },
     append(record) {
       if (!readToEnd) throw new Error('a journal is read to its end before it is added to');
-      return store.append(frameRecord(encodeRecord(record)));
+      return store.append(frameOf(record));
     },
     close: () => store.close(),
   };

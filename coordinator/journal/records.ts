@@ -1,10 +1,11 @@
 import { createHash } from 'node:crypto';
-import { decode, encode } from 'cborg';
+import { decode, encode, encodeInto } from 'cborg';
 import { z } from 'zod';
 import { decodeToCoordinator, encodeMessage } from '../../protocol/codec.js';
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Work } from '../../protocol/messages/round.js';
 import { isRefusal, type Reply } from '../panel/panel-state.js';
+import { frameRecord, HEADER_BYTES, withHeader } from './frame.js';
 
 const count = z.int().min(0);
 
@@ -77,6 +78,21 @@ export type EndedRecord = z.infer<typeof ended>;
 export type Measured = AnsweredRecord['measured'];
 
 export const encodeRecord = (record: JournalRecord): Uint8Array => encode(record);
+
+/** Bytes of a record of replies beside the replies themselves: in all, and for each member. */
+const RECORD_REST_BYTES = 1000;
+const MEMBER_REST_BYTES = 50;
+
+/** As it stands in the journal. The replies of a round may be long, and are copied once. */
+export function frameOf(record: JournalRecord): Uint8Array {
+  if (record.record !== 'answered') return frameRecord(encodeRecord(record));
+  const { replies } = record;
+  const repliesBytes = replies.reduce((sum, reply) => sum + (reply?.length ?? 0), 0);
+  const room = repliesBytes + replies.length * MEMBER_REST_BYTES + RECORD_REST_BYTES;
+  const frame = new Uint8Array(HEADER_BYTES + room);
+  const { written } = encodeInto(record, frame.subarray(HEADER_BYTES));
+  return withHeader(frame.subarray(0, HEADER_BYTES + written));
+}
 
 /** Fails with `journal-broken`. */
 export function decodeRecord(payload: Uint8Array): Checked<JournalRecord> {

@@ -1,3 +1,4 @@
+import { type OpenBarrier, opensAtMs } from './barrier.js';
 import type { Lack, MemberState, PanelSettings, PanelState } from './panel-state.js';
 
 /** A panel of members of these sites, in roster order; none connected, nothing asked. */
@@ -73,5 +74,17 @@ export function owing(
 export const longestSilence = ({ members }: PanelState, of: readonly number[], atMs: number): number =>
   Math.max(...of.map((member) => atMs - (members[member].silentSinceMs ?? atMs)));
 
-export const repliedAtMs = (members: readonly MemberState[]): (number | null)[] =>
-  members.map(({ reply }) => reply?.atMs ?? null);
+export const hasAllWaitedFor = ({ waitFor }: OpenBarrier, members: readonly MemberState[]): boolean =>
+  waitFor.every((member) => members[member].reply !== null);
+
+/**
+ * When the barrier opens by the replies that the members have (`opensAtMs`); null: not without more of them. Asked at
+ * every reply, so that nothing is gathered while one that is waited for is missing.
+ */
+export function barrierOpensAtMs(barrier: OpenBarrier, members: readonly MemberState[]): number | null {
+  if (!hasAllWaitedFor(barrier, members)) return null;
+  return opensAtMs(
+    barrier,
+    members.map(({ reply }) => reply?.atMs ?? null),
+  );
+}

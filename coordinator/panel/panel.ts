@@ -1,5 +1,14 @@
-import { opensAtMs } from './barrier.js';
-import { asked, LACKS, lackOf, leave, longestSilence, owing, postponed, repliedAtMs } from './member.js';
+import {
+  asked,
+  barrierOpensAtMs,
+  hasAllWaitedFor,
+  LACKS,
+  lackOf,
+  leave,
+  longestSilence,
+  owing,
+  postponed,
+} from './member.js';
 import {
   isRefusal,
   type Lack,
@@ -36,13 +45,19 @@ export function step(state: PanelState, event: PanelEvent): PanelStep {
 /** When the panel wants its next `time` event; null while no barrier is closed. */
 export function wakeAtMs({ settings, members, barrier }: PanelState): number | null {
   if (barrier === null) return null;
-  const wakes = members.flatMap(({ open, silentSinceMs }) =>
-    open === null || silentSinceMs === null ? [] : [open.deadlineAtMs, silentSinceMs + settings.patienceMs],
-  );
-  const opens = opensAtMs(barrier, repliedAtMs(members));
-  const next = Math.min(...wakes, ...(opens === null ? [] : [opens]));
+  let next = barrierOpensAtMs(barrier, members) ?? Number.POSITIVE_INFINITY;
+  for (const { open, silentSinceMs } of members)
+    if (open !== null && silentSinceMs !== null)
+      next = Math.min(next, open.deadlineAtMs, silentSinceMs + settings.patienceMs);
   return next === Number.POSITIVE_INFINITY ? null : next;
 }
+
+/**
+ * False while a member that is waited for has not replied: a reply then sets no earlier time at which the panel wants to
+ * be woken.
+ */
+export const mayOpen = ({ barrier, members }: PanelState): boolean =>
+  barrier === null || hasAllWaitedFor(barrier, members);
 
 function openAsk(state: PanelState, event: Extract<PanelEvent, { kind: 'ask' }>): PanelStep {
   const { ask, waitFor, quorum, atMs } = event;
@@ -50,9 +65,8 @@ function openAsk(state: PanelState, event: Extract<PanelEvent, { kind: 'ask' }>)
   const superseded = now.flatMap((member): PanelEffect[] =>
     state.members[member].reply === null ? [] : [dropped(member, state.members[member].newest, 'older')],
   );
-  const members = state.members.map((member, index) =>
-    now.includes(index) ? asked(member, ask, atMs, state) : member,
-  );
+  const members = [...state.members];
+  for (const member of now) members[member] = asked(members[member], ask, atMs, state);
   const barrier = { ask, asked: now, waitFor, quorum, openedAtMs: atMs };
   const sent = sendTo({ ...state, members, barrier }, now);
   const passed = passIfOpen(sent.state, atMs);
@@ -145,7 +159,7 @@ function giveUp(state: PanelState, silent: readonly number[], atMs: number): Pan
 
 function passIfOpen(state: PanelState, atMs: number): PanelStep {
   if (state.barrier === null) return still(state);
-  const opens = opensAtMs(state.barrier, repliedAtMs(state.members));
+  const opens = barrierOpensAtMs(state.barrier, state.members);
   return opens !== null && opens <= atMs ? pass(state, atMs, []) : still(state);
 }
 
@@ -195,6 +209,6 @@ function withMember(
   member: number,
   change: (before: MemberState) => MemberState,
 ): PanelState {
-  const members = state.members.map((before, index) => (index === member ? change(before) : before));
-  return { ...state, members };
+  const before = state.members[member];
+  return before === undefined ? state : { ...state, members: state.members.with(member, change(before)) };
 }

@@ -43,7 +43,8 @@ function* attempt(about: About, before: AttemptBefore): Run {
 
   const frame = scale(specification, designColumns(specification), surveyed);
   if (frame.p === 0) {
-    const reason = 'no column has any spread: nothing to fit.';
+    const reason =
+      'no column of any term has any spread over all sites: there is nothing to fit. Name other columns in `terms`.';
     return stopped(about, { outcome: 'refused', reason }, surveyed);
   }
 

@@ -32,7 +32,8 @@ export function scale(
   const intercept = specification.intercept === 'shared';
   const size = (j: number): number => (intercept ? survey.sd[j] : Math.hypot(survey.mean[j], survey.sd[j]));
   const all = columns.map((_, j) => j);
-  const kept = all.filter((j) => size(j) > (intercept ? SPREAD_LEAST * Math.abs(survey.mean[j]) : 0));
+  const isKept = (j: number): boolean => size(j) > (intercept ? SPREAD_LEAST * Math.abs(survey.mean[j]) : 0);
+  const kept = all.filter(isKept);
   return {
     scaling: {
       rowCountTotal: survey.rowsTotal,
@@ -44,7 +45,7 @@ export function scale(
     intercept,
     kept: kept.map((j) => columns[j]),
     sd: Float64Array.from(kept, (j) => survey.sd[j]),
-    dropped: all.filter((j) => !kept.includes(j)).map((j) => columns[j].name),
+    dropped: all.filter((j) => !isKept(j)).map((j) => columns[j].name),
   };
 }
 

@@ -50,16 +50,21 @@ export function* survey(
     const [first] = answer as readonly SurveyAnswer[];
     return first;
   });
-  const names = JSON.stringify(surveys[0].columns);
-  const odd = surveys.findIndex((answer) => JSON.stringify(answer.columns) !== names);
+  const [{ columns }] = surveys;
+  const odd = surveys.findIndex((answer) => !sameNames(answer.columns, columns));
   if (odd >= 0)
     return {
       outcome: 'refused',
       reason: `site ${memberName(roster[odd])} built other design columns than ${memberName(roster[0])}: do both run the same version?`,
     };
-  const pooled = { ...pool(surveys, roster), agesMs };
+  // one list of the names stays, not one for each member
+  const lean = surveys.map((answer) => ({ ...answer, columns }));
+  const pooled = { ...pool(lean, roster), agesMs };
   return responseProblem(specification, pooled) ?? foldProblem(specification, pooled) ?? pooled;
 }
+
+const sameNames = (a: readonly string[], b: readonly string[]): boolean =>
+  a.length === b.length && a.every((name, j) => name === b[j]);
 
 function pool(surveys: readonly SurveyAnswer[], roster: readonly Member[]): Omit<PooledSurvey, 'agesMs'> {
   const whole = mergeMoments(surveys);

@@ -4,7 +4,7 @@ import type { Answer, Ask, Refusal } from '../../protocol/messages/round.js';
 import { numbersOfAnswer } from '../../protocol/numbers.js';
 import type { Measured } from '../journal/records.js';
 import { openPanel } from '../panel/member.js';
-import { step, wakeAtMs } from '../panel/panel.js';
+import { mayOpen, step, wakeAtMs } from '../panel/panel.js';
 import { isRefusal, type PanelEffect, type PanelEvent, type PanelState } from '../panel/panel-state.js';
 import { type Batch, type Member, memberName, type RunAsk } from '../run/run.js';
 import type { OwedAsk } from './drive.js';
@@ -22,6 +22,8 @@ export interface DeskReports {
 export class AskDesk {
   private panel: PanelState;
   private readonly names: readonly string[];
+  /** By name, the place in the roster. */
+  private readonly places: ReadonlyMap<string, number>;
   private readonly links = new Map<number, MemberLink>();
   private current: { readonly ask: number; readonly asked: RunAsk } | null = null;
   /** Per member: its newest ask. */
@@ -29,7 +31,8 @@ export class AskDesk {
   private numbersDown = 0;
   /** By member: its newest ask, and when that was first sent. */
   private readonly sent = new Map<number, { readonly ask: number; readonly atMs: number }>();
-  private stopTimer: () => void = () => {};
+  /** When the panel is to be told of the time, as far as that is arranged. */
+  private timer: { readonly wakeMs: number; readonly stop: () => void } | null = null;
   private readonly queue: PanelEvent[] = [];
   private draining = false;
   private stopped = false;
@@ -43,6 +46,7 @@ export class AskDesk {
     const sites = roster.map(({ site }) => site);
     this.panel = openPanel(sites, { deadlineMs, patienceMs, missing });
     this.names = roster.map(memberName);
+    this.places = new Map(roster.map((member, index) => [placeKey(member), index]));
     this.newest = roster.map(() => null);
   }
 
@@ -122,7 +126,8 @@ export class AskDesk {
   stop(outcome: string | null): void {
     const again = this.stopped;
     this.stopped = true;
-    this.stopTimer();
+    this.timer?.stop();
+    this.timer = null;
     if (again || outcome === null) return;
     for (const link of this.links.values()) link.end(outcome);
   }
@@ -154,7 +159,7 @@ export class AskDesk {
     for (let next = this.queue.shift(); next !== undefined && !this.stopped; next = this.queue.shift()) {
       const { state, effects } = step(this.panel, next);
       this.panel = state;
-      this.setTimer();
+      if (next.kind !== 'reply' || this.timer === null || mayOpen(state)) this.setTimer();
       for (const effect of effects) this.perform(effect);
     }
     this.draining = false;
@@ -211,23 +216,27 @@ export class AskDesk {
   }
 
   private setTimer(): void {
-    this.stopTimer();
     const wakeMs = wakeAtMs(this.panel);
+    if (wakeMs === (this.timer?.wakeMs ?? null)) return;
+    this.timer?.stop();
+    this.timer = null;
     if (wakeMs === null) return;
     const { time } = this.parts;
-    this.stopTimer = time.after(Math.max(0, wakeMs - time.steadyMs()), () =>
-      this.take({ kind: 'time', atMs: time.steadyMs() }),
-    );
+    const stop = time.after(Math.max(0, wakeMs - time.steadyMs()), () => {
+      this.timer = null;
+      this.take({ kind: 'time', atMs: time.steadyMs() });
+    });
+    this.timer = { wakeMs, stop };
   }
 
   private indexOf(linked: LinkedMember): number {
-    const { site, shard } = linked.member;
-    return this.roster.findIndex(
-      (member) => member.site === site && member.shard.index === shard.index && member.shard.of === shard.of,
-    );
+    return this.places.get(placeKey(linked.member)) ?? -1;
   }
 
   private namesOf(members: readonly number[]): string[] {
     return members.map((member) => this.names[member]);
   }
 }
+
+const placeKey = ({ site, shard }: Pick<Member, 'site' | 'shard'>): string =>
+  `${site} ${shard.index}/${shard.of}`;

@@ -114,5 +114,7 @@ export interface KernelRoom {
 
 export interface KernelVariant {
   readonly name: KernelName;
+  /** Threads that work on the rows; absent: one. */
+  readonly threads?: number;
   open(room: KernelRoom): Kernel;
 }

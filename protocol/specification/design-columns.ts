@@ -20,6 +20,18 @@ export function designColumns(specification: Pick<FitSpecification, 'terms'>): D
   );
 }
 
+/** The names of the coefficients alone: of a million, far less than what each is made of. */
+export const designColumnNames = ({ terms }: Pick<FitSpecification, 'terms'>): string[] =>
+  terms.flatMap((term) =>
+    factorNames(term).reduce((heads, names) =>
+      heads.flatMap((head) => names.map((name) => `${head}:${name}`)),
+    ),
+  );
+
+/** The names that a term's coefficients are made of, by factor; one list where it is no product. */
+export const factorNames = (term: Term): string[][] =>
+  factorsOf(term).map((choices) => choices.map(({ name }) => name));
+
 /** How many coefficients the terms have, without making them. */
 export const designColumnCount = (terms: readonly Term[]): number =>
   terms.reduce(

@@ -1,4 +1,5 @@
 import { LIMITS } from '../limits.js';
+import { designColumns } from './design-columns.js';
 import type { Complain } from './issues.js';
 import { nearestName } from './nearest.js';
 import type { FitDocument, WrittenPenalty } from './schema.js';
@@ -94,12 +95,7 @@ interface Named {
 }
 
 /** Names of terms or coefficients, in `per-term` and `profile`. */
-export function checkNamed(
-  document: Partial<FitDocument>,
-  terms: readonly Term[],
-  columns: readonly DesignColumn[],
-  complain: Complain,
-): void {
+export function checkNamed(document: Partial<FitDocument>, terms: readonly Term[], complain: Complain): void {
   const perTerm = (document.penalty ?? []).flatMap((penalty, index): Named[] =>
     Object.keys(penalty['per-term']).map((name) => ({ name, path: ['penalty', index, 'per-term', name] })),
   );
@@ -108,6 +104,8 @@ export function checkNamed(
       ? entry.names.map((name, at) => ({ name, path: ['report', index, 'profile', at] }))
       : [],
   );
+  if (perTerm.length + profiled.length === 0) return;
+  const columns = designColumns({ terms });
   checkKnown(
     [...perTerm, ...profiled],
     [...new Set([...terms, ...columns].map(({ name }) => name))],

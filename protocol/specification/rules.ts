@@ -1,5 +1,5 @@
 import { LIMITS } from '../limits.js';
-import { designColumnCount, designColumns } from './design-columns.js';
+import { designColumnCount, designColumnNames, factorNames } from './design-columns.js';
 import type { Complain } from './issues.js';
 import { checkAnalysis, checkNamed, checkPenalties } from './rules-analysis.js';
 import type { FitDocument } from './schema.js';
@@ -112,34 +112,56 @@ function checkTerms(document: Partial<FitDocument>, terms: readonly Term[], comp
     complain(['terms'], 'field-value', message, 'Leave out products of columns with many levels.');
     return;
   }
-  const columns = designColumns({ terms });
-  checkNames(
-    terms,
-    columns.map((column) => column.term),
-    columns.map((column) => column.name),
-    complain,
-  );
-  checkNamed(document, terms, columns, complain);
+  checkNames(terms, complain);
+  checkNamed(document, terms, complain);
 }
 
-function checkNames(
-  terms: readonly Term[],
-  termOf: readonly number[],
-  names: readonly string[],
-  complain: Complain,
-): void {
+function checkNames(terms: readonly Term[], complain: Complain): void {
+  const apart = productsApart(terms);
   const owner = new Map<string, number>();
   const told = new Set<number>();
-  names.forEach((name, at) => {
-    const term = termOf[at] ?? 0;
-    // The order of a product's factors does not make another column.
-    const key = terms[term]?.kind === 'product' ? name.split(':').sort().join(':') : name;
-    const first = owner.get(key);
-    if (first === undefined) owner.set(key, term);
-    else if (!told.has(term)) {
-      told.add(term);
-      const message = `Found the coefficient "${name}" a second time (terms[${first}] has it); allowed: each once.`;
-      complain(['terms', term], 'field-conflict', message, 'Remove one of the two terms.');
+  terms.forEach((term, index) => {
+    if (apart.has(index)) return;
+    for (const name of designColumnNames({ terms: [term] })) {
+      // The order of a product's factors does not make another column.
+      const key = term.kind === 'product' ? name.split(':').sort().join(':') : name;
+      const first = owner.get(key);
+      if (first === undefined) owner.set(key, index);
+      else if (!told.has(index)) {
+        told.add(index);
+        const message = `Found the coefficient "${name}" a second time (terms[${first}] has it); allowed: each once.`;
+        complain(['terms', index], 'field-conflict', message, 'Remove one of the two terms.');
+      }
     }
   });
+}
+
+/** Products of more coefficients than this are looked at by their factors first. */
+const NAMES_MOST = 10_000;
+
+/**
+ * Large products that have no coefficient in common with any term, by their factors' names alone: a million names need
+ * not be made to be found different. None where a name holds the colon that joins names.
+ */
+function productsApart(terms: readonly Term[]): Set<number> {
+  const large = terms.flatMap((term, index) =>
+    term.kind === 'product' && designColumnCount([term]) > NAMES_MOST ? [index] : [],
+  );
+  if (large.length === 0) return new Set();
+  const names = terms.map((term) => factorNames(term).map((own) => new Set(own)));
+  if (names.some((factors) => factors.some((own) => [...own].some((name) => name.includes(':')))))
+    return new Set();
+  const meets = (a: Set<string>, b: Set<string>): boolean => [...a].some((name) => b.has(name));
+  return new Set(
+    large.filter((index) => {
+      const own = names[index];
+      if (own.some((factor, k) => own.slice(k + 1).some((other) => meets(factor, other)))) return false;
+      return names.every(
+        (other, at) =>
+          at === index ||
+          other.length !== own.length ||
+          !own.every((factor) => other.some((one) => meets(factor, one))),
+      );
+    }),
+  );
 }

@@ -26,10 +26,10 @@ export function balancing(problem: BaselineProblem): BaselineRun {
     watch.look(z);
     if (watch.done) return watch.run;
     if (zOld !== null) {
-      const u = s.map((own) => own.map((value, j) => value - z[j]));
-      const factor = balancingFactor(normalisedResiduals(x, z, zOld, u, metric), k);
+      const factor = balancingFactor(normalisedResiduals(x, z, zOld, s, metric), k);
+      const around = z;
       metric = metric.times(factor);
-      s = u.map((own) => own.map((value, j) => z[j] + value / factor));
+      s = s.map((own) => own.map((value, j) => around[j] + (value - around[j]) / factor));
     }
     watch.count(p, p);
     const centers = metric.centers(s, z);

@@ -4,13 +4,25 @@ import { afterAll, beforeAll, describe, expect, test } from 'vitest';
 import { until } from '../support/processes.js';
 import { programs } from '../support/programs.js';
 import { type Following, Stage } from '../support/stage.js';
-import { BASE_IMAGE, Services, withoutEngine } from './services.js';
+import { BASE_IMAGE, buildImages, outsideSwarm, Services, withoutEngine } from './services.js';
 
 const skipped = withoutEngine();
 const SITES = ['harrowmere', 'lindell-bay', 'castlefen', 'oakhythe'];
 const FIT = 'breaks.fit.yaml';
 /** Node, the table reader and everything else of ours over the base image. Bytes. */
 const SIZE_MOST = 200e6;
+
+/** For `node -e`: what comes of a connection to port 7443 of each host, as JSON. */
+const REACH = `
+const reach = (host) => new Promise((resolve) => {
+  const s = require('net').connect({ host, port: 7443, timeout: 3000 });
+  const end = (text) => { s.destroy(); resolve([host, text]); };
+  s.on('connect', () => end('reached')).on('timeout', () => end('silence')).on('error', (e) => end(e.code));
+});
+Promise.all(process.argv.slice(1).map(reach)).then((all) => {
+  console.log(JSON.stringify(Object.fromEntries(all)));
+  process.exit();
+});`;
 
 let stage: Stage;
 let services: Services;
@@ -27,7 +39,9 @@ async function resultOfProcesses(): Promise<string> {
     await stage.worker('approve', `${site}.site.yaml`, FIT);
     stage.join(site);
   }
-  const { result } = await stage.submit(FIT).outcome();
+  const following = stage.submit(FIT);
+  await following.program.end(120_000);
+  const { result } = await following.outcome();
   for (const site of SITES) await stage.workerOf(site).kill();
   await stage.killCoordinator();
   return result;
@@ -46,11 +60,11 @@ const stillRuns = (following: Following): void => expect(following.has('outcome'
 describe.skipIf(skipped !== null)(`services in containers${skipped === null ? '' : ` (${skipped})`}`, () => {
   beforeAll(async () => {
     stage = await Stage.open('containers');
-    byProcesses = await resultOfProcesses();
+    [byProcesses] = await Promise.all([resultOfProcesses(), buildImages()]);
     services = await Services.start(stage);
   });
   afterAll(async () => {
-    services?.stop();
+    await services?.stop();
     await stage?.close();
   });
 
@@ -63,6 +77,16 @@ describe.skipIf(skipped !== null)(`services in containers${skipped === null ? ''
     expect(await services.resultOf(following)).toBe(byProcesses);
     expect((await following.program.end()).code).toBe(0);
     expect(JSON.parse(byProcesses)).toMatchObject({ outcome: 'solved', rowsTotal: 12_000 });
+  });
+
+  test('the logs say which kernel computes, and what left', async () => {
+    const log = await services.logOf('castlefen');
+    expect(log).toMatch(
+      /Connected to wss:\/\/coordinator:7443\/v1\/site as castlefen \(commonfit [\d.]+\), with the kernel \w+, \w+, Node/,
+    );
+    // the plain kernel is for a build without the compiled ones
+    expect(log).not.toContain('kernel plain');
+    expect(log).toMatch(/Run \S+ ended: solved\. In all [\d,]+ numbers/);
   });
 
   test('a worker that is paused holds the run up, and no more', async () => {
@@ -107,24 +131,23 @@ describe.skipIf(skipped !== null)(`services in containers${skipped === null ? ''
   });
 
   test('a worker reaches the coordinator, no other worker, and nothing outside', async () => {
-    const reach = (host: string, port: number): Promise<string> =>
-      services.run('castlefen', [
-        'node',
-        '-e',
-        `const s = require('net').connect({ host: '${host}', port: ${port}, timeout: 1500 });
-         const end = (text) => { console.log(text); process.exit(); };
-         s.on('connect', () => end('reached')).on('timeout', () => end('silence')).on('error', (e) => end(e.code));`,
-      ]);
-    expect(await reach('coordinator', 7443)).toBe('reached\n');
-    for (const site of SITES.filter((name) => name !== 'castlefen')) {
-      expect(await reach(site, 7443)).toMatch(/^(ENOTFOUND|EAI_AGAIN|silence)\n$/);
+    const others = SITES.filter((name) => name !== 'castlefen');
+    const addresses: string[] = [];
+    for (const site of others) {
       const { NetworkSettings } = await (await services.handle(site)).inspect();
-      // a refusal would come from the other worker itself
-      for (const { IPAddress } of Object.values(NetworkSettings.Networks))
-        expect(await reach(IPAddress, 7443)).toMatch(/^(ENETUNREACH|EHOSTUNREACH|silence)\n$/);
+      addresses.push(...Object.values(NetworkSettings.Networks).map(({ IPAddress }) => IPAddress));
     }
+    expect(addresses).toHaveLength(3);
     // documentation addresses of RFC 5737 stand for the world
-    expect(await reach('192.0.2.1', 443)).toMatch(/^(ENETUNREACH|EHOSTUNREACH|silence)\n$/);
+    const hosts = ['coordinator', ...others, ...addresses, '192.0.2.1'];
+    const reached: Record<string, string> = JSON.parse(
+      await services.run('castlefen', ['node', '-e', REACH, ...hosts]),
+    );
+    expect(reached.coordinator).toBe('reached');
+    for (const site of others) expect(reached[site], site).toMatch(/^(ENOTFOUND|EAI_AGAIN|silence)$/);
+    // a refusal would come from the other worker itself
+    for (const address of [...addresses, '192.0.2.1'])
+      expect(reached[address], address).toMatch(/^(ENETUNREACH|EHOSTUNREACH|silence)$/);
     const network = await services.networkOf('castlefen');
     expect(await network.inspect()).toMatchObject({ Internal: true });
   });
@@ -159,6 +182,18 @@ describe.skipIf(skipped !== null)(`services in containers${skipped === null ? ''
         return seen.State.Running ? null : seen;
       });
       expect(State.ExitCode).toBe(0);
+    }
+  });
+
+  test('the same file deployed as a stack fits the same bytes', async (context) => {
+    if (!(await outsideSwarm())) context.skip('this engine is in a swarm already');
+    try {
+      const stack = await services.toStack();
+      await stack.healthy('coordinator');
+      const following = stack.submit(FIT);
+      expect(await stack.resultOf(following)).toBe(byProcesses);
+    } finally {
+      await Services.leaveSwarm();
     }
   });
 });

@@ -58,16 +58,54 @@ describe('messages.cddl', () => {
     expect(unused).toEqual([]);
   });
 
-  test('the comparison notices a field that is missing, renamed or of another type', () => {
-    const schema = formOfSchema(toCoordinator);
-    const spoilt = (from: string, to: string): string =>
-      formOfCddl('to-coordinator', cddlRules(read('messages.cddl').replace(from, to)));
-    expect(formOfCddl('to-coordinator', rules)).toBe(schema);
-    expect(spoilt('  newtonSteps: count,\n', '')).not.toBe(schema);
-    expect(spoilt('newtonSteps:', 'steps:')).not.toBe(schema);
-    expect(spoilt('newtonSteps: count', 'newtonSteps: number')).not.toBe(schema);
-    expect(spoilt('gradient: vector / null', 'gradient: vector')).not.toBe(schema);
-    expect(spoilt('1*4096 proximal-point', '1*4095 proximal-point')).not.toBe(schema);
+  test('the comparison notices every field that is missing, renamed, added or of another type', () => {
+    const text = read('messages.cddl');
+    const formOf = (cddl: string): string => {
+      const rulesThere = cddlRules(cddl);
+      return ['to-worker', 'to-coordinator'].map((root) => formOfCddl(root, rulesThere)).join('\n');
+    };
+    const schemas = [toWorker, toCoordinator].map(formOfSchema).join('\n');
+    expect(formOf(text)).toBe(schemas);
+    const fields = text.split('\n').filter((line) => /^ {2}\w+: /.test(line));
+    // fields of the same words in several messages count once here, and are spoilt in each of them in turn below
+    expect(new Set(fields).size).toBeGreaterThan(90);
+    for (const [at, line] of text.split('\n').entries()) {
+      const [, name, type, comment] = /^ {2}(\w+): (.*?),(.*)$/.exec(line) ?? [];
+      if (name === undefined) continue;
+      const spoilt = [
+        '',
+        `  ${name}Other: ${type},${comment}`,
+        `  ${name}: ${type === 'bool' ? 'count' : 'bool'},${comment}`,
+        `  ${name}: ${type.includes('null') ? type.replace(' / null', '') : `${type} / null`},${comment}`,
+        `${line}\n  extra: count,`,
+      ];
+      if (/characters|digits/.test(comment))
+        spoilt.push(line.replace(/\d+(?= (characters|hexadecimal))/, '63'));
+      for (const other of spoilt) {
+        const lines = text.split('\n');
+        lines[at] = other;
+        expect(formOf(lines.join('\n')), `${line} → ${other}`).not.toBe(schemas);
+      }
+    }
+  });
+
+  test('the comparison notices every choice that is missing, and every bound of an array', () => {
+    const formOf = (cddl: string, root: string): string => formOfCddl(root, cddlRules(cddl));
+    const text = read('messages.cddl');
+    for (const [root, schema] of [
+      ['to-worker', toWorker],
+      ['to-coordinator', toCoordinator],
+    ] as const) {
+      const form = formOfSchema(schema);
+      const named = new Set(form.match(/"[a-z-]+"/g));
+      for (const choice of named) {
+        const other = text.replaceAll(choice, '"another"');
+        expect(formOf(other, root), choice).not.toBe(form);
+      }
+      for (const bound of new Set(text.match(/\d*\*\d*(?= )/g)))
+        if (form.includes(`[${/^\d/.test(bound) ? bound : `0${bound}`} (`))
+          expect(formOf(text.replaceAll(bound, '2*3'), root), bound).not.toBe(form);
+    }
   });
 });
 
@@ -95,6 +133,13 @@ describe('README.md', () => {
     for (const kind of [...kindsOf(toWorker), ...kindsOf(toCoordinator)])
       expect(readme).toContain(`\`${kind}\``);
     for (const { shape } of work.options) expect(readme).toContain(`**\`${shape.work.value}\`**`);
+  });
+
+  test('every field of every message is named', () => {
+    const code = [...(readme.match(/`[^`\n]+`/g) ?? []), ...(readme.match(/^ {4}\S.*$/gm) ?? [])].join(' ');
+    const words = new Set(code.match(/\w+/g));
+    const fields = [...rules.values()].flatMap((rule) => rule.match(/\w+(?=: )/g) ?? []);
+    expect([...new Set(fields)].filter((field) => !words.has(field))).toEqual([]);
   });
 
   test('the specification shown is a canonical one, with the columns named below it', () => {

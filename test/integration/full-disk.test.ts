@@ -101,7 +101,7 @@ describe.skipIf(!mayMount)('a full disk', PATIENT, () => {
     const { code, event } = await following.outcome();
     expect(code).toBe(14);
     expect(event.reason).toMatch(
-      /site castlefen refused: The site cannot write to its ledger\. .*\[state-unwritable\]/,
+      /site castlefen refused: The site cannot write to its disk\. .*\[state-unwritable\]/,
     );
     expect(worker.stderr).toContain('castlefen.ledger: The file cannot be written (ENOSPC)');
     expect(worker.running).toBe(true);

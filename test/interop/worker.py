@@ -1,10 +1,11 @@
 """A minimal worker for the commonfit protocol, version 1, written from protocol/README.md and protocol/messages.cddl.
 
-    python3 worker.py --url ws://127.0.0.1:7443 --site NAME --token-file FILE --table FILE.csv
+    python3 worker.py --url ws://127.0.0.1:7443 --site NAME --token-file FILE --table FILE.csv [--pause SECONDS]
 
 It answers `survey`, `proximal`, `evaluate`, `joint` and `factor` for the losses squared, logistic and poisson, with terms of
 numbers, of levels and their products, and refuses the rest with `not-supported`. It has no policy and no ledger: a worker
-for custodians needs both. It keeps no vectors between asks and says `memory-missing` where one was left out.
+for custodians needs both. It keeps no vectors between asks and says `memory-missing` where one was left out. With `--pause` it waits before each answer, as a
+slow machine would.
 
 Needs Python 3.11, websockets, cbor2 and numpy.
 """
@@ -18,6 +19,7 @@ import math
 import pathlib
 import struct
 import sys
+import time
 
 import cbor2
 import numpy as np
@@ -494,8 +496,8 @@ WORKS = {"proximal": proximal, "evaluate": evaluate, "joint": joint, "factor": f
 
 
 class Worker:
-    def __init__(self, site, table):
-        self.site, self.table = site, table
+    def __init__(self, site, table, pause_seconds):
+        self.site, self.table, self.pause_seconds = site, table, pause_seconds
         self.runs, self.answered = {}, {}
         self.frame_bytes_most = FRAME_BYTES_MOST
 
@@ -507,6 +509,7 @@ class Worker:
 
     def answer(self, ask):
         """The frame that answers an ask, or refuses it."""
+        time.sleep(self.pause_seconds)
         key, content = (ask["run"], ask["ask"]), cbor2.dumps(ask, canonical=True)
         try:
             before = self.answered.get(key)
@@ -587,8 +590,9 @@ async def main():
     parser = argparse.ArgumentParser()
     for name in ("url", "site", "token-file", "table"):
         parser.add_argument(f"--{name}", required=True)
+    parser.add_argument("--pause", type=float, default=0.0)
     options = parser.parse_args()
-    worker = Worker(options.site, read_table(options.table))
+    worker = Worker(options.site, read_table(options.table), options.pause)
     token = pathlib.Path(options.token_file).read_text().strip()
     while True:
         try:

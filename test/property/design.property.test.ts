@@ -3,6 +3,9 @@ import { describe, expect, test } from 'vitest';
 import { designColumns } from '../../protocol/specification/design-columns.js';
 import type { LevelsTerm, NumericTerm, Term, Transform } from '../../protocol/specification/types.js';
 import { buildRawShard } from '../../worker/design/build.js';
+import { TransformedColumns } from '../../worker/design/factors.js';
+import { RawSparseRows } from '../../worker/design/raw-sparse-rows.js';
+import { sparseEntries } from '../../worker/design/sparse-build.js';
 import { surveyOf } from '../../worker/design/survey.js';
 import { lossOf } from '../../worker/losses/index.js';
 import { entriesOf } from '../support/dense.js';
@@ -91,7 +94,14 @@ describe('the design', () => {
         const naive = all.flatMap((row) => rowOf(row, terms));
         expect(raw.columns).toEqual(designColumns(spec).map((column) => column.name));
         // 0 × −3 is −0 for the naive twin, which + 0 makes 0
-        expect(entriesOf(raw)).toEqual(Float64Array.from(naive, (value) => value + 0));
+        const wanted = Float64Array.from(naive, (value) => value + 0);
+        expect(entriesOf(raw)).toEqual(wanted);
+        const data = tableOf(all);
+        const entries = sparseEntries(terms, new TransformedColumns(data), data);
+        const full = new Float64Array(wanted.length);
+        new RawSparseRows(entries, raw.columns.length).copy(0, all.length, full);
+        expect(full).toEqual(wanted);
+        expect(entries.starts[all.length]).toBeLessThanOrEqual(terms.length * all.length);
       }),
       { numRuns: 150 },
     );

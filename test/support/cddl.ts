@@ -6,7 +6,11 @@ import { z } from 'zod';
 
 /** Rule name → its text without comments and with single spaces. */
 export function cddlRules(text: string): Map<string, string> {
-  const plain = text.replaceAll(/;[^\n]*/g, '');
+  // how long a text may be is said in comments, since CDDL's own word for it counts bytes
+  const plain = text
+    .replaceAll(/\btstr\b(.*);.*?(?:(\d+) to |at most )(\d+) characters/g, 'tstr-$2-$3$1;')
+    .replaceAll(/\btstr\b(.*);.*?(\d+) hexadecimal digits/g, 'tstr-$2-$2$1;')
+    .replaceAll(/;[^\n]*/g, '');
   const rules = plain.split(/^(?=[a-z-]+ = ?)/m).filter((rule) => /^[a-z-]+ =/.test(rule));
   return new Map(
     rules.map((rule): [string, string] => {
@@ -39,7 +43,7 @@ export function formOfCddl(type: string, rules: ReadonlyMap<string, string>): st
       }),
     );
   }
-  const array = /^\[(?:(\+)|(\d*)\*(\d*)) ?([a-z-]+)\]$/.exec(text);
+  const array = /^\[(?:(\+)|(\d*)\*(\d*)) ?([a-z0-9-]+)\]$/.exec(text);
   if (array !== null) {
     const [, plus, least, most, element] = array;
     return arrayForm(
@@ -48,7 +52,7 @@ export function formOfCddl(type: string, rules: ReadonlyMap<string, string>): st
       formOfCddl(element, rules),
     );
   }
-  if (/^("[a-z-]+"|\d+|null)$/.test(text) || PRIMITIVES.has(text)) return text;
+  if (/^("[a-z-]+"|\d+|null|tstr-\d*-\d+)$/.test(text) || PRIMITIVES.has(text)) return text;
   const rule = rules.get(text);
   if (rule === undefined) throw new Error(`CDDL names "${text}", which no rule defines`);
   return formOfCddl(rule, rules);
@@ -57,6 +61,7 @@ export function formOfCddl(type: string, rules: ReadonlyMap<string, string>): st
 /** The common form of a schema of this protocol. */
 export function formOfSchema(schema: z.core.$ZodType): string {
   if (schema instanceof z.ZodObject) {
+    if (!(schema._zod.def.catchall instanceof z.ZodNever)) throw new Error('a map that takes unknown keys');
     return mapForm(Object.entries(schema.shape).map(([key, value]) => [key, formOfSchema(value)]));
   }
   if (schema instanceof z.ZodNullable) return choiceForm([formOfSchema(schema.unwrap()), 'null']);
@@ -65,11 +70,22 @@ export function formOfSchema(schema: z.core.$ZodType): string {
   if (schema instanceof z.ZodLiteral)
     return choiceForm([...schema.values].map((value) => JSON.stringify(value)));
   if (schema instanceof z.ZodArray) return arrayFormOf(schema);
-  if (schema instanceof z.ZodString) return 'tstr';
+  if (schema instanceof z.ZodString) return textForm(schema);
   if (schema instanceof z.ZodBoolean) return 'bool';
   if (schema instanceof z.ZodNumber) return numberForm(schema);
   if (schema instanceof z.ZodCustom) return 'vector';
   throw new Error(`a schema that CDDL has no form for: ${schema._zod.def.type}`);
+}
+
+function textForm(schema: z.ZodString): string {
+  let least = '';
+  let most = '';
+  for (const check of checksOf(schema)) {
+    if (check instanceof z.core.$ZodCheckMinLength) least = `${check._zod.def.minimum}`;
+    if (check instanceof z.core.$ZodCheckMaxLength) most = `${check._zod.def.maximum}`;
+    if (check instanceof z.core.$ZodCheckLengthEquals) least = most = `${check._zod.def.length}`;
+  }
+  return most === '' ? 'tstr' : `tstr-${least}-${most}`;
 }
 
 function arrayFormOf(schema: z.ZodArray): string {

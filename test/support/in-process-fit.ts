@@ -58,6 +58,16 @@ export async function sitesInProcess(
 ): Promise<SitesInProcess> {
   const spec = parsedValue(parseFitSpecification(text, 'case.fit.yaml'));
   if ('least' in spec.sites) throw new Error('name the sites');
+  return sitesOn(spec, await rawShards(text, table, spec.sites), curvatureMost);
+}
+
+/** Sites with these rows, in the order of the specification. */
+export function sitesOn(
+  spec: FitSpecification,
+  raws: readonly RawShard[],
+  curvatureMost: number | null,
+): SitesInProcess {
+  if ('least' in spec.sites) throw new Error('name the sites');
   const loss = lossOf(spec.loss);
   const allowance: Allowance = {
     leave: [...LEAVE_KINDS],
@@ -65,7 +75,6 @@ export async function sitesInProcess(
     numbersMost: null,
     roundsMost: null,
   };
-  const raws = await rawShards(text, table, spec.sites);
   const roster: Member[] = spec.sites.map((site) => ({ site, shard: SHARD, kernel: 'here' }));
   let solvers: SiteSolvers[] | null = null;
   const answer = ({ works, scaling }: RunAsk): Batch => {

@@ -97,9 +97,10 @@ export class Program {
     return found;
   }
 
-  /** The JSON lines on standard output so far. */
-  jsonLines<T>(): T[] {
-    const whole = this.stdout.slice(0, this.stdout.lastIndexOf('\n') + 1);
+  /** The JSON lines so far, on standard output unless said otherwise. */
+  jsonLines<T>(from: 'stdout' | 'stderr' = 'stdout'): T[] {
+    const text = this[from];
+    const whole = text.slice(0, text.lastIndexOf('\n') + 1);
     return whole
       .split('\n')
       .filter((line) => line !== '')

@@ -199,8 +199,10 @@ export class Following {
   }
 
   /** Waits for the outcome: the exit code, the outcome event and the bytes of result.json. */
-  async outcome(): Promise<{ code: number | null; event: EventOf<'outcome'>; result: string }> {
-    const { code } = await this.program.end();
+  async outcome(
+    patienceMs?: number,
+  ): Promise<{ code: number | null; event: EventOf<'outcome'>; result: string }> {
+    const { code } = await this.program.end(patienceMs);
     const event = this.has('outcome');
     if (event === undefined) throw new Error(`no outcome. ${this.seen()}`);
     return { code, event, result: await this.stage.resultOf(await this.run()) };

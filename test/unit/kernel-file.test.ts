@@ -25,15 +25,20 @@ test('a matrix wider than any kernel takes is left to the plain one, with a warn
   expect(told).toEqual(['70000 columns are too many for the kernel simd; the plain one serves.']);
 });
 
-/** What a Node without SIMD answers: only compiled programs can be started with its flags. */
-const withoutSimd = (wanted: string): { readonly name: string; readonly told: string[] } =>
+/** What a Node without something answers: only compiled programs can be started with its flags. */
+const nodeWithout = (
+  taken: string,
+  wanted: string,
+  flags: readonly string[] = [],
+): { readonly name: string; readonly told: string[] } =>
   JSON.parse(
     execFileSync(
       process.execPath,
       [
+        ...flags,
         '--input-type=module',
         '-e',
-        `WebAssembly.validate = () => false;
+        `${taken};
          const { kernelVariant } = await import('./dist/worker/service/kernel-file.js');
          const told = [];
          const got = await kernelVariant(${wanted}, (message) => told.push(message));
@@ -43,11 +48,16 @@ const withoutSimd = (wanted: string): { readonly name: string; readonly told: st
     ),
   );
 
-test('without SIMD the plain kernel serves and the custodian is told; one asked for is refused', () => {
-  const { name, told } = withoutSimd('null');
-  expect(name).toBe('plain');
-  expect(told).toEqual([
-    'This Node has no SIMD in WebAssembly: the plain kernel is used, several times slower.',
-  ]);
-  expect(withoutSimd("'relaxed'")).toEqual({ name: 'not-supported', told: [] });
-});
+test.each([
+  ['SIMD in WebAssembly', 'WebAssembly.validate = () => false', []],
+  ['shared memory', 'delete globalThis.SharedArrayBuffer', []],
+  ['WebAssembly', '', ['--jitless']],
+])(
+  'without %s the plain kernel serves and the custodian is told; one asked for is refused',
+  (lack, taken, flags) => {
+    const { name, told } = nodeWithout(taken, 'null', flags);
+    expect(name).toBe('plain');
+    expect(told).toEqual([`This Node has no ${lack}: the plain kernel is used, several times slower.`]);
+    expect(nodeWithout(taken, "'relaxed'", flags)).toEqual({ name: 'not-supported', told: [] });
+  },
+);

@@ -1,3 +1,4 @@
+import { totalmem } from 'node:os';
 import { setTimeout as delay } from 'node:timers/promises';
 import type { KernelName, KernelVariant } from '../../numerics/kernels/kernel.js';
 import { type Failure, fail, succeed } from '../../protocol/failure.js';
@@ -6,12 +7,15 @@ import { PROTOCOL_VERSION, SOFTWARE } from '../../protocol/version.js';
 import { Ledger } from '../custody/ledger.js';
 import type { SiteFile } from '../custody/site-file.js';
 import { type Answerer, createAnswerer } from '../service/answerer.js';
+import { type ShardBuilder, shardsInMemory } from '../service/built-shard.js';
 import { keepConnected, type Timers } from '../service/connection.js';
 import type { WorkerEvent } from '../service/events.js';
 import { beat } from '../service/heartbeat.js';
 import { kernelVariant } from '../service/kernel-file.js';
+import { checkRowCache } from '../service/row-cache.js';
+import { boundedShards } from '../service/row-store.js';
 import { besideSiteFile, checkLedgerWritable, ledgerOnDisk, readApprovals } from '../service/site-folder.js';
-import { readTable } from '../source/read-table.js';
+import { readInParts, readTable } from '../source/read-table.js';
 import { readSiteFile } from './documents.js';
 import { EXIT, type ExitCode, exitCodeOf } from './exit-codes.js';
 import { levelOf, sentenceOf } from './log-lines.js';
@@ -25,6 +29,10 @@ export interface JoinOptions {
   readonly json: boolean;
   /** Absent: the fastest one that this Node takes without an experimental flag. */
   readonly kernel?: KernelName;
+  /** Threads that work on the rows. */
+  readonly threads: number;
+  /** Bytes that the rows of a table may take; absent: all rows are in memory. */
+  readonly memory?: number;
   /** File for a sign of life, for service managers. */
   readonly heartbeat?: string;
 }
@@ -74,12 +82,17 @@ async function joinAs(
   const ledgerFile = besideSiteFile(site.file, 'ledger');
   const writable = await checkLedgerWritable(ledgerFile);
   if (!writable.ok) return writable.failure;
+  const keepable =
+    options.memory === undefined ? succeed(null) : checkRowCache(besideSiteFile(site.file, 'rows'));
+  if (!keepable.ok) return keepable.failure;
   const opened = await Ledger.open(ledgerOnDisk(ledgerFile), () => new Date());
   if (!opened.ok) return opened.failure;
   const { ledger, warning } = opened.value;
   if (warning !== null) onEvent({ event: 'warning', message: warning });
-  const kernel = await kernelVariant(options.kernel ?? null, (message) =>
-    onEvent({ event: 'warning', message }),
+  const kernel = await kernelVariant(
+    options.kernel ?? null,
+    (message) => onEvent({ event: 'warning', message }),
+    options.threads,
   );
   if (!kernel.ok) return kernel.failure;
   const answerer = answererOf(site, options, ledger, kernel.value, onEvent);
@@ -91,7 +104,7 @@ async function joinAs(
       site: site.site,
       shard: site.shard,
       software: SOFTWARE,
-      kernel: `${kernel.value.name}, ${process.arch}, Node ${process.versions.node}`,
+      kernel: kernelWords(kernel.value),
     },
     connect: () => connectLink({ url, ...secrets.value }),
     answerer,
@@ -102,6 +115,12 @@ async function joinAs(
     graceMs: GRACE_MS,
     once: options.once,
   });
+}
+
+/** What the run's result says of the arithmetic here. */
+function kernelWords({ name, threads = 1 }: KernelVariant): string {
+  const words = `${name}, ${process.arch}, Node ${process.versions.node}`;
+  return threads === 1 ? words : `${words}, ${threads} threads`;
 }
 
 function answererOf(
@@ -123,11 +142,31 @@ function answererOf(
     },
     kernel,
     readTable: (request) => readTable(site.table, request),
+    buildShard: shardBuilder(site, options.memory),
     ledger,
     nowMs: () => performance.now(),
     onEvent,
     pause: () => new Promise((resolve) => setImmediate(resolve)),
   });
+}
+
+function shardBuilder({ table, file }: SiteFile, memoryBytes: number | undefined): ShardBuilder {
+  if (memoryBytes === undefined) {
+    const bytesMost = machineMemory();
+    return shardsInMemory((request) => readTable(table, request, bytesMost), bytesMost);
+  }
+  return boundedShards({
+    memoryBytes,
+    cachePath: besideSiteFile(file, 'rows'),
+    readInParts: (request, take) => readInParts(table, request, memoryBytes, take),
+    readTable: (request, bytesMost) => readTable(table, request, bytesMost),
+  });
+}
+
+/** Bytes of memory that this process can have at all. */
+function machineMemory(): number {
+  const allowed = process.constrainedMemory();
+  return allowed > 0 ? Math.min(allowed, totalmem()) : totalmem();
 }
 
 /** Where a coordinator takes workers, unless the site file names another path (behind a proxy). */

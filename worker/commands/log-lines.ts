@@ -1,5 +1,6 @@
 import { describeFailure } from '../../protocol/failure.js';
 import type { WorkerEvent } from '../service/events.js';
+import { sizeText } from '../service/size.js';
 import { counted, duration, grouped } from './terminal.js';
 
 export type LogLevel = 'info' | 'warn' | 'error';
@@ -15,7 +16,7 @@ export function levelOf(event: WorkerEvent): LogLevel {
 export function sentenceOf(event: WorkerEvent): string {
   switch (event.event) {
     case 'connected':
-      return `Connected to ${event.url} as ${memberWords(event)} (${event.coordinator}).`;
+      return `Connected to ${event.url} as ${memberWords(event)} (${event.coordinator}), with the kernel ${event.kernel}.`;
     case 'disconnected':
       return disconnected(event);
     case 'run':
@@ -23,7 +24,8 @@ export function sentenceOf(event: WorkerEvent): string {
     case 'table': {
       const dropped = event.rowsDropped === 0 ? '' : ` (${grouped(event.rowsDropped)} left out)`;
       const read = `${counted(event.rowsUsed, 'row')}${dropped}`;
-      return `Read ${read} as ${counted(event.columns, 'design column')} in ${duration(event.tookMs)}.`;
+      const kept = event.bytesOnDisk === 0 ? '' : `; ${sizeText(event.bytesOnDisk)} of them are kept on disk`;
+      return `Read ${read} as ${counted(event.columns, 'design column')} in ${duration(event.tookMs)}${kept}.`;
     }
     case 'answered':
       return answered(event);

@@ -1,14 +1,16 @@
 import { type Checked, fail, succeed } from '../../protocol/failure.js';
-import { designColumns } from '../../protocol/specification/design-columns.js';
-import type { DesignColumn, FitSpecification } from '../../protocol/specification/types.js';
+import { designColumnNames, designColumns } from '../../protocol/specification/design-columns.js';
+import type { FitSpecification } from '../../protocol/specification/types.js';
 import type { LevelColumn, Table } from '../source/table.js';
 import { RawDenseRows } from './dense-rows.js';
-import { type FactorsByKey, factorValues, fillDesign, levelColumn, valuesOf } from './factors.js';
+import { factorValues, fillDesign, levelColumn, TransformedColumns } from './factors.js';
 import { clustersOf, foldsOf } from './folds.js';
 import { groupedByFold } from './group-rows.js';
+import { RawSparseRows } from './raw-sparse-rows.js';
 import { factorsOf } from './request.js';
 import { numericColumn, responseOf, sourceRow } from './response.js';
 import type { MarginColumns, RawShard } from './shard.js';
+import { isSparse, sparseEntries } from './sparse-build.js';
 import { VALUE_MOST } from './value-limit.js';
 
 /**
@@ -29,51 +31,51 @@ export function buildRawShard(spec: FitSpecification, table: Table): Checked<Raw
   if (foreign !== null) return foreign;
   const response = responseOf(spec, table);
   if (!response.ok) return response;
-  const columns = designColumns(spec);
-  const factors = finiteFactors(columns, table);
-  if (!factors.ok) return factors;
-  const x = new Float64Array(table.rowCount * columns.length);
-  fillDesign(x, columns, factors.value, table.rowCount);
-  const overflow = tooLarge(x, columns, table);
-  if (overflow !== null) return overflow;
+  const numeric = new TransformedColumns(table);
+  const undefinedAt = notFiniteTransform(spec, numeric, table);
+  if (undefinedAt !== null) return undefinedAt;
+  const columns = designColumnNames(spec);
+  const rows = isSparse(spec.terms)
+    ? sparseRows(spec, columns, numeric, table)
+    : denseRows(spec, numeric, table);
+  if (!rows.ok) return rows;
   const folds = foldsOf(spec, table);
   if (!folds.ok) return folds;
   const clusters = clustersOf(spec, table);
   const raw: RawShard = {
     rowCount: table.rowCount,
     rowsDropped: table.rowsDropped,
-    columns: columns.map((column) => column.name),
-    rows: new RawDenseRows(x, columns.length, table.rowCount),
+    columns,
+    rows: rows.value,
     ...response.value,
     folds: null,
     clusters: clusters === null ? null : { count: clusters.labels.length, ofRow: clusters.ofRow },
-    margins: spec.report.margins ? marginColumns(spec, columns, table) : null,
+    margins: spec.report.margins ? marginColumns(spec, table) : null,
   };
   return succeed(folds.value === null ? raw : groupedByFold(raw, folds.value));
 }
 
 /** The columns of the terms alone. */
-function marginColumns(
-  spec: FitSpecification,
-  columns: readonly DesignColumn[],
-  table: Table,
-): MarginColumns {
+function marginColumns(spec: FitSpecification, table: Table): MarginColumns {
   const numeric = new Map<string, Float64Array>();
   const levels = new Map<string, LevelColumn>();
   for (const { kind, column } of factorsOf(spec)) {
     if (kind === 'numeric') numeric.set(column, numericColumn(table, column));
     else levels.set(column, levelColumn(table, column));
   }
-  return { columns, numeric, levels };
+  return { columns: designColumns(spec), numeric, levels };
 }
 
-/** Values of every factor; a transform that is not finite names its row. */
-function finiteFactors(columns: readonly DesignColumn[], table: Table): Checked<FactorsByKey> {
-  const factors = factorValues(columns, table);
-  for (const factor of columns.flatMap((column) => column.factors)) {
-    if (factor.kind === 'level' || factor.transform === 'none') continue;
+/** The first value that a transform of the specification is not finite at. */
+function notFiniteTransform(
+  spec: FitSpecification,
+  numeric: TransformedColumns,
+  table: Table,
+): ReturnType<typeof fail> | null {
+  for (const factor of factorsOf(spec)) {
+    if (factor.kind === 'levels' || factor.transform === 'none') continue;
     const { column, transform } = factor;
-    const row = valuesOf(factors, factor).findIndex((value) => !Number.isFinite(value));
+    const row = numeric.of(factor).findIndex((value) => !Number.isFinite(value));
     if (row < 0) continue;
     const name = typeof transform === 'string' ? transform : `power ${transform.power}`;
     return fail(
@@ -85,31 +87,47 @@ function finiteFactors(columns: readonly DesignColumn[], table: Table): Checked<
       },
     );
   }
-  return succeed(factors);
+  return null;
 }
 
-function tooLarge(
-  x: Float64Array,
-  columns: readonly DesignColumn[],
+function denseRows(spec: FitSpecification, numeric: TransformedColumns, table: Table): Checked<RawDenseRows> {
+  const columns = designColumns(spec);
+  const p = columns.length;
+  const x = new Float64Array(table.rowCount * p);
+  fillDesign(x, columns, factorValues(columns, table, numeric), table.rowCount);
+  const at = x.findIndex(isTooLarge);
+  if (at >= 0) return tooLarge(x[at], Math.floor(at / p), columns[at % p].name, table);
+  return succeed(new RawDenseRows(x, p, table.rowCount));
+}
+
+function sparseRows(
+  spec: FitSpecification,
+  names: readonly string[],
+  numeric: TransformedColumns,
   table: Table,
-): ReturnType<typeof fail> | null {
-  const at = x.findIndex((value) => !(Math.abs(value) <= VALUE_MOST));
-  if (at < 0) return null;
-  return fail('value-not-finite', `The value ${x[at]} is larger than ${VALUE_MOST}, too large to square.`, {
-    where: {
-      row: sourceRow(table, Math.floor(at / columns.length)),
-      column: columns[at % columns.length].name,
-    },
+): Checked<RawSparseRows> {
+  const entries = sparseEntries(spec.terms, numeric, table);
+  const at = entries.values.findIndex(isTooLarge);
+  if (at < 0) return succeed(new RawSparseRows(entries, names.length));
+  const row = entries.starts.findIndex((_, r) => entries.starts[r + 1] > at);
+  return tooLarge(entries.values[at], row, names[entries.columns[at]], table);
+}
+
+const isTooLarge = (value: number): boolean => !(Math.abs(value) <= VALUE_MOST);
+
+const tooLarge = (value: number, row: number, column: string, table: Table): ReturnType<typeof fail> =>
+  fail('value-not-finite', `The value ${value} is larger than ${VALUE_MOST}, too large to square.`, {
+    where: { row: sourceRow(table, row), column },
     remedy: 'Correct the value, or give the column in a larger unit.',
   });
-}
 
 /** The first row whose level is in the table's list but not in that of a term: the term would take it for its baseline. */
 function unlistedLevel(spec: FitSpecification, table: Table): ReturnType<typeof fail> | null {
   for (const term of factorsOf(spec)) {
     if (term.kind !== 'levels') continue;
     const { levels, codes } = levelColumn(table, term.column);
-    const listed = levels.map((level) => term.levels.includes(level));
+    const known = new Set(term.levels);
+    const listed = levels.map((level) => known.has(level));
     if (listed.every(Boolean)) continue;
     const row = codes.findIndex((code) => !listed[code]);
     if (row < 0) continue;

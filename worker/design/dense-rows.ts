@@ -2,6 +2,7 @@ import type { Kernel, KernelVariant, PassPoint, PassValue, RowLoss } from '../..
 import { plainKernel } from '../../numerics/kernels/plain.js';
 import { transposed } from '../../numerics/rows.js';
 import type { Scaling } from '../../protocol/messages/run.js';
+import { momentsOf } from './moments.js';
 import type { DesignRows, Moments, RawRows, RowData } from './rows.js';
 import type { Shard } from './shard.js';
 
@@ -86,35 +87,9 @@ export class RawDenseRows implements RawRows {
     readonly rowCount: number,
   ) {}
 
-  /** Two passes with the correction of Chan, Golub and LeVeque (1983, Am. Stat. 37:242), whose error does not grow with the mean. */
   moments(from: number, to: number): Moments {
-    const { p } = this;
-    const rowCount = to - from;
-    const x = this.x.subarray(from * p, to * p);
-    const mean = new Float64Array(p);
-    for (let at = 0; at < x.length; at += p) for (let j = 0; j < p; j++) mean[j] += x[at + j];
-    for (let j = 0; j < p; j++) mean[j] /= rowCount;
-    const rest = new Float64Array(p);
-    const centredSquares = new Float64Array(p);
-    const constant = new Array<boolean>(p).fill(true);
-    for (let at = 0; at < x.length; at += p)
-      for (let j = 0; j < p; j++) {
-        const away = x[at + j] - mean[j];
-        rest[j] += away;
-        centredSquares[j] += away * away;
-        if (x[at + j] !== x[j]) constant[j] = false;
-      }
-    for (let j = 0; j < p; j++) {
-      // a constant column has no spread at all, which rounding of the mean must not hide
-      if (constant[j]) {
-        mean[j] = x[j];
-        centredSquares[j] = 0;
-        continue;
-      }
-      centredSquares[j] = Math.max(0, centredSquares[j] - (rest[j] * rest[j]) / rowCount);
-      mean[j] += rest[j] / rowCount;
-    }
-    return { mean, centredSquares, constant };
+    const { x, p } = this;
+    return momentsOf(p, to - from, (look) => look(x.subarray(from * p, to * p)));
   }
 
   weightedSum(weights: Float64Array | null): Float64Array {

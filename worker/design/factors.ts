@@ -25,7 +25,11 @@ const keyOf = (factor: Factor): string =>
   );
 
 /** A transform that is not defined at a value gives a number that is not finite there. */
-export function factorValues(columns: readonly DesignColumn[], table: Table): FactorsByKey {
+export function factorValues(
+  columns: readonly DesignColumn[],
+  table: Table,
+  numeric = new TransformedColumns(table),
+): FactorsByKey {
   const found = new Map<string, FactorValues>();
   for (const factor of columns.flatMap((column) => column.factors)) {
     const key = keyOf(factor);
@@ -34,18 +38,24 @@ export function factorValues(columns: readonly DesignColumn[], table: Table): Fa
       const { levels, codes } = levelColumn(table, factor.column);
       found.set(key, { kind: 'indicator', codes, code: levels.indexOf(factor.level) });
     } else {
-      const values = numericColumn(table, factor.column);
-      found.set(key, { kind: 'values', values: transformed(values, factor.transform) });
+      found.set(key, { kind: 'values', values: numeric.of(factor) });
     }
   }
   return found;
 }
 
-/** The values of a numeric factor of the design that `factors` were made for. */
-export function valuesOf(factors: FactorsByKey, factor: NumericFactor): Float64Array {
-  const found = factors.get(keyOf(factor));
-  if (found?.kind !== 'values') throw new Error(`no values for the factor ${keyOf(factor)}`);
-  return found.values;
+/** The numeric columns of a table as some terms transform them, each once. */
+export class TransformedColumns {
+  readonly #made = new Map<string, Float64Array>();
+
+  constructor(private readonly table: Table) {}
+
+  of({ column, transform }: Pick<NumericFactor, 'column' | 'transform'>): Float64Array {
+    const key = keyOf({ kind: 'numeric', column, transform });
+    const values = this.#made.get(key) ?? transformed(numericColumn(this.table, column), transform);
+    this.#made.set(key, values);
+    return values;
+  }
 }
 
 /** Not finite where the transform is not defined or too large. */

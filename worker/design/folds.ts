@@ -29,13 +29,20 @@ export function foldsOf({ choose }: FitSpecification, table: Table): Checked<Lab
       `This table has ${table.rowCount} rows to use, the cross-validation makes ${by.folds} folds of them.`,
       { remedy: 'Choose with fewer folds, or run without this site.' },
     );
-  const hash = rowHash(by.seed);
-  // the row's number in the whole table: of no account what else is missing or dropped
-  const codes = Int32Array.from({ length: table.rowCount }, (_, row) =>
-    Math.floor((hash(sourceRow(table, row) - 1) * by.folds) / 2 ** 32),
-  );
+  const codes = foldCodes(by, table);
   return succeed(
     labelled({ levels: Array.from({ length: by.folds }, (_, fold) => String(fold + 1)), codes }),
+  );
+}
+
+/** The fold of each row, from 0, by its number in the whole table: of no account what else is missing or dropped. */
+export function foldCodes(
+  { seed, folds }: { readonly seed: number; readonly folds: number },
+  table: Pick<Table, 'rowCount' | 'rowNumbers'>,
+): Int32Array {
+  const hash = rowHash(seed);
+  return Int32Array.from({ length: table.rowCount }, (_, row) =>
+    Math.floor((hash(sourceRow(table, row) - 1) * folds) / 2 ** 32),
   );
 }
 
@@ -62,7 +69,7 @@ export function clustersOf({ report }: FitSpecification, table: Table): Labelled
   return column === null ? null : labelled(labelColumn(table, column));
 }
 
-function labelColumn(table: Table, column: string): LevelColumn {
+export function labelColumn(table: Table, column: string): LevelColumn {
   const values = table.labels?.get(column);
   if (values === undefined) throw new Error(`the table was read without the labels of ${column}`);
   return values;

@@ -1,19 +1,24 @@
 import type { LevelColumn } from '../source/table.js';
 import type { Labelled } from './folds.js';
+import type { RawRows } from './rows.js';
 import type { FoldRanges, RawShard } from './shard.js';
 
 /**
  * The shard with its rows fold after fold, each fold in table order, so that the rows in a fold, and those outside it in
- * a ring, stand side by side. The design is reordered in place.
+ * a ring, stand side by side. The design is reordered in place; `grouped` is a design in that order already.
  */
-export function groupedByFold(raw: RawShard, { labels, ofRow }: Labelled): RawShard {
+export function groupedByFold(
+  raw: RawShard,
+  { labels, ofRow }: Labelled,
+  grouped: RawRows | null = null,
+): RawShard {
   const starts = startsOf(labels.length, ofRow);
   const order = orderOf(starts, ofRow);
   const { y, weights, offset, clusters, margins } = raw;
   const folds: FoldRanges = { labels, starts };
   return {
     ...raw,
-    rows: raw.rows.reordered(order),
+    rows: grouped ?? raw.rows.reordered(order),
     y: gathered(y, order),
     weights: weights === null ? null : gathered(weights, order),
     offset: offset === null ? null : gathered(offset, order),

@@ -103,7 +103,8 @@ const outOfReach = (
   });
 
 /** 1-based data row in the source. */
-export const sourceRow = (table: Table, row: number): number => table.rowNumbers?.[row] ?? row + 1;
+export const sourceRow = (table: Pick<Table, 'rowNumbers'>, row: number): number =>
+  table.rowNumbers?.[row] ?? row + 1;
 
 export function numericColumn(table: Table, column: string): Float64Array {
   const values = table.numeric.get(column);

@@ -39,6 +39,20 @@ export interface DesignRows {
   stretch(from: number, to: number): DesignRows;
   /** The columns `kept` alone, in that order. */
   columns(kept: readonly number[]): DesignRows;
+  /** Absent, or null: too few columns are idle to set them apart. */
+  occupied?(): Occupied | null;
+}
+
+/** Columns set apart that are the same number in every row, as those of levels that no row has. */
+export interface Occupied {
+  /** The others, in ascending order. */
+  readonly columns: Int32Array;
+  /** Idle columns in ascending order, and the number that each is in every row. */
+  readonly idle: { readonly columns: Int32Array; readonly values: Float64Array };
+  /** Whether any of these numbers is not zero. */
+  readonly shifting: boolean;
+  /** The others and, where idle columns shift the rows, one more column of ones at their end. */
+  readonly rows: DesignRows;
 }
 
 /** Unweighted moments of the design columns over a stretch of rows, p numbers each. */

@@ -11,6 +11,7 @@ import { type JointEnd, jointSteps, type Others } from './joint.js';
 import { type NewtonEnd, type NewtonLimits, newtonProximal } from './newton.js';
 import { type Quadratic, quadratic, targetOf, weightOf } from './quadratic.js';
 import { rowCurvatures, rowPass, rowState } from './row-pass.js';
+import { isFactored } from './row-space.js';
 
 /**
  * What a worker computes on its rows. p is the number of solver columns; every vector has p numbers unless stated. The
@@ -19,7 +20,7 @@ import { rowCurvatures, rowPass, rowState } from './row-pass.js';
 export interface LocalSolver {
   /**
    * x = argmin φ(x) + ½ (x − center)ᵀ M (x − center), M = scale · diag(diagonal), positive. Smooth losses begin at
-   * `start`; the squared loss is solved in one step. Fails with `not-positive-definite`, `number-not-finite`, `stalled`.
+   * `start`, as does a squared loss of many columns; others are solved in one step. Fails with `not-positive-definite`, `number-not-finite`, `stalled`.
    */
   proximal(
     center: Float64Array,
@@ -72,7 +73,7 @@ export function localSolver(shard: Shard, loss: Loss): LocalSolver {
       for (let j = 0; j < metric.length; j++) {
         if (!(metric[j] > 0)) return notPositiveDefinite(`The metric (entry ${j} is ${metric[j]})`);
       }
-      if (squares !== null) {
+      if (squares !== null && isFactored(shard, metric)) {
         const point = squares.proximalPoint(center, metric);
         return point.ok ? succeed({ point: point.value, newtonSteps: 1 }) : point;
       }
@@ -149,8 +150,10 @@ export function sketch(
   const rows = rowState(rowCount);
   rowPass(shard, loss, point, rows, null);
   const weights = rowCurvatures(shard, loss, rows.eta);
-  for (let from = 0; from < rowCount; from += SKETCH_BLOCK_ROWS) {
-    const to = Math.min(from + SKETCH_BLOCK_ROWS, rowCount);
+  // a sum over rows by their entries costs p numbers, however few the rows
+  const step = shard.rows.sparse ? Math.max(1, rowCount) : SKETCH_BLOCK_ROWS;
+  for (let from = 0; from < rowCount; from += step) {
+    const to = Math.min(from + step, rowCount);
     const along = new Float64Array(to - from);
     for (let k = 0; k < columns; k++) {
       shard.rows.products(from, to, directions.subarray(k * p, (k + 1) * p), along);

@@ -1,7 +1,8 @@
 import type { CholeskyFactor, RowState } from '../../numerics/kernels/kernel.js';
 import { maxOf } from '../../numerics/vector.js';
 import type { Shard } from '../design/shard.js';
-import { inRowSpace, pointFromRows, rowFactor, rowKernel } from './row-space.js';
+import { gradientSystem } from './gradient-system.js';
+import { inRowSpace, isFactored, pointFromRows, rowFactor, rowKernel } from './row-space.js';
 
 /** Where the next Newton step starts from. */
 export interface NewtonPoint {
@@ -10,6 +11,8 @@ export interface NewtonPoint {
   readonly rows: RowState;
   /** Gradient of the proximal objective at x. */
   readonly gradient: Float64Array;
+  /** Size of the terms of the objective at x. */
+  readonly magnitude: number;
 }
 
 /** The linear systems of the Newton steps of one proximal problem. */
@@ -18,12 +21,16 @@ export interface NewtonSystem {
   refresh(curvatures: Float64Array): boolean;
   /** −(XᵀSX + M)⁻¹ gradient with the curvatures S taken last. */
   step(at: NewtonPoint): Float64Array;
+  /** False where steps are found without a factor: there is nothing to keep from one step to the next. */
+  readonly factored: boolean;
   /** What a refresh costs, in passes over the rows. */
   readonly passesPerRefresh: number;
 }
 
-export const newtonSystem = (shard: Shard, metric: Float64Array, center: Float64Array): NewtonSystem =>
-  inRowSpace(shard, metric) ? rowSpaceSystem(shard, metric, center) : denseSystem(shard, metric);
+export function newtonSystem(shard: Shard, metric: Float64Array, center: Float64Array): NewtonSystem {
+  if (inRowSpace(shard, metric)) return rowSpaceSystem(shard, metric, center);
+  return isFactored(shard, metric) ? denseSystem(shard, metric) : gradientSystem(shard, metric);
+}
 
 /** Share of the largest diagonal entry added where the matrix does not factor; the direction stays one of descent. */
 const LIFT = 1e-12;
@@ -33,6 +40,7 @@ function denseSystem(shard: Shard, metric: Float64Array): NewtonSystem {
   const { kernel } = shard.rows;
   let factor: CholeskyFactor | null = null;
   return {
+    factored: true,
     passesPerRefresh: p / 4 + (p * p) / (6 * rowCount),
     refresh(curvatures) {
       const a = shard.rows.gram(curvatures, 1);
@@ -71,6 +79,7 @@ function rowSpaceSystem(shard: Shard, metric: Float64Array, center: Float64Array
   let roots: Float64Array = new Float64Array(rowCount);
   let factor: CholeskyFactor | null = null;
   return {
+    factored: true,
     passesPerRefresh: (rowCount * rowCount) / (6 * p),
     refresh(curvatures) {
       roots = curvatures.map(Math.sqrt);

@@ -4,6 +4,7 @@ import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import type { Shard } from '../design/shard.js';
 import type { Loss } from '../losses/loss.js';
 import { notFinite, notPositiveDefinite } from './failures.js';
+import { withoutIdle } from './idle-columns.js';
 import { type NewtonSystem, newtonSystem } from './newton-system.js';
 import { rowCurvatures, rowPass, rowState } from './row-pass.js';
 
@@ -39,6 +40,11 @@ const NOISE = 1e-13;
 /** Share of the point's size under which a step is rounding. */
 const STEP_NOISE = 1e-13;
 const HALVINGS_MOST = 40;
+/**
+ * Share of the first decrement that is near enough where steps have to be found by iteration: the nearer the start was,
+ * the nearer the end is. An ask starts where the one before ended, so the accuracy follows the outer residual.
+ */
+const GAIN = 1e-5;
 
 /** A point, its objective and what the next step needs. */
 interface Iterate {
@@ -59,23 +65,35 @@ interface Direction {
 
 /**
  * Damped Newton (Boyd and Vandenberghe, Convex Optimization, §9.5) with the factor kept from step to step while that is
- * cheaper than a new one: a kept factor contracts the decrement linearly, a new one quadratically.
+ * cheaper than a new one: a kept factor contracts the decrement linearly, a new one quadratically. Columns that are idle
+ * at this site are solved for aside.
  */
 export function newtonProximal(problem: ProximalProblem, limits: NewtonLimits): Checked<NewtonEnd> {
+  const own = withoutIdle(problem);
+  if (own === null) return minimise(problem, limits);
+  const end = minimise(own.problem, limits);
+  if (!end.ok) return end;
+  const { point, lastStep } = end.value;
+  return succeed({ ...end.value, point: own.whole(point), lastStep: own.wholeStep(lastStep) });
+}
+
+function minimise(problem: ProximalProblem, limits: NewtonLimits): Checked<NewtonEnd> {
   const rows = rowState(problem.shard.rowCount);
   const system = newtonSystem(problem.shard, problem.metric, problem.center);
   let iterate = iterateAt(problem, problem.start, rows);
   // decrement of the last whole step: what a kept factor is judged by
   let before: number | null = null;
+  let first: number | null = null;
   for (let steps = 0; steps < limits.stepsMost; steps++) {
     if (!Number.isFinite(iterate.objective)) return notFinite('The loss');
     const direction = nextDirection(problem, limits, system, iterate, rows, before);
     if (direction === null) return notPositiveDefinite('Curvature of the loss plus metric');
     const { step, decrement } = direction;
     if (!Number.isFinite(decrement)) return notFinite('The Newton step');
-    const target = direction.kept ? accuracyKept(limits) : limits.accuracy;
-    const last =
-      Math.abs(decrement) <= target * iterate.magnitude || (!direction.kept && isRounding(step, iterate.x));
+    first ??= decrement;
+    const share = direction.kept ? accuracyKept(limits) : limits.accuracy;
+    const target = Math.max(share * iterate.magnitude, system.factored ? 0 : GAIN * first);
+    const last = Math.abs(decrement) <= target || (!direction.kept && isRounding(step, iterate.x));
     if (last) {
       const point = plusScaled(iterate.x, 1, step);
       return succeed({ point, newtonSteps: steps + 1, lastStep: step, converged: true });
@@ -112,7 +130,7 @@ function nextDirection(
   rows: RowState,
   before: number | null,
 ): Direction | null {
-  if (before !== null) {
+  if (before !== null && system.factored) {
     const kept = directionFrom(system, iterate, rows, true);
     const target = accuracyKept(limits) * iterate.magnitude;
     if (worthKeeping(system, kept.decrement, before, target)) return kept;
@@ -130,8 +148,9 @@ function worthKeeping(system: NewtonSystem, decrement: number, before: number, t
 }
 
 function directionFrom(system: NewtonSystem, iterate: Iterate, rows: RowState, kept: boolean): Direction {
-  const step = system.step({ x: iterate.x, rows, gradient: iterate.gradient });
-  return { step, decrement: -dot(iterate.gradient, step), kept };
+  const { x, gradient, magnitude } = iterate;
+  const step = system.step({ x, rows, gradient, magnitude });
+  return { step, decrement: -dot(gradient, step), kept };
 }
 
 /** Backtracking by halves; null where no step length lowers the objective. `rows` are those of the point returned. */

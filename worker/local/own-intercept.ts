@@ -23,6 +23,7 @@ import {
 import { newtonProximal } from './newton.js';
 import { type Quadratic, quadratic } from './quadratic.js';
 import { rowPass, rowState } from './row-pass.js';
+import { isFactored } from './row-space.js';
 
 /**
  * A local solver whose φ is the least over an intercept of the site's own (the profile of φ): the gradient is that of
@@ -100,7 +101,7 @@ class ProfileSolver {
       if (!(held > 0)) return notPositiveDefinite(`The metric (entry ${j} is ${held})`);
     }
     const metric = afterZero(diagonal.map((d) => scale * d));
-    if (squares !== null) {
+    if (squares !== null && isFactored(shard, metric)) {
       const point = squares.proximalPoint(afterZero(center), metric);
       return point.ok ? succeed({ point: point.value.slice(1), newtonSteps: 1 }) : point;
     }

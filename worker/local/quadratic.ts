@@ -61,9 +61,12 @@ function denseSolve(shard: Shard, gram: () => Float64Array, linear: () => Float6
 /** x = center + M⁻¹XᵀS a with (I + SKS) a = S (y − offset − X center), S = √(W/N): nothing cancels. */
 function rowSpaceSolve(shard: Shard): Solve {
   const { rowCount, p } = shard;
-  const roots = Float64Array.from({ length: rowCount }, (_, r) => Math.sqrt(weightOf(shard, r)));
+  // a number for every row, and most shards never come this way
+  let kept: Float64Array | null = null;
   const factors = metricCache<CholeskyFactor | null>(8 * rowCount * rowCount);
   return (center, metric) => {
+    kept ??= Float64Array.from({ length: rowCount }, (_, r) => Math.sqrt(weightOf(shard, r)));
+    const roots = kept;
     const factor = factors(metric, () => rowFactor(shard, rowKernel(shard, metric), roots));
     if (factor === null) return null;
     const right = new Float64Array(rowCount);

@@ -21,12 +21,15 @@ import {
 } from '../custody/policy.js';
 import type { Policy } from '../custody/site-file.js';
 import type { RawShard } from '../design/shard.js';
+import { RowsLost } from '../design/streamed-rows.js';
 import { lossOf } from '../losses/index.js';
 import type { Table, TableRequest } from '../source/table.js';
 import { workInWords } from './ask-words.js';
+import type { ShardBuilder } from './built-shard.js';
 import { computeWorks } from './compute.js';
 import type { WorkerEvent } from './events.js';
 import { type LiveRun, type RawShards, solverColumns, solversOf, specificationOf } from './live-run.js';
+import { checkMatrices } from './matrix-size.js';
 import { fillWorks, rememberAsked } from './memory.js';
 import { checkWholeSite } from './whole-site.js';
 
@@ -40,6 +43,8 @@ export interface AnswerMeans {
   /** What passes over the rows are computed with; the plain one where none is named. */
   readonly kernel?: KernelVariant;
   readonly readTable: (request: TableRequest) => Promise<Checked<Table>>;
+  /** How shards are made of the table; absent: in memory. */
+  readonly buildShard?: ShardBuilder;
   readonly ledger: Pick<Ledger, 'departed' | 'look' | 'append' | 'catchUp'>;
   readonly nowMs: () => number;
   readonly onEvent: (event: WorkerEvent) => void;
@@ -72,7 +77,8 @@ export class AnswerMaker {
     const started = this.#means.nowMs();
     const spec = await this.#admit(live);
     if (!spec.ok) return spec;
-    const wrong = checkAsk(ask, solverColumns(spec.value, live.message.scaling));
+    const columns = solverColumns(spec.value, live.message.scaling);
+    const wrong = checkAsk(ask, columns) ?? checkMatrices(ask.work, columns);
     if (wrong !== null) return { ok: false, failure: wrong };
     const filled = fillWorks(ask, live.memory);
     if (!filled.ok) return filled;
@@ -126,10 +132,32 @@ export class AnswerMaker {
     return made;
   }
 
-  async #compute({ ask, live, spec, works, wanted }: Piece): Promise<Checked<Answer> | null> {
+  /** Where rows kept on disk are lost, the table is read again, once an answer. */
+  async #compute(piece: Piece): Promise<Checked<Answer> | null> {
+    try {
+      return await this.#computeOnce(piece);
+    } catch (error) {
+      this.#giveUpLost(error, piece.live);
+      this.#means.onEvent({ event: 'warning', message: `${error.message} The table is read again.` });
+    }
+    try {
+      return await this.#computeOnce(piece);
+    } catch (error) {
+      this.#giveUpLost(error, piece.live);
+      return fail('state-unwritable', error.message, { remedy: 'Check the disk of the site file.' });
+    }
+  }
+
+  #giveUpLost(error: unknown, live: LiveRun): asserts error is RowsLost {
+    if (!(error instanceof RowsLost)) throw error;
+    this.#shards.discard(error);
+    live.solvers = null;
+  }
+
+  async #computeOnce({ ask, live, spec, works, wanted }: Piece): Promise<Checked<Answer> | null> {
     const raw = await this.#rows(ask.run, spec);
     if (!raw.ok) return raw;
-    const solvers = solversOf(live, spec, raw.value, this.#means.kernel);
+    const solvers = await solversOf(live, spec, raw.value, this.#means.kernel);
     if (!solvers.ok) return solvers;
     const means = {
       raw: raw.value,
@@ -152,11 +180,14 @@ export class AnswerMaker {
     const started = this.#means.nowMs();
     const got = await this.#shards.get(run, spec);
     if (!got.ok) return got;
-    const { raw, fresh } = got.value;
+    const { built, fresh } = got.value;
+    const { raw } = built;
     if (fresh) {
+      const { bytesOnDisk } = built;
       const { rowCount: rowsUsed, rowsDropped, columns } = raw;
       const tookMs = this.#means.nowMs() - started;
-      this.#means.onEvent({ event: 'table', run, rowsUsed, rowsDropped, columns: columns.length, tookMs });
+      const read = { rowsUsed, rowsDropped, columns: columns.length, bytesOnDisk, tookMs };
+      this.#means.onEvent({ event: 'table', run, ...read });
     }
     const { policy } = this.#means;
     const refused = checkRows(policy, raw.rowCount) ?? checkFolds(policy, raw.folds);

@@ -4,6 +4,7 @@ import type { Prepare } from '../../protocol/messages/run.js';
 import { messageDigest } from '../custody/content.js';
 import type { Departed } from '../custody/policy.js';
 import { AnswerMaker, type AnswerMeans } from './answer-maker.js';
+import { shardsInMemory } from './built-shard.js';
 import { type LiveRun, RawShards, sameScaling } from './live-run.js';
 import { VectorMemory } from './memory.js';
 import { NewestAsks } from './newest-asks.js';
@@ -68,7 +69,7 @@ class OrderedAnswerer implements Answerer {
     this.#deps = deps;
     this.#bounds = { ...BOUNDS, ...deps.bounds };
     this.#newest = new NewestAsks(this.#bounds.runsMost);
-    this.#shards = new RawShards(deps.readTable, deps.shard);
+    this.#shards = new RawShards(deps.buildShard ?? shardsInMemory(deps.readTable), deps.shard);
     this.#maker = new AnswerMaker(deps, this.#shards);
   }
 

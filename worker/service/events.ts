@@ -8,6 +8,8 @@ export type WorkerEvent =
       readonly site: string;
       readonly shard: { readonly index: number; readonly of: number };
       readonly coordinator: string;
+      /** What computes over the rows, as the coordinator is told. */
+      readonly kernel: string;
     }
   | {
       readonly event: 'disconnected';
@@ -25,6 +27,8 @@ export type WorkerEvent =
       readonly rowsUsed: number;
       readonly rowsDropped: number;
       readonly columns: number;
+      /** Of the design columns, where they are not in memory; else 0. */
+      readonly bytesOnDisk: number;
       readonly tookMs: number;
     }
   | {

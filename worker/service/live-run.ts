@@ -4,11 +4,11 @@ import type { Answer } from '../../protocol/messages/round.js';
 import type { Prepare, Scaling } from '../../protocol/messages/run.js';
 import { digestOf, readCanonical } from '../../protocol/specification/canonical.js';
 import type { FitSpecification } from '../../protocol/specification/types.js';
-import { buildRawShard } from '../design/build.js';
 import { tableRequest } from '../design/request.js';
 import type { RawShard } from '../design/shard.js';
+import type { RowsLost } from '../design/streamed-rows.js';
 import { type SiteSolvers, siteSolvers } from '../local/site-solvers.js';
-import type { Table, TableRequest } from '../source/table.js';
+import { type BuiltShard, type ShardBuilder, withinMemory } from './built-shard.js';
 import type { VectorMemory } from './memory.js';
 
 /** One run as this worker knows it. Everything in it can be built again from `prepare` messages and the table. */
@@ -61,18 +61,19 @@ const sameNumbers = (a: ArrayLike<number>, b: ArrayLike<number>): boolean =>
   a.length === b.length && Array.from(a).every((value, at) => Object.is(value, b[at]));
 
 /** The run's local solvers, built when first needed. */
-export function solversOf(
+export async function solversOf(
   run: LiveRun,
   spec: FitSpecification,
   raw: RawShard,
   kernel: KernelVariant | undefined,
-): Checked<SiteSolvers | null> {
+): Promise<Checked<SiteSolvers | null>> {
   const { scaling } = run.message;
   if (run.solvers !== null || scaling === null) return succeed(run.solvers);
   const fits = checkScaling(scaling, raw.columns.length);
   if (!fits.ok) return fits;
-  run.solvers = siteSolvers(spec, raw, scaling, kernel);
-  return succeed(run.solvers);
+  const made = await withinMemory(() => succeed(siteSolvers(spec, raw, scaling, kernel)));
+  if (made.ok) run.solvers = made.value;
+  return made;
 }
 
 type Shard = { readonly index: number; readonly of: number };
@@ -82,12 +83,12 @@ type Shard = { readonly index: number; readonly of: number };
  * reading is not kept: the custodian may mend the table while the run waits.
  */
 export class RawShards {
-  readonly #read: (request: TableRequest) => Promise<Checked<Table>>;
+  readonly #build: ShardBuilder;
   readonly #shard: Shard;
-  readonly #shards = new Map<string, { readonly raw: RawShard; readonly runs: Set<string> }>();
+  readonly #shards = new Map<string, { readonly built: BuiltShard; readonly runs: Set<string> }>();
 
-  constructor(read: (request: TableRequest) => Promise<Checked<Table>>, shard: Shard) {
-    this.#read = read;
+  constructor(build: ShardBuilder, shard: Shard) {
+    this.#build = build;
     this.#shard = shard;
   }
 
@@ -95,7 +96,7 @@ export class RawShards {
   async get(
     run: string,
     spec: FitSpecification,
-  ): Promise<Checked<{ readonly raw: RawShard; readonly fresh: boolean }>> {
+  ): Promise<Checked<{ readonly built: BuiltShard; readonly fresh: boolean }>> {
     const request = tableRequest(spec, this.#shard);
     const { response, offset, weights, terms, loss, choose, report } = spec;
     const folds = choose?.kind === 'folds' ? choose.by : null;
@@ -104,21 +105,29 @@ export class RawShards {
     const kept = this.#shards.get(key);
     if (kept !== undefined) {
       kept.runs.add(run);
-      return succeed({ raw: kept.raw, fresh: false });
+      return succeed({ built: kept.built, fresh: false });
     }
-    const table = await this.#read(request);
-    if (!table.ok) return table;
-    const raw = buildRawShard(spec, table.value);
-    if (!raw.ok) return raw;
-    this.#shards.set(key, { raw: raw.value, runs: new Set([run]) });
-    return succeed({ raw: raw.value, fresh: true });
+    const built = await withinMemory(() => this.#build(spec, request));
+    if (!built.ok) return built;
+    this.#shards.set(key, { built: built.value, runs: new Set([run]) });
+    return succeed({ built: built.value, fresh: true });
   }
 
   /** Drops what no other run uses. */
   release(run: string): void {
-    for (const [key, { runs }] of this.#shards) {
+    for (const [key, { built, runs }] of this.#shards) {
       runs.delete(run);
-      if (runs.size === 0) this.#shards.delete(key);
+      if (runs.size === 0) this.#drop(key, built);
     }
+  }
+
+  /** Drops the shard whose rows are lost, for all runs: the next `get` reads the table again. */
+  discard({ reader }: RowsLost): void {
+    for (const [key, { built }] of this.#shards) if (built.cache === reader) this.#drop(key, built);
+  }
+
+  #drop(key: string, { cache }: BuiltShard): void {
+    this.#shards.delete(key);
+    cache?.close();
   }
 }

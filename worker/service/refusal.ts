@@ -22,7 +22,7 @@ const OUTSIDE: Partial<Record<FailureCode, string>> = {
   'rows-too-few': 'The site has fewer usable rows than the cross-validation has folds.',
   'policy-rows': 'The site has fewer usable rows than its policy asks for.',
   'ledger-broken': 'The site cannot write to its ledger.',
-  'state-unwritable': 'The site cannot write to its ledger.',
+  'state-unwritable': 'The site cannot write to its disk.',
   'file-unreadable': 'The site cannot read its files.',
   internal: 'The worker met a defect of its own.',
 };

@@ -95,7 +95,8 @@ class Session {
     this.#frameBytesMost = frameBytesMost;
     void this.#awaitSteady();
     const { url, hello } = this.#deps;
-    this.#deps.onEvent({ event: 'connected', url, site: hello.site, shard: hello.shard, coordinator });
+    const { site, shard, kernel } = hello;
+    this.#deps.onEvent({ event: 'connected', url, site, shard, kernel, coordinator });
   }
 
   #unexpected(what: string): void {

@@ -5,8 +5,8 @@ import { type Checked, fail, succeed } from '../../protocol/failure.js';
 import { type Approval, parseApprovals, withApproval } from '../custody/approvals.js';
 import type { LedgerFile } from '../custody/ledger.js';
 
-/** The files a worker keeps beside its site file: `NAME.ledger` and `NAME.approvals` beside `NAME.site.yaml`. */
-export function besideSiteFile(siteFile: string, extension: 'ledger' | 'approvals'): string {
+/** What a worker keeps beside its site file `NAME.site.yaml`: `NAME.ledger`, `NAME.approvals`, and rows that have no name for long. */
+export function besideSiteFile(siteFile: string, extension: 'ledger' | 'approvals' | 'rows'): string {
   const name = basename(siteFile).replace(/(\.site)?\.ya?ml$/, '');
   return join(dirname(siteFile), `${name}.${extension}`);
 }

@@ -11,7 +11,11 @@ export interface Engine {
  * Opens DuckDB with nothing that reaches beyond the custodian's files: no extension is fetched, no row is spilled to
  * disk. Rows keep their order in the source. Loaded on first use, because the import costs a quarter of a second.
  */
-export async function openEngine(options: { threads: number }): Promise<Engine> {
+export async function openEngine(options: {
+  readonly threads: number;
+  /** Most memory of its own, bytes; absent: as DuckDB chooses. */
+  readonly memoryBytes?: number;
+}): Promise<Engine> {
   const { DuckDBInstance } = await import('@duckdb/node-api');
   const instance = await DuckDBInstance.create(':memory:', {
     autoinstall_known_extensions: 'false',
@@ -19,6 +23,7 @@ export async function openEngine(options: { threads: number }): Promise<Engine> 
     temp_directory: '',
     preserve_insertion_order: 'true',
     threads: String(options.threads),
+    ...(options.memoryBytes === undefined ? {} : { memory_limit: `${Math.floor(options.memoryBytes)}B` }),
   });
   const connection = await instance.connect();
   return {

@@ -12,13 +12,17 @@ import { diagnose } from './diagnose.js';
 import { type Engine, openEngine, textRows } from './duckdb.js';
 import { inFolder } from './in-folder.js';
 import { jsonNames, missingColumn, openRelation, type Relation, type RelationColumn } from './relation.js';
-import { type Scan, type ScanColumn, scanRelation } from './scan.js';
-import type { LevelColumn, LevelsRequest, Table, TableRequest, TableSource } from './table.js';
+import { type Scan, type ScanColumn, type ScannedRows, scanRelation } from './scan.js';
+import type { LevelsRequest, Table, TableRequest, TableSource } from './table.js';
+import { partOf, type ValueLists, WholeTable } from './table-parts.js';
 
 // a bound on memory: DuckDB buffers tens of megabytes of CSV per thread
 const fileThreads = 4;
 // with one thread a query without `order by` still gives its rows in the same order each time
 const queryThreads = 1;
+/** DuckDB's threads where the rows themselves are not kept in memory, and its least memory in bytes. */
+const partThreads = 1;
+const partEngineBytesLeast = 256e6;
 
 /**
  * Reads the columns asked for. Empty text is a missing value; numbers are the doubles nearest to their decimal form.
@@ -26,24 +30,68 @@ const queryThreads = 1;
  * Fails with `table-missing`, `table-empty`, `table-unreadable` (with DuckDB's words), `header-duplicate`,
  * `column-missing`, `column-not-numeric`, `value-not-finite`, `value-missing` (unless dropped), `level-unknown`,
  * `response-range` (a third class); the last five name the first row and column. Messages quote values of the table: they are for the custodian,
- * and only their code may leave the site.
+ * and only their code may leave the site. `table-unreadable` also where the columns take more than `bytesMost`.
  */
-export async function readTable(source: TableSource, request: TableRequest): Promise<Checked<Table>> {
-  const read = async (): Promise<Checked<Table>> => {
-    const engine = await openEngine({ threads: source.kind === 'query' ? queryThreads : fileThreads });
+export async function readTable(
+  source: TableSource,
+  request: TableRequest,
+  bytesMost = Number.POSITIVE_INFINITY,
+): Promise<Checked<Table>> {
+  const threads = source.kind === 'query' ? queryThreads : fileThreads;
+  return withEngine(source, { threads }, async (engine) => {
+    const whole = new WholeTable(request, bytesMost);
+    const read = await scanSource(engine, source, request, (rows) => whole.take(rows));
+    return read.ok ? succeed(whole.finish(read.value.scan, read.value.lists)) : read;
+  });
+}
+
+/**
+ * The same columns some thousand rows at a time: `take` is given the rows used as tables of their own, each with its
+ * row numbers; what it fails with ends the reading. DuckDB holds row groups of Parquet files whole, and has half of
+ * `memoryBytes` for it.
+ */
+export async function readInParts(
+  source: TableSource,
+  request: TableRequest,
+  memoryBytes: number,
+  take: (part: Table) => Checked<null>,
+): Promise<Checked<{ readonly rowCount: number; readonly rowsDropped: number }>> {
+  const options = { threads: partThreads, memoryBytes: Math.max(memoryBytes / 2, partEngineBytesLeast) };
+  return withEngine(source, options, async (engine) => {
+    const read = await scanSource(engine, source, request, (rows, lists) =>
+      rows.used.length === 0 ? succeed(null) : take(partOf(rows, request, lists)),
+    );
+    if (read.ok) return succeed(read.value.scan);
+    const { failure } = read;
+    return failure.code === 'table-unreadable' && failure.remedy === undefined
+      ? { ok: false, failure: { ...failure, remedy: MEMORY_REMEDY } }
+      : read;
+  });
+}
+
+const MEMORY_REMEDY =
+  'Where DuckDB is out of memory: give more --memory, or write the Parquet file with smaller row groups.';
+
+async function withEngine<T>(
+  source: TableSource,
+  options: Parameters<typeof openEngine>[0],
+  read: (engine: Engine) => Promise<Checked<T>>,
+): Promise<Checked<T>> {
+  const run = async (): Promise<Checked<T>> => {
+    const engine = await openEngine(options);
     try {
-      return await readWith(engine, source, request);
+      return await read(engine);
     } finally {
       engine.close();
     }
   };
-  if (source.kind !== 'query') return read();
+  if (source.kind !== 'query') return run();
   if (!(await isFolder(source.folder)))
     return fail('table-missing', 'The folder that the query is run in is not there.', {
       where: { file: source.folder },
       remedy: 'A query runs in the folder of its site file.',
     });
-  return inFolder(source.folder, read);
+  return inFolder(source.folder, run);
 }
 
 const isFolder = (path: string): Promise<boolean> =>
@@ -52,7 +100,12 @@ const isFolder = (path: string): Promise<boolean> =>
     () => false,
   );
 
-async function readWith(engine: Engine, source: TableSource, request: TableRequest): Promise<Checked<Table>> {
+async function scanSource(
+  engine: Engine,
+  source: TableSource,
+  request: TableRequest,
+  take: (rows: ScannedRows, lists: ValueLists) => Checked<null>,
+): Promise<Checked<{ readonly scan: Scan; readonly lists: ValueLists }>> {
   const labels = request.labels ?? [];
   const used = [...new Set([...request.numeric, ...request.levels.map(({ column }) => column), ...labels])];
   const relation = await openRelation(engine, source, used);
@@ -64,9 +117,10 @@ async function readWith(engine: Engine, source: TableSource, request: TableReque
 
   const labelled = await labelsOf(engine, relation.value, labels);
   if (!labelled.ok) return labelled;
+  const lists = { permitted: permitted.value, labelled: labelled.value };
 
   const columns = scanColumns(relation.value, request, permitted.value);
-  const scan = await scanRelation(engine, relation.value, columns, request);
+  const scan = await scanRelation(engine, relation.value, columns, request, (rows) => take(rows, lists));
   if (!scan.ok) return scan;
   const found = scan.value;
   if (
@@ -94,7 +148,7 @@ async function readWith(engine: Engine, source: TableSource, request: TableReque
       where: relation.value.where,
       remedy: 'Check that the table entry of the site file names the right table.',
     });
-  return succeed(tableOf(found, request, permitted.value, labelled.value));
+  return succeed({ scan: found, lists });
 }
 
 /** The levels of each request in code order: those asked for and, where one more is admitted, the first other value. */
@@ -197,32 +251,4 @@ function scanColumns(
       }),
     ),
   ];
-}
-
-function tableOf(
-  scan: Scan,
-  request: TableRequest,
-  permitted: readonly (readonly string[])[],
-  labelled: readonly (readonly string[])[],
-): Table {
-  const numeric = new Map<string, Float64Array>();
-  const levels = new Map<string, LevelColumn>();
-  const labels = new Map<string, LevelColumn>();
-  scan.values.forEach((values, position) => {
-    if (values instanceof Float64Array) numeric.set(request.numeric[position], values);
-    else {
-      const place = position - request.numeric.length;
-      const beyond = place - request.levels.length;
-      if (beyond < 0) levels.set(request.levels[place].column, { levels: permitted[place], codes: values });
-      else labels.set(request.labels?.[beyond] ?? '', { levels: labelled[beyond], codes: values });
-    }
-  });
-  return {
-    rowCount: scan.rowCount,
-    rowsDropped: scan.rowsDropped,
-    ...(scan.rowNumbers === null ? {} : { rowNumbers: scan.rowNumbers }),
-    numeric,
-    levels,
-    ...(labels.size === 0 ? {} : { labels }),
-  };
 }

@@ -30,20 +30,31 @@ export interface Scan {
   readonly rowsSeen: number;
   readonly rowCount: number;
   readonly rowsDropped: number;
-  /** 1-based; absent where row i is the source's row i + 1. */
-  readonly rowNumbers: Uint32Array | null;
-  /** Float64Array for numeric columns, Int32Array of codes for level columns. */
-  readonly values: readonly (Float64Array | Int32Array)[];
 }
 
-/**
- * One pass over a relation in its order, chunk by chunk: memory holds the used columns of the rows used and one chunk.
- */
+/** Some rows of a source, side by side. They last until the next ones are taken. */
+export interface ScannedRows {
+  /** One array a column, numbers or codes. */
+  readonly values: readonly Float64Array[];
+  /** Places in those arrays of the rows to use. */
+  readonly used: Int32Array;
+  /** 1-based number in the source of the row at place 0. */
+  readonly firstRow: number;
+}
+
+/** Takes the rows to use in their order; a failure ends the pass. */
+export type TakeRows = (rows: ScannedRows) => Checked<null>;
+
+/** True where the rows used may be others than the first ones of the source, one after the other. */
+export const leavesRowsOut = ({ missing, shard }: ScanOptions): boolean => missing === 'drop' || shard.of > 1;
+
+/** One pass over a relation in its order, chunk by chunk: memory holds one chunk beside what `take` keeps. */
 export async function scanRelation(
   engine: Engine,
   relation: Relation,
   columns: readonly ScanColumn[],
   options: ScanOptions,
+  take: TakeRows,
 ): Promise<Checked<Scan | Finding>> {
   const sql = `select ${columns.map((column) => column.sql).join(', ')} from ${relation.from}`;
   const stream = await streamRows(engine, sql, relation.where);
@@ -57,8 +68,10 @@ export async function scanRelation(
       return unreadable(error, relation.where);
     }
     if (chunk === null || chunk.rowCount === 0) return succeed(pass.finish());
-    const finding = pass.take(chunk);
-    if (finding !== null) return succeed(finding);
+    const next = pass.next(chunk);
+    if ('found' in next) return succeed(next);
+    const taken = take(next);
+    if (!taken.ok) return taken;
   }
 }
 
@@ -66,25 +79,16 @@ class Pass {
   private rowsSeen = 0;
   private rowsDropped = 0;
   private rowCount = 0;
-  private readonly kept: GrowingColumn<Float64Array | Int32Array>[];
-  private readonly rowNumbers = new GrowingColumn<Uint32Array>((length) => new Uint32Array(length));
-  private readonly numberRows: boolean;
+  private values: Float64Array[] = [];
 
   constructor(
     private readonly columns: readonly ScanColumn[],
     private readonly options: ScanOptions,
-  ) {
-    this.numberRows = options.missing === 'drop' || options.shard.of > 1;
-    this.kept = columns.map((column) =>
-      column.kind === 'numeric'
-        ? new GrowingColumn((length) => new Float64Array(length))
-        : new GrowingColumn((length) => new Int32Array(length)),
-    );
-  }
+  ) {}
 
-  take(chunk: DuckDBDataChunk): Finding | null {
+  next(chunk: DuckDBDataChunk): ScannedRows | Finding {
     const length = chunk.rowCount;
-    const values = this.columns.map((_, column) => doublesOf(chunk, column, length));
+    const values = this.valuesOf(chunk, length);
     const rows = new Int32Array(length);
     let rowsKept = 0;
     const { index, of } = this.options.shard;
@@ -97,19 +101,21 @@ class Pass {
       if (state.found === 'missing') this.rowsDropped++;
       else rows[rowsKept++] = i;
     }
-    const used = rows.subarray(0, rowsKept);
-    this.kept.forEach((column, j) => {
-      column.append(values[j], used);
-    });
-    if (this.numberRows) {
-      this.rowNumbers.append(
-        Float64Array.from({ length }, (_, i) => this.rowsSeen + i + 1),
-        used,
-      );
-    }
+    const firstRow = this.rowsSeen + 1;
     this.rowCount += rowsKept;
     this.rowsSeen += length;
-    return null;
+    return { values, used: rows.subarray(0, rowsKept), firstRow };
+  }
+
+  /** In the same arrays every time: chunks are many. */
+  private valuesOf(chunk: DuckDBDataChunk, length: number): Float64Array[] {
+    if (this.values.length === 0 || this.values[0].length < length)
+      this.values = this.columns.map(() => new Float64Array(length));
+    this.values.forEach((values, column) => {
+      const vector = chunk.getColumnVector(column);
+      for (let i = 0; i < length; i++) values[i] = vector.getItem(i) as number;
+    });
+    return this.values;
   }
 
   /** An unfit value goes before a missing one: it is a defect of the table even in a row that is dropped. */
@@ -128,59 +134,13 @@ class Pass {
   }
 
   finish(): Scan {
-    const wholeTable = this.rowCount === this.rowsSeen;
     return {
       found: null,
       rowsSeen: this.rowsSeen,
       rowCount: this.rowCount,
       rowsDropped: this.rowsDropped,
-      rowNumbers: wholeTable ? null : this.rowNumbers.finish(),
-      values: this.kept.map((column) => column.finish()),
     };
   }
 }
 
 const usable = { found: null, column: -1 } as const;
-
-function doublesOf(chunk: DuckDBDataChunk, column: number, length: number): Float64Array {
-  const vector = chunk.getColumnVector(column);
-  const values = new Float64Array(length);
-  for (let i = 0; i < length; i++) values[i] = vector.getItem(i) as number;
-  return values;
-}
-
-/** A column of unknown length, in blocks, so that growing copies nothing. */
-class GrowingColumn<T extends Float64Array | Int32Array | Uint32Array> {
-  private readonly full: T[] = [];
-  private block: T;
-  private filled = 0;
-
-  constructor(private readonly allocate: (length: number) => T) {
-    this.block = allocate(BLOCK_ROWS);
-  }
-
-  append(values: Float64Array, rows: Int32Array): void {
-    for (let i = 0; i < rows.length; i++) {
-      if (this.filled === BLOCK_ROWS) {
-        this.full.push(this.block);
-        this.block = this.allocate(BLOCK_ROWS);
-        this.filled = 0;
-      }
-      this.block[this.filled++] = values[rows[i]];
-    }
-  }
-
-  /** One array; the blocks are let go. */
-  finish(): T {
-    const whole = this.allocate(this.full.length * BLOCK_ROWS + this.filled);
-    this.full.forEach((block, i) => {
-      whole.set(block, i * BLOCK_ROWS);
-    });
-    whole.set(this.block.subarray(0, this.filled), this.full.length * BLOCK_ROWS);
-    this.full.length = 0;
-    this.block = this.allocate(0);
-    return whole;
-  }
-}
-
-const BLOCK_ROWS = 16_384;

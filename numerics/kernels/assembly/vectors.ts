@@ -26,3 +26,9 @@ export function laneSum(a: v128): f64 {
 export function zeros(): v128 {
   return f64x2.splat(0);
 }
+
+/** Numbers of two rows, or of a single last one twice. */
+@inline
+export function loadRows(at: usize, single: bool): v128 {
+  return single ? v128.load64_splat(at) : v128.load(at);
+}
