@@ -15,7 +15,11 @@ import type { SiteModels } from './site-models.js';
  * contraction; for the same where models lead (primal residual alone). And their shrinkage after one that fails.
  */
 export const TRIGGERS = { estimate: 1e-3, finish: 1e-2, led: 0.1 } as const;
-const SHRINKAGE = { estimate: 4, finish: 10 } as const;
+const SHRINKAGE = { estimate: 4, finish: 10, coarse: 2 } as const;
+
+/** The gap is about the square of the residual: a coarse tolerance may hold long before the usual trigger. */
+export const estimateTrigger = ({ tolerance }: Pick<ConsensusProblem, 'tolerance'>): number =>
+  Math.max(TRIGGERS.estimate, Math.sqrt(tolerance));
 
 /** Relative gap at which a model step is worth an estimate of its own. */
 const NEAR = 1e-3;
@@ -45,7 +49,7 @@ export interface Standing {
 
 /** Where a method begins, before its first round: F(z₀) and D are known, nothing else. */
 export const standingFrom = (
-  { curvatureMost }: ConsensusProblem,
+  problem: ConsensusProblem,
   startDiagonal: Float64Array,
   objective: number,
   models: SiteModels | null,
@@ -53,8 +57,8 @@ export const standingFrom = (
   startDiagonal,
   startObjective: objective,
   rounds: 0,
-  trigger: curvatureMost > 0 ? TRIGGERS.finish : TRIGGERS.estimate,
-  matricesLeft: curvatureMost,
+  trigger: problem.curvatureMost > 0 ? TRIGGERS.finish : estimateTrigger(problem),
+  matricesLeft: problem.curvatureMost,
   curvatureSeen: false,
   residuals: null,
   gapGuess: null,
@@ -75,12 +79,12 @@ export function* certify(
   z: Float64Array,
 ): Generator<MethodAsk, { readonly end: MethodEnd | null; readonly restart: Finish | null }, SiteAnswers> {
   if (standing.matricesLeft === 0) {
-    standing.trigger /= SHRINKAGE.estimate;
+    standing.trigger /= standing.trigger > TRIGGERS.estimate ? SHRINKAGE.coarse : SHRINKAGE.estimate;
     return { end: estimate(problem, standing, z, yield* askEstimate(standing, z)), restart: null };
   }
   standing.trigger /= SHRINKAGE.finish;
   const finish = yield* finishFrom(problem, standing, z);
-  if (standing.matricesLeft === 0) standing.trigger = TRIGGERS.estimate;
+  if (standing.matricesLeft === 0) standing.trigger = estimateTrigger(problem);
   const end = endOfFinish(problem, standing, finish) ?? (yield* beyondFinish(problem, standing, finish));
   return { end, restart: end === null ? finish : null };
 }

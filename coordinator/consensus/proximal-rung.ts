@@ -11,6 +11,7 @@ import type { ConsensusProblem } from './problem.js';
 import {
   certify,
   ending,
+  estimateTrigger,
   lastCertificate,
   look,
   progressOf,
@@ -62,7 +63,7 @@ function* balancedIteration(
   const g = problem.penalty;
   const acceleration = new Acceleration(new Anderson());
   standing.gapGuess = null;
-  standing.trigger = standing.matricesLeft > 0 ? TRIGGERS.finish : TRIGGERS.estimate;
+  standing.trigger = standing.matricesLeft > 0 ? TRIGGERS.finish : estimateTrigger(problem);
   let metric = firstMetric;
   let { s, x } = pointsFrom(problem, standing, metric);
   let zOld: Float64Array | null = null;

@@ -145,8 +145,14 @@ function startOf(
   };
 }
 
+/** Columns without a coefficient that have a note each; the fits name them all. */
+const DROPPED_LISTED_MOST = 20;
+
 export function notesOf({ survey: surveyed, frame, warm }: Grounds): string[] {
-  const dropped = frame.dropped.map((name) => `${name} has no spread at any site: it gets no coefficient`);
+  const listed = frame.dropped.slice(0, DROPPED_LISTED_MOST);
+  const dropped = listed.map((name) => `${name} has no spread at any site: it gets no coefficient`);
+  const more = frame.dropped.length - listed.length;
+  if (more > 0) dropped.push(`${more} more columns have no spread at any site: they get no coefficient`);
   return [...surveyed.notes, ...dropped, ...(warm === null ? [] : [warm.note])];
 }
 

@@ -24,6 +24,9 @@ Promise.all(process.argv.slice(1).map(reach)).then((all) => {
   process.exit();
 });`;
 
+/** A swarm takes a minute more, and longer where the machine is busy. */
+const long = process.env.COMMONFIT_LONG === '1';
+
 let stage: Stage;
 let services: Services;
 let byProcesses = '';
@@ -185,15 +188,18 @@ describe.skipIf(skipped !== null)(`services in containers${skipped === null ? ''
     }
   });
 
-  test('the same file deployed as a stack fits the same bytes', async (context) => {
-    if (!(await outsideSwarm())) context.skip('this engine is in a swarm already');
-    try {
-      const stack = await services.toStack();
-      await stack.healthy('coordinator');
-      const following = stack.submit(FIT);
-      expect(await stack.resultOf(following)).toBe(byProcesses);
-    } finally {
-      await Services.leaveSwarm();
-    }
-  });
+  test.skipIf(!long)(
+    `the same file deployed as a stack fits the same bytes${long ? '' : ' (skipped without COMMONFIT_LONG=1)'}`,
+    async (context) => {
+      if (!(await outsideSwarm())) context.skip('this engine is in a swarm already');
+      try {
+        const stack = await services.toStack();
+        await stack.healthy('coordinator');
+        const following = stack.submit(FIT);
+        expect(await stack.resultOf(following)).toBe(byProcesses);
+      } finally {
+        await Services.leaveSwarm();
+      }
+    },
+  );
 });
