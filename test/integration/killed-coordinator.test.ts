@@ -5,6 +5,8 @@ import { until } from '../support/processes.js';
 import { setSmallScenario } from '../support/small-scenario.js';
 import { type Following, PATIENT, roundsOf, Stage } from '../support/stage.js';
 
+/** Single instants, which the kills at random of the everyday run come by too: COMMONFIT_LONG=1. */
+const long = process.env.COMMONFIT_LONG === '1';
 const SITES = ['harrowmere', 'castlefen'];
 
 let stage: Stage;
@@ -49,7 +51,7 @@ describe('a run under way goes on to the same bytes where the coordinator is kil
     await expectUndisturbed(following);
   });
 
-  test('while a site is surveyed', async () => {
+  test.runIf(long)('while a site is surveyed', async () => {
     stage.workerOf('castlefen').signal('SIGSTOP');
     const following = stage.submit('long.fit.yaml');
     const run = await following.run();
@@ -59,7 +61,7 @@ describe('a run under way goes on to the same bytes where the coordinator is kil
     await expectUndisturbed(following);
   });
 
-  test('with an ask open', async () => {
+  test.runIf(long)('with an ask open', async () => {
     const following = stage.submit('long.fit.yaml');
     await stage.holdAt(following, 7, 'castlefen');
     await killAndServe();

@@ -68,7 +68,8 @@ describe('a run is the same to the bit', PATIENT, () => {
     await expectUndisturbed(following);
   });
 
-  test('where all workers are killed at once', async () => {
+  // every day in test/integration/killed-at-random.test.ts, too
+  test.runIf(process.env.COMMONFIT_LONG === '1')('where all workers are killed at once', async () => {
     const following = stage.submit('long.fit.yaml');
     await stage.holdAt(following, 6, 'harrowmere');
     await killAndStart(following, SMALL_SITES);

@@ -12,6 +12,8 @@ import { siteFileOf } from '../support/small-scenario.js';
 import { type Following, Stage } from '../support/stage.js';
 import { mayMount, Volume } from '../support/volume.js';
 
+/** What the everyday run leaves to COMMONFIT_LONG=1. */
+const long = process.env.COMMONFIT_LONG === '1';
 const PATIENT = { timeout: 120_000 } as const;
 const SITES = ['harrowmere', 'castlefen'] as const;
 /** Holds the responses, the predictors and a window of the tables below, but not their columns. */
@@ -202,19 +204,22 @@ describe.skipIf(!existsSync('/proc/self/fd'))('in the middle of a run', PATIENT,
     expect(bytesOnDisk(worker)).toHaveLength(3);
   });
 
-  test('the worker is killed and started again: nothing is left behind, and the result the same to the bit', async () => {
-    const { following, worker } = await heldRun();
-    expect(openRows(worker)).toHaveLength(1);
-    await worker.kill();
-    expect(rowsLeftIn(stage.folder)).toEqual([]);
-    await joinSite('castlefen', ['--memory', LIMIT], 'castlefen-slow.site.yaml');
-    const { code, result } = await following.outcome(PATIENT.timeout);
-    expect(code).toBe(0);
-    expect(result).toBe(undisturbed);
-  });
+  test.runIf(long)(
+    'the worker is killed and started again: nothing is left behind, and the result the same to the bit',
+    async () => {
+      const { following, worker } = await heldRun();
+      expect(openRows(worker)).toHaveLength(1);
+      await worker.kill();
+      expect(rowsLeftIn(stage.folder)).toEqual([]);
+      await joinSite('castlefen', ['--memory', LIMIT], 'castlefen-slow.site.yaml');
+      const { code, result } = await following.outcome(PATIENT.timeout);
+      expect(code).toBe(0);
+      expect(result).toBe(undisturbed);
+    },
+  );
 });
 
-describe.skipIf(!mayMount)('a disk that the rows do not fit on', PATIENT, () => {
+describe.skipIf(!mayMount || !long)('a disk that the rows do not fit on', PATIENT, () => {
   test('the run ends as refused, the space is given back, and the next one solves once there is room', async () => {
     const volume = await Volume.open('10m');
     try {

@@ -132,13 +132,17 @@ async function partitioned(sites: readonly WideSite[], ms: number): Promise<LogE
 }
 
 describe('a partition that heals', BUSY, () => {
-  test.each<[string, readonly WideSite[]]>([
-    ['one site', ['castlefen']],
+  const cut: [string, readonly WideSite[]][] = [
     ['all sites', WIDE_SITES],
-  ])('of %s for 3 s: the log says who is late, the links hold, the result is the same', async (_, sites) => {
-    const events = await partitioned(sites, 3000);
-    for (const site of sites) expect(changesOf(events, site)).toEqual([]);
-  });
+    ['one site', ['castlefen']],
+  ];
+  test.each(long ? cut : cut.slice(0, 1))(
+    'of %s for 3 s: the log says who is late, the links hold, the result is the same',
+    async (_, sites) => {
+      const events = await partitioned(sites, 3000);
+      for (const site of sites) expect(changesOf(events, site)).toEqual([]);
+    },
+  );
 
   test.runIf(long)('of one site for 60 s', async () => {
     const events = await partitioned(['castlefen'], 60_000);
