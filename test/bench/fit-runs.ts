@@ -18,6 +18,7 @@ const THRESHOLDS = [1e-7, 1e-9, 1e-11, 1e-13, 1e-15];
 /** One whole fit, in seconds; the least of the repeats. */
 export interface FitTimes {
   readonly name: string;
+  readonly matrices: FitProblem['matrices'];
   readonly rounds: number;
   /** Of ours, as certified, and of the pooled fit beside it, relative. */
   readonly gap: number;
@@ -62,7 +63,7 @@ export async function measureFit(problem: FitProblem, repeats: number, pooled: b
 }
 
 function timesOf(
-  { name }: FitProblem,
+  { name, matrices }: FitProblem,
   ours: readonly OwnFit[],
   theirs: readonly PooledAnswer[],
   readingSeconds: number | null,
@@ -76,6 +77,7 @@ function timesOf(
     pooledSeconds === null || readingSeconds === null ? null : pooledSeconds + readingSeconds;
   return {
     name,
+    matrices,
     rounds: ours[0].rounds,
     gap: ours[0].gap,
     pooledGap: quickest?.gap ?? null,
@@ -95,7 +97,10 @@ async function prepare(stage: Stage, problem: FitProblem): Promise<void> {
   for (const site of SITES) {
     await stage.write(
       `${site}.site.yaml`,
-      siteFileOf(stage, site, `{csv: ./${site}.csv}`, ['curvature-most: any', 'numbers-most: 100000000']),
+      siteFileOf(stage, site, `{csv: ./${site}.csv}`, [
+        `curvature-most: ${problem.matrices}`,
+        'numbers-most: 100000000',
+      ]),
     );
     await stage.admit(site);
     stage.join(site);

@@ -10,6 +10,7 @@ const SMALL: FitProblem = {
   lambda: 0.05,
   l1: 0.5,
   folds: 0,
+  matrices: 3,
 };
 
 test('a small run of bench:fit: through real processes, and beside the pooled fit where R is', {
