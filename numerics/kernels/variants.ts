@@ -55,8 +55,8 @@ export const instantiate = (module: WebAssembly.Module, memory: WebAssembly.Memo
   new WebAssembly.Instance(module, { env: { memory } }).exports as unknown as KernelExports;
 
 /**
- * A variant in WebAssembly, on the threads of a crew if there is one. Where a machine does not give it the memory, `onWithout` is told in words and the plain twin
- * serves that shard.
+ * A variant in WebAssembly, on the threads of a crew if there is one. Where a machine does not give it the memory,
+ * `onWithout` is told in words and the plain twin serves that shard.
  */
 export function wasmVariant(
   name: KernelName,

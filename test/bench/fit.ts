@@ -1,9 +1,7 @@
-import { execFileSync } from 'node:child_process';
-import { writeFileSync } from 'node:fs';
 import { availableParallelism } from 'node:os';
-import { join } from 'node:path';
 import { FIT_PROBLEMS } from './fit-problems.js';
 import { type FitTimes, GAP_MOST, hasPooledFit, measureFit } from './fit-runs.js';
+import { writeResults } from './results-file.js';
 
 const REPEATS = 3;
 
@@ -30,18 +28,7 @@ async function main(): Promise<void> {
     console.log(lineOf(results[results.length - 1]));
   }
   if (word !== '' || !pooled) return;
-  const root = join(import.meta.dirname, '../../..');
-  const commit = execFileSync('git', ['rev-parse', 'HEAD'], { cwd: root, encoding: 'utf8' }).trim();
-  const document = {
-    node: process.version,
-    commit,
-    cores: availableParallelism(),
-    repeats: REPEATS,
-    gapMost: GAP_MOST,
-    results,
-  };
-  writeFileSync(join(root, 'test/bench/results/fit.json'), `${JSON.stringify(document, null, 1)}\n`);
-  console.log('\nWritten to test/bench/results/fit.json');
+  writeResults('fit', results, { cores: availableParallelism(), repeats: REPEATS, gapMost: GAP_MOST });
 }
 
 const lineOf = (row: FitTimes): string =>

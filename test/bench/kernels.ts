@@ -1,12 +1,8 @@
-import { execFileSync } from 'node:child_process';
-import { mkdirSync, writeFileSync } from 'node:fs';
 import { loadavg } from 'node:os';
-import { dirname, join } from 'node:path';
-import { fileURLToPath } from 'node:url';
 import { type KernelTime, kernelTimes } from './kernel-times.js';
+import { cpuMs, writeResults } from './results-file.js';
 
 /** `npm run bench:kernels`: the compiled kernels against this machine's own limits and against the plain twin. */
-const root = join(dirname(fileURLToPath(import.meta.url)), '../../..');
 const REPEATS = 7;
 /** Two threads are only as fast as they can be while nothing else runs: many tries, of which the quickest counts. */
 const THREAD_REPEATS = 15;
@@ -28,25 +24,11 @@ const results = await kernelTimes(
 );
 load.push(loadavg()[0]);
 for (const time of results) process.stdout.write(`${lineOf(time)}\n`);
-const file = join(root, 'test/bench/results/kernels.json');
-mkdirSync(dirname(file), { recursive: true });
-const document = {
-  node: process.version,
-  commit: commit(),
-  repeats: REPEATS,
-  threadRepeats: THREAD_REPEATS,
-  // of the machine over a minute, before and after: every other process takes from what two threads can reach
-  load: load.map((value) => Number(value.toFixed(2))),
-  results: results.map(withTarget),
-};
-process.stdout.write(`Load of the machine: ${document.load.join(' before, ')} after.\n`);
-writeFileSync(file, `${JSON.stringify(document, null, 1)}\n`);
-
-/** Time of this process on a processor: other work on the machine counts only as far as it takes memory bandwidth. */
-function cpuMs(): number {
-  const { user, system } = process.cpuUsage();
-  return (user + system) / 1000;
-}
+// of the machine over a minute, before and after: every other process takes from what two threads can reach
+const loads = load.map((value) => Number(value.toFixed(2)));
+process.stdout.write(`Load of the machine: ${loads.join(' before, ')} after.\n`);
+const counts = { repeats: REPEATS, threadRepeats: THREAD_REPEATS };
+writeResults('kernels', results.map(withTarget), { ...counts, load: loads });
 
 function withTarget(time: KernelTime): KernelTime & { readonly target: number | null } {
   const alone = TARGETS.find(([name]) => time.name.startsWith(name))?.[1] ?? null;
@@ -61,16 +43,4 @@ function lineOf(time: KernelTime): string {
     target === null ? '' : time.ratio >= target ? `, at least ${target} wanted` : `, MISSES ${target}`;
   const plain = timesPlain === null ? '' : `; plain takes ${timesPlain.toFixed(1)} times as long`;
   return `${time.kernel.padEnd(8)}${time.name.padEnd(60)}${time.ratio.toFixed(2)} (${rates})${wanted}${plain}`;
-}
-
-function commit(): string | null {
-  try {
-    return execFileSync('git', ['rev-parse', 'HEAD'], {
-      cwd: root,
-      encoding: 'utf8',
-      stdio: ['ignore', 'pipe', 'ignore'],
-    }).trim();
-  } catch {
-    return null;
-  }
 }

@@ -1,7 +1,6 @@
-import { mkdirSync, mkdtempSync, rmSync, writeFileSync } from 'node:fs';
+import { mkdtempSync, rmSync } from 'node:fs';
 import { tmpdir } from 'node:os';
-import { dirname, join } from 'node:path';
-import { fileURLToPath } from 'node:url';
+import { join } from 'node:path';
 import { curvatureRung } from '../../coordinator/consensus/curvature-rung.js';
 import type { Method } from '../../coordinator/consensus/method.js';
 import type { ConsensusProblem } from '../../coordinator/consensus/problem.js';
@@ -16,6 +15,7 @@ import { localSolver } from '../../worker/local/local-solver.js';
 import { answerLocally, must } from '../support/method-driver.js';
 import { type Hardship, makeHardProblem } from './hard-problem.js';
 import { benchLoss, consensusProblem } from './measure.js';
+import { writeResults } from './results-file.js';
 
 /** What a journal costs: its bytes, and the processor time of its replay against that of the run. */
 interface Case {
@@ -192,10 +192,7 @@ async function main(): Promise<void> {
     }
   }
   if (only !== undefined) return;
-  const file = join(dirname(fileURLToPath(import.meta.url)), '../../../test/bench/results/recovery.json');
-  mkdirSync(dirname(file), { recursive: true });
-  writeFileSync(file, `${JSON.stringify({ node: process.version, results }, null, 1)}\n`);
-  console.log('Written to test/bench/results/recovery.json');
+  writeResults('recovery', results);
 }
 
 await main();

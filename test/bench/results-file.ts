@@ -5,12 +5,14 @@ import { fileURLToPath } from 'node:url';
 
 const root = join(dirname(fileURLToPath(import.meta.url)), '../../..');
 
-/** Writes `test/bench/results/NAME.json`: the Node and commit it was measured with, and the results. */
-export function writeResults(name: string, results: readonly object[]): void {
-  const file = join(root, 'test/bench/results', `${name}.json`);
-  mkdirSync(dirname(file), { recursive: true });
-  const document = { node: process.version, commit: commit(), results };
-  writeFileSync(file, `${JSON.stringify(document, null, 1)}\n`);
+/** Writes `test/bench/results/NAME.json`: the Node and commit it was measured with, what is said `beside` it, and the results. */
+export function writeResults(name: string, results: readonly object[], beside: object = {}): void {
+  const file = `test/bench/results/${name}.json`;
+  const path = join(root, file);
+  mkdirSync(dirname(path), { recursive: true });
+  const document = { node: process.version, commit: commit(), ...beside, results };
+  writeFileSync(path, `${JSON.stringify(document, null, 1)}\n`);
+  process.stdout.write(`\nWritten to ${file}\n`);
 }
 
 /** Time of this process on a processor, all its threads. Milliseconds. */

@@ -1,9 +1,6 @@
-import { execFileSync } from 'node:child_process';
-import { mkdirSync, writeFileSync } from 'node:fs';
-import { dirname, join } from 'node:path';
-import { fileURLToPath } from 'node:url';
 import { isBaseline, METHODS, measureProblem, type Row } from './measure.js';
 import { SUITE } from './problems.js';
+import { writeResults } from './results-file.js';
 import { summarise } from './summary.js';
 
 /** `npm run bench:rounds [-- PART-OF-A-NAME]`: exact counts, so they hold on any machine. */
@@ -26,24 +23,9 @@ function main(): void {
   }
   console.log(`\n${summarise(results, METHODS)}`);
   if (only !== undefined) return;
-  const root = join(dirname(fileURLToPath(import.meta.url)), '../../..');
-  const file = join(root, 'test/bench/results/rounds.json');
-  mkdirSync(dirname(file), { recursive: true });
-  writeFileSync(
-    file,
-    `${JSON.stringify({ node: process.version, commit: commitOf(root), results }, null, 1)}\n`,
-  );
-  console.log('\nWritten to test/bench/results/rounds.json');
+  writeResults('rounds', results);
   if (results.some((row) => !isBaseline(row.method) && (row.failure !== null || row.contradicted)))
     process.exitCode = 1;
-}
-
-function commitOf(root: string): string | null {
-  try {
-    return execFileSync('git', ['rev-parse', 'HEAD'], { cwd: root, encoding: 'utf8' }).trim();
-  } catch {
-    return null;
-  }
 }
 
 main();

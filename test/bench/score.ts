@@ -1,13 +1,12 @@
-import { execFileSync } from 'node:child_process';
-import { mkdirSync, mkdtempSync, rmSync, statSync, writeFileSync } from 'node:fs';
+import { mkdtempSync, rmSync, statSync } from 'node:fs';
 import { availableParallelism, tmpdir } from 'node:os';
-import { dirname, join } from 'node:path';
-import { fileURLToPath } from 'node:url';
+import { join } from 'node:path';
 import { INVERSE_LINKS, type ModelDocument } from '../../protocol/model/model-document.js';
 import type { Term } from '../../protocol/specification/types.js';
 import type { ScoreFormat } from '../../worker/score/score-relation.js';
 import { scoreTable } from '../../worker/score/score-table.js';
 import { openEngine, sqlText } from '../../worker/source/duckdb.js';
+import { writeResults } from './results-file.js';
 
 /**
  * `npm run bench:score [-- ROWS]`: rows a second of `commonfit-worker score` at p = 20, in alternation with DuckDB
@@ -75,19 +74,7 @@ async function main(): Promise<void> {
           `${last.ratioToReading.toFixed(2)} × the time of reading alone, ${last.cpuSecondsPerMillionRows.toFixed(2)} s of processor a million rows, ${last.residentMegabytesMost} MB`,
       );
     }
-    const results = {
-      node: process.version,
-      cores: availableParallelism(),
-      threads: THREADS,
-      p: P,
-      rows,
-      timings,
-    };
-    const root = join(dirname(fileURLToPath(import.meta.url)), '../../..');
-    const file = join(root, 'test/bench/results/score.json');
-    mkdirSync(dirname(file), { recursive: true });
-    writeFileSync(file, `${JSON.stringify({ commit: commitOf(root), ...results }, null, 1)}\n`);
-    console.log('Written to test/bench/results/score.json');
+    writeResults('score', timings, { cores: availableParallelism(), threads: THREADS, p: P, rows });
   } finally {
     rmSync(folder, { recursive: true, force: true });
   }
@@ -154,14 +141,6 @@ async function seconds(work: () => Promise<void>): Promise<number> {
 function median(values: readonly number[]): number {
   const sorted = [...values].sort((a, b) => a - b);
   return sorted[Math.floor(sorted.length / 2)];
-}
-
-function commitOf(root: string): string | null {
-  try {
-    return execFileSync('git', ['rev-parse', 'HEAD'], { cwd: root, encoding: 'utf8' }).trim();
-  } catch {
-    return null;
-  }
 }
 
 await main();

@@ -1,6 +1,4 @@
-import { mkdirSync, writeFileSync } from 'node:fs';
-import { dirname, join } from 'node:path';
-import { fileURLToPath } from 'node:url';
+import { writeResults } from './results-file.js';
 import { measureStragglers, STRAGGLER_RUNGS, type StragglerRow, TOLERANCES } from './straggler-runs.js';
 import { SCENARIOS } from './straggler-scenarios.js';
 import { quantile } from './summary.js';
@@ -35,11 +33,7 @@ function main(): void {
   console.log(`\n${summarise(results)}`);
   if (results.some((row) => row.contradicted > 0 || row.unsolved > 0)) process.exitCode = 1;
   if (seeds < SEEDS) return;
-  const root = join(dirname(fileURLToPath(import.meta.url)), '../../..');
-  const file = join(root, 'test/bench/results/stragglers.json');
-  mkdirSync(dirname(file), { recursive: true });
-  writeFileSync(file, `${JSON.stringify({ node: process.version, seeds, results }, null, 1)}\n`);
-  console.log('\nWritten to test/bench/results/stragglers.json');
+  writeResults('stragglers', results, { seeds });
 }
 
 const lineOf = (row: StragglerRow): string =>

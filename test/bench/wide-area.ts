@@ -1,8 +1,5 @@
-import { execFileSync } from 'node:child_process';
-import { mkdirSync, writeFileSync } from 'node:fs';
-import { dirname, join } from 'node:path';
-import { fileURLToPath } from 'node:url';
 import { NO_CURVATURE, WIDE_FIT, WideArea } from '../support/wide-area.js';
+import { writeResults } from './results-file.js';
 
 const ROUND_TRIPS_MS = [0, 100, 300];
 const REPEATS = 3;
@@ -76,21 +73,8 @@ async function main(): Promise<void> {
       await wide.close();
     }
   }
-  const root = join(dirname(fileURLToPath(import.meta.url)), '../../..');
-  const file = join(root, 'test/bench/results/wide-area.json');
-  mkdirSync(dirname(file), { recursive: true });
-  const document = { node: process.version, commit: commitOf(root), repeats: REPEATS, results };
-  writeFileSync(file, `${JSON.stringify(document, null, 1)}\n`);
-  console.log('\nWritten to test/bench/results/wide-area.json');
+  writeResults('wide-area', results, { repeats: REPEATS });
   if (results.some(({ sameBytes }) => !sameBytes)) process.exitCode = 1;
-}
-
-function commitOf(root: string): string | null {
-  try {
-    return execFileSync('git', ['rev-parse', 'HEAD'], { cwd: root, encoding: 'utf8' }).trim();
-  } catch {
-    return null;
-  }
 }
 
 await main();

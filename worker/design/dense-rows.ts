@@ -8,17 +8,14 @@ import type { Shard } from './shard.js';
 
 /** Rows in memory, row-major, rowCount × p. */
 export class DenseRows implements DesignRows {
-  readonly rowCount: number;
   readonly sparse = false;
 
   constructor(
     readonly x: Float64Array,
     readonly p: number,
     readonly kernel: Kernel,
-    rowCount: number,
-  ) {
-    this.rowCount = rowCount;
-  }
+    readonly rowCount: number,
+  ) {}
 
   products(from: number, to: number, theta: Float64Array, out: Float64Array): void {
     this.kernel.rowProducts(this.x, this.p, from, to, theta, out);
